@@ -1,0 +1,153 @@
+"""What is done and what came of it: the values that schedule, conduct, logbook and characterise share.
+
+Plain frozen values; meaning in the manual under `words`. Nothing here acts.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from enum import StrEnum
+
+from sweeprig.quantities import Reading
+
+
+class Purpose(StrEnum):
+    ZERO = "zero"
+    REST = "rest"
+    RUN_IN = "run_in"
+    TAP_MAP = "tap_map"
+    CURVE = "curve"
+    STALL = "stall"
+    START = "start"
+    KICK = "kick"
+    LONG = "long"
+    REFERENCE = "reference"
+    COAST = "coast"
+    VERIFY = "verify"
+
+
+class Approach(StrEnum):
+    FALLING = "falling"
+    RISING = "rising"
+    FROM_REST = "from_rest"
+
+
+class EndsWhen(StrEnum):
+    SETTLED = "settled"
+    STOPPED = "stopped"
+    """The exposure runs for the hold time; it ends early when the rotor stops."""
+    TIME = "time"
+
+
+class Status(StrEnum):
+    DONE = "done"
+    DISCARDED = "discarded"
+    ABANDONED = "abandoned"
+    TRIPPED = "tripped"
+
+
+class Verdict(StrEnum):
+    """What the rotor did; never pass or fail."""
+
+    TURNING = "turning"
+    STOPPED = "stopped"
+    STARTED = "started"
+    DID_NOT_START = "did_not_start"
+    STEPPING = "stepping"
+    UNDECIDED = "undecided"
+
+
+@dataclass(frozen=True, slots=True, order=True)
+class Condition:
+    """What is the same for a set of findings. Order: as a person would list them."""
+
+    pwm_hz: float
+    supply_v: float
+    direction: str = "forward"
+    load: str = "free air"
+    thermal: str = "warm"
+    freewheel: str = "slow_decay"
+
+    def label(self) -> str:
+        """Short text for tables: what differs in most sweeps comes first."""
+        return f"{self.pwm_hz:g} Hz, {self.supply_v:g} V, {self.direction}, {self.load}, {self.thermal}"
+
+
+@dataclass(frozen=True, slots=True)
+class Hold:
+    """One setting, held until it is settled and read, or until it ended.
+
+    lead       ((duty_percent, seconds), …) performed before the exposure clock starts: the relaunch before a falling
+               approach, the kick pulse. A lead of duty 0 is the drive off.
+    least_s    no decision before this; most_s: the exposure, or the longest wait for `settled`
+    roles      what is read during the hold
+    why        one sentence, shown to people
+    """
+
+    number: int
+    purpose: Purpose
+    approach: Approach
+    condition: Condition
+    duty_percent: float
+    least_s: float
+    most_s: float
+    ends_when: EndsWhen
+    roles: tuple[str, ...]
+    why: str
+    lead: tuple[tuple[float, float], ...] = ()
+    tap: int | None = None
+
+    def same_setting(self, other: Hold) -> bool:
+        """The "same hold" of the three-strikes rule: equal purpose, approach, condition and setting."""
+        return (self.purpose, self.approach, self.condition, round(self.duty_percent, 6), self.tap) == (
+            other.purpose,
+            other.approach,
+            other.condition,
+            round(other.duty_percent, 6),
+            other.tap,
+        )
+
+
+@dataclass(frozen=True, slots=True)
+class Outcome:
+    """What a hold gave.
+
+    began, ended      run clock, s; began_utc, ended_utc likewise in UTC seconds
+    exposed_s         time at the target duty, from its application
+    event_between_s   a stop or a start seen between these two moments of the exposure (s); the open upper end None
+                      means it had not happened by the lower one (censored)
+    restarts          times the rotor turned again by itself after a stop
+    means             channel → mean over the settled part; u there is the standard uncertainty of that mean with the
+                      instrument's accuracy in it
+    """
+
+    number: int
+    hold: Hold
+    session: int
+    status: Status
+    verdict: Verdict
+    began: float
+    ended: float
+    began_utc: float
+    ended_utc: float
+    exposed_s: float = 0.0
+    event_between_s: tuple[float, float | None] = (0.0, None)
+    restarts: int = 0
+    means: Mapping[str, Reading] = field(default_factory=dict)
+    flags: tuple[str, ...] = ()
+    reason: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class NeedsPerson:
+    what: str
+    why: str
+
+
+@dataclass(frozen=True, slots=True)
+class Finished:
+    reason: str
+
+
+Decision = Hold | NeedsPerson | Finished
