@@ -79,7 +79,7 @@ class Hold:
     """One setting, held until it is settled and read, or until it ended.
 
     lead       ((duty_percent, seconds), …) performed before the exposure clock starts: the relaunch before a falling
-               approach, the kick pulse. A lead of duty 0 is the drive off.
+               approach, the kick pulse. A lead of duty 0 is the drive off until no edge came for that long.
     least_s    no decision before this; most_s: the exposure, or the longest wait for `settled`
     roles      what is read during the hold
     why        one sentence, shown to people

@@ -1,0 +1,1 @@
+"""Effects: performing holds on a rig, protecting it, switching it off. The only room that moves a motor."""

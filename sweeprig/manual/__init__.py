@@ -1,0 +1,40 @@
+"""The manual: Markdown texts that ship with the program, by topic. No other room's code is imported but errors."""
+
+from __future__ import annotations
+
+import difflib
+from importlib.resources import files
+
+from sweeprig.errors import ConfigError
+
+_ORDER = (
+    "start", "words", "job-files", "rig", "links", "safety", "findings", "report", "resume", "simbench", "exit-codes",
+    "adapters", "library", "testing",
+)  # fmt: skip
+_CAUTIONS_HEAD = "## Cautions in short"
+
+
+def topics() -> tuple[str, ...]:
+    """All topics, in the order in which a newcomer reads them."""
+    return _ORDER
+
+
+def text(topic: str) -> str:
+    """The Markdown of one topic. An unknown one is a ConfigError that names the nearest."""
+    if topic not in _ORDER:
+        near = difflib.get_close_matches(topic, _ORDER, n=1)
+        hint = f"Did you mean '{near[0]}'?" if near else "Run 'sweeprig manual' for the list."
+        raise ConfigError("no such topic in the manual", value=topic, allowed=", ".join(_ORDER), remedy=hint)
+    return files(__name__).joinpath(f"{topic}.md").read_text(encoding="utf-8")
+
+
+def heading(topic: str) -> str:
+    """The first heading of a topic, for a list of topics."""
+    return text(topic).split("\n", 1)[0].removeprefix("# ").strip()
+
+
+def cautions() -> list[str]:
+    """The short cautions that a real run prints and every report carries, from the topic `safety`."""
+    part = text("safety").split(_CAUTIONS_HEAD, 1)[1].split("\n## ", 1)[0]
+    items = part.split("\n* ")[1:]
+    return [" ".join(item.split()) for item in items]

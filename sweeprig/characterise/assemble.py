@@ -1,0 +1,124 @@
+"""characterise(): all findings of a run from its plan and outcomes. Chooses, calls, puts together; computes nothing.
+
+Only holds with status `done` are data.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+
+from sweeprig.characterise import usable
+from sweeprig.characterise.curve import Curve, fit_curve, lowest_sure_duty
+from sweeprig.characterise.duties_found import START, STALL, TAIL, start_stall_hysteresis, threshold
+from sweeprig.characterise.evidence import (
+    Chosen,
+    Duties,
+    Point,
+    duties,
+    speed_points,
+    stall_trials,
+    start_trials,
+    turning_before,
+    voltage_points,
+)
+from sweeprig.characterise.findings import ConditionFindings, Findings, SpeedCurve, not_found
+from sweeprig.errors import ConfigError
+from sweeprig.holds import Approach, Condition, Outcome, Status
+from sweeprig.plan import Plan
+
+ABOUT = ("job_hash", "simulated", "motor", "rig", "software")
+_NOT_YET = "this version does not work it out"
+
+
+def characterise(plan: Plan, outcomes: Sequence[Outcome], about: Mapping[str, object]) -> Findings:
+    """Findings of every condition of the plan, and of any other that has done holds.
+
+    about: job_hash (text), simulated (bool), motor, rig, software (JSON values). ConfigError when one is missing.
+    """
+    missing = [key for key in ABOUT if key not in about]
+    if missing:
+        raise ConfigError("findings need to know what they are about", value=f"no {', '.join(missing)}")
+    done = [outcome for outcome in outcomes if outcome.status is Status.DONE]
+    turned = turning_before(outcomes)
+    others = sorted({o.hold.condition for o in done} - set(plan.conditions))
+    return Findings(
+        job_hash=str(about["job_hash"]),
+        simulated=bool(about["simulated"]),
+        motor=about["motor"],
+        rig=about["rig"],
+        software=about["software"],
+        conditions=tuple(
+            of_condition(plan, condition, [o for o in done if o.hold.condition == condition], turned)
+            for condition in (*plan.conditions, *others)
+        ),
+    )
+
+
+def of_condition(
+    plan: Plan, condition: Condition, done: Sequence[Outcome], turned: frozenset[int]
+) -> ConditionFindings:
+    """Findings of one condition from its done holds. turned: numbers of holds that began with the rotor turning."""
+    known = duties(plan, condition, done)
+    exposures = stall_trials(plan, known, done, turned)
+    stall = threshold(STALL, exposures, known.u)
+    start = threshold(START, start_trials(known, done), known.u)
+    falling = speed_points(plan, known, done, Approach.FALLING)
+    rising = speed_points(plan, known, done, Approach.RISING)
+    speed = _branch(falling, exposures, monotone=True)
+    volts = _branch(voltage_points(plan, condition, known, done), exposures, monotone=False)
+    within = usable.usable_range(speed, stall, start, plan.saturation_percent, known.u)
+    return ConditionFindings(
+        condition=condition,
+        hold_time_s=None if plan.stall is None else plan.stall.hold_time_s,
+        start_time_s=None if plan.start is None else plan.start.start_time_s,
+        rest_time_s=None if plan.start is None else plan.start.rest_time_s,
+        stall_duty_percent=stall.finding(0.5),
+        sustain_99_duty_percent=stall.finding(TAIL),
+        start_duty_percent=start.finding(0.5),
+        start_99_duty_percent=start.finding(TAIL),
+        cold_start_duty_percent=not_found(_NOT_YET),
+        long_run_duty_percent=not_found(_NOT_YET),
+        start_stall_hysteresis_percent=start_stall_hysteresis(start, stall),
+        kick_99_s=not_found(_NOT_YET),
+        stall_speed_rpm=usable.at_stall(speed, stall, "speed"),
+        stall_voltage_volts=usable.at_stall(volts, stall, "mean motor voltage"),
+        lowest_reliable_speed_rpm=within.low_speed_rpm,
+        top_speed_rpm=usable.top_speed(speed),
+        linearity_percent=usable.linearity(speed, within),
+        curve_hysteresis_rpm=usable.curve_hysteresis(speed, rising),
+        resolution_rpm_per_step=usable.resolution(speed, within, _step(plan, condition)),
+        repeatability_rpm=usable.repeatability(falling),
+        lapse=not_found(_NOT_YET),
+        coast_time_s=not_found(_NOT_YET),
+        usable_range=within,
+        speed_curve=_speed_curve(speed, fit_curve(rising, monotone=True), known),
+    )
+
+
+def _branch(points: Sequence[Point], exposures: Chosen, *, monotone: bool) -> usable.Branch | None:
+    curve = fit_curve(points, monotone=monotone)
+    if curve is None:
+        return None
+    stops = [trial.duty_percent for trial in exposures.trials if trial.failed is not None]
+    return usable.Branch(curve, lowest_sure_duty([float(d) for d in curve.duty], stops))
+
+
+def _step(plan: Plan, condition: Condition) -> float | None:
+    steps = dict(zip(plan.conditions, plan.duty_step_percent, strict=False))
+    return steps.get(condition)
+
+
+def _speed_curve(falling: usable.Branch | None, rising: Curve | None, known: Duties) -> SpeedCurve:
+    """Fitted speeds at the measured duties of both branches; the accuracy of duty is carried over by the slope."""
+    shown = SpeedCurve()
+    for branch, curve in (("falling", None if falling is None else falling.curve), ("rising", rising)):
+        if curve is None:
+            continue
+        u = curve.u_with_duty(known.u)
+        shown = SpeedCurve(
+            (*shown.duty_percent, *(float(d) for d in curve.duty)),
+            (*shown.speed_rpm, *(float(v) for v in curve.value)),
+            (*shown.u_rpm, *(float(one) for one in u)),
+            (*shown.branch, *(branch for _ in curve.duty)),
+        )
+    return shown

@@ -1,0 +1,188 @@
+"""Findings that are duties: stall, sustain, start, and the step between them. From trials by way of `thresholds`.
+
+Which holds are trials is decided in `evidence`; the numbers come from `thresholds` and `combine`.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from sweeprig.characterise.combine import (
+    K_ONE_SIDED,
+    ONE_SIDED,
+    TWO_SIDED,
+    Summary,
+    difference,
+    quantile,
+    summary,
+    widened,
+)
+from sweeprig.characterise.evidence import Chosen
+from sweeprig.characterise.findings import Bound, Finding, not_found
+from sweeprig.characterise.laws import START_LAWS, STALL_LAWS, Evidence, Floats, Law, summed
+from sweeprig.characterise.thresholds import (
+    START_PRIOR,
+    STALL_PRIOR,
+    Fitted,
+    SpreadPrior,
+    bound_without_contrast,
+    fit,
+)
+
+TAIL = 0.99
+_TAIL_FAILURE = (0.02, 0.20)
+
+
+@dataclass(frozen=True, slots=True)
+class Kind:
+    """What differs between stalling and starting. flags: (all trials succeeded, all failed)."""
+
+    trial: str
+    laws: tuple[Law, ...]
+    prior: SpreadPrior
+    flags: tuple[str, str]
+
+
+STALL = Kind("stall", STALL_LAWS, STALL_PRIOR, ("never_stopped", "always_stopped"))
+START = Kind("start", START_LAWS, START_PRIOR, ("always_started", "never_started"))
+
+
+@dataclass(frozen=True, slots=True)
+class Threshold:
+    """Everything known of one kind of threshold. `fitted` is None where all trials ended alike, or none was made."""
+
+    kind: Kind
+    evidence: Evidence
+    fitted: Fitted | None
+    u_duty: float
+    assumes: tuple[str, ...]
+    flags: tuple[str, ...]
+
+    @property
+    def reason(self) -> str:
+        return f"no {self.kind.trial} trial was done at this condition"
+
+    def finding(self, probability: float) -> Finding:
+        """The duty for `probability` with its 95 % interval (in the tail: the hull over laws); else a bound."""
+        if not self.evidence.holds:
+            return not_found(self.reason)
+        if self.fitted is None:
+            return self._one_sided(probability, "lower" if self.evidence.failures else "upper")
+        shown = self._summary(probability, widen=True)
+        return Finding(
+            value=shown.value,
+            u=shown.u,
+            low=shown.low,
+            high=shown.high,
+            coverage_probability=TWO_SIDED,
+            coverage_factor=shown.coverage_factor,
+            holds=self.evidence.holds,
+            method=self._method(probability),
+            assumes=self.assumes,
+            flags=self._flags(probability, shown.value),
+        )
+
+    def upper(self, probability: float) -> Finding:
+        """The one-sided 95 % upper bound of the duty for `probability`: the lowest duty that can be relied on."""
+        if not self.evidence.holds:
+            return not_found(self.reason)
+        if self.fitted is None and self.evidence.failures:
+            return not_found("every trial failed, so only a lower bound is known", flags=(self.kind.flags[1],))
+        return self._one_sided(probability, "upper")
+
+    def bound(self, probability: float, *, widen: bool) -> float:
+        """That bound as a number, or the lower one where all trials failed. widen: the accuracy of duty in it."""
+        if self.fitted is not None:
+            return self._summary(probability, widen=widen).upper
+        value = bound_without_contrast(self.kind.laws, self.evidence, self.kind.prior, probability)
+        sign = -1.0 if self.evidence.failures else 1.0
+        return value + (sign * K_ONE_SIDED * self.u_duty if widen else 0.0)
+
+    def sample(self, probability: float) -> Floats | None:
+        """Equally likely duties, without the accuracy of duty: it shifts a curve over duty by the same amount."""
+        return None if self.fitted is None else self.fitted.at(probability, hull=False)[0]
+
+    def _summary(self, probability: float, *, widen: bool) -> Summary:
+        if self.fitted is None:
+            raise AssertionError("asked only where a fit exists")
+        samples = self.fitted.at(probability, hull=probability >= TAIL)
+        return summary([widened(one, self.u_duty) for one in samples] if widen else samples)
+
+    def _one_sided(self, probability: float, bound: Bound) -> Finding:
+        value = self.bound(probability, widen=True)
+        return Finding(
+            value=value,
+            low=value if bound == "lower" else None,
+            high=value if bound == "upper" else None,
+            bound=bound,
+            coverage_probability=ONE_SIDED,
+            holds=self.evidence.holds,
+            method=self._method(probability),
+            assumes=self.assumes,
+            flags=self._flags(probability, value),
+        )
+
+    def _method(self, probability: float) -> str:
+        if self.fitted is None:
+            return "beyond it, trials that all ended alike would have had a chance below 5 %; spread by its prior"
+        names = " and ".join(one.law.name for one in self.fitted.kept[: None if probability >= TAIL else 1])
+        hull = ", interval: hull over them" if probability >= TAIL and len(self.fitted.kept) > 1 else ""
+        return f"posterior on a grid, place flat, spread log-normal; law: {names}{hull}"
+
+    def _flags(self, probability: float, value: float) -> tuple[str, ...]:
+        flags = list(self.flags)
+        if self.fitted is None:
+            flags.append(self.kind.flags[1 if self.evidence.failures else 0])
+        elif probability >= TAIL:
+            flags += ["law_assumed"] if len(self.kind.laws) < 2 else []
+            flags += [] if self._tail_was_tried() else ["tail_not_tried"]
+        if self.fitted is not None and not self.evidence.duty[0] <= value <= self.evidence.duty[-1]:
+            flags.append("extrapolated")
+        return tuple(flags)
+
+    def _tail_was_tried(self) -> bool:
+        """Whether a trial was made where the leading law expects 2 to 20 % to fail (definitions, Law of stalling)."""
+        if self.fitted is None:
+            return False
+        lead = self.fitted.kept[0]
+        spread = float(np.exp(np.sum(lead.weight * np.log(lead.spread)[:, None])))
+        x = (self.evidence.duty - quantile(lead.at(0.5), 0.5)) / spread
+        failing = -np.expm1(-lead.law.cumulative(x))
+        return bool(np.any((failing >= _TAIL_FAILURE[0]) & (failing <= _TAIL_FAILURE[1])))
+
+
+def threshold(kind: Kind, chosen: Chosen, u_duty: float) -> Threshold:
+    """Fit `kind`'s laws to the chosen trials."""
+    evidence = summed(chosen.trials)
+    contrast = evidence.failures > 0 and evidence.successes > 0
+    fitted = fit(kind.laws, evidence, kind.prior) if contrast else None
+    assumes = (
+        *chosen.assumes,
+        f"spread {kind.prior.median_percent:g} % duty within a factor of "
+        f"{np.exp(K_ONE_SIDED * kind.prior.log_sd):.1f} (90 %) before the trials",
+    )
+    rejected = fitted.rejected if fitted is not None else ()
+    assumes += tuple(f"{name} rejected by the data" for name in rejected)
+    return Threshold(kind, evidence, fitted, u_duty, assumes, chosen.flags)
+
+
+def start_stall_hysteresis(start: Threshold, stall: Threshold) -> Finding:
+    """Start duty minus stall duty; the accuracy of duty is common to both and cancels."""
+    samples = start.sample(0.5), stall.sample(0.5)
+    if samples[0] is None or samples[1] is None:
+        return not_found("the start duty or the stall duty is only a bound, or was not found")
+    shown = summary([difference(samples[0], samples[1])])
+    return Finding(
+        value=shown.value,
+        u=shown.u,
+        low=shown.low,
+        high=shown.high,
+        coverage_probability=TWO_SIDED,
+        coverage_factor=shown.coverage_factor,
+        holds=tuple(sorted({*start.evidence.holds, *stall.evidence.holds})),
+        method="start duty minus stall duty, distributions subtracted",
+        assumes=("start and stall trials independent", "accuracy of duty common to both"),
+        flags=tuple(sorted({*start.flags, *stall.flags})),
+    )

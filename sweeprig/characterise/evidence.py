@@ -1,0 +1,218 @@
+"""Which holds say what: outcomes become trials for the laws and points for the curves, at the duty that really was.
+
+The rules of selection live here, and only here. No statistics.
+"""
+
+from __future__ import annotations
+
+import math
+from collections import defaultdict
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from sweeprig.characterise.laws import Trial
+from sweeprig.characterise.voltage import mean_motor_voltage
+from sweeprig.holds import Approach, Condition, Outcome, Purpose, Status, Verdict
+from sweeprig.plan import Plan
+
+LEAST_TIME_CONSTANTS = 5.0
+"""A hold tells of stalling when it was meant to last this many of the motor's time constants (definitions, Exposure)."""
+_SHORTEST_GAP_S = 1e-3
+
+
+@dataclass(frozen=True, slots=True)
+class Duties:
+    """Duty of each hold by its number, percent; u is common to all (accuracy), so it does not average away."""
+
+    of: Mapping[int, float]
+    u: float
+    assumes: str
+    flags: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Point:
+    """One hold's settled value at its duty. u: of this mean, accuracy in it. weight: seconds exposed."""
+
+    hold: int
+    duty_percent: float
+    value: float
+    u: float
+    weight: float
+    flags: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
+class Chosen:
+    """Trials of one kind with what the choice leans on."""
+
+    trials: tuple[Trial, ...]
+    assumes: tuple[str, ...] = ()
+    flags: tuple[str, ...] = ()
+
+
+def commanded_duty(plan: Plan, outcome: Outcome) -> float:
+    """The quantised duty that the drive reported, else the hold's own, percent."""
+    reading = outcome.means.get(f"{plan.roles.get('drive', 'drive')}.duty_set")
+    return outcome.hold.duty_percent if reading is None or reading.value is None else reading.value
+
+
+def duties(plan: Plan, condition: Condition, outcomes: Sequence[Outcome]) -> Duties:
+    """The duty of each hold: measured where the rig measures it, else commanded.
+
+    A drive repeats its duty far better than an instrument reads it, so the readings at one setting are taken together
+    (median); settings never read (a rotor stopped before the first reading) take the offset between measured and
+    commanded of their neighbours. Mixing the two bare would shift some trials by the switch delay and not others.
+    """
+    commanded = {o.number: round(commanded_duty(plan, o), 9) for o in outcomes}
+    channel = plan.roles.get("duty")
+    read = [
+        (commanded[o.number], reading.value, reading.u)
+        for o in outcomes
+        if channel is not None and (reading := o.means.get(channel)) is not None and reading.value is not None
+    ]
+    if not read:
+        return _commanded_only(plan, condition, commanded)
+    by_setting: dict[float, list[float]] = defaultdict(list)
+    for setting, value, _ in read:
+        by_setting[setting].append(value - setting)
+    settings = sorted(by_setting)
+    offsets = [float(np.median(by_setting[s])) for s in settings]
+    measured = {number: duty + float(np.interp(duty, settings, offsets)) for number, duty in commanded.items()}
+    return Duties(measured, float(np.median([u for *_, u in read])), f"duty as measured by {channel}", ())
+
+
+def _commanded_only(plan: Plan, condition: Condition, commanded: Mapping[int, float]) -> Duties:
+    bound_percent = plan.switch_delay_s * condition.pwm_hz * 100.0
+    flags = ("duty_commanded",) if bound_percent < 0.1 else ("duty_commanded", "duty_not_measured")
+    return Duties(
+        commanded,
+        bound_percent / math.sqrt(3.0),
+        f"duty as commanded, wrong by at most {bound_percent:.3g} % (switch delay × PWM frequency)",
+        flags,
+    )
+
+
+def stall_trials(plan: Plan, known: Duties, outcomes: Sequence[Outcome], turned_before: frozenset[int]) -> Chosen:
+    """Exposures for the stall law: falling-approach stall holds, and curve holds of the falling branch that qualify.
+
+    A curve hold is the same exposure to the same hazard when it was meant to last at least five time constants and the
+    rotor is known to have turned when it began; a rotor that already stood cannot stop, and counting it would invent a
+    quick stop. Whether it qualifies never depends on how it ended.
+    """
+    if plan.stall is None:
+        return Chosen(())
+    trials, flags, curves = [], set(known.flags), 0
+    for outcome in outcomes:
+        if outcome.hold.approach is not Approach.FALLING or not _is_exposure(plan, outcome, turned_before):
+            continue
+        if outcome.verdict not in (Verdict.TURNING, Verdict.STOPPED):
+            flags.add(f"{outcome.verdict.value}_left_out")
+            continue
+        if outcome.restarts:
+            flags.add("self_restart")
+        curves += outcome.hold.purpose is Purpose.CURVE
+        survived, failed = _times(outcome)
+        ratio = plan.stall.hold_time_s
+        trials.append(
+            Trial(
+                outcome.number,
+                known.of[outcome.number],
+                survived / ratio,
+                None if failed is None else failed / ratio,
+            )
+        )
+    assumes = [known.assumes, "hazard constant in time within a hold; no drift and no scatter between holds"]
+    if curves:
+        assumes.append(f"{curves} holds of the falling curve count as exposures (one step down, rotor seen turning)")
+    return Chosen(tuple(trials), tuple(assumes), tuple(sorted(flags)))
+
+
+def _is_exposure(plan: Plan, outcome: Outcome, turned_before: frozenset[int]) -> bool:
+    if outcome.hold.purpose is Purpose.STALL:
+        return True
+    if outcome.hold.purpose is not Purpose.CURVE:
+        return False
+    return outcome.hold.least_s >= LEAST_TIME_CONSTANTS * plan.time_constant_s and outcome.number in turned_before
+
+
+def _times(outcome: Outcome) -> tuple[float, float | None]:
+    """(seconds survived for certain, width of the interval in which it stopped or None)."""
+    begin, end = outcome.event_between_s
+    if outcome.verdict is not Verdict.STOPPED and not outcome.restarts:
+        return (begin if begin > 0.0 else outcome.exposed_s), None
+    end = max(outcome.exposed_s, begin) if end is None else end
+    return begin, max(end - begin, _SHORTEST_GAP_S)
+
+
+def turning_before(outcomes: Sequence[Outcome]) -> frozenset[int]:
+    """Numbers of the holds at whose beginning the rotor is known to have turned: the hold before it, in the same
+    session, ended with it turning, or its own lead drove it."""
+    known, last = set(), None
+    for outcome in sorted(outcomes, key=lambda o: o.number):
+        relaunched = bool(outcome.hold.lead) and outcome.hold.lead[-1][0] > outcome.hold.duty_percent
+        follows = last is not None and (last.session, last.number) == (outcome.session, outcome.number - 1)
+        went_on = follows and last is not None and last.status is Status.DONE
+        if relaunched or (went_on and last is not None and last.verdict in (Verdict.TURNING, Verdict.STARTED)):
+            known.add(outcome.number)
+        last = outcome
+    return frozenset(known)
+
+
+def start_trials(known: Duties, outcomes: Sequence[Outcome]) -> Chosen:
+    """Start attempts from rest: each one success or one failure."""
+    trials, flags = [], set(known.flags)
+    for outcome in outcomes:
+        if outcome.hold.purpose is not Purpose.START or outcome.hold.approach is not Approach.FROM_REST:
+            continue
+        if outcome.verdict is Verdict.STARTED:
+            trials.append(Trial(outcome.number, known.of[outcome.number], 1.0))
+        elif outcome.verdict is Verdict.DID_NOT_START:
+            trials.append(Trial(outcome.number, known.of[outcome.number], 0.0, 1.0))
+        else:
+            flags.add(f"{outcome.verdict.value}_left_out")
+    return Chosen(tuple(trials), (known.assumes, "trials independent of each other"), tuple(sorted(flags)))
+
+
+def speed_points(plan: Plan, known: Duties, outcomes: Sequence[Outcome], branch: Approach) -> tuple[Point, ...]:
+    """Settled speeds on one branch, rpm: of curve holds, and on the falling branch of stall holds too."""
+    channel, points = plan.roles.get("speed"), []
+    for outcome in _settled(plan, outcomes, branch):
+        reading = None if channel is None else outcome.means.get(channel)
+        if reading is not None and reading.value is not None:
+            points.append(Point(outcome.number, known.of[outcome.number], reading.value, reading.u, _weight(outcome)))
+    return tuple(points)
+
+
+def voltage_points(plan: Plan, condition: Condition, known: Duties, outcomes: Sequence[Outcome]) -> tuple[Point, ...]:
+    """Mean motor voltages of the turning motor on the falling branch, V."""
+    points = []
+    for outcome in _settled(plan, outcomes, Approach.FALLING):
+        volts = mean_motor_voltage(plan, condition, outcome.means)
+        if volts is not None:
+            duty, weight = known.of[outcome.number], _weight(outcome)
+            points.append(Point(outcome.number, duty, volts.volts, volts.u, weight, volts.flags))
+    return tuple(points)
+
+
+def _settled(plan: Plan, outcomes: Sequence[Outcome], branch: Approach) -> list[Outcome]:
+    """Holds of the branch whose means are of a turning rotor. One that stopped counts for the time before, if that
+    was long enough to settle: its readings are of a rotor that had not yet begun to stop."""
+    least = LEAST_TIME_CONSTANTS * plan.time_constant_s
+    purposes = (Purpose.CURVE, Purpose.STALL) if branch is Approach.FALLING else (Purpose.CURVE,)
+    return [
+        o
+        for o in outcomes
+        if o.hold.approach is branch
+        and o.hold.purpose in purposes
+        and (o.verdict is Verdict.TURNING or (o.verdict is Verdict.STOPPED and o.hold.purpose is Purpose.STALL))
+        and (o.verdict is Verdict.TURNING or _times(o)[0] >= least)
+        and not o.restarts
+    ]
+
+
+def _weight(outcome: Outcome) -> float:
+    """Seconds the rotor turned at the duty; the whole hold where the exposure was not timed."""
+    return _times(outcome)[0] or max(outcome.ended - outcome.began, _SHORTEST_GAP_S)

@@ -1,0 +1,147 @@
+"""Laws of stalling and starting: how the chance to fail falls with duty, and the likelihood of what was seen.
+
+Numbers in, log-likelihoods out. No priors, no grids, no outcomes here: `thresholds` and `evidence` have those.
+"""
+
+from __future__ import annotations
+
+import math
+from collections import defaultdict
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import special
+
+Floats = NDArray[np.float64]
+
+LN2 = math.log(2.0)
+GUMBEL_SD = math.pi / math.sqrt(6.0)
+"""Standard deviation of a Gumbel law of unit scale, 1.2825 (definitions: spread = 1.283 / b)."""
+LOGISTIC_SD = math.pi / math.sqrt(3.0)
+_LARGEST_EXPONENT = 690.0
+_SMALLEST_CHANCE = 1e-300
+
+
+@dataclass(frozen=True, slots=True)
+class Law:
+    """One law in the standard coordinate x = (D − D50) / spread, D50 where half of the trials succeed.
+
+    cumulative   H(x) = −ln P(success over one whole trial), any shape; falls with x, H(0) = ln 2
+    offset       p → x at which the chance of success is p; so D_p = D50 + offset(p) · spread
+
+    `spread` is the standard deviation of the law, percent duty. Within a trial the hazard is constant in time: after
+    a part t / T of the trial the rotor still turns with probability exp(−H · t / T).
+    """
+
+    name: str
+    cumulative: Callable[[Floats], Floats]
+    offset: Callable[[float], float]
+
+
+def _exponential(x: Floats) -> Floats:
+    return np.asarray(LN2 * np.exp(np.minimum(-GUMBEL_SD * x, _LARGEST_EXPONENT)), dtype=np.float64)
+
+
+def _gaussian(x: Floats) -> Floats:
+    above = -np.log1p(-special.ndtr(-np.maximum(x, 0.0)))
+    return np.where(x > 0.0, above, -special.log_ndtr(np.minimum(x, 0.0)))
+
+
+def _logistic(x: Floats) -> Floats:
+    return np.asarray(np.logaddexp(0.0, -LOGISTIC_SD * x), dtype=np.float64)
+
+
+EXPONENTIAL = Law("exponential hazard", _exponential, lambda p: math.log(LN2 / -math.log(p)) / GUMBEL_SD)
+"""The law of stalling: h(D) = h0·exp(−b(D − D0)), so H = ln 2 · exp(−b(D − D50)) and spread = 1.283 / b."""
+GAUSSIAN = Law("Gaussian threshold", _gaussian, lambda p: float(special.ndtri(p)))
+"""Chance to get through one trial Φ((D − D50) / spread): the logarithm of the hazard falls with the square of duty."""
+LOGISTIC = Law("logistic threshold", _logistic, lambda p: math.log(p / (1.0 - p)) / LOGISTIC_SD)
+
+STALL_LAWS = (EXPONENTIAL, GAUSSIAN)
+START_LAWS = (LOGISTIC, GAUSSIAN)
+"""The first is the one that findings at 50 % are quoted by; all take part in the hull of a finding in the tail."""
+
+
+@dataclass(frozen=True, slots=True)
+class Trial:
+    """What one exposure showed, in parts of the whole trial (hold time, or one start attempt).
+
+    survived   part of the trial at whose end the rotor was still known to turn (a start that succeeded: 1)
+    failed     width of the interval after `survived` in which it failed; None: it had not failed (censored)
+    """
+
+    hold: int
+    duty_percent: float
+    survived: float
+    failed: float | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Evidence:
+    """Trials summed up without loss. `duty`, `exposure`: (m,); `event_duty`, `event_width`, `events`: (k,).
+
+    exposure   sum over the trials at that duty of the part survived
+    events     number of failures at `event_duty` seen within an interval `event_width`
+    """
+
+    duty: Floats
+    exposure: Floats
+    event_duty: Floats
+    event_width: Floats
+    events: Floats
+    holds: tuple[int, ...]
+
+    @property
+    def failures(self) -> int:
+        return int(self.events.sum())
+
+    @property
+    def successes(self) -> int:
+        return len(self.holds) - self.failures
+
+
+def summed(trials: Sequence[Trial]) -> Evidence:
+    """The sufficient sums of `trials`: with a hazard constant in time, exposures at one duty simply add."""
+    exposure: dict[float, float] = defaultdict(float)
+    events: dict[tuple[float, float], int] = defaultdict(int)
+    for trial in trials:
+        duty = round(trial.duty_percent, 9)
+        exposure[duty] += trial.survived
+        if trial.failed is not None:
+            events[duty, round(trial.failed, 9)] += 1
+    duties, pairs = sorted(exposure), sorted(events)
+    return Evidence(
+        duty=np.array(duties, dtype=np.float64),
+        exposure=np.array([exposure[d] for d in duties], dtype=np.float64),
+        event_duty=np.array([d for d, _ in pairs], dtype=np.float64),
+        event_width=np.array([w for _, w in pairs], dtype=np.float64),
+        events=np.array([events[pair] for pair in pairs], dtype=np.float64),
+        holds=tuple(trial.hold for trial in trials),
+    )
+
+
+def log_likelihood(law: Law, evidence: Evidence, median: Floats, spread: Floats) -> Floats:
+    """Log-likelihood of `evidence` at each (median, spread), percent duty; shapes broadcast, and so does the result.
+
+    A failure in (a, b) of the trial counts S(a) − S(b) = exp(−H·a)·(1 − exp(−H·(b − a))), a trial without one S(a).
+    """
+    place, scale = np.asarray(median)[..., None], np.asarray(spread)[..., None]
+    total = -(law.cumulative((evidence.duty - place) / scale) * evidence.exposure).sum(axis=-1)
+    if evidence.events.size:
+        within = -np.expm1(-law.cumulative((evidence.event_duty - place) / scale) * evidence.event_width)
+        total = total + (np.log(np.maximum(within, _SMALLEST_CHANCE)) * evidence.events).sum(axis=-1)
+    return np.asarray(total, dtype=np.float64)
+
+
+def log_chance_of_same(law: Law, evidence: Evidence, median: Floats, spread: Floats) -> Floats:
+    """Log of the chance that such trials end all alike, as they did: all failed, or none. Shapes as above.
+
+    When each happened is left out: the bound for a motor that never (or always) stopped needs only whether.
+    """
+    if not evidence.failures:
+        return log_likelihood(law, evidence, median, spread)
+    place, scale = np.asarray(median)[..., None], np.asarray(spread)[..., None]
+    failed = -np.expm1(-law.cumulative((evidence.event_duty - place) / scale))
+    return np.asarray((np.log(np.maximum(failed, _SMALLEST_CHANCE)) * evidence.events).sum(axis=-1), dtype=np.float64)

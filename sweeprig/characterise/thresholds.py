@@ -1,0 +1,165 @@
+"""From trials to a threshold duty with its uncertainty: a posterior on a grid, or a bound where no event was seen.
+
+Pure numbers: which holds count as trials is decided in `evidence`, what is written about them in `duties_found`.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from scipy import optimize, special
+
+from sweeprig.characterise.combine import ONE_SIDED, equally_likely
+from sweeprig.characterise.laws import Evidence, Floats, Law, log_chance_of_same, log_likelihood
+
+REJECTED_BELOW = 1.0 / 20.0
+"""A law is rejected when its evidence (mean likelihood over the prior) is less than this part of the best law's."""
+_ROWS, _COARSE, _FINE = 41, 33, 81
+_ZOOMS = 4
+_REACH = 4.0
+_KEPT = 14.0
+
+
+@dataclass(frozen=True, slots=True)
+class SpreadPrior:
+    """Log-normal prior of the spread: median (percent duty) and standard deviation of its natural logarithm.
+
+    The place has a flat prior. The spread needs one that is proper, since data that can be separated (every stop below
+    every survival) allow any spread down to zero; this one is broad: at `log_sd` 1 the middle 95 % span a factor of 50.
+    """
+
+    median_percent: float
+    log_sd: float = 1.0
+
+    def log_density(self, log_spread: Floats) -> Floats:
+        return np.asarray(-0.5 * ((log_spread - math.log(self.median_percent)) / self.log_sd) ** 2)
+
+    def rows(self) -> Floats:
+        centre, reach = math.log(self.median_percent), _REACH * self.log_sd
+        return np.linspace(centre - reach, centre + reach, _ROWS)
+
+
+STALL_PRIOR = SpreadPrior(0.3)
+START_PRIOR = SpreadPrior(0.8)
+"""Small brushed motors: a few tenths of a percent duty for the stall, more for the start (common practice, no source).
+The 1.0 log_sd keeps a motor ten times wider or narrower within reach of the data."""
+
+
+@dataclass(frozen=True, slots=True)
+class Posterior:
+    """Weights (rows, columns), sum 1, at `median` (rows, columns) and `spread` (rows,), percent duty."""
+
+    law: Law
+    median: Floats
+    spread: Floats
+    weight: Floats
+    log_evidence: float
+
+    def at(self, probability: float) -> Floats:
+        """Sample of the duty at which a trial succeeds with `probability`."""
+        return equally_likely(self.median + self.law.offset(probability) * self.spread[:, None], self.weight)
+
+
+def posterior(law: Law, evidence: Evidence, prior: SpreadPrior) -> Posterior:
+    """Posterior of (median, spread) given `evidence`, which must hold a success and a failure; else it is improper.
+
+    Each spread has its own span of medians, found by closing in on where the likelihood is (it has one hill for a
+    given spread); then the spreads without weight are dropped and the rest divided anew.
+    """
+    rows = prior.rows()
+    for points in (_COARSE, _FINE):
+        span_low, span_high = _spans(law, evidence, rows)
+        steps = np.linspace(0.0, 1.0, points)
+        median = span_low[:, None] + (span_high - span_low)[:, None] * steps
+        log_weight = log_likelihood(law, evidence, median, np.exp(rows)[:, None])
+        log_weight += (prior.log_density(rows) + np.log(span_high - span_low))[:, None]
+        if points == _COARSE:
+            rows = _rows_with_weight(rows, log_weight)
+    top = float(log_weight.max())
+    weight = np.exp(log_weight - top)
+    total = float(weight.sum())
+    cell = float(rows[1] - rows[0]) / (_FINE - 1)
+    return Posterior(law, median, np.exp(rows), weight / total, top + math.log(total * cell))
+
+
+def _spans(law: Law, evidence: Evidence, rows: Floats) -> tuple[Floats, Floats]:
+    """For each log spread the lowest and highest median whose log-likelihood is within _KEPT of that row's best."""
+    spread = np.exp(rows)
+    reach = 12.0 * spread + 1.0
+    low, high = float(evidence.duty[0]) - reach, float(evidence.duty[-1]) + reach
+    steps = np.linspace(0.0, 1.0, _COARSE)
+    index = np.arange(_COARSE)
+    for _ in range(_ZOOMS):
+        median = low[:, None] + (high - low)[:, None] * steps
+        value = log_likelihood(law, evidence, median, spread[:, None])
+        inside = value >= value.max(axis=1, keepdims=True) - _KEPT
+        first = np.where(inside, index, _COARSE).min(axis=1)
+        last = np.where(inside, index, -1).max(axis=1)
+        width = (high - low) / (_COARSE - 1)
+        low, high = low + np.maximum(first - 1, 0) * width, low + np.minimum(last + 1, _COARSE - 1) * width
+    return low, high
+
+
+def _rows_with_weight(rows: Floats, log_weight: Floats) -> Floats:
+    best = log_weight.max(axis=1)
+    inside = np.flatnonzero(best >= best.max() - _KEPT)
+    first, last = max(int(inside[0]) - 1, 0), min(int(inside[-1]) + 1, rows.size - 1)
+    return np.linspace(rows[first], rows[last], _ROWS)
+
+
+@dataclass(frozen=True, slots=True)
+class Fitted:
+    """Posteriors of the laws that the data do not reject. The first is the law that findings are quoted by."""
+
+    kept: tuple[Posterior, ...]
+    rejected: tuple[str, ...]
+
+    def at(self, probability: float, *, hull: bool) -> tuple[Floats, ...]:
+        """Samples of the duty for `probability`, one a law; with `hull` false only the first law's."""
+        return tuple(one.at(probability) for one in (self.kept if hull else self.kept[:1]))
+
+
+def fit(laws: Sequence[Law], evidence: Evidence, prior: SpreadPrior) -> Fitted:
+    """Fit every law; keep those whose evidence is at least REJECTED_BELOW of the best. laws[0] leads while kept."""
+    posteriors = [posterior(law, evidence, prior) for law in laws]
+    best = max(one.log_evidence for one in posteriors)
+    kept = [one for one in posteriors if one.log_evidence >= best + math.log(REJECTED_BELOW)]
+    rejected = tuple(one.law.name for one in posteriors if one not in kept)
+    return Fitted(tuple(kept), rejected)
+
+
+def bound_without_contrast(laws: Sequence[Law], evidence: Evidence, prior: SpreadPrior, probability: float) -> float:
+    """One-sided 95 % bound of the duty for `probability` when all trials succeeded (upper) or all failed (lower).
+
+    It is the duty beyond which trials that all end alike would have had a chance below 5 %, the spread weighted by
+    its prior; no prior for the place enters. The worst over `laws`. Percent duty.
+    """
+    found = [_bound(law, evidence, prior, probability) for law in laws]
+    return min(found) if evidence.failures else max(found)
+
+
+def _bound(law: Law, evidence: Evidence, prior: SpreadPrior, probability: float) -> float:
+    rows = prior.rows()
+    spread = np.exp(rows)
+    log_prior = prior.log_density(rows)
+    log_prior = log_prior - special.logsumexp(log_prior)
+
+    def excess(duty: float) -> float:
+        median = np.asarray(duty - law.offset(probability) * spread)
+        chance = special.logsumexp(log_chance_of_same(law, evidence, median, spread) + log_prior)
+        return float(chance) - math.log(1.0 - ONE_SIDED)
+
+    duties = evidence.event_duty if evidence.failures else evidence.duty
+    low, high = _bracket(excess, float(duties[0]) - 1.0, float(duties[-1]) + 1.0)
+    return float(optimize.brentq(excess, low, high, xtol=1e-6))
+
+
+def _bracket(excess: Callable[[float], float], low: float, high: float) -> tuple[float, float]:
+    """Move the ends apart until the sign of `excess` differs; it is monotone and passes 0 for any real trial."""
+    step = 1.0
+    while excess(low) * excess(high) > 0.0:
+        low, high, step = low - step, high + step, 2.0 * step
+    return low, high

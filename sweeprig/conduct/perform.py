@@ -1,0 +1,282 @@
+"""Performing one hold: the lead, the step to the target, cycles of readings until it ended.
+
+What goes wrong is raised: `Spoiled` for a hold that says nothing (it is discarded and asked for again), and the causes
+of `watchman`. The loop in `run` turns them into outcomes.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+
+from sweeprig.conduct.bounds import BOUNDS
+from sweeprig.conduct.rig import OpenRig
+from sweeprig.conduct.settle import LEAST_READINGS, mean_and_u, settled
+from sweeprig.conduct.switch_off import drive_off, still_on
+from sweeprig.conduct.track import Track
+from sweeprig.conduct.watchman import Watchman
+from sweeprig.holds import Approach, Condition, Hold, Purpose, Verdict
+from sweeprig.plan import Plan
+from sweeprig.quantities import Reading
+from sweeprig.roles import DriveSetting, SupplySetting, Window
+
+
+class Spoiled(Exception):
+    """The hold says nothing about the motor; the text is the outcome's reason."""
+
+
+@dataclass(slots=True)
+class Performed:
+    """What a hold gave so far; kept while it goes on, so that a broken hold still leaves its readings on record."""
+
+    readings: list[Reading] = field(default_factory=list)
+    verdict: Verdict = Verdict.UNDECIDED
+    exposed_s: float = 0.0
+    event_between_s: tuple[float, float | None] = (0.0, None)
+    restarts: int = 0
+    means: dict[str, Reading] = field(default_factory=dict)
+    flags: tuple[str, ...] = ()
+
+
+class Performer:
+    """Performs holds on one open rig."""
+
+    def __init__(self, rig: OpenRig, plan: Plan, watch: Watchman, beat: Callable[[int], None]) -> None:
+        self.rig = rig
+        self.plan = plan
+        self.watch = watch
+        self.beat = beat
+        self.supply_v: float | None = None
+
+    # -- the drive and the supply --------------------------------------------------------------------------------
+
+    def power(self, condition: Condition) -> None:
+        """Supply at the condition's voltage, its current limit set and read back."""
+        supply = self.rig.supply
+        if supply is None or self.supply_v == condition.supply_v:
+            return
+        if self.rig.guard.on:
+            drive_off(self.rig)
+        name, limits = self.rig.source["supply"], self.rig.job.rig.limits
+        self.rig.tell(name, supply.apply(SupplySetting(condition.supply_v, limits.current)), self.watch.look)
+        self.rig.tell(name, supply.switch_on(), self.watch.look)
+        self.supply_v = condition.supply_v
+
+    def apply(self, condition: Condition, duty_percent: float, done: Performed) -> None:
+        rig, drive, name = self.rig, self.rig.drive, self.rig.source["drive"]
+        setting = DriveSetting(condition.pwm_hz, duty_percent)
+        # From here on the rotor must be seen turning: the ages count before the first edge of power.
+        rig.guard.drive_on(rig.clock.now())
+        set_values = rig.tell(name, drive.apply(setting), self.watch.look)
+        rig.tell(name, drive.switch_on(), self.watch.look)
+        done.readings.extend(set_values.values())
+        done.means.update(set_values)
+
+    def cycle(self, names: tuple[str, ...], window_s: float, hold: Hold, done: Performed) -> dict[str, Reading]:
+        readings = self.rig.read(names, Window(window_s, hold.condition.pwm_hz), self.watch.look)
+        self.watch.look()
+        done.readings.extend(readings.values())
+        self.beat(hold.number)
+        return readings
+
+    # -- one hold ------------------------------------------------------------------------------------------------
+
+    def perform(self, hold: Hold, done: Performed) -> None:
+        """Fill `done`. The rotor's verdict decides whether the drive stays on: after a stop it goes off at once."""
+        self.power(hold.condition)
+        for duty, seconds in hold.lead:
+            if duty == 0:
+                self._rest(hold, seconds, done)
+            else:
+                self._turn_at(hold, duty, seconds, done)
+        if hold.duty_percent == 0 or hold.purpose in (Purpose.ZERO, Purpose.REST):
+            self._stay_off(hold, done)
+        elif hold.purpose is Purpose.CURVE:
+            self._settle(hold, done)
+        elif hold.purpose is Purpose.START:
+            self._start(hold, done)
+        else:
+            self._expose(hold, done)
+
+    def track(self) -> Track:
+        tacho = self.rig.source["speed"]
+        per_revolution = self.rig.job.motor.pulses_per_revolution
+        return Track(
+            self.rig.roles["speed"], f"{tacho}.edge_age", f"{tacho}.edge_gap", per_revolution, self.rig.clock.now()
+        )
+
+    def _rest(self, hold: Hold, seconds: float, done: Performed) -> None:
+        """Drive off until no edge came for `seconds`."""
+        drive_off(self.rig)
+        clock, age = self.rig.clock, self.rig.rotation_channel
+        until = clock.now() + seconds + BOUNDS["coast_s"]
+        began = clock.now()
+        names = (self.rig.source["speed"],)
+        wait_s = BOUNDS["cycle_window_s"]
+        while True:
+            reading = self.cycle(names, wait_s, hold, done)[age]
+            still_s = min(math.inf if reading.value is None else reading.value, reading.at - began)
+            if still_s >= seconds:
+                return
+            if clock.now() >= until:
+                raise Spoiled(f"the rotor did not come to rest within {BOUNDS['coast_s']:g} s with the drive off")
+            wait_s = min(max(seconds - still_s, BOUNDS["cycle_window_s"]), BOUNDS["trial_window_s"])
+
+    def _turn_at(self, hold: Hold, duty: float, seconds: float, done: Performed) -> None:
+        """The relaunch: turning at `duty` for `seconds`, and seen to turn at its end."""
+        self.apply(hold.condition, duty, done)
+        clock, track = self.rig.clock, self.track()
+        until = track.began + seconds
+        names = (self.rig.source["speed"], *self._guarded())
+        while clock.now() < until:
+            track.take(self.cycle(names, min(BOUNDS["trial_window_s"], seconds), hold, done))
+        if not track.turning(clock.now()):
+            drive_off(self.rig)
+            raise Spoiled(f"the rotor did not turn after {seconds:g} s at {duty:g} %")
+
+    def _guarded(self) -> tuple[str, ...]:
+        names = dict.fromkeys(channel.partition(".")[0] for channel in self.rig.guard.channels())
+        names.pop(self.rig.source["speed"], None)
+        return tuple(names)
+
+    def _stay_off(self, hold: Hold, done: Performed) -> None:
+        """Zero check and rest: everything must say off, all the time."""
+        if self.rig.guard.on:
+            drive_off(self.rig)
+        clock, names = self.rig.clock, self.rig.serving(hold.roles)
+        began = clock.now()
+        cycles = []
+        while clock.now() - began < hold.most_s:
+            readings = self.cycle(names, BOUNDS["cycle_window_s"], hold, done)
+            cycles.append(readings)
+            wrong = still_on(self.rig, readings)
+            if wrong:
+                raise Spoiled(f"with the drive off, {'; '.join(wrong)}")
+        done.verdict = Verdict.STOPPED
+        done.exposed_s = clock.now() - began
+        done.means.update(means_of(cycles))
+
+    def _settle(self, hold: Hold, done: Performed) -> None:
+        """A curve point: cycles until the speed has settled to the tolerance, or the longest wait, or a stop."""
+        self.apply(hold.condition, hold.duty_percent, done)
+        clock, track, names = self.rig.clock, self.track(), self.rig.serving(hold.roles)
+        cycles: list[dict[str, Reading]] = []
+        while True:
+            readings = self.cycle(names, BOUNDS["cycle_window_s"], hold, done)
+            track.take(readings)
+            now = clock.now()
+            exposed = now - track.began
+            if track.stopped_at is not None or (exposed >= hold.least_s and not track.turning(now)):
+                self._stopped(track, exposed, done)
+                return
+            if not track.turning(now):
+                continue
+            cycles.append(readings)
+            reached = settled([speed for _, speed in track.speeds[1:]], self.plan.settle.tolerance_percent)
+            if reached is None or exposed < hold.least_s or not (reached.decided or exposed >= hold.most_s):
+                continue
+            self._turning(track, exposed, done)
+            done.means.update(means_of(cycles[1 + reached.first :]))
+            if not reached.decided:
+                done.flags = (*done.flags, f"not_settled_to_tolerance:{reached.reached_percent:.2g}%")
+            return
+
+    def _expose(self, hold: Hold, done: Performed) -> None:
+        """A stall trial or the run-in: exposed for the hold time whatever settling says; a stop ends it."""
+        self.apply(hold.condition, hold.duty_percent, done)
+        clock, track, names = self.rig.clock, self.track(), self.rig.serving(hold.roles)
+        from_rest = hold.approach is Approach.FROM_REST
+        grace = 5.0 * self.plan.time_constant_s
+        cycles: list[dict[str, Reading]] = []
+        while True:
+            left = hold.most_s - (clock.now() - track.began)
+            window_s = max(min(BOUNDS["trial_window_s"], left), BOUNDS["cycle_window_s"])
+            readings = self.cycle(names, window_s, hold, done)
+            track.take(readings)
+            now = clock.now()
+            exposed = now - track.began
+            at_rest = not track.turning(now) and not (from_rest and exposed < grace)
+            if track.stopped_at is not None or at_rest:
+                self._stopped(track, exposed, done)
+                done.means.update(means_of(cycles[:-1]))
+                break
+            if exposed - window_s >= grace:
+                cycles.append(readings)
+            if exposed >= hold.most_s:
+                self._turning(track, exposed, done)
+                done.means.update(means_of(cycles))
+                break
+        if hold.purpose is Purpose.RUN_IN and done.verdict is Verdict.STOPPED:
+            raise Spoiled(f"the rotor stopped or did not start at {hold.duty_percent:g} % in the run-in")
+
+    def _start(self, hold: Hold, done: Performed) -> None:
+        """From rest, full step; ten whole revolutions within the start time and still turning at its end."""
+        self.apply(hold.condition, hold.duty_percent, done)
+        clock, track, names = self.rig.clock, self.track(), self.rig.serving(hold.roles)
+        cycles: list[dict[str, Reading]] = []
+        while (left := hold.most_s - (clock.now() - track.began)) > 0:
+            window_s = max(min(BOUNDS["cycle_window_s"], left), 0.25)
+            cycles.append(self.cycle(names, window_s, hold, done))
+            track.take(cycles[-1])
+        now = clock.now()
+        started = track.turning(now) and track.revolutions >= BOUNDS["start_revolutions"]
+        done.verdict = Verdict.STARTED if started else Verdict.DID_NOT_START
+        done.exposed_s, done.restarts = now - track.began, track.restarts
+        done.event_between_s = (done.exposed_s, None)
+        done.means.update(means_of(cycles[-2:]))
+        if not started:
+            drive_off(self.rig)
+            if track.revolutions > 0:
+                done.flags = (*done.flags, "twitched")
+
+    # -- how it ended --------------------------------------------------------------------------------------------
+
+    def _stopped(self, track: Track, exposed: float, done: Performed) -> None:
+        drive_off(self.rig)
+        done.verdict, done.exposed_s, done.restarts = Verdict.STOPPED, exposed, track.restarts
+        if track.stopped_at is None:
+            # It never turned: it stopped (or stayed at rest) before the first look could tell.
+            done.event_between_s = (0.0, exposed)
+            return
+        good, missing = track.stopped_at
+        done.event_between_s = (max(good - track.began, 0.0), max(missing - track.began, 0.0))
+        if track.restarts:
+            done.flags = (*done.flags, "self_restart")
+
+    def _turning(self, track: Track, exposed: float, done: Performed) -> None:
+        """Still turning: known up to the last edge seen, not up to the moment of asking."""
+        done.exposed_s = exposed
+        done.event_between_s = (max(min(track.last_edge - track.began, exposed), 0.0), None)
+        done.restarts = track.restarts
+        last = [speed for _, speed in track.speeds[-LEAST_READINGS:]]
+        slow = sum(last) / len(last) < self.plan.lowest_rpm
+        done.verdict = Verdict.UNDECIDED if slow else Verdict.TURNING
+        if slow:
+            done.flags = (*done.flags, "below_lowest_speed")
+
+
+def means_of(cycles: list[dict[str, Reading]]) -> dict[str, Reading]:
+    """Channel → mean over the cycles that gave data; u: standard error of the mean and the instrument's accuracy
+    (common to all its readings, so it does not average down), added in squares."""
+    means: dict[str, Reading] = {}
+    if not cycles:
+        return means
+    for channel, last in cycles[-1].items():
+        if channel.endswith((".edge_age", ".edge_gap")):
+            continue
+        good = [
+            reading for cycle in cycles if (reading := cycle.get(channel)) is not None and reading.value is not None
+        ]
+        if not good:
+            continue
+        mean, u_mean = mean_and_u([reading.value for reading in good if reading.value is not None])
+        u_instrument = sum(reading.u for reading in good) / len(good)
+        flags = tuple(sorted({flag for reading in good for flag in reading.flags}))
+        means[channel] = Reading(mean, math.hypot(u_mean, u_instrument), last.unit, last.at, channel, flags)
+    return means
+
+
+def heartbeat_lapsed(settings: Mapping[str, str]) -> bool:
+    """The drive reports its output off although it was told to be on: the host was silent for too long."""
+    return settings.get("output", "1") in ("0", "OFF")

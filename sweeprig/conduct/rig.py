@@ -1,0 +1,264 @@
+"""The rig while it is in use: adapters on their links, and who serves which role.
+
+Opening, identifying and configuring happen here; switching off in `switch_off`, reading in `perform`.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Iterable, Mapping
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any, cast
+
+from sweeprig.clock import Clock
+from sweeprig.conduct.bounds import BOUNDS
+from sweeprig.conduct.protection import Above, Guard, LockedRotor, Policy
+from sweeprig.dialects import find_dialect
+from sweeprig.errors import ConfigError, LinkError, RoleMissing, SweeprigError, WrongInstrument
+from sweeprig.job import Job
+from sweeprig.link import registry
+from sweeprig.link.link import Link
+from sweeprig.link.together import Result, together
+from sweeprig.quantities import Reading
+from sweeprig.roles import (
+    Adapter,
+    AdapterSetup,
+    Drive,
+    Identity,
+    Steps,
+    Supply,
+    Window,
+)
+
+Traffic = Callable[[str, str, bytes, float], None]
+Look = Callable[[], None]
+
+
+@dataclass(slots=True)
+class OpenRig:
+    """Instruments by their name in the rig file. `source`: role → instrument name for every role that is offered."""
+
+    job: Job
+    clock: Clock
+    adapters: dict[str, Adapter]
+    links: dict[str, Link]
+    source: dict[str, str]
+    roles: Mapping[str, str]
+    guard: Guard
+    traffic: Traffic | None = None
+    identities: dict[str, Identity] = field(default_factory=dict)
+
+    @property
+    def drive(self) -> Drive:
+        return cast(Drive, self.adapters[self.source["drive"]])
+
+    @property
+    def supply(self) -> Supply | None:
+        name = self.source.get("supply")
+        return None if name is None else cast(Supply, self.adapters[name])
+
+    @property
+    def rotation_channel(self) -> str:
+        return f"{self.source['speed']}.edge_age"
+
+    @property
+    def simulated(self) -> bool:
+        return bool(self.identities) and all(identity.simulated for identity in self.identities.values())
+
+    def ask(self, steps: Mapping[str, Steps[Any]], within_s: float, look: Look | None = None) -> dict[str, Result[Any]]:
+        """Drive steps on several instruments at once; one result each, none raised."""
+        pairs = {name: (self.links[name], each) for name, each in steps.items()}
+        return together(pairs, self.clock, self.clock.now() + within_s, look, traffic=self.traffic)
+
+    def tell(self, name: str, steps: Steps[Any], look: Look | None = None) -> Any:
+        """Steps on one instrument; its error is raised with the instrument's name."""
+        return value_of(name, self.ask({name: steps}, BOUNDS["exchange_s"], look)[name])
+
+    def read(self, names: Iterable[str], window: Window, look: Look) -> dict[str, Reading]:
+        """One cycle: all `names` measure side by side over one window. Every reading passes the guard as it comes."""
+        readings: dict[str, Reading] = {}
+        failed: list[tuple[str, SweeprigError]] = []
+        guard, pairs = self.guard, {}
+        for name in names:
+            pairs[name] = (self.links[name], self.adapters[name].measure(window))
+
+        def arrived(name: str, result: Result[Any]) -> None:
+            if result.error is not None:
+                failed.append((name, result.error))
+                return
+            guard.take(result.value)
+            readings.update(result.value)
+
+        deadline = self.clock.now() + window.seconds + BOUNDS["cycle_s"]
+        together(pairs, self.clock, deadline, look, arrived, self.traffic)
+        for name, error in failed:
+            raise named(name, error)
+        return readings
+
+    def serving(self, roles: Iterable[str]) -> tuple[str, ...]:
+        """Instruments that the roles and the protection need, each once; the tachometer always: it feeds the board."""
+        wanted = dict.fromkeys(self.source[role] for role in roles if role in self.source)
+        wanted[self.source["speed"]] = None
+        wanted.update(dict.fromkeys(channel.partition(".")[0] for channel in self.guard.channels()))
+        return tuple(wanted)
+
+    def close(self) -> None:
+        for link in self.links.values():
+            link.close()
+
+
+def named(name: str, error: SweeprigError) -> SweeprigError:
+    """The same error, its text beginning with the instrument's name."""
+    if not error.what.startswith(f"{name}: "):
+        error.what = f"{name}: {error.what}"
+    return error
+
+
+def value_of(name: str, result: Result[Any]) -> Any:
+    if result.error is not None:
+        raise named(name, result.error)
+    return result.value
+
+
+def open_rig(
+    job: Job,
+    clock: Clock,
+    ports: Mapping[str, Any] | None = None,
+    traffic: Traffic | None = None,
+    off_first: bool = False,
+) -> OpenRig:
+    """Build the adapters, open the links, ask everyone who they are. Nothing is set yet.
+
+    `off_first`: before anything else is said, drive and supply are told to be off, blind.
+
+    `ports`: the in-process ports of a simulated bench, for `simbench:` addresses. A failed opening closes all.
+    """
+    adapters = build_adapters(job)
+    source = {role: channel.partition(".")[0] for role, channel in job.rig.roles.items()}
+    _check_actuators(adapters, source)
+    guard = Guard(policies(job, source))
+    rig = OpenRig(job, clock, adapters, {}, source, job.rig.roles, guard, traffic)
+    try:
+        for name, instrument in job.rig.instruments.items():
+            deadline = clock.now() + BOUNDS["open_s"]
+            end = instrument.terminator_bytes
+            rig.links[name] = registry.open_link(instrument.address, clock, deadline, ports=ports, terminator=end)
+        if off_first:
+            actuators = {source[role] for role in ("drive", "supply") if role in source}
+            rig.ask({name: adapters[name].switch_off() for name in actuators}, BOUNDS["off_s"])
+        identify(rig, rig.adapters)
+    except BaseException:
+        rig.close()
+        raise
+    return rig
+
+
+def build_adapters(job: Job) -> dict[str, Adapter]:
+    """The adapters of a job's rig, not connected to anything: unknown names and bad options are refused here."""
+    adapters: dict[str, Adapter] = {}
+    for name, instrument in job.rig.instruments.items():
+        kind = registry.find_adapter(instrument.adapter)
+        dialect = {} if instrument.dialect is None else find_dialect(instrument.dialect, _beside(job))
+        setup = AdapterSetup(
+            name, instrument.options, dialect, instrument.accuracies(), job.motor.pulses_per_revolution
+        )
+        adapters[name] = kind(setup)
+    return adapters
+
+
+def _beside(job: Job) -> Path | None:
+    return job.rig_folder
+
+
+def _check_actuators(adapters: Mapping[str, Adapter], source: Mapping[str, str]) -> None:
+    if not isinstance(adapters[source["drive"]], Drive):
+        raise RoleMissing(
+            f"the instrument '{source['drive']}' has the role drive but its adapter cannot set a duty",
+            remedy="give the role to a PWM source",
+            topic="rig",
+        )
+    if "supply" in source and not isinstance(adapters[source["supply"]], Supply):
+        raise RoleMissing(
+            f"the instrument '{source['supply']}' has the role supply but its adapter cannot set a voltage",
+            remedy="give the role to a supply",
+            topic="rig",
+        )
+    if "edge_age" not in adapters[source["speed"]].channels:
+        raise RoleMissing(
+            f"the tachometer '{source['speed']}' does not tell the age of its last edge; a locked rotor cannot be told",
+            remedy="use an adapter with the channel edge_age",
+            topic="rig",
+        )
+
+
+def policies(job: Job, source: Mapping[str, str]) -> list[Policy]:
+    """The rig file's limits, each lowered to the motor's maximum, as policies. Finite by default."""
+    limits, roles = job.limits(), job.rig.roles
+    ages = limits.longest_age.by_role()
+    found: list[Policy] = []
+    for rule, role, limit in (
+        ("over_current", "current", limits.current),
+        ("over_voltage", "motor_voltage", limits.motor_voltage),
+        ("over_speed", "speed", limits.speed),
+        ("winding_too_hot", "winding_temperature", limits.winding_temperature),
+        ("case_too_hot", "case_temperature", limits.case_temperature),
+    ):
+        if role in roles and limit is not None:
+            debounce = int(BOUNDS["debounce_readings"])
+            found.append(Above(rule, roles[role], limit, ages.get(role, math.inf), debounce))
+    found.append(LockedRotor(f"{source['speed']}.edge_age", limits.locked_rotor_time))
+    return found
+
+
+def identify(rig: OpenRig, names: Iterable[str]) -> None:
+    """Ask who they are, all at once; one that does not answer is asked again after a resynchronise, within `wake_s`.
+
+    A board that resets when its port is opened answers only after a second or two (manual: links)."""
+    until = rig.clock.now() + BOUNDS["wake_s"]
+    waiting = list(names)
+    while waiting:
+        results = rig.ask({name: rig.adapters[name].identify() for name in waiting}, BOUNDS["exchange_s"])
+        for name in list(waiting):
+            error = results[name].error
+            if error is None:
+                rig.identities[name] = results[name].value
+                rig.links[name].identified = True
+                waiting.remove(name)
+            elif not isinstance(error, LinkError) or rig.clock.now() >= until:
+                raise named(name, error)
+            else:
+                rig.links[name].resynchronise(rig.clock.now() + BOUNDS["open_s"])
+
+
+def configure(rig: OpenRig) -> dict[str, dict[str, str]]:
+    """Configure every instrument and return its settings as it reports them."""
+    names = list(rig.adapters)
+    for name, result in rig.ask({n: rig.adapters[n].configure() for n in names}, BOUNDS["configure_s"]).items():
+        value_of(name, result)
+    results = rig.ask({n: rig.adapters[n].settings() for n in names}, BOUNDS["configure_s"])
+    return {name: value_of(name, result) for name, result in results.items()}
+
+
+def same_instruments(rig: OpenRig, saved: Mapping[str, Identity]) -> None:
+    """Refuse to go on with another instrument than the saved run had (maker, model and serial)."""
+    for name, old in saved.items():
+        new = rig.identities.get(name)
+        if new is None or (new.maker, new.model, new.serial) != (old.maker, old.model, old.serial):
+            shown = "nobody" if new is None else f"{new.maker} {new.model}, serial {new.serial}"
+            raise WrongInstrument(
+                f"the instrument '{name}' is another one than this run began with",
+                value=f"{shown} instead of {old.maker} {old.model}, serial {old.serial}",
+                remedy="connect the instrument of the saved run, or start a new run",
+                topic="resume",
+            )
+
+
+def require_heartbeat(rig: OpenRig) -> None:
+    """An unattended real run needs a drive that stops by itself when the host goes silent."""
+    if rig.drive.heartbeat_s is None and not rig.simulated:
+        raise ConfigError(
+            "the drive has no heartbeat: it would keep driving if this computer stopped",
+            remedy="start with --attended and stay with the rig, or use a drive with a heartbeat",
+            topic="safety",
+        )

@@ -1,0 +1,205 @@
+"""The loop: ask the schedule, commit the intent, perform, commit the outcome, ask again. And off on every way out.
+
+In process and, later, inside the runner process: the same loop, the same events, the same orders.
+"""
+
+from __future__ import annotations
+
+import contextlib
+from dataclasses import dataclass, replace
+
+from sweeprig.conduct.heal import heal
+from sweeprig.conduct.perform import Performed, Performer, Spoiled, heartbeat_lapsed
+from sweeprig.conduct.rig import OpenRig, configure
+from sweeprig.conduct.states import Event, OnEvent, Orders, State
+from sweeprig.conduct.switch_off import prove_off, switch_off
+from sweeprig.conduct.watchman import MachineSlept, OffOrdered, TripSeen, Watchman
+from sweeprig.errors import LinkError, OffNotProved, RigError
+from sweeprig.holds import Decision, Finished, Hold, NeedsPerson, Outcome, Status, Verdict
+from sweeprig.logbook import Logbook
+from sweeprig.plan import Plan
+from sweeprig.schedule import next_hold
+
+
+@dataclass(frozen=True, slots=True)
+class Ending:
+    """How a session ended: the state, and why in a sentence."""
+
+    state: State
+    reason: str
+
+
+class _Session:
+    """One start or resume of a run, from proof of off to proof of off."""
+
+    def __init__(
+        self, plan: Plan, rig: OpenRig, logbook: Logbook, session: int, on_event: OnEvent, orders: Orders
+    ) -> None:
+        self.plan = replace(plan, session=session)
+        self.rig, self.logbook, self.session = rig, logbook, session
+        self.clock, self.orders, self.on_event = rig.clock, orders, on_event
+        self.watch = Watchman(rig.clock, rig.guard, orders)
+        self.performer = Performer(rig, self.plan, self.watch, self._beat)
+        self.outcomes = logbook.outcomes()
+        self.healed: dict[str, int] = {}
+
+    def tell(self, kind: str, **data: object) -> None:
+        event = Event(kind, self.clock.now(), data)
+        if kind != "beat":
+            self.logbook.event(kind, event.at, self.clock.utc(), data)
+        self.on_event(event)
+
+    def _beat(self, number: int) -> None:
+        self.on_event(Event("beat", self.clock.now(), {"number": number}))
+
+    def enter(self, state: State, **more: object) -> None:
+        self.tell("state", state=state.words, drive_may_be_on=state.drive_may_be_on, **more)
+
+    # -- opening -------------------------------------------------------------------------------------------------
+
+    def open(self) -> None:
+        """Everyone is identified (by `open_rig`): configure, prove off, conclude what an earlier session left."""
+        self.tell("session", session=self.session, simulated=self.rig.simulated)
+        self.enter(State.PROVING_OFF)
+        switch_off(self.rig)
+        settings = configure(self.rig)
+        for name, identity in self.rig.identities.items():
+            self.logbook.instrument(self.session, name, identity, settings[name], self.clock.now())
+        self._off(told=True)
+        self._conclude_abandoned()
+
+    def _conclude_abandoned(self) -> None:
+        """A hold that was begun and has no outcome: its process died. The drive may have been on all the time."""
+        for hold, session, began, began_utc in self.logbook.unfinished():
+            now, utc = self.clock.now(), self.clock.utc()
+            reason = "the process ended during this hold; how long the drive was on is not known"
+            outcome = Outcome(
+                hold.number, hold, session, Status.ABANDONED, Verdict.UNDECIDED, began, now, began_utc, utc, 0.0,
+                reason=reason,
+            )  # fmt: skip
+            self.logbook.conclude(outcome, [])
+            self.outcomes.append(outcome)
+            self.tell("notice", text=f"hold {hold.number} was found without an outcome and is counted as abandoned")
+
+    # -- the loop ------------------------------------------------------------------------------------------------
+
+    def work(self) -> Ending:
+        while True:
+            decision: Decision = next_hold(self.plan, self.outcomes, self.clock.utc())
+            if isinstance(decision, Finished):
+                self.tell("finished", reason=decision.reason)
+                return Ending(State.FINISHED, decision.reason)
+            if isinstance(decision, NeedsPerson):
+                return Ending(State.WAITING_FOR_PERSON, f"{decision.what} ({decision.why})")
+            if self.orders.finish:
+                return Ending(State.PARKED, "stopped by request after a completed hold")
+            ending = self._one(decision)
+            if ending is not None:
+                return ending
+
+    def _one(self, hold: Hold) -> Ending | None:
+        began, began_utc = self.clock.now(), self.clock.utc()
+        # The intent is durable before the drive moves.
+        self.logbook.intend(hold, self.session, began, began_utc)
+        self.tell("state", state=State.HOLDING.words, drive_may_be_on=True, number=hold.number)
+        self.tell("hold_began", number=hold.number, purpose=str(hold.purpose), why=hold.why, most_s=hold.most_s)
+        done = Performed()
+        status, reason, ending, failed = Status.DONE, "", None, False
+        try:
+            self.performer.perform(hold, done)
+            if self.rig.guard.on and heartbeat_lapsed(
+                self.rig.tell(self.rig.source["drive"], self.rig.drive.settings())
+            ):
+                status, reason = Status.DISCARDED, "heartbeat: the board switched its output off during the hold"
+                self._drive_is_off()
+        except Spoiled as spoiled:
+            status, reason = Status.DISCARDED, str(spoiled)
+            self._drive_is_off()
+        except MachineSlept:
+            status, reason, failed = (
+                Status.DISCARDED,
+                "the machine slept, or its clock was stepped, during the hold",
+                True,
+            )
+        except OffOrdered:
+            status, reason = Status.DISCARDED, "switched off by order"
+            ending = Ending(State.PARKED, "switched off by order")
+        except TripSeen as seen:
+            status, reason = Status.TRIPPED, f"{seen.trip.rule}: {seen.trip.evidence}"
+            ending = Ending(State.TRIPPED, reason)
+        except (LinkError, RigError) as error:
+            status, reason, failed = Status.DISCARDED, str(error), True
+        if ending is not None or failed:
+            self._off_now()
+        self._conclude(hold, done, status, reason, began, began_utc)
+        if ending is not None and ending.state is State.TRIPPED:
+            self.tell("trip", rule=reason.partition(":")[0], evidence=reason)
+        if failed:
+            self._heal(reason)
+        return ending
+
+    def _conclude(
+        self, hold: Hold, done: Performed, status: Status, reason: str, began: float, began_utc: float
+    ) -> None:
+        outcome = Outcome(
+            hold.number, hold, self.session, status, done.verdict, began, self.clock.now(), began_utc, self.clock.utc(),
+            done.exposed_s, done.event_between_s, done.restarts, done.means, done.flags, reason,
+        )  # fmt: skip
+        speed = done.means.get(self.rig.roles["speed"])
+        self.tell(
+            "hold_ended", number=hold.number, status=str(status), verdict=str(done.verdict), reason=reason,
+            speed_rpm=None if speed is None else speed.value,
+        )  # fmt: skip
+        self.logbook.conclude(outcome, done.readings)
+        self.outcomes.append(outcome)
+
+    # -- off -----------------------------------------------------------------------------------------------------
+
+    def _off_now(self) -> None:
+        """At once, without the proof: the links may be broken; the proof comes with healing or at the end."""
+        off = switch_off(self.rig)
+        self.performer.supply_v = None
+        self.tell("off", proved=False, took_s=off.took_s, told=list(off.told), silent=dict(off.silent))
+
+    def _drive_is_off(self) -> None:
+        if self.rig.guard.on:
+            self._off_now()
+
+    def _off(self, told: bool = False) -> None:
+        """Off and proved."""
+        began = self.clock.now()
+        if not told:
+            switch_off(self.rig)
+        self.performer.supply_v = None
+        prove_off(self.rig)
+        self.tell("off", proved=True, took_s=self.clock.now() - began)
+
+    def _heal(self, reason: str) -> None:
+        self.tell("link", instrument="", what=f"a hold was discarded: {reason}")
+        for name in heal(self.rig, self.healed):
+            self.tell("link", instrument=name, what="the link is back, same instrument, settings applied, off proved")
+        self.rig.guard.trip = None
+
+    def close(self) -> None:
+        """The last act of every session."""
+        self._off()
+
+
+def run(plan: Plan, rig: OpenRig, logbook: Logbook, session: int, on_event: OnEvent, orders: Orders) -> Ending:
+    """Work one session of a run to its end. Off is proved at its beginning and on every way out.
+
+    Raises RigError when the rig cannot be used any more (the drive was told to be off first), and OffNotProved when off
+    could not be shown. What was concluded stays in the logbook whatever happens.
+    """
+    at_work = _Session(plan, rig, logbook, session, on_event, orders)
+    try:
+        at_work.open()
+        ending = at_work.work()
+    except BaseException:
+        # Whatever it is, the drive goes off first; the first error is the one to show.
+        with contextlib.suppress(RigError, OffNotProved):
+            at_work.close()
+        raise
+    at_work.close()
+    at_work.enter(ending.state, reason=ending.reason)
+    return ending

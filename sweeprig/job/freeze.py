@@ -1,0 +1,138 @@
+"""From a job to the plan that schedule and characterise are given: conditions, duties, steps, all in stated units.
+
+Pure: the same job gives the same plan. The clock enters only as the moment a run began.
+"""
+
+from __future__ import annotations
+
+from datetime import UTC, datetime
+from itertools import product
+
+from sweeprig.holds import Condition
+from sweeprig.job.models import Job
+from sweeprig.job.sweep_models import Deadline, Sweep
+from sweeprig.plan import CurvePlan, Plan, RunIn, SettlePlan, StallPlan, StartPlan
+
+LOWEST_CURVE_DUTY = 2.0
+"""%: where a curve given by `points` ends unless the sweep says otherwise. Below, no motor we know turns."""
+
+_BOARD_CLOCK_HZ = 16e6
+_PRESCALERS = ((244.2, 1), (30.52, 8), (0.0, 64))  # drivers/firmware/README.md: above this frequency, this prescaler
+
+
+def freeze(job: Job, session: int = 1, began_utc: float | None = None) -> Plan:
+    """The plan of `job`.
+
+    session     start or resume of the run that asks, from 1
+    began_utc   UTC seconds at which the run began: turns a deadline in hours into a moment. Without it such a deadline
+                is not in the plan (a preview); `extra["deadline_hours"]` then has it
+    """
+    rig, motor, sweep = job.rig, job.motor, job.sweep
+    conditions = _conditions(sweep)
+    deadline = _deadline_utc(sweep.deadline, began_utc)
+    hours = sweep.deadline.hours if sweep.deadline is not None and deadline is None else None
+    return Plan(
+        seed=sweep.seed,
+        conditions=conditions,
+        roles=dict(rig.roles),
+        duty_low_percent=sweep.duty.low,
+        duty_high_percent=sweep.duty.high,
+        time_constant_s=motor.longest_time_constant,
+        lowest_rpm=sweep.lowest_speed,
+        zero_time_s=0.0 if sweep.zero is None else sweep.zero.time,
+        run_in=None if sweep.run_in is None else RunIn(sweep.run_in.duty, sweep.run_in.time),
+        curve=_curve(sweep),
+        stall=_stall(sweep),
+        start=_start(sweep),
+        settle=SettlePlan(sweep.settle.tolerance, sweep.settle.confidence),
+        saturation_percent=sweep.saturation,
+        voltage_at=rig.voltage_at or "across_motor",  # cross_checks: stated wherever the role is there
+        current_at=rig.current_at or "supply_lead",
+        switch_delay_s=rig.switch_delay or 0.0,
+        duty_step_percent=_duty_steps(job, conditions),
+        deadline_utc=deadline,
+        session=session,
+        extra={} if hours is None else {"deadline_hours": hours},
+    )
+
+
+def with_deadline(job: Job, began_utc: float) -> Job:
+    """The job with a deadline in hours fixed as a moment in UTC: what is written into the run folder at its start."""
+    moment = _deadline_utc(job.sweep.deadline, began_utc)
+    if moment is None:
+        return job
+    # whole seconds: a deadline is no finer, and TOML dates keep no more than six digits of a second
+    fixed = Deadline(until=datetime.fromtimestamp(round(moment), UTC))
+    return job.model_copy(update={"sweep": job.sweep.model_copy(update={"deadline": fixed})})
+
+
+def board_step_percent(pwm_hz: float) -> float:
+    """One timer tick in percent of the period, for the board at `pwm_hz` (drivers/firmware/README.md)."""
+    prescaler = next(prescaler for above_hz, prescaler in _PRESCALERS if pwm_hz > above_hz)
+    return 100.0 / max(1, round(_BOARD_CLOCK_HZ / prescaler / pwm_hz))
+
+
+def curve_duties(points: int, low: float, high: float) -> tuple[float, ...]:
+    """`points` duties from `high` down to `low`, %, spaced quadratically: the curve bends most at low duty.
+
+    duty_i = low + (high − low)·((points − 1 − i)/(points − 1))², rounded to 0.0001 %.
+    """
+    last = points - 1
+    return tuple(round(low + (high - low) * ((last - i) / last) ** 2, 4) for i in range(points))
+
+
+def curve_low(sweep: Sweep) -> float:
+    """%: the lowest duty of a curve given by `points`."""
+    stated = None if sweep.curve is None else sweep.curve.lowest
+    return max(sweep.duty.low, LOWEST_CURVE_DUTY) if stated is None else stated
+
+
+def _conditions(sweep: Sweep) -> tuple[Condition, ...]:
+    """The product of the axes; PWM frequency changes fastest, load (by a person) slowest."""
+    axes = product(sweep.load, sweep.direction, sweep.supply, sweep.pwm)
+    return tuple(Condition(pwm, supply, direction, load) for load, direction, supply, pwm in axes)
+
+
+def _duty_steps(job: Job, conditions: tuple[Condition, ...]) -> tuple[float, ...]:
+    """One drive step for each condition: as stated, else the board's; empty where it is not known."""
+    if job.rig.drive_step is not None:
+        return (job.rig.drive_step,) * len(conditions)
+    drive = job.rig.instruments.get(job.rig.roles.get("drive", ""))
+    if drive is None or drive.adapter != "board":
+        return ()
+    return tuple(board_step_percent(condition.pwm_hz) for condition in conditions)
+
+
+def _curve(sweep: Sweep) -> CurvePlan | None:
+    curve = sweep.curve
+    if curve is None:
+        return None
+    if curve.duties is not None:
+        duties = tuple(sorted(curve.duties, reverse=True))
+    else:
+        duties = curve_duties(curve.points or 0, curve_low(sweep), sweep.duty.high)
+    return CurvePlan(duties, curve.least, curve.most)
+
+
+def _stall(sweep: Sweep) -> StallPlan | None:
+    stall = sweep.stall
+    if stall is None:
+        return None
+    return StallPlan(stall.search, stall.hold_time, stall.step, stall.holds, stall.relaunch_above, stall.relaunch_time)
+
+
+def _start(sweep: Sweep) -> StartPlan | None:
+    start = sweep.start
+    if start is None:
+        return None
+    return StartPlan(start.search, start.start_time, start.rest_time, start.step, start.trials)
+
+
+def _deadline_utc(deadline: Deadline | None, began_utc: float | None) -> float | None:
+    if deadline is None:
+        return None
+    if deadline.until is not None:
+        return deadline.until.timestamp()
+    if began_utc is None or deadline.hours is None:
+        return None
+    return began_utc + 3600.0 * deadline.hours

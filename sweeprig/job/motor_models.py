@@ -1,0 +1,113 @@
+"""The motor file: its nameplate, the limits its findings must meet, and, for the simulated bench, the true motor.
+
+Field names are the file's keys; quantities are held in base units (V, A, s, rpm, %, degC). No checks across files.
+"""
+
+from __future__ import annotations
+
+import difflib
+from typing import Annotated, Literal
+
+from pydantic import AfterValidator, Field, PlainSerializer, PlainValidator, WithJsonSchema
+
+from sweeprig.job.amounts import Amount, Measure, Number, Strict, Words, problem, read_measure, write_measure
+
+FINDING_UNITS = {
+    "stall_duty_percent": "%", "sustain_99_duty_percent": "%", "start_duty_percent": "%",
+    "start_99_duty_percent": "%", "cold_start_duty_percent": "%", "long_run_duty_percent": "%",
+    "start_stall_hysteresis_percent": "%", "kick_99_s": "s", "stall_speed_rpm": "rpm", "stall_voltage_volts": "V",
+    "lowest_reliable_speed_rpm": "rpm", "top_speed_rpm": "rpm", "linearity_percent": "%",
+    "curve_hysteresis_rpm": "rpm", "resolution_rpm_per_step": "rpm", "repeatability_rpm": "rpm", "coast_time_s": "s",
+    "low_duty_percent": "%", "low_duty_from_rest_percent": "%", "high_duty_percent": "%", "low_speed_rpm": "rpm",
+    "high_speed_rpm": "rpm", "turndown": "1",
+}  # fmt: skip
+"""Findings that may carry a limit, with the unit the limit is written in."""
+
+Bound = Annotated[
+    Measure,
+    PlainValidator(read_measure),
+    PlainSerializer(write_measure),
+    WithJsonSchema({"type": ["string", "number"], "description": "in the finding's unit; turndown: a bare number"}),
+]
+
+
+class FindingLimit(Strict):
+    """What a finding must meet: floats in base units that know their `.unit`; one of the two at least is stated."""
+
+    at_least: Bound | None = None
+    at_most: Bound | None = None
+
+
+def _known_finding(name: str) -> str:
+    if name not in FINDING_UNITS:
+        near = difflib.get_close_matches(name, FINDING_UNITS, 1, 0.5)
+        remedy = f'Did you mean "{near[0]}"?' if near else "Look up the name under findings"
+        raise problem("no finding of that name can carry a limit", name, ", ".join(FINDING_UNITS), remedy)
+    return name
+
+
+_Positive = Annotated[float, Number(0.0, 1e6, "A motor has none of nothing", above=True)]
+_OrZero = Annotated[float, Number(0.0, 1e6, "It cannot be negative")]
+_Spread = Annotated[float, Number(0.0, 50.0, "A standard deviation in percent of the mean")]
+
+
+class SimulatedMotor(Strict):
+    """The true motor of the simulated bench: bare SI numbers, each unit in its name."""
+
+    resistance_ohm: _Positive
+    inductance_henry: _Positive
+    torque_constant_nm_per_a: _Positive
+    inertia_kg_m2: _Positive
+    quadratic_load_nm_s2: _OrZero
+    viscous_friction_nm_s: _OrZero
+    running_friction_nm: _Positive
+    running_friction_spread_percent: _Spread
+    breakaway_friction_nm: _Positive
+    breakaway_friction_spread_percent: _Spread
+    friction_correlation_s: _Positive
+    barrier_angle_rad: _Positive
+    thermal_resistance_k_per_w: _Positive
+    thermal_time_constant_s: _Positive
+
+
+_Voltage = Annotated[float, Amount("V", 0.0, 100.0, "sweeprig is for small motors on extra-low voltage", above=True)]
+_Time = Annotated[float, Amount("s", 0.1, 3600.0, "Shorter than 0.1 s no switch-off is in time")]
+
+
+class Motor(Strict):
+    """A motor as its nameplate and its owner describe it.
+
+    kind                   `brushed`, or `with_electronics` (a fan with its own commutation inside)
+    longest_time_constant  of speed after a step of duty, mechanical or electrical, s; an estimate on the long side
+    locked_rotor_time      longest time it may stand still with the drive on at maximum voltage, s
+    longest_restart_time   kind `with_electronics`: longest pause before it tries to start again by itself, s
+    """
+
+    name: Annotated[str, Words(80)]
+    kind: Literal["brushed", "with_electronics"]
+    load: Literal["fan", "pump", "stirrer", "other", "none"]
+    nominal_voltage: _Voltage
+    maximum_voltage: _Voltage
+    maximum_current: Annotated[float, Amount("A", 0.0, 50.0, "sweeprig is for small motors", above=True)]
+    maximum_speed: Annotated[float, Amount("rpm", 0.0, 200_000.0, "No small motor turns faster", above=True)]
+    locked_rotor_time: _Time
+    pulses_per_revolution: Annotated[
+        float, Number(0.0, 10_000.0, "Speed is pulse rate over pulses per revolution", above=True)
+    ]
+    longest_time_constant: Annotated[
+        float, Amount("s", 0.001, 600.0, "Holds last at least five time constants, and holds must end")
+    ]
+    longest_restart_time: _Time | None = None
+    maximum_duty: (
+        Annotated[float, Amount("%", 0.0, 100.0, "Duty is the on-time in percent of the period", above=True)] | None
+    ) = None
+    maximum_temperature: Annotated[float, Amount("degC", 0.0, 250.0, "Of the winding")] | None = None
+    maker: Annotated[str, Words()] | None = None
+    part_number: Annotated[str, Words()] | None = None
+    serial: Annotated[str, Words()] | None = None
+    lot: Annotated[str, Words()] | None = None
+    attitude: Annotated[str, Words()] | None = None
+    hours_before: Annotated[float, Number(0.0, 1e6, "Hours it had run before this job")] | None = None
+    starts_before: Annotated[float, Number(0.0, 1e9, "Starts it had made before this job")] | None = None
+    limits: dict[Annotated[str, AfterValidator(_known_finding)], FindingLimit] = Field(default_factory=dict)
+    simulated: SimulatedMotor | None = None

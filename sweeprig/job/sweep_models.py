@@ -1,0 +1,140 @@
+"""The sweep file: what to find out, and where: axes, curve, stall and start trials, settling, deadline.
+
+Field names are the file's keys; quantities are held in base units (Hz, V, s, %, rpm). No checks across tables.
+"""
+
+from __future__ import annotations
+
+from datetime import datetime
+from typing import Annotated, Literal
+
+from pydantic import AfterValidator, Field
+
+from sweeprig.job.amounts import Amount, Number, Strict, Words, problem
+
+_PWM = Amount(
+    "Hz", 20.0, 100_000.0, "Below 20 Hz the rotor follows single pulses; above 100 kHz a duty step exceeds 0.6 %"
+)
+_DUTY = Amount("%", 0.0, 100.0, "Duty is the on-time in percent of the period")
+_SUPPLY = Amount("V", 0.0, 100.0, "A motor needs some supply, and sweeprig is for extra-low voltage", above=True)
+_STEP = Amount("%", 0.01, 10.0, "Finer than the drive's own step cannot be set, coarser finds no threshold")
+_HOLD = Amount("s", 0.5, 86_400.0, "A hold must see several turns, and must end")
+_RELAUNCH = Amount("%", 10.0, 100.0, "A falling approach begins at least 10 % duty above the stall duty")
+
+
+def _all_different(items: tuple[object, ...]) -> tuple[object, ...]:
+    """Refuse a value that stands twice on an axis: its condition would be measured twice under one name."""
+    for item in items:
+        if items.count(item) > 1:
+            raise problem("a value stands twice in this list", None, "each once", 'Remove one; "1 kHz" is "1000 Hz"')
+    return items
+
+
+_Different = AfterValidator(_all_different)
+_Axis = Field(min_length=1, max_length=20, strict=False)
+
+
+class DutyRange(Strict):
+    """Lowest and highest duty that a hold may use, %."""
+
+    low: Annotated[float, _DUTY] = 0.0
+    high: Annotated[float, _DUTY] = 100.0
+
+
+class Zero(Strict):
+    """Everything read with the drive off before anything turns."""
+
+    time: Annotated[float, Amount("s", 0.5, 600.0, "Offsets are means of several readings")] = 3.0
+
+
+class RunInStage(Strict):
+    """Warm-up at a fixed duty, again in each session."""
+
+    duty: Annotated[float, _DUTY]
+    time: Annotated[float, Amount("s", 1.0, 86_400.0, "A winding warms in minutes")]
+
+
+class Curve(Strict):
+    """Speed against duty, downwards and upwards again.
+
+    points, lowest   so many duties, denser at low duty, from the range's high end down to `lowest`
+    duties           or these very ones, %; then `points` is left out
+    least, most      shortest and longest wait for the speed to settle at each, s
+    """
+
+    points: Annotated[int, Number(3, 100, "A curve needs three points", whole=True)] | None = None
+    lowest: Annotated[float, _DUTY] | None = None
+    duties: (
+        Annotated[tuple[Annotated[float, _DUTY], ...], Field(min_length=3, max_length=100, strict=False), _Different]
+        | None
+    ) = None
+    least: Annotated[float, Amount("s", 0.1, 600.0)] = 2.0
+    most: Annotated[float, Amount("s", 1.0, 3600.0)] = 20.0
+
+
+class Stall(Strict):
+    """Trials of falling approach: relaunch well above, step down, expose for `hold_time`."""
+
+    search: Literal["ladder"] = "ladder"
+    hold_time: Annotated[float, _HOLD]
+    step: Annotated[float, _STEP] = 0.5
+    holds: Annotated[int, Number(4, 10_000, "Fewer say nothing about a threshold", whole=True)]
+    relaunch_above: Annotated[float, _RELAUNCH] = 12.0
+    relaunch_time: Annotated[float, Amount("s", 0.5, 600.0)] = 4.0
+
+
+class Start(Strict):
+    """Trials from rest: no edge for `rest_time`, then a full step, watched for `start_time`."""
+
+    search: Literal["ladder"] = "ladder"
+    start_time: Annotated[float, Amount("s", 0.5, 600.0, "A start is ten whole turns")]
+    rest_time: Annotated[float, Amount("s", 1.0, 3600.0, "Rest is seen as a time without edges")] = 10.0
+    step: Annotated[float, _STEP] = 0.5
+    trials: Annotated[int, Number(4, 10_000, "Fewer say nothing about a threshold", whole=True)]
+
+
+class Settle(Strict):
+    """When a reading counts as settled: within `tolerance` of its final value, with `confidence`."""
+
+    tolerance: Annotated[float, Amount("%", 0.5, 20.0, "Finer than 0.5 % takes longer than it is worth")] = 1.0
+    confidence: Annotated[float, Amount("%", 80.0, 99.9)] = 99.0
+
+
+def _with_zone(moment: datetime) -> datetime:
+    if moment.tzinfo is None:
+        example = f"{moment.replace(microsecond=0).isoformat()}+01:00"
+        raise problem(
+            "a time without its offset from UTC is ambiguous", str(moment), "", f"Write for example {example}"
+        )
+    return moment
+
+
+class Deadline(Strict):
+    """When the run must have finished: a moment, or hours after its start (then fixed as UTC when it starts)."""
+
+    until: Annotated[datetime, AfterValidator(_with_zone)] | None = None
+    hours: Annotated[float, Number(0.0, 1000.0, "A deadline lies ahead", above=True)] | None = None
+
+
+class Sweep(Strict):
+    """A sweep. A table that is left out ([run_in], [curve], [stall], [start]) is not done."""
+
+    name: Annotated[str, Words(80)]
+    pwm: Annotated[tuple[Annotated[float, _PWM], ...], _Axis, _Different]
+    supply: Annotated[tuple[Annotated[float, _SUPPLY], ...], _Axis, _Different]
+    direction: Annotated[tuple[Literal["forward", "reverse"], ...], _Axis, _Different] = ("forward",)
+    load: Annotated[tuple[Annotated[str, Words(80)], ...], _Axis, _Different] = ("free air",)
+    duty: DutyRange = Field(default_factory=DutyRange)
+    lowest_speed: Annotated[
+        float,
+        Amount("rpm", 0.0, 100_000.0, "Slower than this the tachometer cannot tell turning from rest", above=True),
+    ]
+    seed: Annotated[int, Number(0, 999_999_999, "Random choices are drawn from it", whole=True)] = 1
+    saturation: Annotated[float, Amount("%", 0.1, 20.0, "The usable range ends so far below the highest speed")] = 2.0
+    zero: Zero | None = None
+    run_in: RunInStage | None = None
+    curve: Curve | None = None
+    stall: Stall | None = None
+    start: Start | None = None
+    settle: Settle = Field(default_factory=Settle)
+    deadline: Deadline | None = None

@@ -1,0 +1,117 @@
+"""Starting and resuming runs: run folder, logbook, clock and links put together around `conduct.run`.
+
+The one place that chooses between real links, a served simulated bench and the in-process one.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from contextlib import closing
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from sweeprig.clock import Clock, SystemClock
+from sweeprig.conduct.rig import build_adapters, open_rig, require_heartbeat, same_instruments
+from sweeprig.conduct.run import Ending, run
+from sweeprig.conduct.states import OnEvent, Orders
+from sweeprig.errors import ConfigError
+from sweeprig.job import Job, document, freeze, job_hash, load
+from sweeprig.logbook import Logbook
+from sweeprig.logbook.run_folder import JOB, LOGBOOK, TRAFFIC, create_run_folder
+from sweeprig.logbook.traffic import TrafficLog
+
+
+@dataclass(frozen=True, slots=True)
+class Launched:
+    """path: the run folder; ending: how this session ended."""
+
+    path: Path
+    ending: Ending
+
+
+def _nobody(event: object) -> None:
+    del event
+
+
+def in_process(job: Job) -> bool:
+    """Every instrument is answered by the simulated bench inside this process."""
+    kinds = {instrument.address.startswith("simbench:") for instrument in job.rig.instruments.values()}
+    if kinds == {True, False}:
+        raise ConfigError(
+            "some instruments have simbench: addresses and some have not; a simulated bench cannot move a real motor",
+            remedy="give all instruments simbench: addresses, or none",
+            topic="simbench",
+        )
+    return kinds == {True}
+
+
+def start(
+    job: Job | Path | str,
+    runs: Path | str = "runs",
+    *,
+    attended: bool = False,
+    on_event: OnEvent = _nobody,
+    orders: Orders | None = None,
+) -> Launched:
+    """Begin a new run in a new folder under `runs` and work it to the end of its first session.
+
+    Errors: ConfigError before anything moves; RigError, DiskFull with the drive off; nothing concluded is lost.
+    """
+    if not isinstance(job, Job):
+        job = load(job)
+    build_adapters(job)  # unknown adapters and bad options are found before a folder is made
+    text = document(job)
+    folder = create_run_folder(Path(runs), job.motor.name, SystemClock().utc(), text)
+    traffic = TrafficLog(folder / TRAFFIC)
+    logbook = Logbook.create(folder / LOGBOOK, text, job_hash(text), software(), traffic=traffic)
+    return Launched(folder, _session(job, logbook, traffic, attended, on_event, orders or Orders()))
+
+
+def resume(
+    path: Path | str, *, attended: bool = False, on_event: OnEvent = _nobody, orders: Orders | None = None
+) -> Launched:
+    """Go on with a run that ended or was killed: a new session, warm-up done again, nothing lost, nothing doubled."""
+    folder = Path(path)
+    job = load(folder / JOB)
+    traffic = TrafficLog(folder / TRAFFIC)
+    logbook = Logbook.open(folder / LOGBOOK, traffic=traffic)
+    return Launched(folder, _session(job, logbook, traffic, attended, on_event, orders or Orders()))
+
+
+def _session(
+    job: Job, logbook: Logbook, traffic: TrafficLog, attended: bool, on_event: OnEvent, orders: Orders
+) -> Ending:
+    with logbook, closing(traffic):
+        saved = {seen.name: seen.identity for seen in reversed(logbook.instruments())}
+        session, clock, ports = _clock_and_ports(job, logbook, attended)
+        rig = open_rig(job, clock, ports, traffic)
+        try:
+            same_instruments(rig, saved)
+            if not attended:
+                require_heartbeat(rig)
+            return run(freeze(job, session), rig, logbook, session, on_event, orders)
+        finally:
+            rig.close()
+
+
+def _clock_and_ports(job: Job, logbook: Logbook, attended: bool) -> tuple[int, Clock, Mapping[str, Any] | None]:
+    """The session's number, its clock, and the ports of the in-process bench where there is one.
+
+    On the simulated bench the run clock and UTC go on where the last session left them."""
+    info = {"attended": attended, "software": software()}
+    if not in_process(job):
+        clock: Clock = SystemClock(job.rig.rate or 1.0)
+        return logbook.begin_session(clock.now(), clock.utc(), info), clock, None
+    from sweeprig.simbench import build
+
+    began, began_utc = logbook.last_times() or (0.0, None)
+    bench = build(job, session=len(logbook.sessions()) + 1, began=began, began_utc=began_utc)
+    return logbook.begin_session(bench.clock.now(), bench.clock.utc(), info), bench.clock, bench.ports
+
+
+def software() -> str:
+    """Name and version for the record."""
+    from importlib.metadata import version
+
+    return f"sweeprig {version('sweeprig')}"

@@ -1,0 +1,131 @@
+"""How the logbook's file is opened, and what SQLite's errors mean to a person. No tables and no values here.
+
+The file is opened through SQLite and in no other way: opening and closing it otherwise drops the locks of this process.
+"""
+
+from __future__ import annotations
+
+import sqlite3
+from collections.abc import Iterator
+from contextlib import closing, contextmanager
+from pathlib import Path
+
+from sweeprig.errors import DiskFull, RunError, RunInUse, Where
+from sweeprig.logbook.schema import APPLICATION, BUSY_MS, FORMAT
+
+_LOCKED = (sqlite3.SQLITE_BUSY, sqlite3.SQLITE_LOCKED)
+_NOT_WRITTEN = (sqlite3.SQLITE_READONLY, sqlite3.SQLITE_IOERR, sqlite3.SQLITE_CANTOPEN, sqlite3.SQLITE_PERM)
+_NOT_SOUND = (sqlite3.SQLITE_NOTADB, sqlite3.SQLITE_CORRUPT)
+_NEEDS_RECOVERY = (sqlite3.SQLITE_READONLY, sqlite3.SQLITE_CANTOPEN)
+_RESUMABLE = "Nothing that was committed is lost"
+
+
+@contextmanager
+def mapped(path: Path, *, writing: bool) -> Iterator[None]:
+    """The one place where SQLite's errors become ours: DiskFull, RunInUse or RunError, the cause kept."""
+    try:
+        yield
+    except sqlite3.Error as error:
+        raise meaning(error, path, writing=writing) from error
+
+
+def meaning(error: sqlite3.Error, path: Path, *, writing: bool) -> RunError:
+    """What `error` means for the logbook at `path`."""
+    code = primary_code(error)
+    where = Where(str(path))
+    if code in _LOCKED:
+        remedy = "Wait until the other process has ended, or end it, then resume"
+        return RunInUse(f"the logbook stayed locked for {BUSY_MS} ms", value=str(error), where=where, remedy=remedy)
+    if code in _NOT_SOUND:
+        remedy = "Check that this is the logbook of a run; take a copy from before if there is one"
+        return RunError("this is not a sound logbook", value=str(error), where=where, remedy=remedy)
+    if code == sqlite3.SQLITE_FULL:
+        remedy = f"{_RESUMABLE}: make room on the disk, then resume the run"
+        return DiskFull("the logbook cannot grow, the disk is full", where=where, remedy=remedy)
+    if writing and code in _NOT_WRITTEN:
+        remedy = f"{_RESUMABLE}: see that the disk has room, is sound and may be written, then resume the run"
+        return DiskFull("the logbook cannot be written", value=str(error), where=where, remedy=remedy)
+    if code in _NEEDS_RECOVERY:
+        remedy = "Copy the whole run folder to a place where you may write, and open it there"
+        return RunError("the logbook cannot be opened", value=str(error), where=where, remedy=remedy)
+    return RunError("the logbook cannot be used", value=str(error), where=where, remedy=_RESUMABLE)
+
+
+def primary_code(error: sqlite3.Error) -> int:
+    """SQLite's primary result code; 1 (a general error) where the library gives none."""
+    return getattr(error, "sqlite_errorcode", sqlite3.SQLITE_ERROR) & 0xFF
+
+
+def connect(path: Path, mode: str) -> sqlite3.Connection:
+    """A connection in autocommit. `mode`: `ro`, `rw` (the file must be there) or `rwc` (made if need be)."""
+    uri = f"{path.absolute().as_uri()}?mode={mode}"
+    return sqlite3.connect(uri, uri=True, isolation_level=None, timeout=BUSY_MS / 1000.0)
+
+
+def open_for_writing(path: Path) -> sqlite3.Connection:
+    """The logbook with write-ahead log and full synchronisation. RunError, RunInUse or DiskFull where that fails."""
+    require(path)
+    with mapped(path, writing=True):
+        connection = connect(path, "rw")
+        try:
+            check_format(connection, path)
+            journal = connection.execute("PRAGMA journal_mode = WAL").fetchone()[0]
+            if journal != "wal":
+                what = "this disk cannot hold a logbook that is read while it is written"
+                raise RunError(what, where=Where(str(path)), remedy="Run on a local disk, and copy afterwards")
+            connection.execute("PRAGMA synchronous = FULL")
+            connection.execute("PRAGMA fullfsync = ON")  # macOS only: its fsync alone leaves data in the disk's cache
+            connection.execute("PRAGMA foreign_keys = ON")
+        except BaseException:
+            connection.close()
+            raise
+    return connection
+
+
+def ask_once(path: Path, sql: str, values: tuple[object, ...]) -> list[tuple[object, ...]]:
+    """The rows of one query, on a read-only connection that is closed before this returns.
+
+    A connection that stays open would keep the writer from ending the run as one file.
+    """
+    require(path)
+    with mapped(path, writing=False):
+        try:
+            return _ask(path, "ro", sql, values)
+        except sqlite3.Error as error:
+            if primary_code(error) not in _NEEDS_RECOVERY:
+                raise
+        # Killed in the middle of a rollback journal: only a connection that may write can put that right.
+        return _ask(path, "rw", sql, values)
+
+
+def _ask(path: Path, mode: str, sql: str, values: tuple[object, ...]) -> list[tuple[object, ...]]:
+    with closing(connect(path, mode)) as connection:
+        check_format(connection, path)
+        return connection.execute(sql, values).fetchall()
+
+
+def check_format(connection: sqlite3.Connection, path: Path) -> None:
+    """RunError unless the file is a logbook of the format that this release reads."""
+    application = connection.execute("PRAGMA application_id").fetchone()[0]
+    found = connection.execute("PRAGMA user_version").fetchone()[0]
+    where = Where(str(path))
+    if application != APPLICATION:
+        remedy = "Name a run folder, or the logbook.sqlite in it"
+        raise RunError("this database is not a logbook", where=where, remedy=remedy)
+    if found != FORMAT:
+        newer = "It was written by a newer release: install that one to read it"
+        remedy = newer if found > FORMAT else "It is damaged, or was changed by another program"
+        raise RunError(
+            "the logbook's format is unknown to this release",
+            value=str(found),
+            allowed=str(FORMAT),
+            where=where,
+            remedy=remedy,
+        )
+
+
+def require(path: Path) -> None:
+    """RunError where there is no file at `path`."""
+    if not path.is_file():
+        remedy = "Name a run folder; a run that ended before its first hold has no logbook: start it anew"
+        raise RunError("there is no logbook here", where=Where(str(path)), remedy=remedy)

@@ -1,0 +1,149 @@
+"""What each finding is called for people: name, unit, which way is worse, and one sentence of meaning.
+
+The keys are those of findings.json. A key that is not listed here is still shown, under its own name.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+_UNITS = {
+    "percent": "%", "rpm": "rpm", "volts": "V", "amps": "A", "s": "s", "hz": "Hz", "ohm": "ohm", "step": "rpm/step",
+}  # fmt: skip
+CONDITION_FIELDS = ("pwm_hz", "supply_v", "direction", "load", "thermal", "freewheel")
+TIMES = ("hold_time_s", "start_time_s", "rest_time_s")
+
+
+@dataclass(frozen=True, slots=True)
+class Meaning:
+    """worse: 'high' where the largest value over conditions is the worst, 'low', or '' where neither is.
+
+    says: the definition; {hold_time}, {start_time}, {rest_time} and {saturation} are filled in by the page.
+    """
+
+    name: str
+    unit: str
+    worse: str
+    says: str
+
+
+MEANINGS: dict[str, Meaning] = {
+    "usable_range.low_duty_percent": Meaning(
+        "Lowest reliable duty", "%", "high",
+        "One-sided 95 % upper bound of the duty that 99 % of holds of {hold_time} survive. With a kick-start pulse "
+        "the usable range begins here.",
+    ),
+    "usable_range.low_duty_from_rest_percent": Meaning(
+        "Lowest reliable duty from rest", "%", "high",
+        "One-sided 95 % upper bound of the duty at which 99 % of starts succeed within {start_time}. Without a kick "
+        "the usable range begins here.",
+    ),
+    "usable_range.high_duty_percent": Meaning(
+        "Upper end of the usable range", "%", "low",
+        "The lowest duty whose fitted speed is within {saturation} of the highest fitted speed.",
+    ),
+    "usable_range.low_speed_rpm": Meaning(
+        "Lowest usable speed", "rpm", "high", "The fitted speed at the lowest reliable duty.",
+    ),
+    "usable_range.high_speed_rpm": Meaning(
+        "Highest usable speed", "rpm", "low", "The fitted speed at the upper end of the usable range.",
+    ),
+    "usable_range.turndown": Meaning(
+        "Turndown", "1", "low", "Highest over lowest usable speed.",
+    ),
+    "lowest_reliable_speed_rpm": Meaning(
+        "Lowest reliable speed", "rpm", "high", "The fitted speed at the lowest reliable duty; a bound.",
+    ),
+    "stall_duty_percent": Meaning(
+        "Stall duty", "%", "high",
+        "The duty at which half of all holds of {hold_time}, reached from above, are survived.",
+    ),
+    "sustain_99_duty_percent": Meaning(
+        "Sustaining duty, 99 %", "%", "high", "The duty at which 99 % of such holds are survived.",
+    ),
+    "start_duty_percent": Meaning(
+        "Start duty", "%", "high",
+        "The duty at which half of all starts from rest (no edge for {rest_time}) succeed: at least ten revolutions "
+        "within {start_time} and still turning at its end.",
+    ),
+    "start_99_duty_percent": Meaning(
+        "Start duty, 99 %", "%", "high", "The duty at which 99 % of such starts succeed.",
+    ),
+    "cold_start_duty_percent": Meaning(
+        "Cold start duty", "%", "high", "The start duty of the first starts of the night; never pooled with warm ones.",
+    ),
+    "long_run_duty_percent": Meaning(
+        "Long-run duty", "%", "high",
+        "One-sided 95 % upper bound of the duty for the service time; rests on the assumptions named beside it.",
+    ),
+    "start_stall_hysteresis_percent": Meaning(
+        "Start duty over stall duty", "%", "high", "Start duty less stall duty.",
+    ),
+    "kick_99_s": Meaning(
+        "Kick-start pulse, 99 %", "s", "high",
+        "The pulse at the kick duty after which 99 % of starts succeed and last; upper bound.",
+    ),
+    "stall_speed_rpm": Meaning(
+        "Stall speed", "rpm", "high", "The settled speed on the falling branch at the stall duty.",
+    ),
+    "stall_voltage_volts": Meaning(
+        "Mean motor voltage at the stall duty", "V", "high", "The mean motor voltage there, over whole PWM periods.",
+    ),
+    "top_speed_rpm": Meaning("Top speed", "rpm", "low", "The highest fitted speed in the allowed range of duty."),
+    "linearity_percent": Meaning(
+        "Departure from a straight line", "%", "high",
+        "Largest departure of the fitted speed from the best straight line in the usable range, of the top speed.",
+    ),
+    "curve_hysteresis_rpm": Meaning(
+        "Rising less falling branch", "rpm", "high", "Largest difference of the two branches at one duty.",
+    ),
+    "resolution_rpm_per_step": Meaning(
+        "Speed step", "rpm/step", "high", "Largest change of the fitted speed for one step of the drive.",
+    ),
+    "repeatability_rpm": Meaning(
+        "Repeatability", "rpm", "high",
+        "Pooled standard deviation of the settled speed over repeated holds at one setting, worst of three segments.",
+    ),
+    "lapse": Meaning("Lapse", "1", "high", "Share of stops that duty does not cure."),
+    "coast_time_s": Meaning("Coast-down time", "s", "high", "From drive off to the last edge."),
+}  # fmt: skip
+
+FLAGS: dict[str, str] = {
+    "never_stopped": "the motor never stopped in the allowed range: a bound, not a value",
+    "never_started": "the motor never started in the allowed range: a bound, not a value",
+    "always_started": "the motor started at every duty tried: a bound, not a value",
+    "law_assumed": "depends on the assumed law; the data cannot choose between laws",
+    "extrapolated": "read off the curve beyond the last duty that always turned",
+    "not_monotone": "the speed falls again at higher duty",
+    "free_air": "no load was stated: free air",
+    "self_restart": "the rotor stopped and restarted by itself",
+    "supply_limited": "the supply's current limit acted",
+    "not_settled_to_tolerance": "some holds did not settle to the tolerance",
+    "duty_commanded": "the commanded duty was taken; no duty was measured",
+    "duty_not_measured": "no duty was measured, and the switch's delay may shift it by 0.1 % or more",
+    "no_replicates": "no setting was repeated: scatter between holds is not in u",
+    "twitched": "the rotor moved and stopped again: no start",
+    "below_lowest_speed": "slower than the lowest speed that the rig can measure",
+    "lapse_possible": "a share of stops above 1 % that duty does not cure cannot be ruled out",
+    "heartbeat": "the drive's heartbeat lapsed and switched it off",
+    "this_motor_this_night": "this motor, this night",
+    "simulated": "from simulated instruments",
+}
+
+
+def meaning(key: str) -> Meaning:
+    """The meaning of a finding's full name; for an unlisted one the name itself and the unit its ending says."""
+    listed = MEANINGS.get(key) or MEANINGS.get(f"usable_range.{key}")
+    if listed is not None:
+        return listed
+    words = key.split(".")[-1].split("_")
+    unit = _UNITS.get(words[-1], "")
+    shown = words[:-1] if unit and len(words) > 1 else words
+    return Meaning(" ".join(shown).capitalize(), unit, "", "")
+
+
+def flag_text(flag: str) -> str:
+    """A flag in plain words; an unlisted one with its underscores as blanks."""
+    head, _, rest = flag.partition(":")
+    text = FLAGS.get(head, head.replace("_", " "))
+    return f"{text} ({rest.strip()})" if rest.strip() else text

@@ -1,0 +1,227 @@
+"""The simulated bench: motor, instruments and a queue of what happens when, in one bench time.
+
+Nothing of conduct, schedule, characterise or the dialects may be imported here: truth and analysis share no formula.
+"""
+
+from __future__ import annotations
+
+import heapq
+import random
+import zlib
+from collections.abc import Callable
+from dataclasses import fields
+from itertools import count
+from typing import TYPE_CHECKING, NamedTuple, Protocol
+
+from sweeprig.errors import ConfigError, SweeprigError, UnknownAdapter
+from sweeprig.simbench.board import Board
+from sweeprig.simbench.chopper import Wave
+from sweeprig.simbench.clock import START_UTC, BenchClock
+from sweeprig.simbench.instrument import Instrument, Setup
+from sweeprig.simbench.motor_truth import MotorTruth
+from sweeprig.simbench.multimeter import Multimeter
+from sweeprig.simbench.port import Port
+from sweeprig.simbench.scope import Scope
+from sweeprig.simbench.supply import Supply
+
+if TYPE_CHECKING:
+    from sweeprig.job import Job
+
+Callback = Callable[[object], None]
+
+SIMULATED_BY_ADAPTER: dict[str, type[Instrument]] = {
+    "scpi-multimeter": Multimeter,
+    "scpi-scope": Scope,
+    "scpi-supply": Supply,
+    "board": Board,
+}
+
+
+class Machine(Protocol):
+    """The motor on its stage, as the instruments see it (`plant.Plant`); read-outs are valid at `now`."""
+
+    now: float
+
+    @property
+    def edges(self) -> int: ...
+    @property
+    def last_edge_at(self) -> float: ...
+    @property
+    def motor_volt_seconds(self) -> float: ...
+    @property
+    def supply_amp_seconds(self) -> float: ...
+    @property
+    def supply_volt_seconds(self) -> float: ...
+    @property
+    def supply_limited(self) -> bool: ...
+    def set_drive(self, pwm_hz: float, duty_percent: float, on: bool) -> None: ...
+    def set_supply(self, volts: float, current_limit_amps: float, on: bool) -> None: ...
+    def advance(self, to: float) -> None: ...
+    def wave(self) -> Wave | None: ...
+    def pwm_phase_s(self) -> float: ...
+
+
+class Happened(NamedTuple):
+    """What the drive or the supply really did: `drive_on`, `drive_off`, `supply_on` or `supply_off`."""
+
+    at: float
+    what: str
+    why: str
+
+
+class DriveSignal:
+    """The signal at the switch's gate, as the board makes it."""
+
+    def __init__(self) -> None:
+        self.pwm_hz = 0.0
+        self.duty_percent = 0.0
+        self.on = False
+        self._high_seconds = 0.0
+        self._since = 0.0
+
+    @property
+    def has_edges(self) -> bool:
+        return self.on and 0.0 < self.duty_percent < 100.0
+
+    def change(self, now: float, pwm_hz: float, duty_percent: float, on: bool) -> None:
+        self._high_seconds = self.high_seconds(now)
+        self._since = now
+        self.pwm_hz, self.duty_percent, self.on = pwm_hz, duty_percent, on
+
+    def high_seconds(self, now: float) -> float:
+        """How long the signal has been high so far, s: the mean of whole periods."""
+        return self._high_seconds + ((now - self._since) * self.duty_percent / 100.0 if self.on else 0.0)
+
+
+class Bench:
+    """Bench time, the queue of events, the motor and the instruments on it.
+
+    now          bench time, s; only `advance`, `step` and the clock move it
+    clock        keeps the Clock contract on this bench
+    ports        instrument name → its byte port
+    record       what the drive really did, in order; the truth that tests of safety look at
+    on_record    called with each new entry of `record`
+    """
+
+    def __init__(self, plant: Machine, began: float = 0.0, began_utc: float | None = None) -> None:
+        self.plant = plant
+        self.now = began
+        self.clock = BenchClock(self, START_UTC + began if began_utc is None else began_utc)
+        self.signal = DriveSignal()
+        self.instruments: dict[str, Instrument] = {}
+        self.ports: dict[str, Port] = {}
+        self.record: list[Happened] = []
+        self.on_record: Callable[[Happened], None] | None = None
+        self._queue: list[tuple[float, int, Callback, object]] = []
+        self._order = count()
+
+    def add(self, instrument: Instrument) -> None:
+        self.instruments[instrument.name] = instrument
+        self.ports[instrument.name] = instrument.port
+
+    @property
+    def state_changes(self) -> dict[str, int]:
+        """State-changing message units that each instrument has obeyed; queries do not count."""
+        return {name: instrument.changes for name, instrument in self.instruments.items()}
+
+    def at(self, time: float, callback: Callback, argument: object) -> None:
+        """Call `callback(argument)` when bench time is `time`; equal times in the order of these calls."""
+        heapq.heappush(self._queue, (time, next(self._order), callback, argument))
+
+    def next_event(self) -> float:
+        """Bench time of the next event; infinity with none."""
+        return self._queue[0][0] if self._queue else float("inf")
+
+    def step(self, to: float) -> bool:
+        """Do the next event due by `to` and return True; with none due, go to `to` and return False."""
+        queue = self._queue
+        if queue and queue[0][0] <= to:
+            time, _, callback, argument = heapq.heappop(queue)
+            if time > self.now:
+                self.now = time
+            callback(argument)
+            return True
+        if to == float("inf"):
+            raise SweeprigError("the simulated bench was told to wait for ever with nothing going to happen")
+        if to > self.now:
+            self.now = to
+        return False
+
+    def advance(self, to: float) -> None:
+        """Let bench time pass up to `to`, s, doing every event due by then. A time that has passed does nothing."""
+        while self.step(to):
+            pass
+
+    def plant_now(self) -> Machine:
+        """The motor, its physics brought up to now."""
+        plant = self.plant
+        if plant.now < self.now:
+            plant.advance(self.now)
+        return plant
+
+    def note(self, what: str, why: str) -> None:
+        """Put down what the drive or the supply did just now."""
+        happened = Happened(self.now, what, why)
+        self.record.append(happened)
+        if self.on_record is not None:
+            self.on_record(happened)
+
+
+def build(job: Job, session: int = 1, began: float = 0.0, began_utc: float | None = None, ripple: bool = True) -> Bench:
+    """The bench of a job: its simulated motor, cold and still, and one instrument for each in the rig.
+
+    session    seeds friction and reading noise; the instruments' own errors are the same in every session
+    began      bench time, s, at which it begins (a resumed run goes on there); began_utc: UTC seconds at that moment
+    Errors: ConfigError without a `[simulated]` table in the motor file; UnknownAdapter for an adapter that no
+    simulated instrument stands in for.
+    """
+    import numpy as np
+
+    from sweeprig.simbench.plant import Plant
+
+    rng = np.random.default_rng([job.sweep.seed, session])
+    plant = Plant(motor_truth(job), job.motor.pulses_per_revolution, rng, now=began, ripple=ripple)
+    return assemble(job, plant, session, began, began_utc)
+
+
+def assemble(job: Job, plant: Machine, session: int = 1, began: float = 0.0, began_utc: float | None = None) -> Bench:
+    """The rig's instruments around any plant."""
+    bench = Bench(plant, began, began_utc)
+    for name, instrument in job.rig.instruments.items():
+        simulated = SIMULATED_BY_ADAPTER.get(instrument.adapter)
+        if simulated is None:
+            raise UnknownAdapter(
+                f"no simulated instrument stands in for the adapter of {name}",
+                value=instrument.adapter,
+                allowed=", ".join(SIMULATED_BY_ADAPTER),
+                topic="simbench",
+            )
+        bench.add(simulated(setup(job, name, session), bench))
+    return bench
+
+
+def setup(job: Job, name: str, session: int) -> Setup:
+    """What the instrument of this name is built from."""
+    instrument, seed = job.rig.instruments[name], job.sweep.seed
+    return Setup(
+        name=name,
+        serial=f"SIM{zlib.crc32(f'{job.rig.name}/{name}'.encode()):08X}",
+        errors_rng=random.Random(f"{seed}/{name}/errors"),
+        noise=random.Random(f"{seed}/{session}/{name}/noise"),
+        connected_to=instrument.connected_to,
+        accuracy=instrument.accuracies(),
+        options=instrument.options,
+        errors=job.rig.simulated.get(name, {}),
+    )
+
+
+def motor_truth(job: Job) -> MotorTruth:
+    """The true motor from the motor file's `[simulated]` table."""
+    simulated = job.motor.simulated
+    if simulated is None:
+        raise ConfigError(
+            f"the motor {job.motor.name!r} has no true values for the simulated bench",
+            remedy="Add a [simulated] table to the motor file, or run on real instruments",
+            topic="simbench",
+        )
+    return MotorTruth(**{field.name: float(getattr(simulated, field.name)) for field in fields(MotorTruth)})

@@ -1,0 +1,46 @@
+"""The simulated bench's clock: waiting jumps to the next event and lets the bench do what happens until then."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Protocol
+
+from sweeprig.clock import Waitable
+
+START_UTC = 1_772_474_400.0
+"""2026-03-02 18:00:00 UTC: when a simulated night begins unless another start is given."""
+
+
+class Steppable(Protocol):
+    """What the clock needs of the bench."""
+
+    now: float
+
+    def step(self, to: float) -> bool:
+        """Do the next event due by `to` and return True; with none, go to `to` and return False."""
+        ...
+
+
+class BenchClock:
+    """Keeps the Clock contract. `utc()` is the start's UTC plus the bench time that has passed since `began`."""
+
+    def __init__(self, bench: Steppable, began_utc: float) -> None:
+        self._bench = bench
+        self._utc_at_zero = began_utc - bench.now
+
+    def now(self) -> float:
+        return self._bench.now
+
+    def utc(self) -> float:
+        return self._utc_at_zero + self._bench.now
+
+    def wait(self, until: float, on: Sequence[Waitable] = ()) -> None:
+        bench = self._bench
+        while True:
+            ready = until
+            for link in on:
+                at = link.ready_at()
+                if at < ready:
+                    ready = at
+            if ready <= bench.now or not bench.step(ready):
+                return

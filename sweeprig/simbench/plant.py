@@ -1,0 +1,364 @@
+"""The simulated motor on its switch and supply, in time: what really happens, for the instruments to look at.
+
+Looking never changes anything: states are committed at the grid's cell edges and at changed settings only, and what is
+read in between is computed from there. No instrument, no noise of a reading, no analysis lives here.
+"""
+
+from __future__ import annotations
+
+import math
+import random
+from dataclasses import dataclass
+
+import numpy as np
+
+from sweeprig.errors import SweeprigError
+from sweeprig.simbench.chopper import Chopper, Wave, chopper, mean_supply_current, on_volts_at_limit, wave
+from sweeprig.simbench.friction import WanderingFriction, normal_source
+from sweeprig.simbench.motor_truth import MotorTruth
+from sweeprig.simbench.rotor import Motion, after, caught, motion, starts, time_to_stop, time_to_turn
+
+CELL_S = 0.02
+"""Grid of the random friction and of the look whether the rotor is caught or starts."""
+HEAT_CELLS = 25
+"""The winding's heat and resistance are renewed every so many cells, and at every start, stop and changed setting."""
+AMBIENT_DEGC = 20.0
+COPPER_PER_K = 1.0 / 254.5
+"""Copper's temperature coefficient of resistance at 20 degC: 1 / (234.5 + 20) (checks 13.1, verified)."""
+
+
+@dataclass(slots=True)
+class _Sums:
+    """Running integrals up to a moment: angle (rad), V·s and A·s."""
+
+    angle: float = 0.0
+    motor_vs: float = 0.0
+    motor_as: float = 0.0
+    supply_as: float = 0.0
+    supply_vs: float = 0.0
+
+
+class Plant:
+    """One motor with switch, freewheel diode and supply.
+
+    truth, pulses_per_revolution   the motor, and its tachometer
+    rng      draws the frictions; give the plant a generator of its own, for it draws ahead in blocks
+    now      run clock at the beginning, s
+    ripple   False: the peak torque is the mean torque, as if the current were smooth (for tests of the trend)
+
+    Attributes to read: `now`, `pwm_hz`, `duty_percent`, `drive_on` (the gate signal, as commanded), `supply_volts`,
+    `supply_current_limit_amps`, `supply_on`, `turning`, `stops` and `stopped_at` (how often, and when last, the rotor
+    came to rest; −inf before). All else are properties, valid at `now`.
+    """
+
+    def __init__(
+        self,
+        truth: MotorTruth,
+        pulses_per_revolution: float,
+        rng: np.random.Generator | random.Random,
+        now: float = 0.0,
+        ripple: bool = True,
+    ) -> None:
+        self.truth = truth
+        self.now = now
+        self.ripple = ripple
+        self.pwm_hz, self.duty_percent, self.drive_on = 1000.0, 0.0, False
+        self.supply_volts, self.supply_current_limit_amps, self.supply_on = 0.0, 0.0, False
+        self.turning = False
+        self.stops, self.stopped_at = 0, -math.inf
+        draw, correlation = normal_source(rng), truth.friction_correlation_s
+        self._running = WanderingFriction(
+            truth.running_friction_nm, truth.running_friction_spread_percent, correlation, CELL_S, draw
+        )
+        self._breakaway = WanderingFriction(
+            truth.breakaway_friction_nm, truth.breakaway_friction_spread_percent, correlation, CELL_S, draw
+        )
+        self._origin = self._at = self._heated_at = self._pwm_since = now
+        self._cell = self._friction_cell = 0
+        self._sums = _Sums()
+        self._edges_per_rad = pulses_per_revolution / (2.0 * math.pi)
+        self._edges = 0
+        self._edge_step: tuple[float, float, float, Motion] | None = None
+        self._winding_degc = AMBIENT_DEGC
+        self._heat_watts = 0.0
+        self._peek: tuple[_Sums, float] | None = None
+        self._renew_electric(0.0)
+
+    # ---- what the bench sets -------------------------------------------------------------------------------------
+
+    def set_drive(self, pwm_hz: float, duty_percent: float, on: bool) -> None:
+        """The gate signal from `now` on. A changed frequency, or switching on, begins a new PWM period."""
+        if (pwm_hz, duty_percent, on) == (self.pwm_hz, self.duty_percent, self.drive_on):
+            return
+        if not (pwm_hz > 0.0 and 0.0 <= duty_percent <= 100.0):
+            raise SweeprigError(
+                "the simulated drive cannot do this",
+                value=f"{pwm_hz:g} Hz, {duty_percent:g} %",
+                allowed="more than 0 Hz, 0 to 100 %",
+            )
+        self._commit()
+        if pwm_hz != self.pwm_hz or (on and not self.drive_on):
+            self._pwm_since = self.now
+        self.pwm_hz, self.duty_percent, self.drive_on = pwm_hz, duty_percent, on
+        self._settings_changed()
+
+    def set_supply(self, volts: float, current_limit_amps: float, on: bool) -> None:
+        """The supply from `now` on; its limit acts on the mean current, by lowering the voltage."""
+        if (volts, current_limit_amps, on) == (self.supply_volts, self.supply_current_limit_amps, self.supply_on):
+            return
+        if not (volts >= 0.0 and current_limit_amps >= 0.0):
+            raise SweeprigError(
+                "the simulated supply cannot do this",
+                value=f"{volts:g} V, {current_limit_amps:g} A",
+                allowed="zero or more",
+            )
+        self._commit()
+        self.supply_volts, self.supply_current_limit_amps, self.supply_on = volts, current_limit_amps, on
+        self._settings_changed()
+
+    def advance(self, to: float) -> None:
+        """Let the physics run until `to` (run clock, s)."""
+        if to < self.now:
+            raise SweeprigError("time cannot run backwards", value=f"{to!r} s", allowed=f"from {self.now!r} s")
+        self.now = to
+        self._peek = None
+        # while idle nothing can happen: the next changed setting makes one exact jump of it all
+        while not self._idle:
+            edge = self._origin + (self._cell + 1) * CELL_S
+            if edge > to:
+                return
+            self._flow_to(edge)
+            self._enter_next_cell()
+
+    # ---- what the bench sees -------------------------------------------------------------------------------------
+
+    @property
+    def omega(self) -> float:
+        """Speed, rad/s."""
+        return self._look()[1]
+
+    @property
+    def edges(self) -> int:
+        """Tachometer edges so far."""
+        return int(self._look()[0].angle * self._edges_per_rad)
+
+    @property
+    def last_edge_at(self) -> float:
+        """When the last edge came (run clock, s), solved within the step; −inf before the first."""
+        edges = self.edges
+        step = self._edge_step
+        if edges > self._edges:
+            step = (self._at, self.now - self._at, self._sums.angle, self._motion)
+        if step is None:
+            return -math.inf
+        began, seconds, angle, how = step
+        return began + time_to_turn(how, edges / self._edges_per_rad - angle, min(seconds, time_to_stop(how)))
+
+    @property
+    def angle(self) -> float:
+        """Angle turned so far, rad: the integral of the speed."""
+        return self._look()[0].angle
+
+    @property
+    def motor_volt_seconds(self) -> float:
+        """∫ mean motor voltage dt; the ripple within a PWM period is `wave`'s."""
+        return self._look()[0].motor_vs
+
+    @property
+    def motor_amp_seconds(self) -> float:
+        """∫ mean motor current dt."""
+        return self._look()[0].motor_as
+
+    @property
+    def supply_amp_seconds(self) -> float:
+        """∫ mean supply current dt."""
+        return self._look()[0].supply_as
+
+    @property
+    def supply_volt_seconds(self) -> float:
+        """∫ supply voltage dt, at its terminals: zero while off, less than set while the limit acts."""
+        return self._look()[0].supply_vs
+
+    @property
+    def supply_limited(self) -> bool:
+        """The supply does not hold its voltage now: the current limit acts."""
+        emf = self.truth.torque_constant_nm_per_a * self.omega
+        return self._may_limit and mean_supply_current(self._electric, emf) > self.supply_current_limit_amps
+
+    @property
+    def winding_degc(self) -> float:
+        """Winding temperature, degC."""
+        return self._winding_at(self.now)
+
+    def wave(self) -> Wave:
+        """The present waveform of motor voltage and current, for instruments that resolve the PWM period."""
+        emf = self.truth.torque_constant_nm_per_a * self.omega
+        return wave(self._electric_at(emf), emf)
+
+    def pwm_phase_s(self) -> float:
+        """Seconds since the gate signal last went on, 0 up to one period."""
+        return (self.now - self._pwm_since) % (1.0 / self.pwm_hz)
+
+    # ---- electric side -------------------------------------------------------------------------------------------
+
+    @property
+    def _driven(self) -> bool:
+        return self.drive_on and self.supply_on and self.duty_percent > 0.0 and self.supply_volts > 0.0
+
+    def _settings_changed(self) -> None:
+        self._renew_electric(self._omega_committed)
+        if self._idle:
+            return
+        if not self.turning:
+            self._try_start()
+        self._relinearise()
+
+    def _renew_electric(self, omega: float) -> None:
+        """Coefficients, heat and standstill torques after anything they depend on has changed."""
+        t = self.truth
+        self._omega_committed = omega
+        self._resistance = t.resistance_ohm * (1.0 + COPPER_PER_K * (self._winding_degc - AMBIENT_DEGC))
+        duty = self.duty_percent if self._driven else 0.0
+        self._electric = self._chopper(self.supply_volts if self.supply_on else 0.0, duty)
+        at_rest = mean_supply_current(self._electric, 0.0)
+        self._may_limit = at_rest > self.supply_current_limit_amps
+        standing = wave(self._electric_at(0.0), 0.0)
+        self._mean_nm = t.torque_constant_nm_per_a * standing.mean_motor_amps
+        self._peak_nm = t.torque_constant_nm_per_a * standing.peak_amps if self.ripple else self._mean_nm
+        self._standing = standing
+        emf = t.torque_constant_nm_per_a * omega
+        present = standing if emf == 0.0 else wave(self._electric_at(emf), emf)
+        self._heat_watts = self._resistance * present.mean_square_amps
+        self._idle = not self.turning and not self._driven
+        self._relinearise()
+
+    def _chopper(self, volts: float, duty_percent: float) -> Chopper:
+        return chopper(volts, self._resistance, self.truth.inductance_henry, self.pwm_hz, duty_percent)
+
+    def _electric_at(self, emf: float) -> Chopper:
+        """The coefficients at this back-EMF: with a lower voltage where the supply's current limit acts."""
+        c = self._electric
+        if not self._may_limit or mean_supply_current(c, emf) <= self.supply_current_limit_amps:
+            return c
+        return self._chopper(on_volts_at_limit(c, emf, self.supply_current_limit_amps), self.duty_percent)
+
+    def _relinearise(self) -> None:
+        electric = self._electric
+        omega = self._omega_committed
+        if self._may_limit:
+            electric = self._electric_at(self.truth.torque_constant_nm_per_a * omega)
+        self._acting = electric
+        self._motion = motion(self.truth, electric, omega, self._running.torque)
+
+    # ---- time ----------------------------------------------------------------------------------------------------
+
+    def _flow_to(self, until: float) -> None:
+        """Commit the state at `until`, within the present cell."""
+        seconds = until - self._at
+        sums, omega = self._flow(seconds)
+        edges = int(sums.angle * self._edges_per_rad)
+        if edges > self._edges:
+            self._edges = edges
+            self._edge_step = (self._at, seconds, self._sums.angle, self._motion)
+        self._sums = sums
+        self._omega_committed = omega
+        self._at = until
+
+    def _flow(self, seconds: float) -> tuple[_Sums, float]:
+        """(integrals, speed) `seconds` after the committed state, with the friction of its cell; changes nothing."""
+        s = self._sums
+        if not self.turning:
+            return self._rest(s, seconds), 0.0
+        how, electric = self._motion, self._acting
+        omega, turned = after(how, seconds)
+        moving = seconds
+        if omega <= 0.0:
+            moving = min(seconds, time_to_stop(how))
+            omega, turned = 0.0, after(how, moving)[1]
+        k = self.truth.torque_constant_nm_per_a
+        charge = how.amps * moving + how.amps_slope * (turned - how.speed * moving)
+        drawn = mean_supply_current(electric, k * turned / moving) * moving if moving > 0.0 else 0.0
+        volts = electric.on_volts if self._may_limit else (self.supply_volts if self.supply_on else 0.0)
+        flowed = _Sums(
+            s.angle + turned,
+            s.motor_vs + self._resistance * charge + k * turned,
+            s.motor_as + charge,
+            s.supply_as + drawn,
+            s.supply_vs + volts * moving,
+        )
+        return (flowed if moving == seconds else self._rest(flowed, seconds - moving)), omega
+
+    def _rest(self, s: _Sums, seconds: float) -> _Sums:
+        """Integrals over `seconds` at standstill."""
+        w = self._standing
+        volts = w.chopper.on_volts if self._may_limit else (self.supply_volts if self.supply_on else 0.0)
+        return _Sums(
+            s.angle,
+            s.motor_vs + w.mean_motor_volts * seconds,
+            s.motor_as + w.mean_motor_amps * seconds,
+            s.supply_as + w.mean_supply_amps * seconds,
+            s.supply_vs + volts * seconds,
+        )
+
+    def _enter_next_cell(self) -> None:
+        self._cell += 1
+        if self._cell % HEAT_CELLS == 0:
+            self._heat()
+            self._renew_electric(self._omega_committed)
+        self._friction_cell = self._cell
+        self._running.next_cell()
+        rough = self._breakaway.next_cell()
+        if not self.turning:
+            self._try_start()
+        elif self._omega_committed <= 0.0 or caught(self.truth, self._omega_committed, rough, self._peak_nm):
+            self._stop()
+        if self.turning:
+            self._relinearise()
+
+    def _try_start(self) -> None:
+        if starts(self._breakaway.torque, self._peak_nm, self._mean_nm, self._running.torque):
+            self.turning = True
+            self._heat()
+            self._renew_electric(0.0)
+
+    def _stop(self) -> None:
+        self.turning = False
+        self.stops += 1
+        self.stopped_at = self._at
+        self._heat()
+        self._renew_electric(0.0)
+
+    def _winding_at(self, when: float) -> float:
+        """First order towards ambient + R_th·P, exactly, with the heat of the last renewal."""
+        final = AMBIENT_DEGC + self.truth.thermal_resistance_k_per_w * self._heat_watts
+        fade = math.exp((self._heated_at - when) / self.truth.thermal_time_constant_s)
+        return final + (self._winding_degc - final) * fade
+
+    def _heat(self) -> None:
+        self._winding_degc = self._winding_at(self._at)
+        self._heated_at = self._at
+
+    def _commit(self) -> None:
+        """Bring the committed state to `now`: the rest of a step, or one jump over an idle gap of any length."""
+        self._peek = None
+        self._flow_to(self.now)
+        if self._idle:
+            self._cell = self._cell_of(self.now)
+            self._running.skip(self._cell - self._friction_cell)
+            self._breakaway.skip(self._cell - self._friction_cell)
+            self._friction_cell = self._cell
+        self._heat()
+
+    def _cell_of(self, when: float) -> int:
+        """The cell that holds `when`, by the same comparison that `advance` steps with."""
+        cell = int((when - self._origin) / CELL_S)
+        while self._origin + (cell + 1) * CELL_S <= when:
+            cell += 1
+        while cell > 0 and self._origin + cell * CELL_S > when:
+            cell -= 1
+        return cell
+
+    def _look(self) -> tuple[_Sums, float]:
+        if self._peek is None:
+            self._peek = self._flow(self.now - self._at)
+        return self._peek

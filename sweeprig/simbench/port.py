@@ -1,0 +1,139 @@
+"""The byte side of one simulated instrument: what is written reaches it, what it answers becomes readable in time.
+
+Keeps the link room's BytePort contract (open, write, next_ready, read, close) without importing it.
+"""
+
+from __future__ import annotations
+
+import math
+from collections import deque
+from typing import Protocol
+
+LONGEST_LINE = 4096
+
+
+class Receiver(Protocol):
+    """What sits behind a port."""
+
+    def receive(self, line: bytes) -> None:
+        """One line without its terminator, now."""
+        ...
+
+    def overrun(self) -> None:
+        """A line was longer than the input buffer and was lost."""
+        ...
+
+
+class Timeline(Protocol):
+    """What a port needs of the bench."""
+
+    now: float
+
+    def at(self, time: float, callback: _Callback, argument: object) -> None: ...
+
+
+class _Callback(Protocol):
+    def __call__(self, argument: object, /) -> None: ...
+
+
+class Port:
+    """`latency_s` passes before an answer; each byte takes `byte_s` both ways (0.0 on a network).
+
+    longest_line  bytes of one message; a longer one is dropped up to its terminator and reported as overrun
+    """
+
+    def __init__(
+        self,
+        bench: Timeline,
+        receiver: Receiver,
+        latency_s: float,
+        byte_s: float = 0.0,
+        longest_line: int = LONGEST_LINE,
+    ) -> None:
+        self._bench = bench
+        self._receiver = receiver
+        self._latency_s = latency_s
+        self._byte_s = byte_s
+        self._longest_line = longest_line
+        self._partial = b""
+        self._dropping = False
+        self._received_until = 0.0
+        self._sent_until = 0.0
+        self._answers: deque[tuple[float, bytes]] = deque()
+        self.is_open = False
+
+    def open(self) -> None:
+        """Opening flushes what an earlier client left unread, and its unfinished line."""
+        self.flush()
+        self.is_open = True
+
+    def close(self) -> None:
+        """What is under way is lost; the instrument itself goes on."""
+        self.is_open = False
+        self.flush()
+
+    def flush(self) -> None:
+        """Drop unfinished input and unread answers."""
+        self._partial = b""
+        self._dropping = False
+        self._answers.clear()
+
+    def write(self, data: bytes) -> None:
+        """Bytes from the client; each whole line (LF or CR LF) reaches the instrument when its last byte has."""
+        if self._byte_s == 0.0 and not self._partial and data.find(b"\n") == len(data) - 1 <= self._longest_line:
+            self._receiver.receive(data[:-1] if data[-2:-1] != b"\r" else data[:-2])
+            return
+        start = max(self._bench.now, self._received_until)
+        self._received_until = start + len(data) * self._byte_s
+        *lines, rest = data.split(b"\n")
+        arrived = 0
+        for line in lines:
+            arrived += len(line) + 1
+            whole, self._partial = self._partial + line, b""
+            self._deliver(start + arrived * self._byte_s, whole)
+        self._partial += rest
+        if len(self._partial) > self._longest_line:
+            self._partial, self._dropping = b"", True
+
+    def _deliver(self, time: float, line: bytes) -> None:
+        if self._dropping or len(line) > self._longest_line:
+            self._dropping = False
+            self._when(time, self._overrun, line)
+        else:
+            self._when(time, self._receive, line.removesuffix(b"\r"))
+
+    def _when(self, time: float, callback: _Callback, line: bytes) -> None:
+        if time <= self._bench.now:
+            callback(line)
+        else:
+            self._bench.at(time, callback, line)
+
+    def _receive(self, line: object) -> None:
+        self._receiver.receive(line)  # type: ignore[arg-type]  # only bytes are ever queued with this callback
+
+    def _overrun(self, _: object) -> None:
+        self._receiver.overrun()
+
+    def send(self, text: str) -> None:
+        """An answer of the instrument, formed now; LF is added. Lost when nobody holds the port open."""
+        if not self.is_open:
+            return
+        raw = text.encode("ascii") + b"\n"
+        ready = self._bench.now + self._latency_s
+        if self._byte_s:
+            ready = self._sent_until = max(ready, self._sent_until) + len(raw) * self._byte_s
+        self._answers.append((ready, raw))
+
+    def next_ready(self) -> float:
+        """Bench time at which bytes become readable; infinity while no answer is under way."""
+        return self._answers[0][0] if self._answers else math.inf
+
+    def read(self) -> bytes:
+        """What is readable now, and nothing of what is still under way."""
+        answers, now = self._answers, self._bench.now
+        if not answers or answers[0][0] > now:
+            return b""
+        raw = answers.popleft()[1]
+        while answers and answers[0][0] <= now:
+            raw += answers.popleft()[1]
+        return raw

@@ -1,0 +1,150 @@
+"""Trials on the simulated motor itself, done as a person with perfect eyes would: holds, starts from rest, speeds.
+
+They act on the plant alone, with no instrument in between; counting them and drawing conclusions is `truth`'s.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from sweeprig.holds import Condition
+from sweeprig.simbench.motor_truth import MotorTruth
+from sweeprig.simbench.plant import Plant
+
+RPM = 30.0 / math.pi
+"""rpm per rad/s."""
+GAP_S = 0.5
+"""A rotor at rest for so long has stopped; a shorter catch that it frees itself from has not."""
+LOOK_S = 0.25
+WHOLE_REVOLUTIONS = 10.0
+SPEED_HOLDS = 12
+"""Holds behind one true speed; its standard error is from the scatter between them."""
+
+
+@dataclass(frozen=True, slots=True)
+class Procedure:
+    """How a trial is done; the meanings are those of `plan.StallPlan` and `plan.StartPlan`.
+
+    settle_s   speeds and voltages are averaged from this long after the duty was applied
+    run_in     (duty_percent, seconds) that warm the motor before each block of trials
+    """
+
+    hold_time_s: float = 20.0
+    start_time_s: float = 3.0
+    rest_time_s: float = 5.0
+    relaunch_above_percent: float = 12.0
+    relaunch_s: float = 4.0
+    lowest_rpm: float = 60.0
+    saturation_percent: float = 2.0
+    duty_low_percent: float = 0.0
+    duty_high_percent: float = 100.0
+    current_limit_amps: float = math.inf
+    settle_s: float = 3.0
+    run_in: tuple[float, float] = (60.0, 240.0)
+
+
+@dataclass(frozen=True, slots=True)
+class Task:
+    """Trials of one kind at one duty; `seed` is the entropy of their generator."""
+
+    motor: MotorTruth
+    condition: Condition
+    procedure: Procedure
+    kind: str
+    duty: float
+    trials: int
+    seed: tuple[int, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Counts:
+    """events: stops (kind `stall`) or starts (kind `start`); the sums are over the settled turning time."""
+
+    duty: float
+    trials: int
+    events: int
+    radians: float = 0.0
+    volt_seconds: float = 0.0
+    seconds: float = 0.0
+
+
+def warm_plant(motor: MotorTruth, condition: Condition, procedure: Procedure, seed: tuple[int, ...]) -> Plant:
+    """A plant after its run-in, turning, seeded by `seed`."""
+    plant = Plant(motor, 1.0, np.random.default_rng(seed))
+    plant.set_supply(condition.supply_v, procedure.current_limit_amps, True)
+    _launch(plant, condition.pwm_hz, procedure.run_in[0], procedure.run_in[1])
+    return plant
+
+
+def _launch(plant: Plant, pwm_hz: float, duty: float, seconds: float) -> None:
+    """`seconds` at `duty`; where that does not start the rotor, a kick at full duty and then once more."""
+    plant.set_drive(pwm_hz, duty, True)
+    plant.advance(plant.now + seconds)
+    if not plant.turning:
+        plant.set_drive(pwm_hz, 100.0, True)
+        plant.advance(plant.now + 2.0)
+        plant.set_drive(pwm_hz, duty, True)
+        plant.advance(plant.now + seconds)
+
+
+def falling_trial(plant: Plant, pwm_hz: float, duty: float, p: Procedure) -> tuple[bool, float, float, float]:
+    """One hold on the falling branch → (stopped, rad turned, V·s across the motor, s), the sums while settled."""
+    _launch(plant, pwm_hz, min(p.duty_high_percent, duty + p.relaunch_above_percent), p.relaunch_s)
+    plant.set_drive(pwm_hz, duty, True)
+    began, stops = plant.now, plant.stops
+    looks = max(1, round(p.hold_time_s / LOOK_S))
+    first: tuple[float, float, float] | None = None
+    last = first
+    for look in range(1, looks + 1):
+        plant.advance(began + p.hold_time_s * look / looks)
+        if not plant.turning and plant.now - plant.stopped_at >= GAP_S:
+            break
+        if plant.stops == stops and plant.now - began >= p.settle_s:
+            last = (plant.now, plant.angle, plant.motor_volt_seconds)
+            first = first or last
+    stopped = not plant.turning
+    if first is None or last is None or last == first:
+        return stopped, 0.0, 0.0, 0.0
+    seconds, radians, volts = last[0] - first[0], last[1] - first[1], last[2] - first[2]
+    return stopped or radians / seconds * RPM < p.lowest_rpm, radians, volts, seconds
+
+
+def start_trial(plant: Plant, pwm_hz: float, duty: float, p: Procedure) -> bool:
+    """Coast to rest, rest, one step to `duty`: ten whole revolutions in time, and still turning at its end."""
+    plant.set_drive(pwm_hz, 0.0, False)
+    while plant.turning:
+        plant.advance(plant.now + LOOK_S)
+    plant.advance(plant.now + p.rest_time_s)
+    before = plant.angle
+    plant.set_drive(pwm_hz, duty, True)
+    plant.advance(plant.now + p.start_time_s)
+    return plant.turning and (plant.angle - before) / (2.0 * math.pi) >= WHOLE_REVOLUTIONS
+
+
+def perform(task: Task) -> Counts:
+    plant = warm_plant(task.motor, task.condition, task.procedure, task.seed)
+    pwm = task.condition.pwm_hz
+    if task.kind == "start":
+        started = sum(start_trial(plant, pwm, task.duty, task.procedure) for _ in range(task.trials))
+        return Counts(task.duty, task.trials, started)
+    trials = [falling_trial(plant, pwm, task.duty, task.procedure) for _ in range(task.trials)]
+    stopped, radians, volts, seconds = (sum(column) for column in zip(*trials, strict=True))
+    return Counts(task.duty, task.trials, int(stopped), radians, volts, seconds)
+
+
+def true_speed(
+    motor: MotorTruth, condition: Condition, duty_percent: float, procedure: Procedure, seed: tuple[int, ...] = (1,)
+) -> tuple[float, float, float]:
+    """Mean settled speed on the falling branch, while it turns → (rpm, its standard error, mean motor voltage V)."""
+    plant = warm_plant(motor, condition, procedure, seed)
+    holds = [falling_trial(plant, condition.pwm_hz, duty_percent, procedure)[1:] for _ in range(SPEED_HOLDS)]
+    radians, volts, seconds = np.array(holds).T
+    total = float(seconds.sum())
+    if total <= 0.0:
+        return 0.0, 0.0, 0.0
+    mean = float(radians.sum()) / total
+    u = math.sqrt(float(((radians - mean * seconds) ** 2).sum()) * SPEED_HOLDS / (SPEED_HOLDS - 1)) / total
+    return mean * RPM, u * RPM, float(volts.sum()) / total

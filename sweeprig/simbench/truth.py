@@ -1,0 +1,333 @@
+"""The true findings of a simulated motor, by brute force on the plant alone: many trials, counted.
+
+No instrument and no formula of the analysis is used. Stops and starts are counted at duties around each wanted level;
+a smooth law through the counts gives the level, with its own standard error. The trials themselves are in `trials`.
+"""
+
+from __future__ import annotations
+
+import math
+import multiprocessing
+from collections.abc import Callable, Iterable, Iterator, Sequence
+from concurrent.futures import ProcessPoolExecutor
+from contextlib import contextmanager
+from dataclasses import asdict, dataclass, replace
+from typing import Any
+
+import numpy as np
+from scipy import stats
+from scipy.optimize import brentq
+
+from sweeprig.errors import SweeprigError
+from sweeprig.holds import Condition
+from sweeprig.simbench.motor_truth import MotorTruth
+from sweeprig.simbench.trials import Counts, Procedure, Task, perform, true_speed
+
+BLOCK_TRIALS = 50
+"""Trials on one plant, one after the other, after its run-in; blocks are what the processes share out."""
+
+Finding = dict[str, Any]
+Map = Callable[[Callable[[Any], Any], Iterable[Any]], Iterable[Any]]
+
+
+# ---- the whole -------------------------------------------------------------------------------------------------------
+
+
+def truth(
+    motor: MotorTruth,
+    conditions: Sequence[Condition],
+    *,
+    hold_time_s: float,
+    start_time_s: float,
+    rest_time_s: float,
+    relaunch: tuple[float, float] = (12.0, 4.0),
+    lowest_rpm: float = 60.0,
+    saturation_percent: float = 2.0,
+    duty_range: tuple[float, float] = (0.0, 100.0),
+    current_limit_amps: float = math.inf,
+    seed: int = 1,
+    runs: int = 6000,
+    workers: int = 1,
+) -> list[dict[str, Any]]:
+    """The true findings, one JSON-able dict a condition, under the names of findings.json.
+
+    Each finding is {"value", "u"} (u: the standard error of this counting) or {"value": None, "reason"}.
+
+    relaunch   (percent above the trial duty, s) before each falling approach
+    duty_range lowest and highest duty allowed, percent
+    runs       trials per threshold (stall and start each), shared over about twenty duties
+    workers    processes; more than one starts fresh interpreters. The result does not depend on it.
+    """
+    procedure = Procedure(
+        hold_time_s=hold_time_s,
+        start_time_s=start_time_s,
+        rest_time_s=rest_time_s,
+        relaunch_above_percent=relaunch[0],
+        relaunch_s=relaunch[1],
+        lowest_rpm=lowest_rpm,
+        saturation_percent=saturation_percent,
+        duty_low_percent=duty_range[0],
+        duty_high_percent=duty_range[1],
+        current_limit_amps=current_limit_amps,
+    )
+    tasks = [
+        Task(motor, condition, procedure, "stall", 0.0, 1, (seed, number))
+        for number, condition in enumerate(conditions)
+    ]
+    with _workers(workers) as spread:
+        return [_condition(task, runs, spread) for task in tasks]
+
+
+@contextmanager
+def _workers(number: int) -> Iterator[Map]:
+    if number <= 1:
+        yield map
+        return
+    with ProcessPoolExecutor(number, mp_context=multiprocessing.get_context("spawn")) as pool:
+        yield pool.map
+
+
+def _condition(task: Task, runs: int, spread: Map) -> dict[str, Any]:
+    p = task.procedure
+    result: dict[str, Any] = {"condition": asdict(task.condition)}
+    result |= {"hold_time_s": p.hold_time_s, "start_time_s": p.start_time_s, "rest_time_s": p.rest_time_s}
+    result["trials"], result["lack_of_fit_p"] = {}, {}
+    stall = _threshold(replace(task, kind="stall", seed=(*task.seed, 1)), runs, spread, result)
+    start = _threshold(replace(task, kind="start", seed=(*task.seed, 2)), runs, spread, result)
+    result["stall_duty_percent"], result["sustain_99_duty_percent"], result["stall_spread_percent"] = stall
+    result["start_duty_percent"], result["start_99_duty_percent"], result["start_spread_percent"] = start
+    result["start_stall_hysteresis_percent"] = _difference(start[0], stall[0])
+    sustain = stall[1]["value"]
+    curve, upper = _curve(task, p.duty_low_percent if sustain is None else sustain, spread)
+    high = {"high_duty_percent": upper["high_duty_percent"], "high_speed_rpm": upper["high_speed_rpm"]}
+    low = {"low_duty_percent": stall[1], "low_duty_from_rest_percent": start[1]}
+    if sustain is None:
+        missing = stall[1]
+        speeds = dict.fromkeys(("stall_speed_rpm", "stall_voltage_volts", "lowest_reliable_speed_rpm"), missing)
+        turndown = missing
+    else:
+        stall_speed, stall_voltage = _speed_finding(task, stall[0]["value"], stall[0]["u"], spread)
+        slowest, _ = _speed_finding(replace(task, seed=(*task.seed, 3)), sustain, stall[1]["u"], spread)
+        speeds = {"stall_speed_rpm": stall_speed, "stall_voltage_volts": stall_voltage}
+        speeds["lowest_reliable_speed_rpm"] = slowest
+        turndown = _ratio(high["high_speed_rpm"], slowest)
+    result |= speeds | {"top_speed_rpm": upper["top_speed_rpm"]}
+    ends = {"low_speed_rpm": speeds["lowest_reliable_speed_rpm"], "turndown": turndown}
+    return result | {"usable_range": low | high | ends, "speed_curve": curve}
+
+
+def _threshold(task: Task, runs: int, spread: Map, record: dict[str, Any]) -> tuple[Finding, Finding, Finding]:
+    """(50 % duty, 99 % duty, spread) of stalling or starting: a third of the runs evenly, the rest where they count."""
+    around = _bracket(replace(task, trials=24))
+    if around is None:
+        reason = "never_stopped" if task.kind == "stall" else "never_started"
+        missing: Finding = {"value": None, "reason": reason}
+        return missing, missing, missing
+    middle, width = around
+    even = [float(d) for d in np.linspace(middle - 1.2 * width, middle + 1.5 * width, 10)]
+    counts = list(spread(perform, _spread_out(task, even, runs // 3, 10)))
+    law = fit_law(counts)
+    events = [0.05, 0.15, 0.3, 0.5, 0.7, 0.85, 0.93, 0.97, 0.99, 0.995]
+    if task.kind == "stall":
+        events = [1.0 - chance for chance in events]
+    better = [law.duty_at(chance)[0] for chance in events]
+    counts += spread(perform, _spread_out(task, better, runs - runs // 3, 11))
+    law = fit_law(counts)
+    record["trials"][task.kind] = sum(c.trials for c in counts)
+    record["lack_of_fit_p"][task.kind] = law.lack_of_fit_p
+    half, u_half = law.duty_at(0.5)
+    safe, u_safe = law.duty_at(0.01 if task.kind == "stall" else 0.99)
+    # 1.283/b, the standard deviation of the stopping law exp(−T·h), h falling as exp(−b·duty)
+    width_50 = math.pi / math.sqrt(6.0) / abs(law.slope(half))
+    return _finding(half, u_half), _finding(safe, u_safe), {"value": width_50}
+
+
+def _difference(a: Finding, b: Finding) -> Finding:
+    if a["value"] is None or b["value"] is None:
+        return a if a["value"] is None else b
+    return _finding(a["value"] - b["value"], math.hypot(a["u"], b["u"]))
+
+
+def _ratio(a: Finding, b: Finding) -> Finding:
+    value = a["value"] / b["value"]
+    return _finding(value, value * math.hypot(a["u"] / a["value"], b["u"] / b["value"]))
+
+
+# ---- where to look ---------------------------------------------------------------------------------------------------
+
+
+def _bracket(task: Task) -> tuple[float, float] | None:
+    """(duty, half-width) of the range in which the outcome changes; None where it does not within the allowed duties.
+
+    Bisection on eight trials for the middle, then outwards until nearly all trials agree.
+    """
+    count = 0
+
+    def chance_of_turning(duty: float) -> float:
+        nonlocal count
+        count += 1
+        got = perform(replace(task, duty=duty, seed=(*task.seed, count)))
+        return (got.events if task.kind == "start" else got.trials - got.events) / got.trials
+
+    low, high = task.procedure.duty_low_percent, task.procedure.duty_high_percent
+    if chance_of_turning(low) > 0.5 or chance_of_turning(high) < 0.5:
+        return None
+    while high - low > 0.2:
+        middle = 0.5 * (low + high)
+        low, high = (low, middle) if chance_of_turning(middle) > 0.5 else (middle, high)
+    middle, width = 0.5 * (low + high), 0.2
+    while width < 12.8 and chance_of_turning(min(task.procedure.duty_high_percent, middle + width)) < 0.97:
+        width *= 1.5
+    return middle, width
+
+
+def _spread_out(task: Task, duties: Sequence[float], runs: int, stage: int) -> list[Task]:
+    """`runs` trials shared evenly over `duties`, in blocks, each with a seed of its own."""
+    low, high = task.procedure.duty_low_percent, task.procedure.duty_high_percent
+    blocks = max(1, round(runs / len(duties) / BLOCK_TRIALS))
+    size = max(1, round(runs / len(duties) / blocks))
+    return [
+        replace(task, duty=min(high, max(low, duty)), trials=size, seed=(*task.seed, stage, number, block))
+        for number, duty in enumerate(duties)
+        for block in range(blocks)
+    ]
+
+
+# ---- a smooth law through the counts ---------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class Law:
+    """Chance of an event at duty x: 1 − exp(−exp(η)), η a polynomial in (x − centre)/scale, lowest order first.
+
+    A constant hazard over the trial gives just this form for stops and for starts; the polynomial is free.
+    """
+
+    centre: float
+    scale: float
+    coefficients: tuple[float, ...]
+    covariance: tuple[tuple[float, ...], ...]
+    span: tuple[float, float]
+    lack_of_fit_p: float
+
+    def eta(self, duty: float) -> float:
+        z = (duty - self.centre) / self.scale
+        return float(sum(c * z**i for i, c in enumerate(self.coefficients)))
+
+    def slope(self, duty: float) -> float:
+        z = (duty - self.centre) / self.scale
+        return float(sum(i * c * z ** (i - 1) for i, c in enumerate(self.coefficients) if i)) / self.scale
+
+    def duty_at(self, chance: float) -> tuple[float, float]:
+        """(duty, standard error) where the chance of an event is `chance`; SweeprigError outside the counted range."""
+        wanted = math.log(-math.log1p(-chance))
+        grid = np.linspace(*self.span, 800)
+        above = np.array([self.eta(x) for x in grid]) > wanted
+        places = np.flatnonzero(above[1:] != above[:-1])
+        if len(places) == 0:
+            raise SweeprigError(f"the counted trials do not reach a chance of {chance:g}", value=f"{self.span} % duty")
+        # a polynomial may turn back at its ends: the crossing nearest to where most was counted is the one
+        place = min(places, key=lambda i: abs(grid[i] - self.centre))
+        duty = float(brentq(lambda x: self.eta(x) - wanted, grid[place], grid[place + 1]))
+        powers = ((duty - self.centre) / self.scale) ** np.arange(len(self.coefficients))
+        variance = float(powers @ np.array(self.covariance) @ powers)
+        return duty, math.sqrt(variance) / abs(self.slope(duty))
+
+
+def fit_law(counts: Sequence[Counts]) -> Law:
+    """Maximum likelihood for degrees 2 to 4, the one with the least Akaike criterion."""
+    x = np.array([c.duty for c in counts])
+    n = np.array([float(c.trials) for c in counts])
+    k = np.array([float(c.events) for c in counts])
+    informative = n * np.clip(k / n, 0.02, 0.98) * (1.0 - np.clip(k / n, 0.02, 0.98))
+    centre = float(np.average(x, weights=informative))
+    scale = max(1e-3, float(np.sqrt(np.average((x - centre) ** 2, weights=informative))))
+    fits = [_fit_degree((x - centre) / scale, n, k, degree) for degree in (2, 3, 4)]
+    beta, covariance, deviance = min(fits, key=lambda fit: fit[2] + 2.0 * len(fit[0]))
+    freedom = max(1, len(np.unique(x)) - len(beta))
+    return Law(
+        centre,
+        scale,
+        tuple(float(b) for b in beta),
+        tuple(tuple(float(v) for v in row) for row in covariance),
+        (float(x.min()), float(x.max())),
+        float(stats.chi2.sf(deviance, freedom)),
+    )
+
+
+def _fit_degree(z: Any, n: Any, k: Any, degree: int) -> tuple[Any, Any, float]:
+    """Fisher scoring with halved steps → (coefficients, covariance, deviance against each duty's own frequency)."""
+    z, place = np.unique(z, return_inverse=True)
+    n, k = np.bincount(place, n), np.bincount(place, k)
+    design = z[:, None] ** np.arange(degree + 1)
+
+    def deviance(beta: Any) -> float:
+        rate = np.exp(np.clip(design @ beta, -30.0, 3.4))
+        terms = stats.binom.logpmf(k, n, -np.expm1(-rate)) - stats.binom.logpmf(k, n, k / n)
+        return float(-2.0 * np.sum(terms))
+
+    empirical = (k + 0.5) / (n + 1.0)
+    beta = np.zeros(degree + 1)
+    beta[:2] = np.polyfit(z, np.log(-np.log1p(-empirical)), 1, w=np.sqrt(n))[::-1]
+    best = deviance(beta)
+    fisher = np.eye(degree + 1)
+    for _ in range(200):
+        rate = np.exp(np.clip(design @ beta, -30.0, 3.4))
+        chance, per_eta = -np.expm1(-rate), rate * np.exp(-rate)
+        weight = per_eta / (chance * (1.0 - chance))
+        fisher = design.T @ (design * (n * weight * per_eta)[:, None])
+        step = np.linalg.solve(fisher + 1e-9 * np.eye(degree + 1), design.T @ (weight * (k - n * chance)))
+        while (new := deviance(beta + step)) > best + 1e-12 and np.max(np.abs(step)) > 1e-12:
+            step = step / 2.0
+        beta, gain, best = beta + step, best - new, new
+        if gain < 1e-9:
+            break
+    return beta, np.linalg.inv(fisher), best
+
+
+# ---- speeds ----------------------------------------------------------------------------------------------------------
+
+
+def _speed_of(task: Task) -> tuple[float, float, float]:
+    return true_speed(task.motor, task.condition, task.duty, task.procedure, task.seed)
+
+
+def _finding(value: float, u: float) -> Finding:
+    return {"value": float(value), "u": float(u)}
+
+
+def _curve(task: Task, low: float, spread: Map) -> tuple[Finding, dict[str, Finding]]:
+    """The speed curve from `low` upwards and, from it, top speed and upper end of the usable range."""
+    p = task.procedure
+    duties = [float(d) for d in np.linspace(low, p.duty_high_percent, 15)]
+    speeds = list(spread(_speed_of, [replace(task, duty=d, seed=(*task.seed, 20, i)) for i, d in enumerate(duties)]))
+    rpm = [s[0] for s in speeds]
+    top = max(range(len(rpm)), key=rpm.__getitem__)
+    wanted = rpm[top] * (1.0 - p.saturation_percent / 100.0)
+    above = next(i for i, speed in enumerate(rpm) if speed >= wanted)
+    left, right = (duties[above - 1], duties[above]) if above else (duties[0], duties[1])
+    fine = [float(d) for d in np.linspace(left, right, 7)]
+    near = list(spread(_speed_of, [replace(task, duty=d, seed=(*task.seed, 21, i)) for i, d in enumerate(fine)]))
+    quadratic = np.polyfit(np.array(fine) - left, [s[0] for s in near], 2)
+    dense = np.linspace(0.0, right - left, 2001)
+    reached = np.polyval(quadratic, dense) >= wanted
+    offset = float(dense[int(np.argmax(reached))]) if bool(reached.any()) else right - left
+    slope = max(1e-9, abs(float(np.polyval(np.polyder(quadratic), offset))))
+    u_speed = math.hypot(max(s[1] for s in near), speeds[top][1])
+    curve = {"duty_percent": duties, "speed_rpm": rpm, "u_rpm": [s[1] for s in speeds]}
+    return curve, {
+        "top_speed_rpm": _finding(rpm[top], speeds[top][1]),
+        "high_duty_percent": _finding(left + offset, u_speed / slope),
+        "high_speed_rpm": _finding(wanted, speeds[top][1]),
+    }
+
+
+def _speed_finding(task: Task, duty: float, u_duty: float, spread: Map) -> tuple[Finding, Finding]:
+    """(speed, mean motor voltage) at a duty that is itself known to `u_duty`."""
+    step = max(0.2, 2.0 * u_duty)
+    tasks = [replace(task, duty=duty + d, seed=(*task.seed, 30, i)) for i, d in enumerate((0.0, step, -step, 0.0))]
+    at, above, below, again = spread(_speed_of, tasks)
+    rpm, volts = 0.5 * (at[0] + again[0]), 0.5 * (at[2] + again[2])
+    speed_slope, volt_slope = (above[0] - below[0]) / (2.0 * step), (above[2] - below[2]) / (2.0 * step)
+    u_rpm = math.hypot(at[1] / math.sqrt(2.0), speed_slope * u_duty)
+    return _finding(rpm, u_rpm), _finding(volts, math.hypot(0.5 * abs(at[2] - again[2]), volt_slope * u_duty))

@@ -1,0 +1,147 @@
+"""What the terminal shows: progress while a run lasts, tables afterwards. Used by `cli` only; in the terminal
+with rich, without one as plain lines."""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+from sweeprig.conduct.states import Event
+
+SIMULATED = "SIMULATED: no real motor was moved; these numbers describe an invented one."
+
+
+def show_time(seconds: float) -> str:
+    """'2 h 05 min', '3 min 20 s', '12 s'."""
+    seconds = round(seconds)
+    if seconds >= 3600:
+        return f"{seconds // 3600} h {seconds % 3600 // 60:02d} min"
+    if seconds >= 60:
+        return f"{seconds // 60} min {seconds % 60:02d} s"
+    return f"{seconds} s"
+
+
+class Lines:
+    """Plain lines: one a hold; for logs, pipes and slow remote shells."""
+
+    def __init__(self, expected_s: float) -> None:
+        self.expected_s = expected_s
+        self.began: float | None = None
+        self.holds = 0
+
+    def __enter__(self) -> Lines:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        return None
+
+    def say(self, text: str) -> None:
+        print(text, file=sys.stderr, flush=True)
+
+    def left(self, at: float) -> str:
+        spent = at - (self.began if self.began is not None else at)
+        left = self.expected_s - spent
+        return f"about {show_time(left)} left" if left > 0 else "longer than predicted"
+
+    def __call__(self, event: Event) -> None:
+        if self.began is None:
+            self.began = event.at
+        text = self.sentence(event)
+        if text is not None:
+            self.say(text)
+
+    def sentence(self, event: Event) -> str | None:
+        """One sentence for an event that a person wants to read; None for the others."""
+        data = event.data
+        if event.kind == "session":
+            simulated = f"  {SIMULATED}" if data["simulated"] else ""
+            return f"session {data['session']}{simulated}"
+        if event.kind == "hold_began":
+            self.holds += 1
+            return f"hold {data['number']}: {data['why']} ({self.left(event.at)})"
+        if event.kind == "hold_ended" and data["status"] != "done":
+            return f"  hold {data['number']} {data['status']}: {data['reason']}"
+        if event.kind == "trip":
+            return f"TRIPPED: {data['evidence']}. The drive was switched off."
+        if event.kind == "off" and data.get("proved"):
+            return "drive and supply off, and shown to be off"
+        if event.kind in ("link", "notice"):
+            return "  " + " ".join(str(value) for value in data.values() if value)
+        if event.kind == "finished":
+            return f"finished: {data['reason']}"
+        return None
+
+
+class Screen(Lines):
+    """In a terminal: the same sentences in one status line that changes in place; what matters stays above it."""
+
+    KEEP = ("session", "trip", "link", "notice", "finished", "off")
+
+    def __enter__(self) -> Screen:
+        from rich.console import Console
+
+        self.console = Console(stderr=True)
+        self.status = self.console.status("opening the rig", spinner="line")
+        self.status.start()
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.status.stop()
+
+    def say(self, text: str) -> None:
+        self.console.print(text, markup=False, highlight=False)
+
+    def __call__(self, event: Event) -> None:
+        from rich.markup import escape
+
+        if self.began is None:
+            self.began = event.at
+        text = self.sentence(event)
+        if text is None:
+            return
+        if event.kind in self.KEEP or text.startswith("  hold"):
+            self.say(text)
+        else:
+            self.status.update(escape(text))
+
+
+def progress(expected_s: float, plain: bool) -> Lines:
+    """A screen where standard error is a terminal, lines elsewhere or when asked."""
+    return Lines(expected_s) if plain or not sys.stderr.isatty() else Screen(expected_s)
+
+
+def table(title: str, columns: Sequence[str], rows: Sequence[Sequence[str]]) -> str:
+    """A table as text. Columns keep their full words; a narrow terminal folds them."""
+    from rich.box import SIMPLE_HEAD
+    from rich.console import Console
+    from rich.table import Table
+
+    grid = Table(title=title, title_justify="left", box=SIMPLE_HEAD, pad_edge=False)
+    for index, column in enumerate(columns):
+        grid.add_column(column, justify="left" if index == 0 else "right", overflow="fold")
+    for row in rows:
+        grid.add_row(*(str(cell) for cell in row))
+    console = Console(width=None if sys.stdout.isatty() else 110, markup=False, highlight=False)
+    with console.capture() as captured:
+        console.print(grid, markup=False)
+    return captured.get().rstrip()
+
+
+def preview_text(night: Any, title: str, sums: Mapping[str, float], refused: Sequence[str]) -> str:
+    """The night ahead in words: holds and time, what can and cannot be found, safety sums, persons, guesses."""
+    lines = [title, ""]
+    total = sum(night.holds.values())
+    kinds = ", ".join(f"{count} {purpose.replace('_', ' ')}" for purpose, count in night.holds.items())
+    lines.append(f"{total} holds ({kinds}); about {show_time(night.seconds)} on the bench.")
+    lines += ["", "With this rig you will get:"] + [f"  {line}" for line in night.can]
+    if night.cannot:
+        lines += ["", "You will not get:"] + [f"  {line}" for line in night.cannot]
+    if night.persons:
+        lines += ["", "A person is needed for:"] + [f"  {line}" for line in night.persons]
+    lines += ["", "If the rotor locks while nobody looks, the drive goes off after at most:"]
+    lines += [f"  {name}: {show_time(value) if value >= 60 else f'{value:.1f} s'}" for name, value in sums.items()]
+    if refused:
+        lines += ["", "Refused, until this is mended:"] + [f"  {line}" for line in refused]
+    lines += ["", "The prediction guesses: " + "; ".join(night.guesses) + "."]
+    return "\n".join(lines)

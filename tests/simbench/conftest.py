@@ -1,0 +1,149 @@
+"""A small plant with known numbers, and instruments on a bench with it, for the tests of the simulated instruments."""
+
+from __future__ import annotations
+
+import math
+import random
+from collections.abc import Callable
+from typing import TypeVar
+
+import pytest
+
+from sweeprig.quantities import Accuracy
+from sweeprig.simbench.bench import Bench
+from sweeprig.simbench.board import Board
+from sweeprig.simbench.chopper import Wave
+from sweeprig.simbench.instrument import Instrument, Setup
+from sweeprig.simbench.multimeter import Multimeter
+from sweeprig.simbench.scope import Scope
+from sweeprig.simbench.supply import Supply
+
+Kind = TypeVar("Kind", bound=Instrument)
+
+
+class FakePlant:
+    """A rotor of constant pulse rate between two times; motor voltage = supply × duty, current 0.25 A while driven."""
+
+    def __init__(self, now: float = 0.0) -> None:
+        self.now = now
+        self.pulse_hz = 100.0
+        self.turns_from = 0.0
+        self.turns_until = math.inf
+        self.settings: list[tuple[float, str, tuple[float, float, bool]]] = []
+        self.drive = (1000.0, 0.0, False)
+        self.supply = (0.0, 0.0, False)
+        self.supply_limited = False
+        self.motor_volt_seconds = 0.0
+        self.supply_volt_seconds = 0.0
+        self.supply_amp_seconds = 0.0
+        self.present_wave: Wave | None = None
+        self.phase_of: Callable[[float], float] = lambda _: 0.0
+
+    def set_drive(self, pwm_hz: float, duty_percent: float, on: bool) -> None:
+        self.drive = (pwm_hz, duty_percent, on)
+        self.settings.append((self.now, "drive", self.drive))
+
+    def set_supply(self, volts: float, current_limit_amps: float, on: bool) -> None:
+        self.supply = (volts, current_limit_amps, on)
+        self.settings.append((self.now, "supply", self.supply))
+
+    def advance(self, to: float) -> None:
+        seconds = to - self.now
+        volts = self.supply[0] if self.supply[2] else 0.0
+        duty = self.drive[1] / 100.0 if self.drive[2] else 0.0
+        self.motor_volt_seconds += volts * duty * seconds
+        self.supply_volt_seconds += volts * seconds
+        self.supply_amp_seconds += 0.25 * duty * seconds
+        self.now = to
+
+    @property
+    def edges(self) -> int:
+        turned = min(self.now, self.turns_until) - self.turns_from
+        return max(0, math.floor(turned * self.pulse_hz))
+
+    @property
+    def last_edge_at(self) -> float:
+        return self.turns_from + self.edges / self.pulse_hz if self.edges else -math.inf
+
+    def wave(self) -> Wave | None:
+        return self.present_wave
+
+    def pwm_phase_s(self) -> float:
+        return self.phase_of(self.now)
+
+
+class Bed:
+    """A bench with a fake plant, and a client that asks and waits as a program would."""
+
+    def __init__(self) -> None:
+        self.plant = FakePlant()
+        self.bench = Bench(self.plant)
+
+    def add(
+        self,
+        kind: type[Kind],
+        connected_to: str = "none",
+        accuracy: dict[str, Accuracy] | None = None,
+        options: dict[str, object] | None = None,
+        errors: dict[str, float] | None = None,
+    ) -> Kind:
+        name = kind.model
+        instrument = kind(
+            Setup(
+                name=name,
+                serial="SIM1",
+                errors_rng=random.Random(f"1/{name}"),
+                noise=random.Random(f"1/1/{name}"),
+                connected_to=connected_to,
+                accuracy=accuracy or {},
+                options=options or {},
+                errors=errors or {},
+            ),
+            self.bench,
+        )
+        self.bench.add(instrument)
+        instrument.port.open()
+        return instrument
+
+    def board(self, **more: object) -> Board:
+        return self.add(Board, **more)  # type: ignore[arg-type]  # keyword pass-through of add's own arguments
+
+    def multimeter(self, connected_to: str = "across_motor", **more: object) -> Multimeter:
+        return self.add(Multimeter, connected_to, **more)  # type: ignore[arg-type]  # as above
+
+    def bench_supply(self, **more: object) -> Supply:
+        return self.add(Supply, "supply_terminals", **more)  # type: ignore[arg-type]  # as above
+
+    def scope(self, connected_to: str = "drive_signal", **more: object) -> Scope:
+        return self.add(Scope, connected_to, **more)  # type: ignore[arg-type]  # as above
+
+    def tell(self, instrument: Instrument, *messages: str) -> None:
+        """Send set messages and let their bytes arrive."""
+        for message in messages:
+            instrument.port.write(message.encode("ascii") + b"\n")
+        self.bench.advance(self.bench.now + 0.02)
+
+    def ask(self, instrument: Instrument, message: str, within_s: float = 20.0) -> str:
+        """Send a query and wait for its answer as a link on the bench's clock does; "" when none came in time."""
+        port = instrument.port
+        port.write(message.encode("ascii") + b"\n")
+        self.bench.clock.wait(self.bench.now + within_s, (Awaited(instrument),))
+        return port.read().decode("ascii").removesuffix("\n")
+
+
+class Awaited:
+    """What the clock waits on: one instrument's port."""
+
+    def __init__(self, instrument: Instrument) -> None:
+        self._port = instrument.port
+
+    def fileno(self) -> int | None:
+        return None
+
+    def ready_at(self) -> float:
+        return self._port.next_ready()
+
+
+@pytest.fixture
+def bed() -> Bed:
+    return Bed()
