@@ -31,7 +31,9 @@ CAUTIONS = (
     "Local codes and licensed practice come first. Read: sweeprig manual safety."
 )
 
-as_json = click.option("--json", "json_out", is_flag=True, help="Print one JSON value; all else goes to standard error.")
+as_json = click.option(
+    "--json", "json_out", is_flag=True, help="Print one JSON value; all else goes to standard error."
+)
 run_argument = click.argument("run", type=click.Path(path_type=Path))
 
 
@@ -261,7 +263,9 @@ def report(run: Path, json_out: bool) -> None:
 
 @cli.command()
 @run_argument
-@click.option("--to", "folder", type=click.Path(path_type=Path), help="Folder for the files; the run's own if left out.")
+@click.option(
+    "--to", "folder", type=click.Path(path_type=Path), help="Folder for the files; the run's own if left out."
+)
 @as_json
 def export(run: Path, folder: Path | None, json_out: bool) -> None:
     """Write holds and readings as CSV, units in the header."""
@@ -293,7 +297,9 @@ def off(job: str, json_out: bool) -> None:
     done = switch_off(checked, SystemClock(checked.rig.rate or 1.0))
     told = " and ".join(done.told)
     value = {"off": list(done.told), "took_s": done.took_s, "proved": True}
-    click.echo(json.dumps(value) if json_out else f"{told} confirmed off after {done.took_s:.2f} s, and shown to be off")
+    click.echo(
+        json.dumps(value) if json_out else f"{told} confirmed off after {done.took_s:.2f} s, and shown to be off"
+    )
 
 
 # -- the simulated bench ---------------------------------------------------------------------------------------------
@@ -308,7 +314,9 @@ def simbench() -> None:
 @click.argument("job")
 @click.option("--rate", type=click.FloatRange(min=0, min_open=True), default=1.0, show_default=True,
               help="Bench seconds in one real second.")  # fmt: skip
-@click.option("--write", type=click.Path(path_type=Path), help="Write a rig file with the opened addresses and the rate.")
+@click.option(
+    "--write", type=click.Path(path_type=Path), help="Write a rig file with the opened addresses and the rate."
+)
 @click.option("--record", type=click.Path(path_type=Path), help="Write what the drive really did, one JSON line each.")
 def serve(job: str, rate: float, write: Path | None, record: Path | None) -> None:
     """Serve the job's instruments on loopback until Ctrl-C."""
@@ -346,7 +354,11 @@ def manual(topic: str | None, json_out: bool) -> None:
 
     if topic is None:
         names = pages.topics()
-        click.echo(json.dumps(list(names)) if json_out else "sweeprig manual TOPIC, with TOPIC one of:\n  " + "\n  ".join(names))
+        click.echo(
+            json.dumps(list(names))
+            if json_out
+            else "sweeprig manual TOPIC, with TOPIC one of:\n  " + "\n  ".join(names)
+        )
         return
     text = pages.text(topic)
     click.echo(json.dumps({"topic": topic, "text": text}) if json_out else text)

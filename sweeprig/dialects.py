@@ -115,11 +115,18 @@ def _load(place: str, file: Traversable) -> dict[str, object]:
     try:
         return tomllib.loads(data.decode("utf-8"))
     except (tomllib.TOMLDecodeError, UnicodeDecodeError) as fault:
-        line = re.search(r"at line (\d+)", str(fault))
         raise ConfigError(
             "the dialect file is not TOML",
             value=str(fault),
-            where=Where(place, int(line.group(1)) if line else None),
+            where=Where(place, _line_of(fault, data)),
             remedy="correct the file",
             topic="dialects",
         ) from fault
+
+
+def _line_of(fault: ValueError, data: bytes) -> int | None:
+    """The line that the TOML reader names in its text; None where it names none."""
+    if "at end of document" in str(fault):
+        return data.rstrip(b"\n").count(b"\n") + 1
+    line = re.search(r"at line (\d+)", str(fault))
+    return int(line.group(1)) if line else None

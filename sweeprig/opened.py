@@ -13,7 +13,7 @@ from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from sweeprig.errors import RunError, Where
+from sweeprig.errors import ConfigError, RunError, Where
 from sweeprig.holds import Outcome
 from sweeprig.logbook import Intent, Reader, run_folder
 from sweeprig.logbook.export import READING_COLUMNS, hold_columns, reading_lines
@@ -165,7 +165,7 @@ class Run:
             return characterise(self.plan, self.outcomes, self.about)
         try:
             return Findings.from_json(json.loads(text))
-        except (ValueError, KeyError, TypeError) as error:
+        except (ValueError, KeyError, TypeError, AttributeError, ConfigError) as error:
             remedy = "Delete it: it is worked out again from the logbook"
             raise RunError(
                 "the findings of the run cannot be read", value=str(error), where=Where(str(file)), remedy=remedy

@@ -5,8 +5,9 @@ An adapter is pure: no link, no clock, no sleep, no retry. Each method is a gene
 
 MUST   confirm every set by a query (read-back or *OPC?) before returning; raise InstrumentRefused when it differs
 MUST   send the identity query, and only it, from `identify`, as an early ask
-MUST   return from `measure` one Reading for each channel asked, with a `no_data:…` flag where there is none
-MUST   refuse in its constructor (ConfigError) any option or window it cannot honour
+MUST   return from `measure` quantity → Reading for each of its channels, `no_data:…` flagged where there is none
+MUST   refuse in its constructor (ConfigError) any option it cannot honour
+MUST   refuse in `check_window` (ConfigError) a window that it can never honour; asked once when the rig opens
 MUST   switch off in `switch_off` with early asks and without needing an earlier answer
 MUST   ask for nothing longer than its own stated `within_s`
 MAY    ask several times in one method, pace asks with `after_s`, and read several channels with one ask
@@ -130,6 +131,7 @@ class Adapter(Protocol):
     def identify(self) -> Steps[Identity]: ...
     def configure(self) -> Steps[None]: ...
     def settings(self) -> Steps[dict[str, str]]: ...
+    def check_window(self, window: Window) -> None: ...
     def measure(self, window: Window) -> Steps[dict[str, Reading]]: ...
     def switch_off(self) -> Steps[None]: ...
 

@@ -145,3 +145,94 @@ def preview_text(night: Any, title: str, sums: Mapping[str, float], refused: Seq
         lines += ["", "Refused, until this is mended:"] + [f"  {line}" for line in refused]
     lines += ["", "The prediction guesses: " + "; ".join(night.guesses) + "."]
     return "\n".join(lines)
+
+
+def findings_text(findings: Mapping[str, Any]) -> str:
+    """The answer: a line a finding, a column a condition; then what was flagged, each remark once."""
+    from sweeprig.report import tables
+
+    conditions = findings["conditions"]
+    if not conditions:
+        return "Nothing was found yet: no condition has a finished hold."
+    fields = tables.telling_fields(conditions)
+    by_condition = [tables.rows(condition) for condition in conditions]
+    names = list(dict.fromkeys(row.finding for rows in by_condition for row in rows if row.found))
+    body = []
+    for name in names:
+        cells = {index: row for index, rows in enumerate(by_condition) for row in rows if row.finding == name}
+        some = next(iter(cells.values()))
+        unit = "" if some.unit == "1" else f", {some.unit}"
+        body.append([f"{some.name}{unit}", *(_cell(cells.get(index)) for index in range(len(conditions)))])
+    title = f"{findings['motor']} on {findings['rig']}"
+    if findings["simulated"]:
+        title = f"{title}\n{SIMULATED}"
+    labels = [tables.condition_label(condition, fields) for condition in conditions]
+    lines = [table(title, ["95 % intervals", *labels], body), *_remarks(by_condition, labels)]
+    return "\n".join(lines)
+
+
+def _cell(row: Any) -> str:
+    if row is None or not row.found:
+        return "not found"
+    if row.interval in ("–", "") or row.interval.startswith("one-sided"):
+        return str(row.value)
+    return f"{row.value}\n({row.interval})" if "±" not in row.value else str(row.value)
+
+
+def _remarks(by_condition: Sequence[Sequence[Any]], labels: Sequence[str]) -> list[str]:
+    """Each remark once, with the findings and conditions it belongs to."""
+    where: dict[str, dict[str, list[str]]] = {}
+    for rows, label in zip(by_condition, labels, strict=True):
+        for row in rows:
+            for remark in row.remarks if row.found else ():
+                where.setdefault(remark, {}).setdefault(row.name, []).append(label)
+    if not where:
+        return []
+    lines = ["", "Remarks"]
+    for remark, found in where.items():
+        places = "; ".join(
+            name if len(at) == len(labels) else f"{name} ({', '.join(at)})" for name, at in found.items()
+        )
+        lines.append(f"  {remark}: {places}")
+    return lines
+
+
+def status_text(value: Mapping[str, Any]) -> str:
+    """A run's status as a few sentences."""
+    counts = ", ".join(f"{count} {status}" for status, count in value["outcomes"].items()) or "none yet"
+    lines = [
+        f"{value['motor']} on {value['rig']}: {value['state']}" + ("  (SIMULATED)" if value["simulated"] else ""),
+        f"{value['sessions']} session(s), {show_time(value['run_clock_s'])} on the run clock; holds: {counts}",
+    ]
+    if value["in_hand"] is not None:
+        lines.append(f"hold {value['in_hand']['number']} was begun and has no outcome: {value['in_hand']['why']}")
+    if value["last"] is not None:
+        last = value["last"]
+        lines.append(
+            f"last hold {last['number']} ({last['purpose']}): {last['status']}, {last['verdict']} {last['reason']}"
+        )
+    return "\n".join(line.rstrip() for line in lines)
+
+
+def truth_text(value: Mapping[str, Any]) -> str:
+    """The simulated motor's parameters and true findings as two tables."""
+    parameters = [[name.replace("_", " "), f"{number:g}"] for name, number in value["motor"].items()]
+    columns = [condition["label"] for condition in value["conditions"]]
+    names = list(dict.fromkeys(name for condition in value["conditions"] for name in condition["findings"]))
+    rows = []
+    for name in names:
+        cells = [condition["findings"].get(name) for condition in value["conditions"]]
+        rows.append([name.replace("_", " "), *(_true(cell) for cell in cells)])
+    title = f"What is true of the simulated motor, by {value['trials']} trials a threshold; ± is this counting's 2 u"
+    return "\n\n".join(
+        (f"{SIMULATED}\n\n{table('Parameters', ['', 'value'], parameters)}", table(title, ["", *columns], rows))
+    )
+
+
+def _true(cell: Mapping[str, Any] | None) -> str:
+    if cell is None or cell.get("value") is None:
+        return "none"
+    from sweeprig.report.numbers import value_and_u
+
+    u = cell.get("u") or 0.0
+    return value_and_u(cell["value"], 2.0 * u) if u else f"{cell['value']:.4g}"

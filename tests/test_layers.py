@@ -28,26 +28,17 @@ MAY_IMPORT: dict[str, set[str]] = {
     "logbook": VALUES,
     "simbench": GROUND | {"job"},
     "conduct": GROUND | {"link", "dialects", "job", "schedule", "logbook"},
-    "report": VALUES | {"job", "characterise"},
+    "report": VALUES | {"job", "characterise", "manual"},
     "manual": {"errors"},
     "opened": VALUES | {"job", "logbook", "characterise", "report"},
+    "results": VALUES | {"job", "logbook", "characterise", "report", "opened"},
+    "terminal": VALUES | {"conduct", "report"},
     "launch": GROUND | {"conduct", "job", "logbook", "simbench"},
     "conformance": GROUND | {"link"},
     "testing": GROUND | {"job", "simbench", "launch", "opened", "conduct"},
     "cli": GROUND
-    | {
-        "conduct",
-        "job",
-        "schedule",
-        "logbook",
-        "opened",
-        "report",
-        "launch",
-        "simbench",
-        "manual",
-        "link",
-        "characterise",
-    },
+    | {"conduct", "job", "schedule", "logbook", "opened", "report", "launch", "simbench", "manual", "link"}
+    | {"characterise", "results", "terminal"},
 }
 """Room → rooms it may import (itself always). A room that is missing here is a defect: decide its place first."""
 

@@ -7,6 +7,7 @@ for a whole gate: the counts are polled.
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 
 from sweeprig.errors import ConfigError, InstrumentRefused
 from sweeprig.quantities import Reading
@@ -37,13 +38,24 @@ def timer_ticks(pwm_hz: float) -> float:
 class Board:
     """Options: `heartbeat` (2 s; "0 s" for none), `gate` (0.25 s). No dialect: the protocol is the board's own.
 
-    Channels: speed, edge_age, edge_gap (from `measure`), pwm_hz, duty_set (from `apply`, the quantised values).
+    Channels, from `measure`:
+    speed     Σedges / Σticks · clock · 60 / pulses per revolution; without edges no data, `no_data:no_edges`, never 0
+    edge_age  s since the last edge, at the last poll
+    edge_gap  s, the largest such age seen at a poll of the window
+    and from `apply`, as quantised by the board: pwm_hz, duty_set.
+
     `power_on` says whether the board had restarted before the last `configure`; None before the first.
     """
 
     def __init__(self, setup: AdapterSetup) -> None:
         self.name = name = setup.name
-        self.channels = {"speed": "rpm", "edge_age": "s", "edge_gap": "s", "pwm_hz": "Hz", "duty_set": "%"}
+        self.channels: Mapping[str, str] = {
+            "speed": "rpm",
+            "edge_age": "s",
+            "edge_gap": "s",
+            "pwm_hz": "Hz",
+            "duty_set": "%",
+        }
         self.power_on: bool | None = None
         common.check_accuracy(setup, self.channels)
         options = common.Options(setup)
@@ -83,7 +95,7 @@ class Board:
                 value=f"{setup.pulses_per_revolution}",
                 allowed="above 0",
                 remedy="correct pulses_per_revolution in the motor file",
-                topic="motor",
+                topic="job-files",
             )
 
     def identify(self) -> Steps[Identity]:
@@ -157,20 +169,16 @@ class Board:
                     value=f"{value:g} {unit}".strip(),
                     allowed=f"{low:g} to {high:g} {unit}".strip(),
                     remedy="correct the sweep",
-                    topic="sweep",
+                    topic="job-files",
                 )
 
     def measure(self, window: Window) -> Steps[dict[str, Reading]]:
         """Poll the counts until gates that ended after the first poll cover the window.
 
-        speed     Σedges / Σticks · clock · 60 / pulses per revolution over those gates. The first of them began before
-                  the first poll, by less than a gate. Gates that passed between polls count for nothing and are flagged
-                  `gates_missed`. No edge in any: no data, `no_data:no_edges`, never 0
-        edge_age  s since the last edge, at the last poll
-        edge_gap  s, the largest such age seen at a poll of this window
-
-        Should the gates stand still, the polling ends two gates and half a second after the window: `no_data:no_gates`
-        or, with some, `short_window`. A gate number that goes backwards is a board that restarted: InstrumentRefused.
+        The first of them began before the first poll, by less than a gate. Gates that passed between polls count for
+        nothing and are flagged `gates_missed`. Should the gates stand still, the polling ends two gates and half a
+        second after the window: `no_data:no_gates` or, with some, `short_window`. A gate number that goes backwards is
+        a board that restarted: InstrumentRefused.
         """
         gate_s, wanted, counts = self._gate_s, window.seconds * (1.0 - 1e-9), self._counts
         answer = yield self._fetch
@@ -233,7 +241,7 @@ class Board:
             value=f"gate {after} after gate {before}",
             allowed="gate numbers that rise",
             remedy="check the board's supply and its reset line; its settings are lost",
-            topic="instruments",
+            topic="rig",
         )
 
     def switch_on(self) -> Steps[None]:

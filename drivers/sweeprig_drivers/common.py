@@ -209,7 +209,7 @@ def refused(name: str, what: str, value: str, allowed: str, entries: tuple[str, 
         value=value,
         allowed=allowed,
         remedy="check the setting against the instrument's ranges",
-        topic="instruments",
+        topic="rig",
     )
 
 

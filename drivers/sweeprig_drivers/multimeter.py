@@ -6,6 +6,7 @@ The mean over whole PWM periods is what it is asked for; what a broken period co
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 
 from sweeprig.errors import ConfigError
 from sweeprig.quantities import Reading
@@ -51,7 +52,7 @@ class ScpiMultimeter:
 
     def __init__(self, setup: AdapterSetup) -> None:
         self.name = name = setup.name
-        self.channels = {"volts": "V"}
+        self.channels: Mapping[str, str] = {"volts": "V"}
         common.check_accuracy(setup, self.channels)
         options = common.Options(setup)
         self._range_v = options.quantity("range", "V", 1e-3, 1000.0)

@@ -5,6 +5,8 @@ Which point the probe sits on decides what the duty means (bench practice: at th
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+
 from sweeprig.quantities import Reading
 from sweeprig.roles import AdapterSetup, Identity, Steps, Window
 from sweeprig_drivers import common
@@ -41,7 +43,7 @@ class ScpiScope:
         wired = {"frequency": channel, "duty": channel}
         if volts_channel is not None:
             wired["volts"] = volts_channel
-        self.channels = {quantity: UNITS[quantity] for quantity in wired}
+        self.channels: Mapping[str, str] = {quantity: UNITS[quantity] for quantity in wired}
         common.check_accuracy(setup, self.channels)
         dialect = Dialect(name, setup.dialect, "scope", COMMANDS)
         self._identity = query(dialect.command("identity"), early=True)

@@ -6,6 +6,7 @@ An actuator: it powers the motor, so every set is read back and off is shown to 
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 
 from sweeprig.errors import ConfigError
 from sweeprig.quantities import Reading
@@ -42,7 +43,7 @@ class ScpiSupply:
 
     def __init__(self, setup: AdapterSetup) -> None:
         self.name = name = setup.name
-        self.channels = {"volts": "V", "amps": "A", "volts_set": "V", "amps_limit": "A"}
+        self.channels: Mapping[str, str] = {"volts": "V", "amps": "A", "volts_set": "V", "amps_limit": "A"}
         common.check_accuracy(setup, self.channels)
         options = common.Options(setup)
         self._volts_step = options.quantity("volts_resolution", "V", 1e-6, 1.0, 1e-3)

@@ -9,7 +9,7 @@ from collections.abc import Mapping, Sequence
 
 from sweeprig.characterise import usable
 from sweeprig.characterise.curve import Curve, fit_curve, lowest_sure_duty
-from sweeprig.characterise.duties_found import START, STALL, TAIL, start_stall_hysteresis, threshold
+from sweeprig.characterise.duties_found import STALL, START, TAIL, start_stall_hysteresis, threshold
 from sweeprig.characterise.evidence import (
     Chosen,
     Duties,

@@ -137,7 +137,7 @@ def _check(x: Floats, trials: Floats, successes: Floats) -> None:
 
 
 def separation(x: Floats, trials: Floats, successes: Floats) -> Separated | None:
-    """Whether a division (complete or quasi-complete) leaves no finite fit (Albert and Anderson 1984); exact for one x."""
+    """Whether a division, complete or quasi-complete, leaves no finite fit (Albert and Anderson 1984)."""
     good, bad = x[successes > 0], x[successes < trials]
     if not good.size or not bad.size:
         missing = "success" if not good.size else "failure"

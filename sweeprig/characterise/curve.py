@@ -4,10 +4,11 @@ Formulas on arrays; which holds are points is decided in `evidence`.
 
 The uncertainty has three parts, kept apart because they behave differently:
 * common   the instrument's accuracy. It is the same for all readings of one instrument, so it is never averaged down:
-           a level's common part is the mean of its readings' u, however many they are. `Reading.u` contains the noise of
-           that reading's mean as well; counting that as common too errs on the safe side.
+           a level's common part is the mean of its readings' u, however many they are. `Reading.u` has the noise of
+           that reading's mean in it as well; counting that as common too errs on the safe side.
 * random   scatter between holds at one setting (drift of friction, settling, reading noise), from replicates, pooled
-           over the levels; falls with the number of holds. Without replicates it is not known: flag `no_replicates`.
+           over the levels; falls with the number of holds. Without replicates (flag `no_replicates`) the
+           readings' own u stands for it.
 * model    between levels the truth lies within ± the distance of the smooth curve from the straight chord, and below
            the lowest level within ± the whole extrapolated step; both as rectangles (JCGM 100:2008, 4.3.7).
 """
@@ -127,15 +128,15 @@ def fit_curve(points: Sequence[Point], *, monotone: bool) -> Curve | None:
         return None
     value = np.array([level.value for level in found])
     scatter, freedom = pooled_scatter(found)
-    u_random = np.array([scatter / math.sqrt(level.effective_n) for level in found])
     u_common = np.array([level.u_common for level in found])
+    random = np.array([scatter / math.sqrt(level.effective_n) for level in found])
+    # without replicates the readings' own u is all that is known, so it has to stand for the scatter as well
+    u_random = random if freedom else u_common
     flags = [] if freedom else ["no_replicates"]
     if monotone:
-        # an unreplicated level may still differ from its neighbour by the noise in its own reading
-        noise = np.where(u_random > 0.0, u_random, u_common)
         weights = np.array([level.weight for level in found])
         raised = np.asarray(optimize.isotonic_regression(value, weights=weights).x, dtype=np.float64)
-        flags += ["not_monotone"] if np.any(np.abs(raised - value) > 3.0 * noise + 1e-9) else []
+        flags += ["not_monotone"] if np.any(np.abs(raised - value) > 3.0 * u_random + 1e-9) else []
         value = raised
     return Curve(
         duty=np.array([level.duty_percent for level in found]),

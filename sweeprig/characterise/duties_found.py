@@ -21,10 +21,10 @@ from sweeprig.characterise.combine import (
 )
 from sweeprig.characterise.evidence import Chosen
 from sweeprig.characterise.findings import Bound, Finding, not_found
-from sweeprig.characterise.laws import START_LAWS, STALL_LAWS, Evidence, Floats, Law, summed
+from sweeprig.characterise.laws import STALL_LAWS, START_LAWS, Evidence, Floats, Law, summed
 from sweeprig.characterise.thresholds import (
-    START_PRIOR,
     STALL_PRIOR,
+    START_PRIOR,
     Fitted,
     SpreadPrior,
     bound_without_contrast,
@@ -32,6 +32,9 @@ from sweeprig.characterise.thresholds import (
 )
 
 TAIL = 0.99
+FEW = 4
+"""With fewer failures (or successes) than this the spread is mostly what the prior says, and a motor with a spread far
+outside it is not covered as stated: flag `few_failures` (`few_successes`)."""
 _TAIL_FAILURE = (0.02, 0.20)
 
 
@@ -138,6 +141,8 @@ class Threshold:
         elif probability >= TAIL:
             flags += ["law_assumed"] if len(self.kind.laws) < 2 else []
             flags += [] if self._tail_was_tried() else ["tail_not_tried"]
+        if self.fitted is not None and min(self.evidence.failures, self.evidence.successes) < FEW:
+            flags.append("few_failures" if self.evidence.failures < FEW else "few_successes")
         if self.fitted is not None and not self.evidence.duty[0] <= value <= self.evidence.duty[-1]:
             flags.append("extrapolated")
         return tuple(flags)

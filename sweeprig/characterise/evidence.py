@@ -18,7 +18,7 @@ from sweeprig.holds import Approach, Condition, Outcome, Purpose, Status, Verdic
 from sweeprig.plan import Plan
 
 LEAST_TIME_CONSTANTS = 5.0
-"""A hold tells of stalling when it was meant to last this many of the motor's time constants (definitions, Exposure)."""
+"""A curve hold tells of stalling when it was meant to last this many of the motor's time constants."""
 _SHORTEST_GAP_S = 1e-3
 
 

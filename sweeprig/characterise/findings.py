@@ -62,7 +62,7 @@ def not_found(reason: str, *, flags: tuple[str, ...] = ()) -> Finding:
 
 @dataclass(frozen=True, slots=True)
 class UsableRange:
-    """low duties and the low speed are one-sided upper bounds, so `turndown` is a lower one (ratio of speeds, unit 1)."""
+    """The low duties and the low speed are one-sided upper bounds, so `turndown` (a ratio) is a lower one."""
 
     low_duty_percent: Finding
     low_duty_from_rest_percent: Finding
@@ -128,7 +128,7 @@ class ConditionFindings:
 
     @classmethod
     def from_json(cls, value: Mapping[str, Any]) -> ConditionFindings:
-        found = {name: Finding.from_json(value[name]) for name in FINDING_NAMES}
+        found: dict[str, Any] = {name: Finding.from_json(value[name]) for name in FINDING_NAMES}
         within = {name: Finding.from_json(value["usable_range"][name]) for name in RANGE_NAMES}
         return cls(
             condition=Condition(**{f.name: value[f.name] for f in fields(Condition)}),
@@ -216,7 +216,7 @@ class Findings:
                 allowed=f"version {VERSION}",
                 remedy="Let this release work out the findings again from the logbook",
             )
-        rows = {key: tuple(shown[key]) for key in ("limits", "suspicions", "advice")}
+        rows: dict[str, Any] = {key: tuple(shown[key]) for key in ("limits", "suspicions", "advice")}
         conditions = tuple(ConditionFindings.from_json(one) for one in shown["conditions"])
         about = {key: shown[key] for key in ("job_hash", "simulated", "motor", "rig", "software", "version")}
         return cls(conditions=conditions, **about, **rows)

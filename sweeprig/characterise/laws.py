@@ -45,8 +45,7 @@ def _exponential(x: Floats) -> Floats:
 
 
 def _gaussian(x: Floats) -> Floats:
-    above = -np.log1p(-special.ndtr(-np.maximum(x, 0.0)))
-    return np.where(x > 0.0, above, -special.log_ndtr(np.minimum(x, 0.0)))
+    return np.asarray(-special.log_ndtr(x), dtype=np.float64)
 
 
 def _logistic(x: Floats) -> Floats:

@@ -127,7 +127,8 @@ def fit(laws: Sequence[Law], evidence: Evidence, prior: SpreadPrior) -> Fitted:
     posteriors = [posterior(law, evidence, prior) for law in laws]
     best = max(one.log_evidence for one in posteriors)
     kept = [one for one in posteriors if one.log_evidence >= best + math.log(REJECTED_BELOW)]
-    rejected = tuple(one.law.name for one in posteriors if one not in kept)
+    names = {one.law.name for one in kept}
+    rejected = tuple(law.name for law in laws if law.name not in names)
     return Fitted(tuple(kept), rejected)
 
 

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import special
@@ -17,8 +17,10 @@ from sweeprig.characterise.curve import Curve, Level, levels, pooled_scatter
 from sweeprig.characterise.duties_found import TAIL, Threshold
 from sweeprig.characterise.evidence import Point
 from sweeprig.characterise.findings import Finding, UsableRange, not_found
+from sweeprig.characterise.laws import Floats
 
 SEGMENTS = 3
+LEAST_APART_PERCENT = 2.0
 LEAST_FREEDOM = 2
 """Degrees of freedom that a segment needs before its scatter is quoted."""
 _ACCURACY = "accuracy of an instrument common to all its readings, not averaged down"
@@ -82,7 +84,7 @@ def at_stall(branch: Branch | None, stall: Threshold, what: str) -> Finding:
         holds=holds,
         method=f"distribution of the stall duty carried through the falling {what} curve (means weighted by exposure)",
         assumes=(_ACCURACY,),
-        flags=branch.flags(float(np.median(sample))),
+        flags=tuple(sorted({*branch.flags(float(np.median(sample))), *stall.flags})),
     )
 
 
@@ -99,7 +101,7 @@ def _at_stall_bound(branch: Branch, stall: Threshold, what: str, holds: tuple[in
         holds=holds,
         method=f"fitted {what} at the bound of the stall duty",
         assumes=(_ACCURACY,),
-        flags=(*branch.flags(duty), stall.kind.flags[0 if upper else 1]),
+        flags=tuple(sorted({*branch.flags(duty), *stall.flags, stall.kind.flags[0 if upper else 1]})),
     )
 
 
@@ -144,15 +146,29 @@ def high_duty(branch: Branch | None, saturation_percent: float, u_duty: float) -
     curve, share = branch.curve, 1.0 - saturation_percent / 100.0
     duty, speed = curve.dense(float(curve.duty[0]), float(curve.duty[-1]))
     index = int(np.argmax(speed >= share * speed[-1]))
-    value = float(duty[index])
+    value = _crossing(duty, speed, index, share * float(speed[-1]))
     free = curve.u_free_at(np.array([value, float(curve.duty[-1])]))
     slope = float(np.gradient(speed, duty)[index])
     u_speed = math.hypot(float(free[0]), share * float(free[1]))
     span = float(curve.duty[-1] - curve.duty[0]) / math.sqrt(12.0)
     # on a flat top the place is known no better than by the whole width of the curve
     u = math.hypot(min(u_speed / slope, span) if slope > 0.0 else span, u_duty)
-    found = two_sided(value, u, curve.holds, f"lowest duty within {saturation_percent:g} % of top speed", curve.flags)
-    return found
+    method = f"lowest duty within {saturation_percent:g} % of top speed"
+    found = two_sided(value, u, curve.holds, method, curve.flags)
+    # no duty outside the measured ones can be the answer
+    return replace(
+        found,
+        low=max(value - K_TWO_SIDED * u, float(curve.duty[0])),
+        high=min(value + K_TWO_SIDED * u, float(curve.duty[-1])),
+    )
+
+
+def _crossing(duty: Floats, speed: Floats, index: int, wanted: float) -> float:
+    """Duty where the speed reaches `wanted`, between the dense points index − 1 and index."""
+    if index == 0:
+        return float(duty[0])
+    part = (wanted - float(speed[index - 1])) / float(speed[index] - speed[index - 1])
+    return float(duty[index - 1] + part * (duty[index] - duty[index - 1]))
 
 
 def usable_range(
@@ -225,13 +241,26 @@ def resolution(branch: Branch | None, within: UsableRange, step_percent: float |
     if step_percent is None or step_percent <= 0.0:
         return not_found("the drive does not state its duty step")
     curve, low, high = span
-    duty, speed = curve.dense(low, high)
-    slope = np.gradient(speed, duty)
+    duty = _apart(curve, low, high)
+    slope, random = np.diff(curve.at(duty)) / np.diff(duty), np.interp(duty, curve.duty, curve.u_random)
     steepest = int(np.argmax(slope))
-    left = int(np.clip(np.searchsorted(curve.duty, duty[steepest]) - 1, 0, curve.duty.size - 2))
-    u_slope = math.hypot(*curve.u_random[left : left + 2]) / float(curve.duty[left + 1] - curve.duty[left])
-    method = f"duty step {step_percent:.4g} % × steepest slope in the usable range, at {duty[steepest]:.1f} % duty"
+    u_slope = math.hypot(*random[steepest : steepest + 2]) / float(duty[steepest + 1] - duty[steepest])
+    where = f"from {duty[steepest]:.1f} to {duty[steepest + 1]:.1f} % duty"
+    method = f"duty step {step_percent:.4g} % × steepest slope between levels of the usable range, {where}"
     return two_sided(float(slope[steepest]) * step_percent, u_slope * step_percent, curve.holds, method, curve.flags)
+
+
+def _apart(curve: Curve, low: float, high: float) -> Floats:
+    """Levels from the last at or below `low` to the first at or above `high`, LEAST_APART_PERCENT or more from one
+    another (two at the least). Between nearer levels a slope is mostly noise, and within an interval the smooth curve's
+    own slope swings before a bend, so only slopes between levels are quoted."""
+    first = max(int(np.searchsorted(curve.duty, low, side="right")) - 1, 0)
+    last = min(int(np.searchsorted(curve.duty, high)), curve.duty.size - 1)
+    kept = [float(curve.duty[first])]
+    for duty in curve.duty[first + 1 : last].tolist():
+        if duty - kept[-1] >= LEAST_APART_PERCENT and curve.duty[last] - duty >= LEAST_APART_PERCENT:
+            kept.append(duty)
+    return np.array([*kept, float(curve.duty[last])])
 
 
 def curve_hysteresis(falling: Branch | None, rising: Sequence[Point]) -> Finding:
@@ -260,8 +289,7 @@ def repeatability(points: Sequence[Point]) -> Finding:
 
     Pooled in each segment; bound s·√(ν / χ²(0.05, ν)) for ν degrees of freedom (normal scatter).
     """
-    found = [level for level in levels(points) if len(level.holds) > 1]
-    rows = [row for segment in _segments(found) if (row := _bound_of_scatter(segment)) is not None]
+    rows = [row for segment in _segments(levels(points)) if (row := _bound_of_scatter(segment)) is not None]
     if not rows:
         return not_found("no duty segment has three holds at one setting, or two at two")
     bound, scatter, freedom, holds = max(rows, key=lambda row: row[0])
@@ -293,4 +321,9 @@ def _bound_of_scatter(segment: Sequence[Level]) -> tuple[float, float, int, tupl
     if freedom < LEAST_FREEDOM:
         return None
     bound = scatter * math.sqrt(freedom / float(special.chdtri(freedom, ONE_SIDED)))
-    return bound, scatter, freedom, tuple(sorted(hold for level in segment for hold in level.holds))
+    return (
+        bound,
+        scatter,
+        freedom,
+        tuple(sorted(hold for level in segment if len(level.holds) > 1 for hold in level.holds)),
+    )

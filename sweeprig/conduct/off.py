@@ -1,4 +1,4 @@
-"""`sweeprig off`: drive and supply off on a rig that no run holds, all links at once, then the proof where it can be had."""
+"""`sweeprig off`: drive and supply off on a rig that no run holds, on all links at once, then the proof."""
 
 from __future__ import annotations
 

@@ -7,11 +7,11 @@ of `watchman`. The loop in `run` turns them into outcomes.
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from dataclasses import dataclass, field
 
 from sweeprig.conduct.bounds import BOUNDS
-from sweeprig.conduct.rig import OpenRig
+from sweeprig.conduct.rig import OpenRig, by_channel
 from sweeprig.conduct.settle import LEAST_READINGS, mean_and_u, settled
 from sweeprig.conduct.switch_off import drive_off, still_on
 from sweeprig.conduct.track import Track
@@ -67,11 +67,14 @@ class Performer:
         rig, drive, name = self.rig, self.rig.drive, self.rig.source["drive"]
         setting = DriveSetting(condition.pwm_hz, duty_percent)
         # From here on the rotor must be seen turning: the ages count before the first edge of power.
+        was_on = rig.guard.on
         rig.guard.drive_on(rig.clock.now())
         set_values = rig.tell(name, drive.apply(setting), self.watch.look)
-        rig.tell(name, drive.switch_on(), self.watch.look)
+        if not was_on:
+            # Never "on" again on a drive that should be on: that would hide a lapse of its heartbeat.
+            rig.tell(name, drive.switch_on(), self.watch.look)
         done.readings.extend(set_values.values())
-        done.means.update(set_values)
+        done.means.update(by_channel(set_values))
 
     def cycle(self, names: tuple[str, ...], window_s: float, hold: Hold, done: Performed) -> dict[str, Reading]:
         readings = self.rig.read(names, Window(window_s, hold.condition.pwm_hz), self.watch.look)
@@ -132,6 +135,7 @@ class Performer:
         while clock.now() < until:
             track.take(self.cycle(names, min(BOUNDS["trial_window_s"], seconds), hold, done))
         if not track.turning(clock.now()):
+            self.still_driven()
             drive_off(self.rig)
             raise Spoiled(f"the rotor did not turn after {seconds:g} s at {duty:g} %")
 
@@ -226,13 +230,21 @@ class Performer:
         done.event_between_s = (done.exposed_s, None)
         done.means.update(means_of(cycles[-2:]))
         if not started:
+            self.still_driven()
             drive_off(self.rig)
             if track.revolutions > 0:
                 done.flags = (*done.flags, "twitched")
 
     # -- how it ended --------------------------------------------------------------------------------------------
 
+    def still_driven(self) -> None:
+        """The drive says that it is on. Off by itself (its heartbeat lapsed) is no stop of the rotor: Spoiled."""
+        rig, name = self.rig, self.rig.source["drive"]
+        if rig.guard.on and rig.tell(name, rig.drive.settings(), self.watch.look).get("output", "1") in ("0", "OFF"):
+            raise Spoiled("heartbeat: the drive switched itself off during the hold, the host was silent for too long")
+
     def _stopped(self, track: Track, exposed: float, done: Performed) -> None:
+        self.still_driven()
         drive_off(self.rig)
         done.verdict, done.exposed_s, done.restarts = Verdict.STOPPED, exposed, track.restarts
         if track.stopped_at is None:
@@ -275,8 +287,3 @@ def means_of(cycles: list[dict[str, Reading]]) -> dict[str, Reading]:
         flags = tuple(sorted({flag for reading in good for flag in reading.flags}))
         means[channel] = Reading(mean, math.hypot(u_mean, u_instrument), last.unit, last.at, channel, flags)
     return means
-
-
-def heartbeat_lapsed(settings: Mapping[str, str]) -> bool:
-    """The drive reports its output off although it was told to be on: the host was silent for too long."""
-    return settings.get("output", "1") in ("0", "OFF")

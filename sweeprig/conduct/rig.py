@@ -87,8 +87,9 @@ class OpenRig:
             if result.error is not None:
                 failed.append((name, result.error))
                 return
-            guard.take(result.value)
-            readings.update(result.value)
+            found = by_channel(result.value)
+            guard.take(found)
+            readings.update(found)
 
         deadline = self.clock.now() + window.seconds + BOUNDS["cycle_s"]
         together(pairs, self.clock, deadline, look, arrived, self.traffic)
@@ -106,6 +107,11 @@ class OpenRig:
     def close(self) -> None:
         for link in self.links.values():
             link.close()
+
+
+def by_channel(measured: Mapping[str, Reading]) -> dict[str, Reading]:
+    """What an adapter measured, keyed by the full channel name instead of the quantity."""
+    return {reading.channel: reading for reading in measured.values()}
 
 
 def named(name: str, error: SweeprigError) -> SweeprigError:
@@ -138,6 +144,9 @@ def open_rig(
     source = {role: channel.partition(".")[0] for role, channel in job.rig.roles.items()}
     _check_actuators(adapters, source)
     guard = Guard(policies(job, source))
+    for adapter in adapters.values():
+        for pwm_hz in job.sweep.pwm:
+            adapter.check_window(Window(BOUNDS["cycle_window_s"], pwm_hz))
     rig = OpenRig(job, clock, adapters, {}, source, job.rig.roles, guard, traffic)
     try:
         for name, instrument in job.rig.instruments.items():

@@ -9,7 +9,7 @@ import contextlib
 from dataclasses import dataclass, replace
 
 from sweeprig.conduct.heal import heal
-from sweeprig.conduct.perform import Performed, Performer, Spoiled, heartbeat_lapsed
+from sweeprig.conduct.perform import Performed, Performer, Spoiled
 from sweeprig.conduct.rig import OpenRig, configure
 from sweeprig.conduct.states import Event, OnEvent, Orders, State
 from sweeprig.conduct.switch_off import prove_off, switch_off
@@ -107,11 +107,7 @@ class _Session:
         status, reason, ending, failed = Status.DONE, "", None, False
         try:
             self.performer.perform(hold, done)
-            if self.rig.guard.on and heartbeat_lapsed(
-                self.rig.tell(self.rig.source["drive"], self.rig.drive.settings())
-            ):
-                status, reason = Status.DISCARDED, "heartbeat: the board switched its output off during the hold"
-                self._drive_is_off()
+            self.performer.still_driven()
         except Spoiled as spoiled:
             status, reason = Status.DISCARDED, str(spoiled)
             self._drive_is_off()

@@ -9,7 +9,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 from sweeprig.conduct.bounds import BOUNDS
-from sweeprig.conduct.rig import OpenRig
+from sweeprig.conduct.rig import OpenRig, by_channel
 from sweeprig.errors import OffNotProved, SweeprigError
 from sweeprig.quantities import Reading, show_quantity
 from sweeprig.roles import Window
@@ -92,7 +92,7 @@ def _read_blind(rig: OpenRig, roles: list[str]) -> dict[str, Reading]:
     for name, result in results.items():
         if result.error is not None:
             raise _not_proved(name, result.error)
-        readings.update(result.value)
+        readings.update(by_channel(result.value))
     return readings
 
 

@@ -9,10 +9,11 @@ from collections.abc import Callable
 from typing import NamedTuple
 
 from sweeprig.conformance.bed import Bed, Exchange, Failed, NotApplicable, over_link, perform
+from sweeprig.conformance.scripted import Scripted
 from sweeprig.conformance.suite import SUITE
 from sweeprig.roles import Adapter, DriveSetting, SupplySetting, Window
 
-__all__ = ["Check", "Exchange", "checks", "over_link", "perform"]
+__all__ = ["Check", "Exchange", "Scripted", "checks", "over_link", "perform"]
 
 
 class Check(NamedTuple):

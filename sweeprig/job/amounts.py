@@ -108,7 +108,8 @@ class Amount:
         self, schema: core_schema.CoreSchema, handler: GetJsonSchemaHandler
     ) -> dict[str, object]:
         about = f"{_noun(self.unit)}, {self.allowed}" + (f". {self.why}" if self.why else "")
-        return {"type": "string", "pattern": unit_pattern(self.unit), "description": about}
+        # `unit` is no word of JSON Schema and constrains nothing: it is for people and for writing the default
+        return {"type": "string", "pattern": unit_pattern(self.unit), "unit": self.unit, "description": about}
 
 
 @dataclass(frozen=True, slots=True)
@@ -170,14 +171,15 @@ class Words:
     def read(self, value: object) -> str:
         """The text, blanks at its ends removed."""
         if not isinstance(value, str):
-            raise problem("a text in quotes is wanted", value, self.allowed)
+            raise problem("a text in quotes is wanted", value, self.allowed, "Put it in quotes")
         text = value.strip()
         if not text:
-            raise problem("the text is empty", value, self.allowed)
+            raise problem("the text is empty", value, self.allowed, "Write what a person would call it")
         if len(text) > self.most:
-            raise problem(f"a text of {len(text)} characters is too long", value, self.allowed)
+            raise problem(f"a text of {len(text)} characters is too long", value, self.allowed, "Shorten it")
         if not text.isprintable() or (self.ascii_only and not text.isascii()):
-            raise problem("the text has characters that are not allowed here", value, self.allowed)
+            what = "the text has characters that are not allowed here"
+            raise problem(what, value, self.allowed, f"Take out {_first_odd(text, self.ascii_only)}")
         return text
 
     def __get_pydantic_core_schema__(self, source: object, handler: GetCoreSchemaHandler) -> core_schema.CoreSchema:
@@ -247,6 +249,12 @@ def unit_pattern(unit: str) -> str:
     if unit == "1":
         return f"{_NUMBER}$"
     return f"{_NUMBER}{_PREFIXED.get(unit, unit)}\\s*$"
+
+
+def _first_odd(text: str, ascii_only: bool) -> str:
+    """The first character that is not allowed, by its number: it may not be one that can be shown."""
+    odd = next(char for char in text if not char.isprintable() or (ascii_only and not char.isascii()))
+    return f"U+{ord(odd):04X}"
 
 
 def _found(text: str) -> str:

@@ -9,13 +9,13 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from sweeprig.errors import ConfigError, RoleMissing
+from sweeprig.job.amounts import shown
 from sweeprig.job.freeze import curve_low
 from sweeprig.job.models import Job
 from sweeprig.job.motor_models import FINDING_UNITS
 from sweeprig.job.problems import Sources, misfit
 from sweeprig.job.toml_source import KeyPath
 from sweeprig.job.wiring_checks import wiring_checks
-from sweeprig.quantities import show_quantity
 
 TIME_CONSTANTS = 5.0
 """A first-order change is done to 0.7 % after so many time constants (exp(−5) = 0.0067)."""
@@ -70,21 +70,21 @@ def _voltages(job: Job, sources: Sources) -> Iterator[ConfigError]:
                 path: KeyPath = ("sweep", "supply", position)
                 yield misfit(
                     sources, path, f"this supply voltage is above {name} ({sources.where(place)})",
-                    f"up to {show_quantity(bound, 'V')}", "Lower it; raise the limit only if the data sheet does",
+                    f"up to {shown(bound, 'V')}", "Lower it; raise the limit only if the data sheet does",
                 )  # fmt: skip
                 break
     if job.motor.nominal_voltage > job.motor.maximum_voltage:
         yield misfit(
             sources, ("motor", "nominal_voltage"),
             f"the nominal voltage is above the maximum ({sources.where(('motor', 'maximum_voltage'))})",
-            f"up to {show_quantity(job.motor.maximum_voltage, 'V')}", "Look both up in the data sheet",
+            f"up to {shown(job.motor.maximum_voltage, 'V')}", "Look both up in the data sheet",
         )  # fmt: skip
 
 
 def _duties(job: Job, sources: Sources) -> Iterator[ConfigError]:
     """low < high; high within what motor and rig allow; every duty of the sweep in between."""
     duty, path = job.sweep.duty, ("sweep", "duty", "high")
-    high = show_quantity(duty.high, "%")
+    high = shown(duty.high, "%")
     if duty.low >= duty.high:
         yield misfit(
             sources, ("sweep", "duty", "low"), "the lowest duty is not below the highest", f"below {high}",
@@ -98,7 +98,7 @@ def _duties(job: Job, sources: Sources) -> Iterator[ConfigError]:
     for bound, place in bounds:
         if bound is not None and duty.high > bound:
             what = f"the highest duty, {high}, is above what {place[0]} allows ({sources.where(place)})"
-            yield misfit(sources, path, what, f"up to {show_quantity(bound, '%')}", "Lower the sweep's highest duty")
+            yield misfit(sources, path, what, f"up to {shown(bound, '%')}", "Lower the sweep's highest duty")
     inside: list[tuple[KeyPath, float | None]] = [
         (("sweep", "run_in", "duty"), job.sweep.run_in.duty if job.sweep.run_in else None),
         (("sweep", "curve", "lowest"), job.sweep.curve.lowest if job.sweep.curve else None),
@@ -107,7 +107,7 @@ def _duties(job: Job, sources: Sources) -> Iterator[ConfigError]:
     inside += [(("sweep", "curve", "duties", position), each) for position, each in enumerate(listed)]
     for place, value in inside:
         if value is not None and not duty.low <= value <= duty.high:
-            allowed = f"{show_quantity(duty.low, '%')} to {high}"
+            allowed = f"{shown(duty.low, '%')} to {high}"
             yield misfit(
                 sources, place, "this duty lies outside the sweep's duty range", allowed, "Widen [duty] or move it"
             )
@@ -131,12 +131,12 @@ def _curve(job: Job, sources: Sources) -> Iterator[ConfigError]:
     if curve.points is not None and low >= job.sweep.duty.high:
         yield misfit(
             sources, ("sweep", "curve", "lowest"), "the curve would begin below its own low end",
-            f"below {show_quantity(job.sweep.duty.high, '%')}", "Lower it", default=show_quantity(low, "%"),
+            f"below {shown(job.sweep.duty.high, '%')}", "Lower it", default=shown(low, "%"),
         )  # fmt: skip
     if curve.least > curve.most:
         yield misfit(
             sources, ("sweep", "curve", "least"), "the shortest wait is longer than the longest",
-            f"up to {show_quantity(curve.most, 's')} (most)", "Exchange least and most",
+            f"up to {shown(curve.most, 's')} (most)", "Exchange least and most",
         )  # fmt: skip
 
 
@@ -155,11 +155,11 @@ def _times(job: Job, sources: Sources) -> Iterator[ConfigError]:
     for path, seconds in times:
         if seconds * _SLACK < needed:
             place = sources.where(("motor", "longest_time_constant"))
-            figure = f"{TIME_CONSTANTS:g} × {show_quantity(constant, 's')} = {show_quantity(needed, 's')}"
+            figure = f"{TIME_CONSTANTS:g} × {shown(constant, 's')} = {shown(needed, 's')}"
             yield misfit(
                 sources, path, f"shorter than five of the motor's longest time constants, {figure} ({place})",
-                f"{show_quantity(needed, 's')} or more", "Lengthen it: the speed has not arrived before",
-                default=show_quantity(seconds, "s"),
+                f"{shown(needed, 's')} or more", "Lengthen it: the speed has not arrived before",
+                default=shown(seconds, "s"),
             )  # fmt: skip
     if sweep.start is not None:
         yield from _start_time(job, sweep.start.start_time, sources)
@@ -174,14 +174,14 @@ def _start_time(job: Job, start_time: float, sources: Sources) -> Iterator[Confi
             owner = ("rig", "limits", "locked_rotor_time")
         yield misfit(
             sources, path, f"a motor that does not start stands locked for as long as it may ({sources.where(owner)})",
-            f"below {show_quantity(locked, 's')}", "Shorten it, or protection ends every trial that fails",
+            f"below {shown(locked, 's')}", "Shorten it, or protection ends every trial that fails",
             topic="safety",
         )  # fmt: skip
     if longest is not None and start_time < longest:
         place = sources.where(("motor", "longest_restart_time"))
         yield misfit(
             sources, path, f"shorter than the pause after which the motor tries again by itself ({place})",
-            f"{show_quantity(longest, 's')} or more", "Lengthen it: a start that only comes later would be missed",
+            f"{shown(longest, 's')} or more", "Lengthen it: a start that only comes later would be missed",
         )  # fmt: skip
 
 
@@ -192,14 +192,14 @@ def _limits(job: Job, sources: Sources) -> Iterator[ConfigError]:
         if age >= locked:
             yield misfit(
                 sources, ("rig", "limits", "longest_age", role),
-                "a reading may grow older than the rotor may stand locked", f"below {show_quantity(locked, 's')}",
+                "a reading may grow older than the rotor may stand locked", f"below {shown(locked, 's')}",
                 "Shorten it", topic="safety",
             )  # fmt: skip
     if job.sweep.lowest_speed >= job.motor.maximum_speed:
         yield misfit(
             sources, ("sweep", "lowest_speed"),
             f"not below the motor's maximum speed ({sources.where(('motor', 'maximum_speed'))})",
-            f"below {show_quantity(job.motor.maximum_speed, 'rpm')}",
+            f"below {shown(job.motor.maximum_speed, 'rpm')}",
             "State the slowest speed that still counts as turning",
         )  # fmt: skip
     true = job.motor.simulated
@@ -228,9 +228,7 @@ def _findings(job: Job, sources: Sources) -> Iterator[ConfigError]:
                 what = f"the limit on {finding} is {wanted}, and this is {found}"
                 yield misfit(sources, (*path, key), what, wanted, "Correct the unit")
         if limit.at_least is not None and limit.at_most is not None and limit.at_least > limit.at_most:
-            yield misfit(
-                sources, path, f"no {finding} can meet this", "at_least not above at_most", "Exchange the two"
-            )
+            yield misfit(sources, path, f"no {finding} can meet this", "at_least not above at_most", "Exchange the two")
 
 
 def _deadline(job: Job, sources: Sources) -> Iterator[ConfigError]:

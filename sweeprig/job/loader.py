@@ -16,6 +16,7 @@ from sweeprig.job.models import Job
 from sweeprig.job.problems import PARTS, Sources, problems
 from sweeprig.job.toml_source import Source, parse, read
 
+
 def load(path: Path | str) -> Job:
     """Read and check the job at `path`. `rig`, `motor` and `sweep` name files relative to it, or are tables in it.
 
@@ -46,7 +47,7 @@ def _checked(source: Source, folder: Path) -> Job:
     else:
         found = cross_checks(job, sources)
         if not found:
-            return job
+            return job.found_in(Path(sources.place_of("rig")).parent)
     raise _first_of(found)
 
 

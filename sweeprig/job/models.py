@@ -5,7 +5,10 @@ Only values. Reading files is loader.py, checks across tables are cross_checks.p
 
 from __future__ import annotations
 
+from pathlib import Path
 from typing import Annotated
+
+from pydantic import PrivateAttr
 
 from sweeprig.job.amounts import Strict, Words
 from sweeprig.job.motor_models import Motor
@@ -24,6 +27,22 @@ class Job(Strict):
     rig: Rig
     motor: Motor
     sweep: Sweep
+    _rig_folder: Path | None = PrivateAttr(None)
+
+    @property
+    def rig_folder(self) -> Path | None:
+        """The folder of the rig's file: a user's own dialects lie beside it. None: the job is not from a file."""
+        return self._rig_folder
+
+    def found_in(self, rig_folder: Path) -> Job:
+        """The same job, whose rig stands in a file in `rig_folder`."""
+        copy = self.model_copy()
+        copy._rig_folder = rig_folder
+        return copy
+
+    def __eq__(self, other: object) -> bool:
+        """Equal when all that the files say is equal, wherever they lie."""
+        return isinstance(other, Job) and all(getattr(self, key) == getattr(other, key) for key in Job.model_fields)
 
     def limits(self) -> Limits:
         """The rig's limits, each lowered to the motor's maximum where that is lower. What protection must use."""

@@ -60,13 +60,13 @@ class SimulatedMotor(Strict):
     inertia_kg_m2: _Positive
     quadratic_load_nm_s2: _OrZero
     viscous_friction_nm_s: _OrZero
-    running_friction_nm: _Positive
+    running_friction_nm: _OrZero
     running_friction_spread_percent: _Spread
-    breakaway_friction_nm: _Positive
+    breakaway_friction_nm: _OrZero
     breakaway_friction_spread_percent: _Spread
     friction_correlation_s: _Positive
-    barrier_angle_rad: _Positive
-    thermal_resistance_k_per_w: _Positive
+    barrier_angle_rad: _OrZero
+    thermal_resistance_k_per_w: _OrZero
     thermal_time_constant_s: _Positive
 
 

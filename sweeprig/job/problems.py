@@ -45,6 +45,10 @@ class Sources:
     job: Source
     parts: Mapping[str, Source] = field(default_factory=dict)
 
+    def place_of(self, part: str) -> str:
+        """The file in which `rig`, `motor` or `sweep` stands."""
+        return self.parts.get(part, self.job).file
+
     def where(self, path: KeyPath) -> Where:
         part = self.parts.get(str(path[0])) if path else None
         return self.job.where(path) if part is None else part.where(path[1:])
@@ -82,8 +86,12 @@ def problems(error: ValidationError, sources: Sources, model: type[BaseModel]) -
                 misspelt.add((*path[:-1], near))
     for detail in details:
         path = _path(detail)
-        if detail["type"] == "missing" and path in misspelt:
+        if path in misspelt and detail["type"] == "missing":
             continue  # one slip of the pen is one problem
+        if detail["type"] == "too_short" and any(
+            other["loc"][: len(path)] == path != other["loc"] for other in details
+        ):
+            continue  # the library counts only entries that are right
         found.append((path, _problem(detail, path, sources, model)))
     found.sort(key=lambda item: (_rank(item[0]), _line_of(item[1])))
     return [made for _path_, made in found]
@@ -119,13 +127,17 @@ def _problem(detail: ErrorDetails, path: KeyPath, sources: Sources, model: type[
     if kind in ("too_short", "too_long"):
         least, most = context.get("min_length"), context.get("max_length")
         allowed = f"{least} or more" if least is not None else f"up to {most}"
-        what = "there are too few entries" if kind == "too_short" else f"{context['actual_length']} entries are too many"
-        return ConfigError(what, value=value, allowed=allowed, where=where, topic=TOPIC)
-    what, remedy = _WANTED.get(kind, detail["msg"]), _EXAMPLES.get(kind)
+        what = (
+            "there are too few entries" if kind == "too_short" else f"{context['actual_length']} entries are too many"
+        )
+        remedy = "Add some, or remove the key" if kind == "too_short" else "Remove some, or make two files"
+        return ConfigError(what, value=value, allowed=allowed, where=where, remedy=remedy, topic=TOPIC)
+    what, remedy = _WANTED.get(kind, detail["msg"]), _EXAMPLES.get(kind, "Look the key up in the manual")
     if kind in ("tuple_type", "list_type"):
         remedy = f"Write [{value}]"
     elif len(path) == 1 and path[0] in PARTS:
         what = f"the path of a {path[0]} file is wanted, or a table"
+        remedy = f'Write {path[0]} = "{path[0]}s/….toml"'
     elif kind.startswith("model_") and isinstance(detail["input"], list):
         remedy = f"Write [{where.key}], single brackets: there is only one"
     return ConfigError(what, value=value, where=where, remedy=remedy, topic=TOPIC)

@@ -20,7 +20,17 @@ from pydantic import (
     WithJsonSchema,
 )  # fmt: skip
 
-from sweeprig.job.amounts import Amount, Measure, Number, Strict, Words, exact_text, problem, read_measure, write_measure
+from sweeprig.job.amounts import (
+    Amount,
+    Measure,
+    Number,
+    Strict,
+    Words,
+    exact_text,
+    problem,
+    read_measure,
+    write_measure,
+)
 from sweeprig.quantities import Accuracy
 from sweeprig.roles import ACTUATORS, SENSORS
 
@@ -49,7 +59,9 @@ def _read_role(name: str) -> str:
 def _read_plus(value: object) -> Measure:
     measure = read_measure(value)
     if measure < 0:
-        raise problem("an accuracy is stated as a positive amount", value, "0 or more")
+        raise problem(
+            "an accuracy is stated as a positive amount", value, "0 or more", "Leave out the sign: ± is understood"
+        )
     return measure
 
 
@@ -63,12 +75,14 @@ def _read_option(value: object) -> object:
         return value
     if isinstance(value, float):
         return _FAULT.read(value)
-    raise problem("an option is a text, a number, true, false or a list of these", value)
+    raise problem(
+        "an option is a text, a number, true, false or a list of these", value, "", "Write it as one of these"
+    )
 
 
 def _read_faults(value: object) -> object:
     if not isinstance(value, dict):
-        raise problem("a table of bare numbers is wanted", value)
+        raise problem("a table of bare numbers is wanted", value, "", "Write for example gain_error_percent = 0.5")
     return {
         key: _LATENCY.read(entry) if key == "latency" else _FAULT.read(entry)  # the one with a unit
         for key, entry in value.items()

@@ -8,18 +8,20 @@ from __future__ import annotations
 import difflib
 from collections.abc import Iterator
 
+from pydantic_core import PydanticCustomError
+
 from sweeprig.errors import ConfigError
-from sweeprig.job.amounts import as_written
+from sweeprig.job.amounts import Amount, as_written, shown
 from sweeprig.job.models import Job
 from sweeprig.job.problems import Sources, misfit
 from sweeprig.job.rig_models import Instrument
 from sweeprig.job.toml_source import KeyPath
-from sweeprig.quantities import parse_quantity, show_quantity
 from sweeprig.roles import ACTUATORS, UNIT_OF_ROLE
 
 SHORTEST_HEARTBEAT_S = 0.05
 """Real seconds: below this an ordinary machine's scheduling fakes a lost heartbeat."""
 
+_HEARTBEAT = Amount("s", 0.1, 10.0, "What the board's firmware takes")
 _FIRMWARE_HEARTBEAT_S = 1.0  # drivers/firmware/README.md: the default of SYST:COMM:TIM
 _LOOPBACK = ("::127.0.0.1::", "::LOCALHOST::")
 _UNGROUNDED = {"low_side_diode": "a low-side switch", "h_bridge": "an H bridge"}
@@ -147,21 +149,19 @@ def _heartbeat(job: Job, sources: Sources) -> Iterator[ConfigError]:
     try:
         heartbeat = _HEARTBEAT.read(stated)
     except PydanticCustomError as wrong:
-        XX
-        yield _error(
-            sources, path, "a time in s is wanted, and this is none", "100 ms to 10 s", 'Write for example "2 s"'
-        )
+        said = wrong.context or {}
+        yield _error(sources, path, str(said["what"]), str(said["allowed"]), str(said["remedy"]))
         return
     limit = job.rig.limits.heartbeat
     if limit is not None and heartbeat > limit:
         place = sources.where(("rig", "limits", "heartbeat"))
         what = f"the drive would stay on without a sign of life for longer than the rig allows ({place})"
-        yield _error(sources, path, what, f"up to {show_quantity(limit, 's')}", "Shorten it", topic="safety")
+        yield _error(sources, path, what, f"up to {shown(limit, 's')}", "Shorten it", topic="safety")
     real = heartbeat / (job.rig.rate or 1.0)
     if job.rig.rate is not None and real < SHORTEST_HEARTBEAT_S:
         what = (
-            f"at this rate the heartbeat of {show_quantity(heartbeat, 's')} lasts {show_quantity(real, 's')}, "
-            f"less than {show_quantity(SHORTEST_HEARTBEAT_S, 's')}"
+            f"at this rate the heartbeat of {shown(heartbeat, 's')} lasts {shown(real, 's')}, "
+            f"less than {shown(SHORTEST_HEARTBEAT_S, 's')}"
         )
         allowed = f"up to {heartbeat / SHORTEST_HEARTBEAT_S:g}"
         yield _error(sources, ("rig", "rate"), what, allowed, "Serve the bench at a lower rate", topic="simbench")

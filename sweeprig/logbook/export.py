@@ -23,7 +23,7 @@ READING_COLUMNS = ("hold", "session", "at (s)", "channel", "unit", "value", "u",
 """`value` and `u` (standard uncertainty) are in the unit that stands beside them: channels differ from row to row."""
 
 _FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r", "\n", "＝", "＋", "－", "＠")  # full-width: East Asian spreadsheets
-_NUMBER = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?")
+_NUMBER = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?", re.ASCII)
 
 Columns = dict[str, list[object]]
 

@@ -227,4 +227,4 @@ def os_errors_at(path: Path) -> Iterator[None]:
             remedy = "Make room, or name a folder on another disk"
             raise DiskFull("the disk is full", where=where, remedy=remedy) from error
         remedy = "Name a folder on a local disk in which you may write"
-        raise RunError("the run folder cannot be used", value=str(error), where=where, remedy=remedy) from error
+        raise RunError("this folder cannot be used", value=str(error), where=where, remedy=remedy) from error

@@ -9,8 +9,10 @@ from sweeprig.errors import ConfigError
 
 _ORDER = (
     "start", "words", "job-files", "rig", "links", "safety", "findings", "report", "resume", "simbench", "exit-codes",
-    "adapters", "library", "testing",
+    "adapters", "dialects", "library", "testing",
 )  # fmt: skip
+ALSO = {"motor": "job-files", "sweep": "job-files", "instruments": "rig"}
+"""Other names under which error texts send people to a topic."""
 _CAUTIONS_HEAD = "## Cautions in short"
 
 
@@ -20,7 +22,8 @@ def topics() -> tuple[str, ...]:
 
 
 def text(topic: str) -> str:
-    """The Markdown of one topic. An unknown one is a ConfigError that names the nearest."""
+    """The Markdown of one topic, or of the one that answers for it (`ALSO`). ConfigError for an unknown one."""
+    topic = ALSO.get(topic, topic)
     if topic not in _ORDER:
         near = difflib.get_close_matches(topic, _ORDER, n=1)
         hint = f"Did you mean '{near[0]}'?" if near else "Run 'sweeprig manual' for the list."

@@ -39,6 +39,10 @@ def _short(row: Row) -> str:
     return number if row.unit in ("", "1") else f"{number} {row.unit}"
 
 
+def _at_least(row: Row) -> str:
+    return f"at least {_short(row)}" if _above(row) else _short(row)
+
+
 def _above(row: Row) -> bool:
     """Only a lower bound is known: the value lies beyond what was tried."""
     return row.value.startswith("≥")
@@ -92,7 +96,7 @@ def _speeds(found: Mapping[str, Row]) -> str:
     low, high, down = found.get(_LOW_SPEED), found.get(_HIGH_SPEED), found.get(_TURNDOWN)
     if low is None or high is None or not (low.found and high.found):
         return ""
-    ratio = f", a turndown of {_short(down)}" if down is not None and down.found else ""
+    ratio = f", a turndown of {_at_least(down)}" if down is not None and down.found else ""
     return f"The speed range that is really usable runs from {_short(low)} to {_short(high)}{ratio}."
 
 

@@ -8,6 +8,7 @@ from __future__ import annotations
 import dataclasses
 import hashlib
 import json
+import re
 from collections import Counter
 from collections.abc import Iterable, Mapping, Sequence
 from datetime import UTC, datetime
@@ -21,6 +22,7 @@ from sweeprig.report.tables import condition_label, entries
 
 Json = Mapping[str, Any]
 NOT_RECORDED = "not recorded"
+_FIGURE = re.compile(r"\d+(?:\.\d+)?")
 _UNIT_OF_QUANTITY = {"volts": "V", "amps": "A", "speed": "rpm", "duty": "%", "frequency": "Hz", "pwm_hz": "Hz"}
 NO_MEANING = "This version of the report has no definition for it; the findings file names its method."
 MOST_LISTED = 200
@@ -93,14 +95,24 @@ def definitions(run: Any) -> list[tuple[str, str, str]]:
 
 
 def methods(findings: Json) -> list[tuple[str, str, str]]:
-    """(how, what it assumes, the findings so found), one line for each way, over all conditions."""
-    ways: dict[tuple[str, str], dict[str, None]] = {}
+    """(the findings so found, how, what it assumes), one line for each way.
+
+    Ways that differ in their figures only are one line, with one of the texts and a note.
+    """
+    ways: dict[tuple[str, str], tuple[dict[str, None], set[tuple[str, str]]]] = {}
     for condition in findings.get("conditions") or ():
         for key, finding in entries(condition):
             if finding.get("value") is not None:
                 way = (listed(finding.get("method")), listed(finding.get("assumes")))
-                ways.setdefault(way, {})[meaning(key).name] = None
-    return [(*way, ", ".join(names)) for way, names in ways.items()]
+                names, texts = ways.setdefault((_FIGURE.sub("#", way[0]), _FIGURE.sub("#", way[1])), ({}, set()))
+                names[meaning(key).name] = None
+                texts.add(way)
+    return [(", ".join(names), *_one_of(texts)) for names, texts in ways.values()]
+
+
+def _one_of(texts: set[tuple[str, str]]) -> tuple[str, str]:
+    how, what = min(texts)
+    return (how, what) if len(texts) == 1 else (f"{how} (the figures differ from condition to condition)", what)
 
 
 def listed(value: Any) -> str:
@@ -193,12 +205,15 @@ def not_data(outcomes: Sequence[Outcome]) -> tuple[list[tuple[str, ...]], int]:
 
 
 def flagged(outcomes: Sequence[Outcome]) -> list[tuple[str, int, str]]:
-    """(flag in words, number of holds, the first of their numbers) of flags on holds that are data."""
+    """(flag in words, number of holds, the first of their numbers) of flags on holds that are data.
+
+    A flag that carries a figure (`not_settled_to_tolerance:3.2%`) is one line, whatever the figures.
+    """
     where: dict[str, list[int]] = {}
     for o in outcomes:
-        for flag in o.flags if o.status is Status.DONE else ():
-            where.setdefault(flag_text(flag), []).append(o.number)
-    return [(flag, len(n), ", ".join(map(str, n[:8])) + (" …" if len(n) > 8 else "")) for flag, n in where.items()]
+        for head in dict.fromkeys(flag.partition(":")[0] for flag in o.flags) if o.status is Status.DONE else ():
+            where.setdefault(flag_text(head), []).append(o.number)
+    return [(flag, len(n), ", ".join(map(str, n[:12])) + (" …" if len(n) > 12 else "")) for flag, n in where.items()]
 
 
 def instruments(run: Any) -> list[dict[str, str]]:

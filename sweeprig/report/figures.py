@@ -34,6 +34,8 @@ def speed_curve(run: Any, ax: Axes | None = None, condition: int | None = None) 
     ax = _prepared(ax, "duty (%)", "speed (rpm)")
     conditions: Sequence[Json] = run.findings.as_json().get("conditions") or ()
     chosen = list(conditions) if condition is None else [conditions[condition]]
+    if not chosen:
+        _say(ax, "no condition was measured")
     _shade(ax, chosen)
     for entry in chosen:
         _branches(ax, entry)
@@ -77,12 +79,11 @@ def voltages(run: Any, ax: Axes | None = None) -> Axes:
         x, y, u = (np.array(column) for column in zip(*sorted(points), strict=True))
         ax.errorbar(x, y, yerr=K * u, label=_short(condition, plan.conditions), elinewidth=0.8, **mark.style(3.6))
     for volts in sorted({c.supply_v for c in plan.conditions}):
-        ax.plot([0, 100], [0, volts], color=marks.GREY, linewidth=0.8, linestyle=(0, (1, 2)))
-        _note(ax, f"duty × {volts:g} V", (30, 0.3 * volts))
+        label = f"duty × {volts:g} V"
+        ax.plot([0, 100], [0, volts], color=marks.GREY, linewidth=1.0, linestyle=(0, (1, 2)), label=label)
     _duty_axis(ax)
-    if ax.get_legend_handles_labels()[0]:
-        ax.legend(frameon=False, fontsize=8, loc="upper left", bbox_to_anchor=(1.0, 1.0))
-    else:
+    ax.legend(frameon=False, fontsize=8, loc="upper left", bbox_to_anchor=(1.0, 1.0))
+    if not any(_voltage_point(o, plan) for o in run.outcomes):
         _say(ax, "no motor voltage was read")
     return ax
 
@@ -321,10 +322,6 @@ def _duty_axis(ax: Axes) -> None:
     ax.xaxis.set_major_locator(FixedLocator([0, 20, 40, 60, 80, 100]))
 
 
-def _note(ax: Axes, text: str, at: tuple[float, float]) -> None:
-    ax.annotate(text, at, (8, -6), textcoords="offset points", ha="left", va="top", fontsize=7.5, color=marks.GREY)
-
-
 def _short(condition: Condition, among: Sequence[Condition]) -> str:
     """What tells this condition from the others: the frequency, and each other field that differs in the sweep."""
     text = show_quantity(condition.pwm_hz, "Hz")
@@ -341,7 +338,7 @@ def _verdict_marks(ax: Axes, outcomes: Sequence[Outcome], x: list[float], y: lis
     for kind, mark in (marks.VERDICTS | marks.NOT_DATA).items():
         chosen = [i for i, found in enumerate(kinds) if found == kind]
         if chosen:
-            style = mark.style(3.4 if kind in marks.VERDICTS else 6.0)
+            style = mark.style(6.0 if kind in marks.NOT_DATA or kind == Verdict.UNDECIDED else 3.4)
             label = f"{mark.label} ({len(chosen)})"
             ax.plot([x[i] for i in chosen], [y[i] for i in chosen], label=label, rasterized=many, **style)
 

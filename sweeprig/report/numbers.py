@@ -12,6 +12,8 @@ from decimal import ROUND_CEILING, ROUND_FLOOR, ROUND_HALF_EVEN, Decimal
 DIGITS_OF_UNCERTAINTY = 2
 DIGITS_WITHOUT = 4
 """Significant digits of a value that carries no uncertainty."""
+DIGITS_OF_BOUND = 3
+"""Significant digits of a bound that carries no uncertainty of its own."""
 MOST_DIGITS = 8
 """No value is written with more significant digits than this, however small its uncertainty."""
 MINUS = "\N{MINUS SIGN}"
@@ -42,11 +44,11 @@ def plain(value: float, digits: int = DIGITS_WITHOUT) -> str:
     return text.rstrip("0").rstrip(".") if "." in text else text
 
 
-def place_for(value: float, spread: float | None) -> int:
-    """Where a value with this uncertainty ends: two digits of the uncertainty, four of the value without one."""
+def place_for(value: float, spread: float | None, digits: int = DIGITS_WITHOUT) -> int:
+    """Where a value with this uncertainty ends: two digits of the uncertainty, `digits` of the value without one."""
     adjusted = Decimal(repr(float(value))).adjusted() if value else 0
     if spread is None or not math.isfinite(spread) or spread <= 0:
-        return adjusted - DIGITS_WITHOUT + 1
+        return adjusted - digits + 1
     return max(last_place(spread), adjusted - MOST_DIGITS + 1)
 
 
@@ -67,12 +69,12 @@ def interval(low: float, high: float, spread: float | None) -> str:
 
 def at_most(value: float, spread: float | None) -> str:
     """'≤ 14.2': an upper bound, rounded up so that it stays one."""
-    return f"≤ {at_place(value, place_for(value, spread), ROUND_CEILING)}"
+    return f"≤ {at_place(value, place_for(value, spread, DIGITS_OF_BOUND), ROUND_CEILING)}"
 
 
 def at_least(value: float, spread: float | None) -> str:
     """'≥ 14.2': a lower bound, rounded down so that it stays one."""
-    return f"≥ {at_place(value, place_for(value, spread), ROUND_FLOOR)}"
+    return f"≥ {at_place(value, place_for(value, spread, DIGITS_OF_BOUND), ROUND_FLOOR)}"
 
 
 def symmetric(value: float, low: float | None, high: float | None, expanded: float) -> bool:

@@ -20,14 +20,12 @@ from sweeprig.simbench.clock import START_UTC, BenchClock
 from sweeprig.simbench.instrument import Instrument, Setup
 from sweeprig.simbench.motor_truth import MotorTruth
 from sweeprig.simbench.multimeter import Multimeter
-from sweeprig.simbench.port import Port
+from sweeprig.simbench.port import Callback, Port
 from sweeprig.simbench.scope import Scope
 from sweeprig.simbench.supply import Supply
 
 if TYPE_CHECKING:
     from sweeprig.job import Job
-
-Callback = Callable[[object], None]
 
 SIMULATED_BY_ADAPTER: dict[str, type[Instrument]] = {
     "scpi-multimeter": Multimeter,
@@ -212,6 +210,7 @@ def setup(job: Job, name: str, session: int) -> Setup:
         accuracy=instrument.accuracies(),
         options=instrument.options,
         errors=job.rig.simulated.get(name, {}),
+        terminator=instrument.terminator_bytes,
     )
 
 

@@ -51,6 +51,7 @@ class Setup:
     errors        the rig file's `[simulated.NAME]` table: overrides, plain numbers
     errors_rng    seeded by (sweep seed, name): the same instrument in every session
     noise         seeded by (sweep seed, session, name): never the same noise twice
+    terminator    that ends its messages and answers
     """
 
     name: str
@@ -61,6 +62,7 @@ class Setup:
     accuracy: Mapping[str, Accuracy] = field(default_factory=dict)
     options: Mapping[str, object] = field(default_factory=dict)
     errors: Mapping[str, float] = field(default_factory=dict)
+    terminator: bytes = b"\n"
 
     def error(self, key: str, default: float) -> float:
         return float(self.errors.get(key, default))
@@ -148,7 +150,9 @@ class Instrument:
         self.bench = bench
         self.changes = 0
         self.tree = CommandTree()
-        self.port = Port(bench, self, setup.error("latency", self.latency_s), self.byte_s, self.longest_line)
+        self.port = Port(
+            bench, self, setup.error("latency", self.latency_s), self.byte_s, self.longest_line, setup.terminator
+        )
         self._programs: dict[bytes, tuple[Unit, ...]] = {}
         self._waiting: _Waiting | None = None
         self._held: deque[bytes] = deque()

@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from sweeprig.errors import SweeprigError
-from sweeprig.simbench.chopper import Chopper, Wave, chopper, mean_supply_current, on_volts_at_limit, wave
+from sweeprig.simbench.chopper import Chopper, Wave, chopper, mean_current, mean_supply_current, on_volts_at_limit, wave
 from sweeprig.simbench.friction import WanderingFriction, normal_source
 from sweeprig.simbench.motor_truth import MotorTruth
 from sweeprig.simbench.rotor import Motion, after, caught, motion, starts, time_to_stop, time_to_turn
@@ -243,12 +243,16 @@ class Plant:
         return self._chopper(on_volts_at_limit(c, emf, self.supply_current_limit_amps), self.duty_percent)
 
     def _relinearise(self) -> None:
-        electric = self._electric
-        omega = self._omega_committed
-        if self._may_limit:
-            electric = self._electric_at(self.truth.torque_constant_nm_per_a * omega)
-        self._acting = electric
-        self._motion = motion(self.truth, electric, omega, self._running.torque)
+        omega, k = self._omega_committed, self.truth.torque_constant_nm_per_a
+        electric = self._electric_at(k * omega)
+        self._motion = how = motion(self.truth, electric, omega, self._running.torque)
+        if electric is self._electric:
+            return
+        # the supply's voltage rises with the back-EMF while its limit acts: the slope is that of both together
+        aside = k * omega + 1e-3
+        slope = (mean_current(self._electric_at(aside), aside)[0] - how.amps) / 1e-3 * k
+        rate = how.rate + k * (slope - how.amps_slope) / self.truth.inertia_kg_m2
+        self._motion = how._replace(rate=rate, amps_slope=slope)
 
     # ---- time ----------------------------------------------------------------------------------------------------
 
@@ -269,7 +273,7 @@ class Plant:
         s = self._sums
         if not self.turning:
             return self._rest(s, seconds), 0.0
-        how, electric = self._motion, self._acting
+        how = self._motion
         omega, turned = after(how, seconds)
         moving = seconds
         if omega <= 0.0:
@@ -277,27 +281,27 @@ class Plant:
             omega, turned = 0.0, after(how, moving)[1]
         k = self.truth.torque_constant_nm_per_a
         charge = how.amps * moving + how.amps_slope * (turned - how.speed * moving)
-        drawn = mean_supply_current(electric, k * turned / moving) * moving if moving > 0.0 else 0.0
-        volts = electric.on_volts if self._may_limit else (self.supply_volts if self.supply_on else 0.0)
+        emf = k * turned / moving if moving > 0.0 else 0.0
+        electric = self._electric_at(emf)
+        drawn = mean_supply_current(electric, emf) * moving
         flowed = _Sums(
             s.angle + turned,
             s.motor_vs + self._resistance * charge + k * turned,
             s.motor_as + charge,
             s.supply_as + drawn,
-            s.supply_vs + volts * moving,
+            s.supply_vs + electric.on_volts * moving,
         )
         return (flowed if moving == seconds else self._rest(flowed, seconds - moving)), omega
 
     def _rest(self, s: _Sums, seconds: float) -> _Sums:
         """Integrals over `seconds` at standstill."""
         w = self._standing
-        volts = w.chopper.on_volts if self._may_limit else (self.supply_volts if self.supply_on else 0.0)
         return _Sums(
             s.angle,
             s.motor_vs + w.mean_motor_volts * seconds,
             s.motor_as + w.mean_motor_amps * seconds,
             s.supply_as + w.mean_supply_amps * seconds,
-            s.supply_vs + volts * seconds,
+            s.supply_vs + w.chopper.on_volts * seconds,
         )
 
     def _enter_next_cell(self) -> None:

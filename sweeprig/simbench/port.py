@@ -7,9 +7,12 @@ from __future__ import annotations
 
 import math
 from collections import deque
-from typing import Protocol
+from collections.abc import Callable
+from typing import Any, Protocol
 
 LONGEST_LINE = 4096
+Callback = Callable[[Any], None]
+"""What an event calls, with the argument that was given with it."""
 
 
 class Receiver(Protocol):
@@ -29,17 +32,14 @@ class Timeline(Protocol):
 
     now: float
 
-    def at(self, time: float, callback: _Callback, argument: object) -> None: ...
-
-
-class _Callback(Protocol):
-    def __call__(self, argument: object, /) -> None: ...
+    def at(self, time: float, callback: Callback, argument: object) -> None: ...
 
 
 class Port:
     """`latency_s` passes before an answer; each byte takes `byte_s` both ways (0.0 on a network).
 
     longest_line  bytes of one message; a longer one is dropped up to its terminator and reported as overrun
+    terminator    LF, CR LF or CR, added to answers; of a message its last byte ends it, and a CR before LF is dropped
     """
 
     def __init__(
@@ -49,12 +49,15 @@ class Port:
         latency_s: float,
         byte_s: float = 0.0,
         longest_line: int = LONGEST_LINE,
+        terminator: bytes = b"\n",
     ) -> None:
         self._bench = bench
         self._receiver = receiver
         self._latency_s = latency_s
         self._byte_s = byte_s
         self._longest_line = longest_line
+        self._terminator = terminator
+        self._end = terminator[-1:]
         self._partial = b""
         self._dropping = False
         self._received_until = 0.0
@@ -79,13 +82,14 @@ class Port:
         self._answers.clear()
 
     def write(self, data: bytes) -> None:
-        """Bytes from the client; each whole line (LF or CR LF) reaches the instrument when its last byte has."""
-        if self._byte_s == 0.0 and not self._partial and data.find(b"\n") == len(data) - 1 <= self._longest_line:
+        """Bytes from the client; each whole line reaches the instrument when its last byte has."""
+        plain = self._byte_s == 0.0 and not self._partial and not self._dropping
+        if plain and data.find(self._end) == len(data) - 1 <= self._longest_line:
             self._receiver.receive(data[:-1] if data[-2:-1] != b"\r" else data[:-2])
             return
         start = max(self._bench.now, self._received_until)
         self._received_until = start + len(data) * self._byte_s
-        *lines, rest = data.split(b"\n")
+        *lines, rest = data.split(self._end)
         arrived = 0
         for line in lines:
             arrived += len(line) + 1
@@ -100,25 +104,22 @@ class Port:
             self._dropping = False
             self._when(time, self._overrun, line)
         else:
-            self._when(time, self._receive, line.removesuffix(b"\r"))
+            self._when(time, self._receiver.receive, line.removesuffix(b"\r"))
 
-    def _when(self, time: float, callback: _Callback, line: bytes) -> None:
+    def _when(self, time: float, callback: Callback, line: bytes) -> None:
         if time <= self._bench.now:
             callback(line)
         else:
             self._bench.at(time, callback, line)
 
-    def _receive(self, line: object) -> None:
-        self._receiver.receive(line)  # type: ignore[arg-type]  # only bytes are ever queued with this callback
-
-    def _overrun(self, _: object) -> None:
+    def _overrun(self, _: bytes) -> None:
         self._receiver.overrun()
 
     def send(self, text: str) -> None:
-        """An answer of the instrument, formed now; LF is added. Lost when nobody holds the port open."""
+        """An answer of the instrument, formed now; the terminator is added. Lost when nobody holds the port open."""
         if not self.is_open:
             return
-        raw = text.encode("ascii") + b"\n"
+        raw = text.encode("ascii") + self._terminator
         ready = self._bench.now + self._latency_s
         if self._byte_s:
             ready = self._sent_until = max(ready, self._sent_until) + len(raw) * self._byte_s

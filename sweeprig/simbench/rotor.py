@@ -51,7 +51,7 @@ def after(start: Motion, seconds: float) -> tuple[float, float]:
     """
     x = start.rate * seconds
     change = start.acceleration * seconds
-    if x > -1e-3:  # the closed form loses digits here; the series does not, and covers a rate of zero
+    if -1e-3 < x < 1e-3:  # the closed form loses digits here; the series does not, and covers a rate of zero
         first, second = 1.0 + x * (0.5 + x / 6.0), 0.5 + x * (1.0 / 6.0 + x / 24.0)
     else:
         first = math.expm1(x) / x
@@ -73,7 +73,7 @@ def time_to_turn(start: Motion, angle: float, seconds: float) -> float:
     """When within `seconds` the rotor has turned by `angle` (rad): Newton from the even pace; angle(t) is monotone."""
     _, whole = after(start, seconds)
     t = seconds * angle / whole
-    for _ in range(8):
+    for _ in range(60):  # from standstill the angle begins quadratically: Newton then only halves its error at first
         speed, turned = after(start, t)
         if speed <= 0.0:
             break

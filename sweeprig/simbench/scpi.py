@@ -302,8 +302,8 @@ def channel_list(text: str, highest: int) -> list[int]:
 
 
 def nr1(value: int) -> str:
-    """An integer answer (IEEE 488.2, 8.7.2)."""
-    return str(value)
+    """An integer answer (IEEE 488.2, 8.7.2); a boolean answers 0 or 1."""
+    return str(int(value))
 
 
 def nr3(value: float, digits: int = 8) -> str:

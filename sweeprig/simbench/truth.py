@@ -124,15 +124,18 @@ def _threshold(task: Task, runs: int, spread: Map, record: dict[str, Any]) -> tu
         missing: Finding = {"value": None, "reason": reason}
         return missing, missing, missing
     middle, width = around
-    even = [float(d) for d in np.linspace(middle - 1.2 * width, middle + 1.5 * width, 10)]
+    even = [float(d) for d in np.linspace(middle - 1.5 * width, middle + 1.5 * width, 10)]
     counts = list(spread(perform, _spread_out(task, even, runs // 3, 10)))
-    law = fit_law(counts)
+    law = fit_law(counts, degrees=(2,))
     events = [0.05, 0.15, 0.3, 0.5, 0.7, 0.85, 0.93, 0.97, 0.99, 0.995]
     if task.kind == "stall":
         events = [1.0 - chance for chance in events]
-    better = [law.duty_at(chance)[0] for chance in events]
-    counts += spread(perform, _spread_out(task, better, runs - runs // 3, 11))
-    law = fit_law(counts)
+    for stage in range(11, 15):
+        better = [law.duty_near(chance) for chance in events]
+        counts += spread(perform, _spread_out(task, better, runs - runs // 3, stage))
+        law = fit_law(counts)
+        if law.reaches(0.005 if task.kind == "stall" else 0.995) and law.reaches(0.5):
+            break
     record["trials"][task.kind] = sum(c.trials for c in counts)
     record["lack_of_fit_p"][task.kind] = law.lack_of_fit_p
     half, u_half = law.duty_at(0.5)
@@ -218,6 +221,19 @@ class Law:
         z = (duty - self.centre) / self.scale
         return float(sum(i * c * z ** (i - 1) for i, c in enumerate(self.coefficients) if i)) / self.scale
 
+    def reaches(self, chance: float) -> bool:
+        """The counted range holds a duty with this chance."""
+        wanted = math.log(-math.log1p(-chance))
+        values = [self.eta(float(x)) for x in np.linspace(*self.span, 200)]
+        return min(values) <= wanted <= max(values)
+
+    def duty_near(self, chance: float) -> float:
+        """A duty (percent) in or a little beyond the counted range where the chance of an event is about `chance`."""
+        wanted = math.log(-math.log1p(-chance))
+        reach = 0.5 * (self.span[1] - self.span[0])
+        grid = np.linspace(self.span[0] - reach, self.span[1] + reach, 800)
+        return float(min(grid, key=lambda x: abs(self.eta(float(x)) - wanted)))
+
     def duty_at(self, chance: float) -> tuple[float, float]:
         """(duty, standard error) where the chance of an event is `chance`; SweeprigError outside the counted range."""
         wanted = math.log(-math.log1p(-chance))
@@ -234,15 +250,15 @@ class Law:
         return duty, math.sqrt(variance) / abs(self.slope(duty))
 
 
-def fit_law(counts: Sequence[Counts]) -> Law:
-    """Maximum likelihood for degrees 2 to 4, the one with the least Akaike criterion."""
+def fit_law(counts: Sequence[Counts], degrees: tuple[int, ...] = (2, 3, 4)) -> Law:
+    """Maximum likelihood for each degree; the one with the least Akaike criterion."""
     x = np.array([c.duty for c in counts])
     n = np.array([float(c.trials) for c in counts])
     k = np.array([float(c.events) for c in counts])
     informative = n * np.clip(k / n, 0.02, 0.98) * (1.0 - np.clip(k / n, 0.02, 0.98))
     centre = float(np.average(x, weights=informative))
     scale = max(1e-3, float(np.sqrt(np.average((x - centre) ** 2, weights=informative))))
-    fits = [_fit_degree((x - centre) / scale, n, k, degree) for degree in (2, 3, 4)]
+    fits = [_fit_degree((x - centre) / scale, n, k, degree) for degree in degrees]
     beta, covariance, deviance = min(fits, key=lambda fit: fit[2] + 2.0 * len(fit[0]))
     freedom = max(1, len(np.unique(x)) - len(beta))
     return Law(

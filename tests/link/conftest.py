@@ -60,8 +60,8 @@ class TcpFar:
     def receive(self, size: int) -> bytes:
         data = b""
         peer = self.peer
-        while len(data) < size:
-            data += peer.recv(size - len(data))
+        while len(data) < size and (more := peer.recv(size - len(data))):
+            data += more
         return data
 
     def reply(self, data: bytes) -> None:

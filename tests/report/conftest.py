@@ -181,12 +181,17 @@ def job() -> SimpleNamespace:
     return SimpleNamespace(title=title, rig=rig, motor=motor, sweep=SimpleNamespace(name="evening"), client="own use")
 
 
-@pytest.fixture
-def make_run() -> Callable[[], FakeRun]:
-    """Makes a fresh run that a test may change."""
+@pytest.fixture(scope="session")
+def fresh_run() -> Callable[[], FakeRun]:
     return lambda: FakeRun(findings_json(), job())
 
 
 @pytest.fixture
-def run(make_run: Callable[[], FakeRun]) -> FakeRun:
-    return make_run()
+def make_run(fresh_run: Callable[[], FakeRun]) -> Callable[[], FakeRun]:
+    """Makes a fresh run that a test may change."""
+    return fresh_run
+
+
+@pytest.fixture
+def run(fresh_run: Callable[[], FakeRun]) -> FakeRun:
+    return fresh_run()

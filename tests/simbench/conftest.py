@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 import random
 from collections.abc import Callable
-from typing import TypeVar
+from typing import Any, TypeVar
 
 import pytest
 
@@ -105,17 +105,17 @@ class Bed:
         instrument.port.open()
         return instrument
 
-    def board(self, **more: object) -> Board:
-        return self.add(Board, **more)  # type: ignore[arg-type]  # keyword pass-through of add's own arguments
+    def board(self, **more: Any) -> Board:
+        return self.add(Board, **more)
 
-    def multimeter(self, connected_to: str = "across_motor", **more: object) -> Multimeter:
-        return self.add(Multimeter, connected_to, **more)  # type: ignore[arg-type]  # as above
+    def multimeter(self, connected_to: str = "across_motor", **more: Any) -> Multimeter:
+        return self.add(Multimeter, connected_to, **more)
 
-    def bench_supply(self, **more: object) -> Supply:
-        return self.add(Supply, "supply_terminals", **more)  # type: ignore[arg-type]  # as above
+    def bench_supply(self, **more: Any) -> Supply:
+        return self.add(Supply, "supply_terminals", **more)
 
-    def scope(self, connected_to: str = "drive_signal", **more: object) -> Scope:
-        return self.add(Scope, connected_to, **more)  # type: ignore[arg-type]  # as above
+    def scope(self, connected_to: str = "drive_signal", **more: Any) -> Scope:
+        return self.add(Scope, connected_to, **more)
 
     def tell(self, instrument: Instrument, *messages: str) -> None:
         """Send set messages and let their bytes arrive."""

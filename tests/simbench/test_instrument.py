@@ -11,7 +11,7 @@ from sweeprig.quantities import Accuracy
 from sweeprig.simbench.instrument import Instrument
 
 if TYPE_CHECKING:
-    from conftest import Bed
+    from tests.simbench.conftest import Bed
 
 EVERY_KIND = ["board", "multimeter", "bench_supply", "scope"]
 

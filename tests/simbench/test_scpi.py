@@ -6,6 +6,7 @@ import pytest
 
 from sweeprig.simbench.scpi import (
     CommandTree,
+    Handler,
     Refused,
     boolean,
     channel_list,
@@ -28,7 +29,7 @@ def said() -> list[str]:
 def tree(said: list[str]) -> CommandTree:
     made = CommandTree()
 
-    def says(word: str, answer: str | None = None) -> object:
+    def says(word: str, answer: str | None = None) -> Handler:
         def handler(parameters: tuple[str, ...]) -> str | None:
             said.append(" ".join((word, *parameters)))
             return answer
@@ -44,8 +45,8 @@ def tree(said: list[str]) -> CommandTree:
         ("MEASure:FREQuency?", 1, 1),
         ("*CLS", 0, 0),
     ):
-        made.add(header, says(header), least, most)  # type: ignore[arg-type]  # the helper returns a plain handler
-    made.add("*IDN?", says("*IDN?", "a,b,c,d"), indefinite=True)  # type: ignore[arg-type]  # as above
+        made.add(header, says(header), least, most)
+    made.add("*IDN?", says("*IDN?", "a,b,c,d"), indefinite=True)
     return made
 
 
@@ -123,7 +124,7 @@ def test_an_empty_message_is_no_error(tree: CommandTree) -> None:
 def test_separators_inside_quotes_and_parentheses_do_not_separate() -> None:
     """`(@1,3)` is one parameter and a `;` in quotes is text."""
     assert split_outside("(@1,3),4", ",") == ["(@1,3)", "4"]
-    assert split_outside("\"a;b\" ;'c;\"'", ";") == ['"a;b"', "'c;\"'"]
+    assert split_outside('"a;b" ;\'c;"\'', ";") == ['"a;b"', "'c;\"'"]
 
 
 @pytest.mark.parametrize(
@@ -141,7 +142,8 @@ def test_numbers_are_read_in_all_forms_and_with_suffixes(text: str, unit: str, v
 
 
 @pytest.mark.parametrize(
-    ("text", "code"), [("abc", -104), ("1,5", -104), ("5 A", -131), ("5 xV", -131), ("11", -222), ("-1", -222), ("1E999", -222)]
+    ("text", "code"),
+    [("abc", -104), ("1,5", -104), ("5 A", -131), ("5 xV", -131), ("11", -222), ("-1", -222), ("1E999", -222)],
 )  # fmt: skip
 def test_a_wrong_number_is_refused_with_its_standard_code(text: str, code: int) -> None:
     """No number is -104, a wrong suffix -131, out of range -222."""
@@ -157,7 +159,9 @@ def test_whole_numbers_are_rounded_and_bounded() -> None:
         integer("256", 0, 255)
 
 
-@pytest.mark.parametrize(("text", "value"), [("ON", True), ("off", False), ("1", True), ("0", False), ("0.4", False), ("2", True)])  # fmt: skip
+@pytest.mark.parametrize(
+    ("text", "value"), [("ON", True), ("off", False), ("1", True), ("0", False), ("0.4", False), ("2", True)]
+)
 def test_booleans_are_words_or_rounded_numbers(text: str, value: bool) -> None:
     """ON, OFF or a number that is rounded."""
     assert boolean(text) is value
@@ -169,13 +173,18 @@ def test_a_word_that_is_no_boolean_is_an_illegal_value() -> None:
         boolean("YES")
 
 
-@pytest.mark.parametrize(("text", "channels"), [("(@1)", [1]), ("(@1,3)", [1, 3]), ("(@2:4)", [2, 3, 4]), ("(@ 1 , 2)", [1, 2])])  # fmt: skip
+@pytest.mark.parametrize(
+    ("text", "channels"), [("(@1)", [1]), ("(@1,3)", [1, 3]), ("(@2:4)", [2, 3, 4]), ("(@ 1 , 2)", [1, 2])]
+)
 def test_channel_lists_are_read(text: str, channels: list[int]) -> None:
     """One channel, several, a span."""
     assert channel_list(text, 4) == channels
 
 
-@pytest.mark.parametrize(("text", "code"), [("1", -104), ("(@5)", -222), ("(@0)", -222), ("(@x)", -224), ("(@1:)", -224), ("(@2:1)", -222)])  # fmt: skip
+@pytest.mark.parametrize(
+    ("text", "code"),
+    [("1", -104), ("(@5)", -222), ("(@0)", -222), ("(@x)", -224), ("(@1:)", -224), ("(@2:1)", -222)],
+)
 def test_wrong_channel_lists_are_refused(text: str, code: int) -> None:
     """No list -104, no such channel -222, no number -224."""
     with pytest.raises(Refused) as refused:

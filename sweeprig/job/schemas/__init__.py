@@ -10,6 +10,7 @@ from pathlib import Path
 
 from pydantic import BaseModel
 
+from sweeprig.job.amounts import exact_text
 from sweeprig.job.models import Job
 from sweeprig.job.motor_models import Motor
 from sweeprig.job.rig_models import Rig
@@ -31,25 +32,22 @@ def _text(kind: str, model: type[BaseModel]) -> str:
             path = {"type": "string", "minLength": 1, "description": f"path of a {part} file, relative to this file"}
             schema["properties"][part] = {"anyOf": [path, schema["properties"][part]]}
     head = {"$schema": "https://json-schema.org/draft/2020-12/schema"}
-    return json.dumps(head | _tidy(schema), indent=1, ensure_ascii=False, sort_keys=True) + "\n"
+    return json.dumps(_tidy(head | schema), indent=1, ensure_ascii=False, sort_keys=True) + "\n"
 
 
-def _tidy(schema: dict[str, object]) -> dict[str, object]:
-    """Without `null`, which TOML does not have, and without titles, which only repeat the key."""
-    return {key: _tidy_node(value) for key, value in schema.items() if key != "title"}
-
-
-def _tidy_node(node: object) -> object:
+def _tidy(node: object) -> object:
+    """Without `null`, which TOML does not have, and titles, which only repeat the key; defaults as they are written."""
     if isinstance(node, list):
-        return [_tidy_node(entry) for entry in node]
+        return [_tidy(entry) for entry in node]
     if not isinstance(node, dict):
         return node
     if {"type": "null"} in node.get("anyOf", ()):
         arms = [arm for arm in node["anyOf"] if arm != {"type": "null"}]
         rest = {key: value for key, value in node.items() if key != "anyOf" and value is not None}
         node = rest | (arms[0] if len(arms) == 1 else {"anyOf": arms})
-    properties = node.get("properties")
-    plain = {key: _tidy_node(value) for key, value in node.items() if key not in ("title", "properties")}
-    if isinstance(properties, dict):  # a property may itself be called `title`
-        plain["properties"] = {key: _tidy_node(value) for key, value in properties.items()}
-    return plain
+    if "unit" in node and isinstance(node.get("default"), float):
+        node = node | {"default": exact_text(node["default"], node["unit"])}
+    tidy = {key: _tidy(value) for key, value in node.items() if key not in ("title", "properties")}
+    if "properties" in node:  # a property may itself be called `title`
+        tidy["properties"] = {key: _tidy(value) for key, value in node["properties"].items()}
+    return tidy

@@ -1,0 +1,99 @@
+"""Protection: on readings and on the clock, as pure policies."""
+
+from __future__ import annotations
+
+import math
+
+from sweeprig.conduct.protection import Above, Guard, LockedRotor
+from sweeprig.quantities import Reading
+
+
+def reading(channel: str, value: float | None, at: float, flags: tuple[str, ...] = ()) -> dict[str, Reading]:
+    return {channel: Reading(value, 0.0, "A", at, channel, flags)}
+
+
+def guard() -> Guard:
+    return Guard([Above("over_current", "meter.amps", 1.5, 2.0, debounce=2), LockedRotor("tacho.edge_age", 6.0)])
+
+
+def test_over_current_trips_after_its_debounce() -> None:
+    """One reading above the limit may be a spike; the second in a row trips, with the evidence."""
+    watch = guard()
+    watch.drive_on(0.0)
+    watch.take(reading("meter.amps", 1.6, 0.1))
+    assert watch.check(0.1) is None
+    watch.take(reading("meter.amps", -1.7, 0.2))
+    trip = watch.check(0.2)
+    assert trip is not None
+    assert trip.rule == "over_current"
+    assert "1.7 A" in trip.evidence
+    assert "limit 1.5 A" in trip.evidence
+
+
+def test_a_reading_in_between_resets_the_debounce() -> None:
+    """The debounce counts readings in a row."""
+    watch = guard()
+    watch.drive_on(0.0)
+    for at, value in ((0.1, 1.6), (0.2, 1.0), (0.3, 1.6)):
+        watch.take(reading("meter.amps", value, at))
+    assert watch.check(0.3) is None
+
+
+def test_overload_is_above_the_limit() -> None:
+    """A meter that shows overload has more than it can show: that is above, not unknown."""
+    watch = guard()
+    watch.drive_on(0.0)
+    for at in (0.1, 0.2):
+        watch.take(reading("meter.amps", None, at, ("no_data:overload",)))
+    trip = watch.check(0.2)
+    assert trip is not None
+    assert trip.rule == "over_current"
+
+
+def test_silence_trips_on_the_clock() -> None:
+    """A protected channel that goes silent trips at its longest age, without any reading."""
+    watch = guard()
+    watch.drive_on(10.0)
+    watch.take(reading("tacho.edge_age", 0.0, 11.9))
+    assert watch.due == 12.0
+    assert watch.check(11.99) is None
+    trip = watch.check(12.0)
+    assert trip is not None
+    assert trip.rule == "no_reading"
+    assert "meter.amps" in trip.evidence
+
+
+def test_locked_rotor_counts_from_the_last_rotation_seen() -> None:
+    """Readings that say "no edge for so long" do not count as rotation; edges do."""
+    watch = guard()
+    watch.drive_on(0.0)
+    for tick in range(1, 100):
+        at = tick / 10
+        watch.take(reading("meter.amps", 0.1, at))
+        watch.take(reading("tacho.edge_age", max(at - 3.0, 0.0), at))
+        if watch.check(at) is not None:
+            break
+    assert math.isclose(at, 9.0, abs_tol=0.11)
+    assert watch.trip is not None
+    assert watch.trip.rule == "locked_rotor"
+
+
+def test_nothing_is_due_while_the_drive_is_off() -> None:
+    """With the drive off the clock cannot trip anything."""
+    watch = guard()
+    assert watch.due == math.inf
+    watch.drive_on(0.0)
+    watch.drive_off()
+    assert watch.check(1e9) is None
+
+
+def test_the_first_trip_stays() -> None:
+    """What tripped first is what is told, whatever comes after."""
+    watch = guard()
+    watch.drive_on(0.0)
+    for at in (0.1, 0.2):
+        watch.take(reading("meter.amps", 9.0, at))
+    watch.take(reading("meter.amps", 0.0, 0.3))
+    trip = watch.check(100.0)
+    assert trip is not None
+    assert trip.rule == "over_current"
