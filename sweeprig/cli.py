@@ -25,11 +25,6 @@ if TYPE_CHECKING:
     from sweeprig.opened import Run
 
 OWN_ERROR = 70
-CAUTIONS = (
-    "This is not a safety device. The rig must be safe with this computer dead: fuse or supply limit sized to the "
-    "motor, emergency stop that cuts the supply, motor clamped, rotor covered. Wear eye protection at start-up. "
-    "Local codes and licensed practice come first. Read: sweeprig manual safety."
-)
 
 as_json = click.option(
     "--json", "json_out", is_flag=True, help="Print one JSON value; all else goes to standard error."
@@ -147,9 +142,12 @@ def _allowed(job: Job, attended: bool) -> None:
     """Cautions on a real rig, and the refusals of an unattended run."""
     from sweeprig.conduct.unattended import refusals
     from sweeprig.launch import in_process
+    from sweeprig.manual import cautions
 
     if not in_process(job) and job.rig.rate is None:
-        click.echo(CAUTIONS, err=True)
+        click.echo("Before power is on:", err=True)
+        for caution in cautions():
+            click.echo(f"  - {caution}", err=True)
     refused = refusals(job)
     if refused and not attended:
         raise ConfigError(
@@ -278,23 +276,28 @@ def export(run: Path, folder: Path | None, json_out: bool) -> None:
 
 
 @cli.command()
-@click.argument("job")
+@click.argument("rig")
 @as_json
-def off(job: str, json_out: bool) -> None:
-    """Switch drive and supply of a job's rig off, at once on all links, and prove it."""
+def off(rig: str, json_out: bool) -> None:
+    """Switch drive and supply of a rig off, at once on all links, and prove it. RIG: a rig file or a job file."""
     from sweeprig.clock import SystemClock
     from sweeprig.conduct.off import off as switch_off
-    from sweeprig.launch import in_process
+    from sweeprig.conduct.rig import RigUse
+    from sweeprig.job.loader import is_rig_file, load_rig
 
-    checked = _job(job)
-    if in_process(checked):
+    if Path(rig).exists() and is_rig_file(rig):
+        alone, folder = load_rig(rig)
+        use = RigUse(alone, alone.limits, 1.0, folder)
+    else:
+        use = RigUse.of_job(_job(rig))
+    if all(instrument.in_process for instrument in use.rig.instruments.values()):
         raise ConfigError(
             "this rig is simulated inside the process that uses it; there is nothing to switch off from here",
-            where=Where(job),
-            remedy="give the job of a real rig or of a served simulated bench",
+            where=Where(rig),
+            remedy="give the file of a real rig or of a served simulated bench",
             topic="simbench",
         )
-    done = switch_off(checked, SystemClock(checked.rig.rate or 1.0))
+    done = switch_off(use, SystemClock(use.rig.rate or 1.0))
     told = " and ".join(done.told)
     value = {"off": list(done.told), "took_s": done.took_s, "proved": True}
     click.echo(

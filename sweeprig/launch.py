@@ -5,6 +5,7 @@ The one place that chooses between real links, a served simulated bench and the 
 
 from __future__ import annotations
 
+import shutil
 from collections.abc import Mapping
 from contextlib import closing
 from dataclasses import dataclass
@@ -12,13 +13,13 @@ from pathlib import Path
 from typing import Any
 
 from sweeprig.clock import Clock, SystemClock
-from sweeprig.conduct.rig import build_adapters, open_rig, require_heartbeat, same_instruments
+from sweeprig.conduct.rig import RigUse, build_adapters, open_rig, require_heartbeat, same_instruments
 from sweeprig.conduct.run import Ending, run
 from sweeprig.conduct.states import OnEvent, Orders
-from sweeprig.errors import ConfigError
 from sweeprig.job import Job, document, freeze, job_hash, load
+from sweeprig.job.freeze import with_deadline
 from sweeprig.logbook import Logbook
-from sweeprig.logbook.run_folder import JOB, LOGBOOK, TRAFFIC, create_run_folder
+from sweeprig.logbook.run_folder import FINDINGS, JOB, LOGBOOK, REPORT, TRAFFIC, create_run_folder
 from sweeprig.logbook.traffic import TrafficLog
 
 
@@ -35,15 +36,8 @@ def _nobody(event: object) -> None:
 
 
 def in_process(job: Job) -> bool:
-    """Every instrument is answered by the simulated bench inside this process."""
-    kinds = {instrument.address.startswith("simbench:") for instrument in job.rig.instruments.values()}
-    if kinds == {True, False}:
-        raise ConfigError(
-            "some instruments have simbench: addresses and some have not; a simulated bench cannot move a real motor",
-            remedy="give all instruments simbench: addresses, or none",
-            topic="simbench",
-        )
-    return kinds == {True}
+    """Every instrument is answered by the simulated bench inside this process (`load` refuses a mixture)."""
+    return all(instrument.in_process for instrument in job.rig.instruments.values())
 
 
 def start(
@@ -60,9 +54,12 @@ def start(
     """
     if not isinstance(job, Job):
         job = load(job)
-    build_adapters(job)  # unknown adapters and bad options are found before a folder is made
+    build_adapters(RigUse.of_job(job))  # unknown adapters and bad options are found before a folder is made
+    now = SystemClock().utc()
+    job = with_deadline(job, now)
     text = document(job)
-    folder = create_run_folder(Path(runs), job.motor.name, SystemClock().utc(), text)
+    folder = create_run_folder(Path(runs), job.motor.name, now, text)
+    _keep_dialects(job, folder)
     traffic = TrafficLog(folder / TRAFFIC)
     logbook = Logbook.create(folder / LOGBOOK, text, job_hash(text), software(), traffic=traffic)
     return Launched(folder, _session(job, logbook, traffic, attended, on_event, orders or Orders()))
@@ -74,9 +71,22 @@ def resume(
     """Go on with a run that ended or was killed: a new session, warm-up done again, nothing lost, nothing doubled."""
     folder = Path(path)
     job = load(folder / JOB)
+    for stale in (FINDINGS, REPORT):
+        (folder / stale).unlink(missing_ok=True)
     traffic = TrafficLog(folder / TRAFFIC)
     logbook = Logbook.open(folder / LOGBOOK, traffic=traffic)
     return Launched(folder, _session(job, logbook, traffic, attended, on_event, orders or Orders()))
+
+
+def _keep_dialects(job: Job, folder: Path) -> None:
+    """The user's own dialects go with the run, so that a resume finds them beside its job.toml."""
+    if job.rig_folder is None:
+        return
+    for name in {instrument.dialect for instrument in job.rig.instruments.values()} - {None}:
+        own = job.rig_folder / "dialects" / f"{name}.toml"
+        if own.is_file():
+            (folder / "dialects").mkdir(exist_ok=True)
+            shutil.copy(own, folder / "dialects")
 
 
 def _session(
@@ -85,7 +95,7 @@ def _session(
     with logbook, closing(traffic):
         saved = {seen.name: seen.identity for seen in reversed(logbook.instruments())}
         session, clock, ports = _clock_and_ports(job, logbook, attended)
-        rig = open_rig(job, clock, ports, traffic)
+        rig = open_rig(RigUse.of_job(job), clock, ports, traffic)
         try:
             same_instruments(rig, saved)
             if not attended:

@@ -153,6 +153,29 @@ class Run:
             "software": head["software"],
         }
 
+    def status(self) -> dict[str, object]:
+        """Where the run stands, as plain values: state, sessions, run clock (s), outcomes by status, hold in hand, last
+        outcome. A hold in hand is one that was begun and has no outcome: of a running run, or of a killed one."""
+        states = [event for event in self.contents.events() if event.kind == "state"]
+        last = self.outcomes[-1] if self.outcomes else None
+        in_hand = self.unfinished[0].hold if self.unfinished else None
+        times = self.contents.last_times()
+        return {
+            "run": str(self.path),
+            "motor": self.job.motor.name,
+            "rig": self.job.rig.name,
+            "simulated": self.simulated,
+            "state": str(states[-1].data["state"]) if states else "not begun",
+            "sessions": len(self.contents.sessions()),
+            "run_clock_s": (times[0] - self.contents.sessions()[0].began) if times else 0.0,
+            "outcomes": dict(Counter(str(outcome.status) for outcome in self.outcomes)),
+            "in_hand": None if in_hand is None else {"number": in_hand.number, "why": in_hand.why},
+            "last": None if last is None else {
+                "number": last.number, "purpose": str(last.hold.purpose), "status": str(last.status),
+                "verdict": str(last.verdict), "reason": last.reason,
+            },
+        }  # fmt: skip
+
     @cached_property
     def findings(self) -> Findings:
         """From `findings.json` where the run has one, else worked out from the outcomes there are now."""

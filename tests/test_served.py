@@ -49,7 +49,7 @@ def findings(run: Run) -> dict[str, dict[str, float]]:
 @pytest.mark.slow
 @pytest.mark.timeout(110)
 def test_served_and_in_process_agree(short_job: Path, served_job: Path, tmp_path: Path) -> None:
-    """Unmodified adapters over TCP and a serial port give the findings of the in-process bench within their uncertainty.
+    """Unmodified adapters over TCP and a serial port give the in-process findings within their uncertainty.
 
     Two independent values differ by more than 4 combined standard uncertainties once in 16,000 (normal)."""
     served = start(served_job, tmp_path / "served-runs")
@@ -71,4 +71,31 @@ def test_the_server_refuses_a_rate_that_would_starve_the_heartbeat(
     """Rates at which heartbeat / N is below 50 ms are refused with the figure, exit code 2."""
     done = sweeprig("simbench", "serve", short_job, "--rate", 100)
     assert done.returncode == 2
-    assert "50 ms" in done.stderr
+    assert "lasts only 20 ms of real time" in done.stderr
+    assert "up to 40" in done.stderr
+
+
+def test_off_on_a_served_rig(served_job: Path, sweeprig: Callable[..., subprocess.CompletedProcess[str]]) -> None:
+    """`off` takes the rig file or a job file, confirms on both actuators and proves it; exit 0."""
+    for file in (served_job.with_name("served-rig.toml"), served_job):
+        done = sweeprig("off", file)
+        assert done.returncode == 0, done.stderr
+        assert "board" in done.stdout
+        assert "supply" in done.stdout
+        assert "shown to be off" in done.stdout
+
+
+def test_off_on_a_rig_that_is_not_there(
+    short_job: Path, sweeprig: Callable[..., subprocess.CompletedProcess[str]]
+) -> None:
+    """A rig whose instruments do not answer cannot be shown to be off: exit 3, and the text says what to do by hand."""
+    rig = short_job.parent / "shelter-bench.toml"
+    text = rig.read_text("utf-8")
+    for number, name in enumerate(("board", "supply", "meter", "scope")):
+        text = text.replace(f'"simbench:{name}"', f'"TCPIP0::127.0.0.1::{number + 1}::SOCKET"')
+    rig.write_text(text, "utf-8")
+    done = sweeprig("off", rig)
+    assert done.returncode == 3
+    assert "by hand" in done.stderr
+    assert "board" in done.stderr
+    assert "supply" in done.stderr

@@ -6,6 +6,7 @@ Only holds with status `done` are data.
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from functools import partial
 
 from sweeprig.characterise import usable
 from sweeprig.characterise.curve import Curve, fit_curve, lowest_sure_duty
@@ -64,8 +65,9 @@ def of_condition(
     start = threshold(START, start_trials(known, done), known.u)
     falling = speed_points(plan, known, done, Approach.FALLING)
     rising = speed_points(plan, known, done, Approach.RISING)
-    speed = _branch(falling, exposures, monotone=True)
-    volts = _branch(voltage_points(plan, condition, known, done), exposures, monotone=False)
+    speed = _branch(falling, rising, exposures, monotone=True)
+    volts_of = partial(voltage_points, plan, condition, known, done)
+    volts = _branch(volts_of(Approach.FALLING), volts_of(Approach.RISING), exposures, monotone=False)
     within = usable.usable_range(speed, stall, start, plan.saturation_percent, known.u)
     return ConditionFindings(
         condition=condition,
@@ -91,12 +93,14 @@ def of_condition(
         lapse=not_found(_NOT_YET),
         coast_time_s=not_found(_NOT_YET),
         usable_range=within,
-        speed_curve=_speed_curve(speed, fit_curve(rising, monotone=True), known),
+        speed_curve=_speed_curve(speed, fit_curve(rising, monotone=True, other=falling), known),
     )
 
 
-def _branch(points: Sequence[Point], exposures: Chosen, *, monotone: bool) -> usable.Branch | None:
-    curve = fit_curve(points, monotone=monotone)
+def _branch(
+    falling: Sequence[Point], rising: Sequence[Point], exposures: Chosen, *, monotone: bool
+) -> usable.Branch | None:
+    curve = fit_curve(falling, monotone=monotone, other=rising)
     if curve is None:
         return None
     stops = [trial.duty_percent for trial in exposures.trials if trial.failed is not None]

@@ -6,9 +6,10 @@ The uncertainty has three parts, kept apart because they behave differently:
 * common   the instrument's accuracy. It is the same for all readings of one instrument, so it is never averaged down:
            a level's common part is the mean of its readings' u, however many they are. `Reading.u` has the noise of
            that reading's mean in it as well; counting that as common too errs on the safe side.
-* random   scatter between holds at one setting (drift of friction, settling, reading noise), from replicates, pooled
-           over the levels; falls with the number of holds. Without replicates (flag `no_replicates`) the
-           readings' own u stands for it.
+* random   scatter between holds at one setting (drift of friction, settling, reading noise); falls with the number of
+           holds. It grows towards the stall, so it is pooled over the replicates near a level; where there are none,
+           over the differences between the two branches, hysteresis and all; where there is neither (flag
+           `no_replicates`), the readings' own u stands for it.
 * model    between levels the truth lies within ± the distance of the smooth curve from the straight chord, and below
            the lowest level within ± the whole extrapolated step; both as rectangles (JCGM 100:2008, 4.3.7).
 """
@@ -27,6 +28,9 @@ from sweeprig.characterise.laws import Floats
 
 SAME_DUTY_PERCENT = 0.05
 """Settings nearer than this are one level: between them a smooth curve would follow the noise."""
+NEAR_PERCENT = 10.0
+"""Replicates as near as this in duty show the scatter of a level."""
+LEAST_FREEDOM = 2
 _DENSE = 2001
 
 
@@ -72,12 +76,16 @@ def _level(group: Sequence[Point]) -> Level:
 
 @dataclass(frozen=True, slots=True)
 class Curve:
-    """Fitted values at `duty` (n,), n ≥ 2, rising strictly; between them a shape-preserving cubic."""
+    """Fitted values at `duty` (n,), n ≥ 2, rising strictly; between them a shape-preserving cubic.
+
+    u_common, u_random: standard uncertainties of the levels; one_hold: standard deviation of a single hold there. (n,)
+    """
 
     duty: Floats
     value: Floats
     u_common: Floats
     u_random: Floats
+    one_hold: Floats
     holds: tuple[int, ...]
     flags: tuple[str, ...]
 
@@ -117,8 +125,8 @@ class Curve:
         return duty, self.at(duty)
 
 
-def fit_curve(points: Sequence[Point], *, monotone: bool) -> Curve | None:
-    """The curve through the levels of `points`; None with fewer than two levels.
+def fit_curve(points: Sequence[Point], *, monotone: bool, other: Sequence[Point] = ()) -> Curve | None:
+    """The curve through the levels of `points`; None with fewer than two levels. other: points of the other branch.
 
     monotone: the values are first made non-decreasing (least squares with the levels' weights; pool adjacent
     violators); when a drop is larger than the scatter explains the flag `not_monotone` says so.
@@ -127,12 +135,11 @@ def fit_curve(points: Sequence[Point], *, monotone: bool) -> Curve | None:
     if len(found) < 2:
         return None
     value = np.array([level.value for level in found])
-    scatter, freedom = pooled_scatter(found)
+    scatter = local_scatter(found, levels(other))
     u_common = np.array([level.u_common for level in found])
-    random = np.array([scatter / math.sqrt(level.effective_n) for level in found])
-    # without replicates the readings' own u is all that is known, so it has to stand for the scatter as well
-    u_random = random if freedom else u_common
-    flags = [] if freedom else ["no_replicates"]
+    one_hold = np.array([level.u_common if s is None else s for s, level in zip(scatter, found, strict=True)])
+    u_random = one_hold / np.sqrt([level.effective_n for level in found])
+    flags = ["no_replicates"] if None in scatter else []
     if monotone:
         weights = np.array([level.weight for level in found])
         raised = np.asarray(optimize.isotonic_regression(value, weights=weights).x, dtype=np.float64)
@@ -143,9 +150,31 @@ def fit_curve(points: Sequence[Point], *, monotone: bool) -> Curve | None:
         value=value,
         u_common=u_common,
         u_random=u_random,
+        one_hold=one_hold,
         holds=tuple(sorted(p.hold for p in points)),
         flags=tuple(flags),
     )
+
+
+def local_scatter(found: Sequence[Level], other: Sequence[Level]) -> list[float | None]:
+    """Standard deviation between holds at each level of `found`; None where nothing shows it.
+
+    From the replicates within NEAR_PERCENT of duty when they have LEAST_FREEDOM together, else from the differences of
+    all levels without such replicates to the level of `other` at the same duty, divided by √2.
+    """
+    near = [
+        pooled_scatter([one for one in found if abs(one.duty_percent - level.duty_percent) <= NEAR_PERCENT])
+        for level in found
+    ]
+    bare = [level for level, (_, freedom) in zip(found, near, strict=True) if freedom < LEAST_FREEDOM]
+    away = [
+        level.value - pair.value
+        for level in bare
+        for pair in other
+        if abs(level.duty_percent - pair.duty_percent) < SAME_DUTY_PERCENT
+    ]
+    between = math.sqrt(sum(a * a for a in away) / (2.0 * len(away))) if away else None
+    return [scatter if freedom >= LEAST_FREEDOM else between for scatter, freedom in near]
 
 
 def pooled_scatter(found: Sequence[Level]) -> tuple[float, int]:

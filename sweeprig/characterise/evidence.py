@@ -80,7 +80,11 @@ def duties(plan: Plan, condition: Condition, outcomes: Sequence[Outcome]) -> Dut
         by_setting[setting].append(value - setting)
     settings = sorted(by_setting)
     offsets = [float(np.median(by_setting[s])) for s in settings]
-    measured = {number: duty + float(np.interp(duty, settings, offsets)) for number, duty in commanded.items()}
+    measured = {
+        # a switch that never switches has no delay
+        number: duty + float(np.interp(duty, settings, offsets)) if 0.0 < duty < 100.0 else duty
+        for number, duty in commanded.items()
+    }
     return Duties(measured, float(np.median([u for *_, u in read])), f"duty as measured by {channel}", ())
 
 
@@ -114,17 +118,18 @@ def stall_trials(plan: Plan, known: Duties, outcomes: Sequence[Outcome], turned_
         if outcome.restarts:
             flags.add("self_restart")
         curves += outcome.hold.purpose is Purpose.CURVE
-        survived, failed = _times(outcome)
-        ratio = plan.stall.hold_time_s
-        trials.append(
-            Trial(
-                outcome.number,
-                known.of[outcome.number],
-                survived / ratio,
-                None if failed is None else failed / ratio,
-            )
-        )
-    assumes = [known.assumes, "hazard constant in time within a hold; no drift and no scatter between holds"]
+        survived, failed = _times(plan, outcome)
+        if survived <= 0.0 and failed is None:
+            # nothing was exposed, so nothing can be said
+            continue
+        whole = plan.stall.hold_time_s
+        width = None if failed is None else failed / whole
+        trials.append(Trial(outcome.number, known.of[outcome.number], survived / whole, width))
+    assumes = [
+        known.assumes,
+        "hazard constant in time within a hold; a stop within five time constants happened by then",
+        "no drift and no scatter between holds",
+    ]
     if curves:
         assumes.append(f"{curves} holds of the falling curve count as exposures (one step down, rotor seen turning)")
     return Chosen(tuple(trials), tuple(assumes), tuple(sorted(flags)))
@@ -138,12 +143,19 @@ def _is_exposure(plan: Plan, outcome: Outcome, turned_before: frozenset[int]) ->
     return outcome.hold.least_s >= LEAST_TIME_CONSTANTS * plan.time_constant_s and outcome.number in turned_before
 
 
-def _times(outcome: Outcome) -> tuple[float, float | None]:
-    """(seconds survived for certain, width of the interval in which it stopped or None)."""
+def _times(plan: Plan, outcome: Outcome) -> tuple[float, float | None]:
+    """(seconds survived for certain, width of the interval in which it stopped or None).
+
+    A stop within the first five time constants counts as "by then": the rotor is still coming down from its approach,
+    so the moment tells how long that took, and not how large the hazard is.
+    """
     begin, end = outcome.event_between_s
     if outcome.verdict is not Verdict.STOPPED and not outcome.restarts:
         return (begin if begin > 0.0 else outcome.exposed_s), None
     end = max(outcome.exposed_s, begin) if end is None else end
+    coming_down = LEAST_TIME_CONSTANTS * plan.time_constant_s
+    if begin < coming_down:
+        return 0.0, max(end, coming_down)
     return begin, max(end - begin, _SHORTEST_GAP_S)
 
 
@@ -182,17 +194,21 @@ def speed_points(plan: Plan, known: Duties, outcomes: Sequence[Outcome], branch:
     for outcome in _settled(plan, outcomes, branch):
         reading = None if channel is None else outcome.means.get(channel)
         if reading is not None and reading.value is not None:
-            points.append(Point(outcome.number, known.of[outcome.number], reading.value, reading.u, _weight(outcome)))
+            points.append(
+                Point(outcome.number, known.of[outcome.number], reading.value, reading.u, _weight(plan, outcome))
+            )
     return tuple(points)
 
 
-def voltage_points(plan: Plan, condition: Condition, known: Duties, outcomes: Sequence[Outcome]) -> tuple[Point, ...]:
-    """Mean motor voltages of the turning motor on the falling branch, V."""
+def voltage_points(
+    plan: Plan, condition: Condition, known: Duties, outcomes: Sequence[Outcome], branch: Approach
+) -> tuple[Point, ...]:
+    """Mean motor voltages of the turning motor on one branch, V."""
     points = []
-    for outcome in _settled(plan, outcomes, Approach.FALLING):
+    for outcome in _settled(plan, outcomes, branch):
         volts = mean_motor_voltage(plan, condition, outcome.means)
         if volts is not None:
-            duty, weight = known.of[outcome.number], _weight(outcome)
+            duty, weight = known.of[outcome.number], _weight(plan, outcome)
             points.append(Point(outcome.number, duty, volts.volts, volts.u, weight, volts.flags))
     return tuple(points)
 
@@ -208,11 +224,11 @@ def _settled(plan: Plan, outcomes: Sequence[Outcome], branch: Approach) -> list[
         if o.hold.approach is branch
         and o.hold.purpose in purposes
         and (o.verdict is Verdict.TURNING or (o.verdict is Verdict.STOPPED and o.hold.purpose is Purpose.STALL))
-        and (o.verdict is Verdict.TURNING or _times(o)[0] >= least)
+        and (o.verdict is Verdict.TURNING or _times(plan, o)[0] >= least)
         and not o.restarts
     ]
 
 
-def _weight(outcome: Outcome) -> float:
+def _weight(plan: Plan, outcome: Outcome) -> float:
     """Seconds the rotor turned at the duty; the whole hold where the exposure was not timed."""
-    return _times(outcome)[0] or max(outcome.ended - outcome.began, _SHORTEST_GAP_S)
+    return _times(plan, outcome)[0] or max(outcome.ended - outcome.began, _SHORTEST_GAP_S)

@@ -20,6 +20,7 @@ LN2 = math.log(2.0)
 GUMBEL_SD = math.pi / math.sqrt(6.0)
 """Standard deviation of a Gumbel law of unit scale, 1.2825 (definitions: spread = 1.283 / b)."""
 LOGISTIC_SD = math.pi / math.sqrt(3.0)
+MANY = 400
 _LARGEST_EXPONENT = 690.0
 _SMALLEST_CHANCE = 1e-300
 
@@ -79,7 +80,7 @@ class Trial:
 
 @dataclass(frozen=True, slots=True)
 class Evidence:
-    """Trials summed up without loss. `duty`, `exposure`: (m,); `event_duty`, `event_width`, `events`: (k,).
+    """Trials summed up (see `summed`). `duty`, `exposure`: (m,); `event_duty`, `event_width`, `events`: (k,).
 
     exposure   sum over the trials at that duty of the part survived
     events     number of failures at `event_duty` seen within an interval `event_width`
@@ -102,14 +103,19 @@ class Evidence:
 
 
 def summed(trials: Sequence[Trial]) -> Evidence:
-    """The sufficient sums of `trials`: with a hazard constant in time, exposures at one duty simply add."""
+    """The sufficient sums of `trials`: with a hazard constant in time, exposures at one duty simply add.
+
+    Beyond MANY trials duties are taken to 0.01 % and intervals to two digits, far below what such a night resolves,
+    so that the work does not grow with the number of holds.
+    """
     exposure: dict[float, float] = defaultdict(float)
     events: dict[tuple[float, float], int] = defaultdict(int)
+    many = len(trials) > MANY
     for trial in trials:
-        duty = round(trial.duty_percent, 9)
+        duty = round(trial.duty_percent, 2 if many else 9)
         exposure[duty] += trial.survived
         if trial.failed is not None:
-            events[duty, round(trial.failed, 9)] += 1
+            events[duty, float(f"{trial.failed:.{2 if many else 12}g}")] += 1
     duties, pairs = sorted(exposure), sorted(events)
     return Evidence(
         duty=np.array(duties, dtype=np.float64),

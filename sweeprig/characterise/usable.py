@@ -13,7 +13,7 @@ import numpy as np
 from scipy import special
 
 from sweeprig.characterise.combine import K_TWO_SIDED, ONE_SIDED, TWO_SIDED, carried, summary
-from sweeprig.characterise.curve import Curve, Level, levels, pooled_scatter
+from sweeprig.characterise.curve import LEAST_FREEDOM, Curve, Level, levels, pooled_scatter
 from sweeprig.characterise.duties_found import TAIL, Threshold
 from sweeprig.characterise.evidence import Point
 from sweeprig.characterise.findings import Finding, UsableRange, not_found
@@ -21,8 +21,6 @@ from sweeprig.characterise.laws import Floats
 
 SEGMENTS = 3
 LEAST_APART_PERCENT = 2.0
-LEAST_FREEDOM = 2
-"""Degrees of freedom that a segment needs before its scatter is quoted."""
 _ACCURACY = "accuracy of an instrument common to all its readings, not averaged down"
 
 
@@ -73,7 +71,8 @@ def at_stall(branch: Branch | None, stall: Threshold, what: str) -> Finding:
     holds = tuple(sorted({*branch.curve.holds, *stall.evidence.holds}))
     if sample is None:
         return _at_stall_bound(branch, stall, what, holds)
-    shown = summary([carried(sample, branch.curve.at, branch.curve.u_at)])
+    # neither a speed on this branch nor the mean voltage that drives it can be below zero
+    shown = summary([np.maximum(carried(sample, branch.curve.at, branch.curve.u_at), 0.0)])
     return Finding(
         value=shown.value,
         u=shown.u,
@@ -264,7 +263,10 @@ def _apart(curve: Curve, low: float, high: float) -> Floats:
 
 
 def curve_hysteresis(falling: Branch | None, rising: Sequence[Point]) -> Finding:
-    """The largest difference of speed between the branches, rising levels against the falling curve, rpm."""
+    """The largest difference of speed between the branches, rising levels against the falling curve, rpm.
+
+    Where no hold was repeated the scatter is judged by these very differences, so u errs on the safe side.
+    """
     found = levels(rising)
     if falling is None or not found:
         return not_found("the curve was not measured in both directions")
@@ -275,9 +277,11 @@ def curve_hysteresis(falling: Branch | None, rising: Sequence[Point]) -> Finding
     place = np.array([level.duty_percent for level in inside])
     away = np.array([level.value for level in inside]) - curve.at(place)
     index = int(np.argmax(np.abs(away)))
-    scatter, freedom = pooled_scatter(found)
-    own = scatter if freedom else float(curve.u_random.max())
-    u = math.hypot(float(curve.u_free_at(place)[index]), own / math.sqrt(inside[index].effective_n))
+    # one rising hold scatters as one falling hold does there
+    free = float(curve.u_free_at(place)[index])
+    u = math.hypot(
+        free, float(np.interp(place[index], curve.duty, curve.one_hold)) / math.sqrt(inside[index].effective_n)
+    )
     direction = "rising above falling" if away[index] > 0.0 else "falling above rising"
     method = f"largest distance between the branches, at {place[index]:.1f} % duty, {direction}"
     holds = tuple(sorted({*curve.holds, *(hold for level in inside for hold in level.holds)}))

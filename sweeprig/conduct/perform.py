@@ -58,7 +58,7 @@ class Performer:
             return
         if self.rig.guard.on:
             drive_off(self.rig)
-        name, limits = self.rig.source["supply"], self.rig.job.rig.limits
+        name, limits = self.rig.source["supply"], self.rig.use.limits
         self.rig.tell(name, supply.apply(SupplySetting(condition.supply_v, limits.current)), self.watch.look)
         self.rig.tell(name, supply.switch_on(), self.watch.look)
         self.supply_v = condition.supply_v
@@ -104,7 +104,7 @@ class Performer:
 
     def track(self) -> Track:
         tacho = self.rig.source["speed"]
-        per_revolution = self.rig.job.motor.pulses_per_revolution
+        per_revolution = self.rig.use.pulses_per_revolution
         return Track(
             self.rig.roles["speed"], f"{tacho}.edge_age", f"{tacho}.edge_gap", per_revolution, self.rig.clock.now()
         )

@@ -17,6 +17,7 @@ from sweeprig.conduct.protection import Above, Guard, LockedRotor, Policy
 from sweeprig.dialects import find_dialect
 from sweeprig.errors import ConfigError, LinkError, RoleMissing, SweeprigError, WrongInstrument
 from sweeprig.job import Job
+from sweeprig.job.rig_models import Limits, Rig
 from sweeprig.link import registry
 from sweeprig.link.link import Link
 from sweeprig.link.together import Result, together
@@ -35,11 +36,30 @@ Traffic = Callable[[str, str, bytes, float], None]
 Look = Callable[[], None]
 
 
+@dataclass(frozen=True, slots=True)
+class RigUse:
+    """A rig and what is used of a motor with it: the limits that hold, and how its tachometer counts.
+
+    folder   where the rig file lies: a user's own dialects are found beside it
+    pwm_hz   frequencies that instruments will have to average over; empty where nothing will be swept
+    """
+
+    rig: Rig
+    limits: Limits
+    pulses_per_revolution: float
+    folder: Path | None
+    pwm_hz: tuple[float, ...] = ()
+
+    @classmethod
+    def of_job(cls, job: Job) -> RigUse:
+        return cls(job.rig, job.limits(), job.motor.pulses_per_revolution, job.rig_folder, tuple(job.sweep.pwm))
+
+
 @dataclass(slots=True)
 class OpenRig:
     """Instruments by their name in the rig file. `source`: role → instrument name for every role that is offered."""
 
-    job: Job
+    use: RigUse
     clock: Clock
     adapters: dict[str, Adapter]
     links: dict[str, Link]
@@ -66,7 +86,7 @@ class OpenRig:
     def simulated(self) -> bool:
         return bool(self.identities) and all(identity.simulated for identity in self.identities.values())
 
-    def ask(self, steps: Mapping[str, Steps[Any]], within_s: float, look: Look | None = None) -> dict[str, Result[Any]]:
+    def ask(self, steps: Mapping[str, Steps[Any]], within_s: float, look: Look | None = None) -> dict[str, Result]:
         """Drive steps on several instruments at once; one result each, none raised."""
         pairs = {name: (self.links[name], each) for name, each in steps.items()}
         return together(pairs, self.clock, self.clock.now() + within_s, look, traffic=self.traffic)
@@ -78,12 +98,12 @@ class OpenRig:
     def read(self, names: Iterable[str], window: Window, look: Look) -> dict[str, Reading]:
         """One cycle: all `names` measure side by side over one window. Every reading passes the guard as it comes."""
         readings: dict[str, Reading] = {}
-        failed: list[tuple[str, SweeprigError]] = []
+        failed: list[tuple[str, Exception]] = []
         guard, pairs = self.guard, {}
         for name in names:
             pairs[name] = (self.links[name], self.adapters[name].measure(window))
 
-        def arrived(name: str, result: Result[Any]) -> None:
+        def arrived(name: str, result: Result) -> None:
             if result.error is not None:
                 failed.append((name, result.error))
                 return
@@ -114,48 +134,30 @@ def by_channel(measured: Mapping[str, Reading]) -> dict[str, Reading]:
     return {reading.channel: reading for reading in measured.values()}
 
 
-def named(name: str, error: SweeprigError) -> SweeprigError:
-    """The same error, its text beginning with the instrument's name."""
-    if not error.what.startswith(f"{name}: "):
+def named(name: str, error: Exception) -> Exception:
+    """The same error, its text beginning with the instrument's name; a defect of an adapter is left as it is."""
+    if isinstance(error, SweeprigError) and not error.what.startswith(f"{name}: "):
         error.what = f"{name}: {error.what}"
     return error
 
 
-def value_of(name: str, result: Result[Any]) -> Any:
+def value_of(name: str, result: Result) -> Any:
     if result.error is not None:
         raise named(name, result.error)
     return result.value
 
 
 def open_rig(
-    job: Job,
-    clock: Clock,
-    ports: Mapping[str, Any] | None = None,
-    traffic: Traffic | None = None,
-    off_first: bool = False,
+    use: RigUse, clock: Clock, ports: Mapping[str, Any] | None = None, traffic: Traffic | None = None
 ) -> OpenRig:
     """Build the adapters, open the links, ask everyone who they are. Nothing is set yet.
 
-    `off_first`: before anything else is said, drive and supply are told to be off, blind.
-
     `ports`: the in-process ports of a simulated bench, for `simbench:` addresses. A failed opening closes all.
     """
-    adapters = build_adapters(job)
-    source = {role: channel.partition(".")[0] for role, channel in job.rig.roles.items()}
-    _check_actuators(adapters, source)
-    guard = Guard(policies(job, source))
-    for adapter in adapters.values():
-        for pwm_hz in job.sweep.pwm:
-            adapter.check_window(Window(BOUNDS["cycle_window_s"], pwm_hz))
-    rig = OpenRig(job, clock, adapters, {}, source, job.rig.roles, guard, traffic)
+    rig = assemble(use, clock, traffic)
     try:
-        for name, instrument in job.rig.instruments.items():
-            deadline = clock.now() + BOUNDS["open_s"]
-            end = instrument.terminator_bytes
-            rig.links[name] = registry.open_link(instrument.address, clock, deadline, ports=ports, terminator=end)
-        if off_first:
-            actuators = {source[role] for role in ("drive", "supply") if role in source}
-            rig.ask({name: adapters[name].switch_off() for name in actuators}, BOUNDS["off_s"])
+        for name in rig.adapters:
+            open_link(rig, name, ports)
         identify(rig, rig.adapters)
     except BaseException:
         rig.close()
@@ -163,21 +165,36 @@ def open_rig(
     return rig
 
 
-def build_adapters(job: Job) -> dict[str, Adapter]:
-    """The adapters of a job's rig, not connected to anything: unknown names and bad options are refused here."""
+def assemble(use: RigUse, clock: Clock, traffic: Traffic | None = None) -> OpenRig:
+    """The rig with its adapters and its guard, no link opened. ConfigError, RoleMissing for what cannot work."""
+    adapters = build_adapters(use)
+    source = {role: channel.partition(".")[0] for role, channel in use.rig.roles.items()}
+    _check_actuators(adapters, source)
+    for adapter in adapters.values():
+        for pwm_hz in use.pwm_hz:
+            adapter.check_window(Window(BOUNDS["cycle_window_s"], pwm_hz))
+    return OpenRig(use, clock, adapters, {}, source, use.rig.roles, Guard(policies(use, source)), traffic)
+
+
+def open_link(rig: OpenRig, name: str, ports: Mapping[str, Any] | None = None) -> None:
+    """Open one instrument's link; a LinkError carries the instrument's name."""
+    instrument, deadline = rig.use.rig.instruments[name], rig.clock.now() + BOUNDS["open_s"]
+    end = instrument.terminator_bytes
+    try:
+        rig.links[name] = registry.open_link(instrument.address, rig.clock, deadline, ports=ports, terminator=end)
+    except LinkError as error:
+        raise named(name, error) from error
+
+
+def build_adapters(use: RigUse) -> dict[str, Adapter]:
+    """The adapters of a rig, not connected to anything: unknown names and bad options are refused here."""
     adapters: dict[str, Adapter] = {}
-    for name, instrument in job.rig.instruments.items():
+    for name, instrument in use.rig.instruments.items():
         kind = registry.find_adapter(instrument.adapter)
-        dialect = {} if instrument.dialect is None else find_dialect(instrument.dialect, _beside(job))
-        setup = AdapterSetup(
-            name, instrument.options, dialect, instrument.accuracies(), job.motor.pulses_per_revolution
-        )
+        dialect = {} if instrument.dialect is None else find_dialect(instrument.dialect, use.folder)
+        setup = AdapterSetup(name, instrument.options, dialect, instrument.accuracies(), use.pulses_per_revolution)
         adapters[name] = kind(setup)
     return adapters
-
-
-def _beside(job: Job) -> Path | None:
-    return job.rig_folder
 
 
 def _check_actuators(adapters: Mapping[str, Adapter], source: Mapping[str, str]) -> None:
@@ -201,9 +218,9 @@ def _check_actuators(adapters: Mapping[str, Adapter], source: Mapping[str, str])
         )
 
 
-def policies(job: Job, source: Mapping[str, str]) -> list[Policy]:
-    """The rig file's limits, each lowered to the motor's maximum, as policies. Finite by default."""
-    limits, roles = job.limits(), job.rig.roles
+def policies(use: RigUse, source: Mapping[str, str]) -> list[Policy]:
+    """The limits as policies. Finite by default."""
+    limits, roles = use.limits, use.rig.roles
     ages = limits.longest_age.by_role()
     found: list[Policy] = []
     for rule, role, limit in (

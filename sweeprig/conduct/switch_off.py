@@ -5,12 +5,12 @@ Sent blind where it must be: also on a link that is dirty or has not yet said wh
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.conduct.rig import OpenRig, by_channel
-from sweeprig.errors import OffNotProved, SweeprigError
+from sweeprig.errors import OffNotProved
 from sweeprig.quantities import Reading, show_quantity
 from sweeprig.roles import Window
 
@@ -27,9 +27,8 @@ class Off:
 def switch_off(rig: OpenRig, supply_too: bool = True) -> Off:
     """Tell drive (and supply) to be off, all links at once. Never raises: what did not answer is in the result."""
     began = rig.clock.now()
-    names = [rig.source["drive"]]
-    if supply_too and "supply" in rig.source:
-        names.append(rig.source["supply"])
+    roles = ("drive", "supply") if supply_too else ("drive",)
+    names = [rig.source[role] for role in roles if role in rig.source and rig.source[role] in rig.links]
     try:
         results = rig.ask({name: rig.adapters[name].switch_off() for name in names}, BOUNDS["off_s"])
     finally:
@@ -84,7 +83,7 @@ def still_on(rig: OpenRig, readings: Mapping[str, Reading]) -> list[str]:
     return wrong
 
 
-def _read_blind(rig: OpenRig, roles: list[str]) -> dict[str, Reading]:
+def _read_blind(rig: OpenRig, roles: Sequence[str]) -> dict[str, Reading]:
     names = rig.serving(roles)
     window = Window(BOUNDS["cycle_window_s"])
     results = rig.ask({name: rig.adapters[name].measure(window) for name in names}, window.seconds + BOUNDS["cycle_s"])
@@ -96,5 +95,5 @@ def _read_blind(rig: OpenRig, roles: list[str]) -> dict[str, Reading]:
     return readings
 
 
-def _not_proved(name: str, error: SweeprigError) -> OffNotProved:
+def _not_proved(name: str, error: Exception) -> OffNotProved:
     return OffNotProved(f"'{name}' cannot be read, so off cannot be proved: {error}", topic="safety")

@@ -9,11 +9,12 @@ from pathlib import Path
 
 from pydantic import ValidationError
 
-from sweeprig.errors import ConfigError, Where
+from sweeprig.errors import ConfigError, RoleMissing, Where
 from sweeprig.job.amounts import as_written
 from sweeprig.job.cross_checks import cross_checks
 from sweeprig.job.models import Job
 from sweeprig.job.problems import PARTS, Sources, problems
+from sweeprig.job.rig_models import Rig
 from sweeprig.job.toml_source import Source, parse, read
 
 
@@ -29,6 +30,32 @@ def load(path: Path | str) -> Job:
 def load_text(text: str, file: str = "job.toml", folder: Path | None = None) -> Job:
     """Like `load`, from a text; `file` is its name in errors, `folder` where the files it names lie (default: here)."""
     return _checked(parse(text, file), folder or Path())
+
+
+def load_rig(path: Path | str) -> tuple[Rig, Path]:
+    """Read and check a rig file by itself, for switching it off: the rig, and the folder that it lies in."""
+    source = read(Path(path))
+    try:
+        rig = Rig.model_validate(source.data)
+    except ValidationError as error:
+        raise _first_of(problems(error, Sources(source), Rig)) from None
+    for role in ("drive", "speed"):
+        if rig.roles.get(role, "").partition(".")[0] not in rig.instruments:
+            raise RoleMissing(
+                f"the role {role} names no instrument of this rig",
+                value=rig.roles.get(role, "not given"),
+                allowed=", ".join(rig.instruments),
+                where=source.where(("roles", role)),
+                remedy="Name an instrument of the rig",
+                topic="rig",
+            )
+    return rig, Path(path).parent
+
+
+def is_rig_file(path: Path | str) -> bool:
+    """Whether the file at `path` is a rig file rather than a job file."""
+    data = read(Path(path)).data
+    return "instruments" in data and not any(name in data for name in PARTS)
 
 
 def _checked(source: Source, folder: Path) -> Job:

@@ -52,8 +52,8 @@ def create_run_folder(runs: Path, motor: str, utc: float, job_text: str) -> Path
     system or where it cannot be made, DiskFull where the disk is full.
     """
     with os_errors_at(runs):
-        runs.mkdir(parents=True, exist_ok=True)
         refuse_network(runs)
+        runs.mkdir(parents=True, exist_ok=True)
         folder = _make_exclusively(runs, f"{stamp(utc)}-{reduced(motor)}")
         (folder / REQUESTS).mkdir()
         write_whole(folder / JOB, job_text)

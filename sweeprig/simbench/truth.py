@@ -45,6 +45,7 @@ def truth(
     saturation_percent: float = 2.0,
     duty_range: tuple[float, float] = (0.0, 100.0),
     current_limit_amps: float = math.inf,
+    run_in: tuple[float, float] = (60.0, 240.0),
     seed: int = 1,
     runs: int = 6000,
     workers: int = 1,
@@ -55,6 +56,7 @@ def truth(
 
     relaunch   (percent above the trial duty, s) before each falling approach
     duty_range lowest and highest duty allowed, percent
+    run_in     (duty percent, s) that warm the motor before each block of trials
     runs       trials per threshold (stall and start each), shared over about twenty duties
     workers    processes; more than one starts fresh interpreters. The result does not depend on it.
     """
@@ -69,6 +71,7 @@ def truth(
         duty_low_percent=duty_range[0],
         duty_high_percent=duty_range[1],
         current_limit_amps=current_limit_amps,
+        run_in=run_in,
     )
     tasks = [
         Task(motor, condition, procedure, "stall", 0.0, 1, (seed, number))

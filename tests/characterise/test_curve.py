@@ -38,6 +38,23 @@ def test_without_replicates_the_readings_stand_in() -> None:
     assert curve.u_random == pytest.approx([2.0, 2.0])
 
 
+def test_scatter_is_local() -> None:
+    """Replicates near the stall do not make the far end of the curve unsure; there the branches' difference counts."""
+    noisy = [Point(0, 10.0, value, 1.0, 10.0) for value in (80.0, 120.0, 100.0)]
+    falling = [*noisy, Point(0, 50.0, 1000.0, 1.0, 10.0), Point(0, 90.0, 2000.0, 1.0, 10.0)]
+    rising = [Point(0, 50.0, 1003.0, 1.0, 10.0), Point(0, 90.0, 1999.0, 1.0, 10.0)]
+    curve = fit_curve(falling, monotone=True, other=rising)
+    assert curve is not None
+    # exact: s = 20; root of (3² + 1²) / (2 · 2) differences
+    assert curve.one_hold == pytest.approx([20.0, math.sqrt(2.5), math.sqrt(2.5)])
+    assert curve.u_random[0] == pytest.approx(20.0 / math.sqrt(3.0))
+    assert curve.flags == ()
+    alone = fit_curve(falling, monotone=True)
+    assert alone is not None
+    assert alone.one_hold == pytest.approx([20.0, 1.0, 1.0])
+    assert alone.flags == ("no_replicates",)
+
+
 def test_exposure_weights_the_mean() -> None:
     """A survivor of 20 s and one that turned for 5 s weigh four to one."""
     found = levels([Point(1, 10.0, 100.0, 1.0, 20.0), Point(2, 10.0, 90.0, 1.0, 5.0)])

@@ -44,6 +44,15 @@ def test_stall_holds_are_exposures_in_parts_of_the_hold_time(plan: Plan, outcome
     )
 
 
+def test_early_stop_tells_only_that_it_was_early(plan: Plan, outcome: MakeOutcome) -> None:
+    """A stop while the rotor still comes down (five time constants, 2.5 s) counts as by then, whenever it was seen."""
+    for event in ((0.0, 0.1), (0.3, 0.4), (2.0, 2.2)):
+        made = [outcome(1, Purpose.STALL, 10.0, Verdict.STOPPED, event_between_s=event, exposed_s=event[1])]
+        assert trials_of(plan, made) == (Trial(1, 10.0, 0.0, 2.5 / 20.0),)
+    late = [outcome(1, Purpose.STALL, 10.0, Verdict.STOPPED, event_between_s=(2.0, 3.0), exposed_s=3.0)]
+    assert trials_of(plan, late) == (Trial(1, 10.0, 0.0, 3.0 / 20.0),)
+
+
 def test_other_approaches_and_verdicts_are_no_trials(plan: Plan, outcome: MakeOutcome) -> None:
     """A rising hold, a stepping rotor and an undecided one say nothing for the law, and what is left out is flagged."""
     made = [
@@ -51,6 +60,7 @@ def test_other_approaches_and_verdicts_are_no_trials(plan: Plan, outcome: MakeOu
         outcome(2, Purpose.STALL, 12.0, Verdict.STEPPING),
         outcome(3, Purpose.STALL, 12.0, Verdict.UNDECIDED),
         outcome(4, Purpose.LONG, 12.0, Verdict.TURNING),
+        outcome(5, Purpose.STALL, 12.0, Verdict.TURNING, event_between_s=(0.0, None), exposed_s=0.0),
     ]
     chosen = stall_trials(plan, duties(plan, plan.conditions[0], made), made, turning_before(made))
     assert chosen.trials == ()
@@ -97,16 +107,18 @@ def test_hold_after_a_gap_is_not_known_to_begin_turning(outcome: MakeOutcome) ->
 
 
 def test_duty_is_the_measured_one(plan: Plan, outcome: MakeOutcome) -> None:
-    """Readings at one setting are taken together, and a hold that was never read takes its neighbours' offset."""
+    """Readings at one setting are taken together; one never read takes its neighbours' offset; 0 and 100 % stay."""
     made = [
         outcome(1, Purpose.STALL, 12.0, Verdict.TURNING, values={"scope.duty": (12.31, 0.03, "%")}),
         outcome(2, Purpose.STALL, 12.0, Verdict.TURNING, values={"scope.duty": (12.29, 0.03, "%")}),
         outcome(3, Purpose.STALL, 10.0, Verdict.TURNING, values={"scope.duty": (10.10, 0.03, "%")}),
         outcome(4, Purpose.STALL, 11.0, Verdict.STOPPED),
         outcome(5, Purpose.STALL, 9.0, Verdict.STOPPED),
+        outcome(6, Purpose.CURVE, 100.0, Verdict.TURNING),
+        outcome(7, Purpose.CURVE, 0.0, Verdict.STOPPED),
     ]
     known = duties(measured(plan), plan.conditions[0], made)
-    assert known.of == pytest.approx({1: 12.3, 2: 12.3, 3: 10.1, 4: 11.2, 5: 9.1})
+    assert known.of == pytest.approx({1: 12.3, 2: 12.3, 3: 10.1, 4: 11.2, 5: 9.1, 6: 100.0, 7: 0.0})
     assert known.u == 0.03
     assert known.flags == ()
     assert "scope.duty" in known.assumes
@@ -161,5 +173,5 @@ def test_voltage_points_keep_their_flags(plan: Plan, outcome: MakeOutcome) -> No
     """At the switch node without a supply reading the point leans on the supply's setting, and says so."""
     made = [outcome(1, Purpose.CURVE, 40.0, Verdict.TURNING, values={"meter.volts": (7.0, 0.01, "V")})]
     node = replace(plan, voltage_at="switch_node")
-    (point,) = voltage_points(node, plan.conditions[0], duties(node, plan.conditions[0], made), made)
+    (point,) = voltage_points(node, plan.conditions[0], duties(node, plan.conditions[0], made), made, Approach.FALLING)
     assert (point.value, point.flags) == (5.0, ("supply_setting_assumed",))

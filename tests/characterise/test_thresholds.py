@@ -59,6 +59,26 @@ def test_evidence_is_the_integral() -> None:
     assert ratio == pytest.approx(math.log(float(sums[0] / sums[1])), abs=0.03)  # independent method
 
 
+def test_many_trials_may_be_rounded() -> None:
+    """Above the number of trials where duties are rounded, the findings are those of the unrounded sums."""
+    rng = np.random.default_rng(8)
+    trials = []
+    for index in range(401):
+        duty = float(rng.uniform(9.5, 11.5))
+        stop = rng.exponential() / float(EXPONENTIAL.cumulative(np.array((duty - 10.0) / 0.4)))
+        trials.append(Trial(index, duty, min(stop, 1.0), 0.01234 if stop < 1.0 else None))
+    rounded, exact = summed(trials), summed(trials[:200])
+    other = summed(trials[200:])
+    assert rounded.duty.size < exact.duty.size + other.duty.size
+    lost = []
+    for median, spread in ((9.9, 0.35), (10.0, 0.4), (10.1, 0.5)):
+        place = np.array(median), np.array(spread)
+        whole = log_likelihood(EXPONENTIAL, exact, *place) + log_likelihood(EXPONENTIAL, other, *place)
+        # own bound: differences of log-likelihood below 0.1 move no 95 % interval by more than a few hundredths of u
+        lost.append(float(log_likelihood(EXPONENTIAL, rounded, *place) - whole))
+    assert max(lost) - min(lost) < 0.1
+
+
 def test_separable_data_have_a_proper_answer() -> None:
     """When all stops lie below all survivals the stall duty lies near the gap, with an interval that is finite."""
     found = threshold(STALL, Chosen(SEPARABLE), 0.0).finding(0.5)

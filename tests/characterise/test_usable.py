@@ -14,7 +14,7 @@ from sweeprig.characterise.duties_found import STALL, START, Threshold, threshol
 from sweeprig.characterise.evidence import Chosen, Point
 from sweeprig.characterise.laws import Trial
 
-ACCURACY = 2.0
+ACCURACY = 10.0
 LADDER = (
     *(Trial(i, duty, 1.0) for i, duty in enumerate((12.0, 11.5, 11.0, 10.5, 10.0) * 4)),
     *(Trial(30 + i, duty, 0.4, 0.0125) for i, duty in enumerate((9.5, 10.0, 9.5, 9.0, 9.5))),
@@ -117,6 +117,27 @@ def test_high_duty_is_where_more_duty_gives_little() -> None:
     assert found.low is not None
     assert found.high is not None
     assert found.low < truth < found.high <= 100.0
+
+
+def test_high_duty_is_as_sure_as_the_speeds_over_the_slope() -> None:
+    """On a straight line u is the scatter of both speeds over the slope, without the accuracy they share."""
+    line = [Point(0, duty, 40.0 * duty + sign, ACCURACY, 1.0) for duty in (20.0, 60.0, 98.0, 100.0) for sign in (-1, 1)]
+    curve = fit_curve(line, monotone=True)
+    assert curve is not None
+    found = usable.high_duty(usable.Branch(curve, 20.0), 2.0, 0.03)
+    assert found.value == pytest.approx(98.0)
+    assert found.u == pytest.approx(math.hypot(math.hypot(1.0, 0.98) / 40.0, 0.03), rel=1e-3)  # exact
+
+
+def test_speed_is_never_below_zero() -> None:
+    """A stall speed read off far below the readings may be nothing, and is not negative."""
+    found = usable.at_stall(branch([14.0, 20.0, 30.0, 100.0], sure=14.0), stall(), "speed")
+    steep = [Point(0, duty, 500.0 * (duty - 11.0), 1.0, 1.0) for duty in (11.5, 12.0, 30.0) for _ in (0, 1)]
+    curve = fit_curve(steep, monotone=True)
+    assert curve is not None
+    assert usable.at_stall(usable.Branch(curve, 11.5), stall(), "speed").low == 0.0
+    assert found.low is not None
+    assert found.low >= 0.0
 
 
 def test_high_duty_of_a_flat_top() -> None:

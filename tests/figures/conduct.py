@@ -14,7 +14,7 @@ from typing import Any
 from sweeprig.clock import SystemClock
 from sweeprig.conduct import run as conduct_run
 from sweeprig.conduct.perform import Performed, Performer
-from sweeprig.conduct.rig import configure, open_rig
+from sweeprig.conduct.rig import RigUse, configure, open_rig
 from sweeprig.holds import Hold
 from sweeprig.job import load, shipped
 from sweeprig.launch import start
@@ -76,7 +76,7 @@ def together_ratio(cycles: int) -> tuple[float, dict[str, float]]:
 
 
 def _ratio(job_file: Path, cycles: int) -> tuple[float, dict[str, float]]:
-    rig = open_rig(load(job_file), SystemClock())
+    rig = open_rig(RigUse.of_job(load(job_file)), SystemClock())
     try:
         configure(rig)
         names = [name for name in rig.adapters if name != "scope"]

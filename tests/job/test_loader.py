@@ -320,6 +320,22 @@ def test_limits_are_lowered_to_the_motors(configs: Path) -> None:
     assert limits.winding_temperature is None
 
 
+def test_bounds_themselves_are_allowed(configs: Path, spoil: Spoil) -> None:
+    """The motor's maximum voltage as supply, five time constants as hold time, the range's ends as PWM: all allowed."""
+    spoil("sweeps/evening.toml", '["12 V"]', '["13.5 V"]')
+    spoil("sweeps/evening.toml", 'hold_time = "20 s"', 'hold_time = "3 s"')
+    spoil("sweeps/evening.toml", '"300 Hz", "1 kHz", "25 kHz"', '"20 Hz", "100 kHz"')
+    job = load(configs / "demo.toml")
+    assert (job.sweep.supply, job.sweep.pwm) == ((13.5,), (20.0, 100_000.0))
+
+
+def test_motors_are_exchanged_by_one_line(configs: Path, spoil: Spoil) -> None:
+    """The second fan that ships fits the first one's job, rig and sweep."""
+    spoil("demo.toml", "motors/aspirator-fan.toml", "motors/aspirator-fan-b.toml")
+    (configs / "motors" / "aspirator-fan-b.toml").write_bytes(shipped("motors/aspirator-fan-b").read_bytes())
+    assert load(configs / "demo.toml").motor.name == "aspirating fan B"
+
+
 def test_shipped_finds_jobs_and_parts() -> None:
     """Names with and without ending, parts by their folder; a wrong one is refused with the names there are."""
     assert shipped("demo") == shipped("demo.toml")

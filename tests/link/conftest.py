@@ -1,4 +1,4 @@
-"""Far ends for the link tests: a TCP peer and a pseudo-terminal driven by hand, and an in-process port.
+"""Far ends for the link tests: a TCP peer, a pseudo-terminal and an in-process port driven by hand, a planned link.
 
 No threads: the kernel keeps connections and bytes until the test plays the peer.
 """
@@ -11,18 +11,19 @@ import os
 import select
 import socket
 import sys
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from typing import Protocol
 
 import pytest
 
-from sweeprig.clock import SystemClock
+from sweeprig.clock import SystemClock, Waitable
 from sweeprig.link.base import BaseLink
 from sweeprig.link.inprocess import InProcessLink
 from sweeprig.link.registry import open_link
 from sweeprig.roles import Reply
 
 PATIENCE_S = 5.0
+START = 100.0
 
 
 class Far(Protocol):
@@ -169,6 +170,83 @@ class Pair:
         self.clock.wait(self.clock.now() + PATIENCE_S, on=(self.link,))
 
 
+class JumpingClock:
+    """Jumps to the next reply or to `until`; keeps what was waited on."""
+
+    def __init__(self) -> None:
+        self.t = START
+        self.waits: list[tuple[float, tuple[Waitable, ...]]] = []
+
+    def now(self) -> float:
+        return self.t
+
+    def utc(self) -> float:
+        return self.t
+
+    def wait(self, until: float, on: Sequence[Waitable] = ()) -> None:
+        self.waits.append((until, tuple(on)))
+        self.t = max(self.t, min([until, *(link.ready_at() for link in on)]))
+        assert self.t < 1e9, "waited for ever"
+
+
+class PlannedLink:
+    """Answers each message after `delay` with `text`; None stays silent; an exception is raised by take or send."""
+
+    def __init__(
+        self, clock: JumpingClock, delay: float = 0.01, text: bytes | None = b"1.5", error: Exception | None = None
+    ) -> None:
+        self.clock = clock
+        self.delay = delay
+        self.text = text
+        self.error = error
+        self.error_at = "take"
+        self.address = "planned"
+        self.dirty = ""
+        self.identified = True
+        self.empty_lines = 0
+        self.partial = b""
+        self.sent: list[tuple[float, bytes, float, bool]] = []
+        self.due = math.inf
+
+    def send(self, message: bytes, reply: Reply, deadline: float, early: bool = False) -> None:
+        if self.error is not None and self.error_at == "send":
+            raise self.error
+        self.sent.append((self.clock.t, message, deadline, early))
+        if reply is not Reply.NOTHING and self.text is not None:
+            self.due = self.clock.t + self.delay
+
+    def take(self) -> bytes | None:
+        if self.clock.t < self.due:
+            return None
+        self.due = math.inf
+        if self.error is not None:
+            raise self.error
+        return self.text
+
+    def declare_timeout(self) -> bytes:
+        self.dirty = "no whole reply by the deadline"
+        return self.partial
+
+    def resynchronise(self, deadline: float) -> None:
+        raise AssertionError(f"nothing below conduct heals a link ({deadline})")
+
+    def close(self) -> None:
+        raise AssertionError("the loop owns no link")
+
+    def fileno(self) -> int | None:
+        return None
+
+    def ready_at(self) -> float:
+        return self.due
+
+    @property
+    def sent_at(self) -> list[float]:
+        return [round(at - START, 9) for at, *_ in self.sent]
+
+
+Planned = type[PlannedLink]
+
+
 def wait_for(link: BaseLink, clock: SystemClock, within_s: float) -> bytes | None:
     until = clock.now() + within_s
     raw = link.take()
@@ -176,6 +254,17 @@ def wait_for(link: BaseLink, clock: SystemClock, within_s: float) -> bytes | Non
         clock.wait(until, on=(link,))
         raw = link.take()
     return raw
+
+
+@pytest.fixture
+def jumping() -> JumpingClock:
+    return JumpingClock()
+
+
+@pytest.fixture
+def planned() -> Planned:
+    """The link double of the `together` tests; test files may not import each other."""
+    return PlannedLink
 
 
 @pytest.fixture

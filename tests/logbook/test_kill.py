@@ -20,7 +20,7 @@ from sweeprig.logbook import Logbook, Reader
 
 WRITER = Path(__file__).with_name("writer_process.py")
 READINGS_A_HOLD = 40
-KILLS = 8
+KILLS = 6
 
 needs_sigkill = pytest.mark.skipif(not hasattr(signal, "SIGKILL"), reason="needs SIGKILL and fork")
 

@@ -192,6 +192,16 @@ def test_last_times_is_the_last_thing_written(path: Path, make_hold: MakeHold, m
         assert book.last_times() == (33.0, 133.0)
 
 
+def test_every_commit_is_synced(book: Logbook) -> None:
+    """The writer keeps a write-ahead log, syncs it at every commit, and waits for a lock no longer than 500 ms.
+
+    2 is FULL (certified: https://www.sqlite.org/pragma.html#pragma_synchronous).
+    """
+    asked = ("journal_mode", "synchronous", "foreign_keys", "busy_timeout", "user_version")
+    told = {name: book._connection.execute(f"PRAGMA {name}").fetchone()[0] for name in asked}
+    assert told == {"journal_mode": "wal", "synchronous": 2, "foreign_keys": 1, "busy_timeout": 500, "user_version": 1}
+
+
 def test_clean_close_leaves_one_file(path: Path, book: Logbook) -> None:
     """A clean end leaves the logbook as one file, with the waiting events in it."""
     book.event("finished", 9.0, 109.0, {})

@@ -17,12 +17,14 @@ def test_lines(tmp_path: Path) -> None:
     log("meter", ">", b"READ?", 12.25)
     log("meter", "<", b"+1.0E+00", 12.5)
     log("scope", "<", b"\x00\xff\n\\n", 12.75)
+    log("scope", "<", b"a\\n", 13.0)
     log.close()
     assert log.failed == ""
     assert (tmp_path / "traffic.log").read_text("ascii").splitlines() == [
         "12.2500 meter > READ?",
         "12.5000 meter < +1.0E+00",
         r"12.7500 scope < \x00\xff\n\\n",
+        r"13.0000 scope < a\\n",
     ]
 
 

@@ -61,7 +61,10 @@ def test_continuous_current_against_ngspice() -> None:
 
 @pytest.mark.parametrize(
     ("emf", "conduction_s", "peak", "volts", "amps", "spice_amps"),
-    [(4.0, 0.908620e-3, 0.842827, 6.365521, 0.394253, 0.39415), (8.0, 0.637321e-3, 0.421414, 8.901429, 0.150238, 0.15022)],
+    [
+        (4.0, 0.908620e-3, 0.842827, 6.365521, 0.394253, 0.39415),
+        (8.0, 0.637321e-3, 0.421414, 8.901429, 0.150238, 0.15022),
+    ],
 )
 def test_current_free_gap_against_ngspice(
     emf: float, conduction_s: float, peak: float, volts: float, amps: float, spice_amps: float

@@ -62,12 +62,12 @@ def test_run_up_against_the_full_transfer_function() -> None:
     Independent method: scipy.signal.step of the CTMS form (checked there against the published settling time 2.07 s).
     Leaving out L delays nothing by more than L/R = 1 ms of a 75 ms rise: 1.5 % of the final speed.
     """
-    ctms = signal.TransferFunction([0.01], [0.005, 0.06, 0.1001])
+    ctms = ([0.01], [0.005, 0.06, 0.1001])
     times, reply = signal.step(ctms, T=np.linspace(0.0, 5.0, 5001))
     outside = times[np.abs(reply - 0.0999001) > 0.02 * 0.0999001]
     assert float(outside[-1]) == pytest.approx(2.0652, abs=0.002)
     r, inductance, k, j, b = 12.0, 12e-3, 0.03, 6e-6, 5e-6
-    full = signal.TransferFunction([12.0 * k], [j * inductance, j * r + b * inductance, b * r + k * k])
+    full = ([12.0 * k], [j * inductance, j * r + b * inductance, b * r + k * k])
     times, reply = signal.step(full, T=np.linspace(0.0, 0.6, 61))
     motor = steady_motor(r, inductance, k, j, 0.0, viscous=b)
     plant = Plant(motor, 1.0, random.Random(1))

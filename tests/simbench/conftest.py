@@ -29,6 +29,7 @@ class FakePlant:
         self.pulse_hz = 100.0
         self.turns_from = 0.0
         self.turns_until = math.inf
+        self.earlier_edges, self.earlier_last_edge_at = 0, -math.inf
         self.settings: list[tuple[float, str, tuple[float, float, bool]]] = []
         self.drive = (1000.0, 0.0, False)
         self.supply = (0.0, 0.0, False)
@@ -59,11 +60,17 @@ class FakePlant:
     @property
     def edges(self) -> int:
         turned = min(self.now, self.turns_until) - self.turns_from
-        return max(0, math.floor(turned * self.pulse_hz))
+        return self.earlier_edges + max(0, math.floor(turned * self.pulse_hz))
 
     @property
     def last_edge_at(self) -> float:
-        return self.turns_from + self.edges / self.pulse_hz if self.edges else -math.inf
+        edges = self.edges - self.earlier_edges
+        return self.turns_from + edges / self.pulse_hz if edges else self.earlier_last_edge_at
+
+    def stop_and_turn_again(self, turns_from: float) -> None:
+        """At rest from now until `turns_from`, then turning as before; the edges so far stay counted."""
+        self.earlier_edges, self.earlier_last_edge_at = self.edges, self.last_edge_at
+        self.turns_from = turns_from
 
     def wave(self) -> Wave | None:
         return self.present_wave

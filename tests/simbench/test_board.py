@@ -133,6 +133,22 @@ def test_a_start_from_rest_begins_at_its_first_edge(bed: Bed) -> None:
     assert ticks == pytest.approx(5 / 40.0 * clock_hz, abs=1.0)
 
 
+def test_edges_before_switching_on_do_not_begin_an_interval(bed: Bed) -> None:
+    """Turned, stopped and started again 4 s later: the first gate with edges has the true rate, not a 4 s interval."""
+    board = bed.board()
+    bed.tell(board, "OUTP ON")
+    bed.bench.advance(1.0)
+    bed.tell(board, "OUTP OFF")
+    bed.bench.plant_now()
+    bed.plant.stop_and_turn_again(5.05)
+    bed.bench.advance(5.0)
+    bed.tell(board, "OUTP ON")
+    bed.bench.advance(5.26)
+    _, edges, ticks, clock_hz, _ = gate(bed, board)
+    assert edges >= 18
+    assert ticks == pytest.approx(edges / 100.0 * clock_hz, abs=1.0)
+
+
 def test_coasting_down_with_the_output_off_is_still_counted(bed: Bed) -> None:
     """Gates go on after OUTP OFF, so that a coast-down can be watched."""
     board = bed.board()

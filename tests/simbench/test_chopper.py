@@ -101,7 +101,9 @@ def test_short_forms_agree_with_the_wave(supply_v: float, pwm_hz: float, duty: f
     """`mean_current` and `mean_supply_current` give the wave's means; the derivative is the secant's."""
     setting = fan(supply_v, pwm_hz, duty)
     edge = setting.boundary_emf
-    emfs = [float(e) for e in np.linspace(0.0, supply_v * 1.05, 40) if abs(e - edge) > 1e-3 and abs(e - supply_v) > 1e-3]
+    emfs = [
+        float(e) for e in np.linspace(0.0, supply_v * 1.05, 40) if abs(e - edge) > 1e-3 and abs(e - supply_v) > 1e-3
+    ]
     for emf in emfs:
         amps, slope = mean_current(setting, emf)
         assert amps == pytest.approx(wave(setting, emf).mean_motor_amps, rel=1e-9, abs=1e-12)

@@ -90,7 +90,9 @@ def test_time_to_stop(rate: float) -> None:
     assert math.isinf(time_to_stop(Motion(20.0, -10.0, -5.0, 0.0, 0.0)))
 
 
-@pytest.mark.parametrize(("speed", "acceleration", "rate"), [(100.0, -900.0, -9.0), (0.0, 300.0, -5.0), (5.0, -200.0, -3.0)])
+@pytest.mark.parametrize(
+    ("speed", "acceleration", "rate"), [(100.0, -900.0, -9.0), (0.0, 300.0, -5.0), (5.0, -200.0, -3.0)]
+)
 def test_time_to_turn(speed: float, acceleration: float, rate: float) -> None:
     """By the time given for an angle the rotor has turned by just that angle."""
     start = Motion(speed, acceleration, rate, 0.0, 0.0)

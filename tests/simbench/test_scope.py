@@ -44,6 +44,15 @@ def test_a_signal_that_stops_during_the_measurement_is_not_measured(bed: Bed) ->
     assert bed.ask(scope, "MEAS:FREQ? (@1)") == "9.91E+37"
 
 
+def test_a_signal_that_begins_during_the_measurement_is_not_measured(bed: Bed) -> None:
+    """Asked a moment before OUTP ON arrives: 9.91E37; asked again it is there."""
+    board, scope = bed.board(), bed.scope()
+    bed.tell(board, "SOUR:PULS:DCYC 50")
+    board.port.write(b"OUTP ON\n")
+    assert bed.ask(scope, "MEAS:FREQ? (@1)") == "9.91E+37"
+    assert float(bed.ask(scope, "MEAS:FREQ? (@1)")) == pytest.approx(1000.0, rel=1e-3)
+
+
 def test_other_channels_see_nothing_and_a_list_gives_a_list(bed: Bed) -> None:
     """The rig says channel 2: channel 1 has no signal; several channels answer separated by commas."""
     board, scope = bed.board(), bed.scope(options={"channel": 2}, errors=QUIET)
