@@ -138,7 +138,9 @@ def top_speed(branch: Branch | None) -> Finding:
 def high_duty(branch: Branch | None, saturation_percent: float, u_duty: float) -> Finding:
     """The lowest duty whose fitted speed is within `saturation_percent` of the highest.
 
-    A ratio of speeds of one instrument: its accuracy cancels. u from the free parts of both speeds over the slope.
+    A ratio of speeds of one instrument: its accuracy cancels. u from the free parts of both speeds over the slope, and
+    as a rectangle the distance to the nearest level: where the curve was not seen it may bend (a slow PWM gives a step
+    in the last few percent before full duty).
     """
     if branch is None:
         return not_found("no speed readings at two duties of the falling branch")
@@ -151,7 +153,8 @@ def high_duty(branch: Branch | None, saturation_percent: float, u_duty: float) -
     u_speed = math.hypot(float(free[0]), share * float(free[1]))
     span = float(curve.duty[-1] - curve.duty[0]) / math.sqrt(12.0)
     # on a flat top the place is known no better than by the whole width of the curve
-    u = math.hypot(min(u_speed / slope, span) if slope > 0.0 else span, u_duty)
+    u_place = min(u_speed / slope, span) if slope > 0.0 else span
+    u = math.hypot(u_place, u_duty, float(np.abs(curve.duty - value).min()) / math.sqrt(3.0))
     method = f"lowest duty within {saturation_percent:g} % of top speed"
     found = two_sided(value, u, curve.holds, method, curve.flags)
     # no duty outside the measured ones can be the answer

@@ -8,7 +8,7 @@ from __future__ import annotations
 import contextlib
 from dataclasses import dataclass, replace
 
-from sweeprig.conduct.heal import heal
+from sweeprig.conduct.heal import broken, heal
 from sweeprig.conduct.perform import Performed, Performer, Spoiled
 from sweeprig.conduct.rig import OpenRig, configure
 from sweeprig.conduct.states import Event, OnEvent, Orders, State
@@ -131,7 +131,7 @@ class _Session:
         if ending is not None and ending.state is State.TRIPPED:
             self.tell("trip", rule=reason.partition(":")[0], evidence=reason)
         if failed:
-            self._heal(reason)
+            self._heal(f"a hold was discarded: {reason}")
         return ending
 
     def _conclude(
@@ -171,14 +171,18 @@ class _Session:
         self.tell("off", proved=True, took_s=self.clock.now() - began)
 
     def _heal(self, reason: str) -> None:
-        self.tell("link", instrument="", what=f"a hold was discarded: {reason}")
+        self.tell("link", instrument="", what=reason)
         for name in heal(self.rig, self.healed):
             self.tell("link", instrument=name, what="the link is back, same instrument, settings applied, off proved")
         self.rig.guard.trip = None
 
     def close(self) -> None:
-        """The last act of every session."""
-        self._off()
+        """The last act of every session. A wait that was broken off leaves links dirty: they are brought back, so that
+        off can be proved and not only told."""
+        switch_off(self.rig)
+        if broken(self.rig):
+            self._heal("links were left in the middle of an exchange")
+        self._off(told=True)
 
 
 def run(plan: Plan, rig: OpenRig, logbook: Logbook, session: int, on_event: OnEvent, orders: Orders) -> Ending:

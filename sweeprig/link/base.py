@@ -18,6 +18,9 @@ from sweeprig.roles import Reply
 CHUNK = 65_536
 """Bytes taken from a port at once; with the largest reply it bounds what a link holds."""
 
+QUIET_S = 0.2
+"""A line is drained when nothing has come for so long."""
+
 # By name, so that this module imports no library that a rig may not need.
 _TIMEOUT_NAMES = frozenset({"SerialTimeoutException"})
 _LOST_NAMES = frozenset({"termios.error"})
@@ -125,6 +128,22 @@ class BaseLink(ABC):
     def resynchronise(self, deadline: float) -> None:
         """Closed and opened anew: on a fresh connection no late reply can arrive."""
         self.open(deadline)
+
+    def _fall_silent(self, deadline: float) -> None:
+        """Drain until nothing has come for QUIET_S, then begin clean. LinkLost if it never falls silent."""
+        try:
+            now = self._clock.now()
+            quiet_at = now + QUIET_S
+            while now < quiet_at:
+                if now >= deadline:
+                    raise ConnectionError("the instrument did not fall silent in time")
+                self._clock.wait(min(quiet_at, deadline), on=(self,))
+                now = self._clock.now()
+                if self._read():
+                    quiet_at = now + QUIET_S
+        except Exception as error:
+            raise self._failed(error) from error
+        self._start_clean()
 
     def close(self) -> None:
         """Never raises, may be called twice."""

@@ -48,6 +48,11 @@ class InProcessLink(BaseLink):
         self._read_now: Callable[[], bytes] = port.read
         self._next_ready: Callable[[], float] = port.next_ready
 
+    def resynchronise(self, deadline: float) -> None:
+        """Opened anew, then drained: behind a port may be a serial line, on which a late reply still arrives."""
+        self.open(deadline)
+        self._fall_silent(deadline)
+
     def ready_at(self) -> float:
         return self._next_ready()
 

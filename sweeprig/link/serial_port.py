@@ -19,8 +19,6 @@ FORM = "serial:PORT or serial:PORT?baud=115200"
 BAUD = 115_200
 WRITE_S = 0.05
 """Longest time (real seconds) in which the machine must take a message; its buffer holds many, so it takes no time."""
-QUIET_S = 0.2
-"""A port is drained when nothing has come for so long."""
 _READ = 4_096
 
 
@@ -55,22 +53,7 @@ class SerialLink(BaseLink):
         if self._port is None:
             self.open(deadline)
             return
-        try:
-            self._drain(deadline)
-        except Exception as error:
-            raise self._failed(error) from error
-        self._start_clean()
-
-    def _drain(self, deadline: float) -> None:
-        now = self._clock.now()
-        quiet_at = now + QUIET_S
-        while now < quiet_at:
-            if now >= deadline:
-                raise ConnectionError("the port did not fall silent in time")
-            self._clock.wait(min(quiet_at, deadline), on=(self,))
-            now = self._clock.now()
-            if self._read():
-                quiet_at = now + QUIET_S
+        self._fall_silent(deadline)
 
     def _open(self, deadline: float) -> None:
         """Opening a port does not wait, so that `deadline` needs no watching."""

@@ -164,13 +164,13 @@ def test_interrupts_are_not_mapped(clock: SystemClock) -> None:
 
 
 def test_resynchronising_in_process_opens_anew(port_pair: Pair, port_far: PortFar) -> None:
-    """On the simulated bench resynchronising is a fresh connection: unread bytes are gone."""
+    """On the simulated bench resynchronising is a fresh connection, and what still comes late is drained."""
     port_pair.ask(b"READ?")
     port_far.reply(b"1.")
     assert port_pair.link.take() is None
     port_pair.link.declare_timeout()
     port_far.reply(b"5\n")
-    port_pair.link.resynchronise(port_pair.clock.now())
+    port_pair.link.resynchronise(port_pair.clock.now() + 2.0)
     assert (port_far.opened, port_far.unread, port_pair.link.dirty) == (2, b"", "")
 
 
