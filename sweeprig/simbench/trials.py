@@ -17,8 +17,9 @@ from sweeprig.simbench.plant import Plant
 RPM = 30.0 / math.pi
 """rpm per rad/s."""
 GAP_S = 0.5
-"""A rotor at rest for so long has stopped; a shorter catch that it frees itself from has not."""
-LOOK_S = 0.25
+GAP_INTERVALS = 3.0
+"""Stopped: no edge for so many of the intervals expected, and for so long at least (definition of turning)."""
+LOOK_S = 0.1
 WHOLE_REVOLUTIONS = 10.0
 SPEED_HOLDS = 12
 """Holds behind one true speed; its standard error is from the scatter between them."""
@@ -30,6 +31,7 @@ class Procedure:
 
     settle_s   speeds and voltages are averaged from this long after the duty was applied
     run_in     (duty_percent, seconds) that warm the motor before each block of trials
+    expected_rpm  the speed that the longest allowed gap between edges is reckoned from
     """
 
     hold_time_s: float = 20.0
@@ -38,12 +40,18 @@ class Procedure:
     relaunch_above_percent: float = 12.0
     relaunch_s: float = 4.0
     lowest_rpm: float = 60.0
+    pulses_per_revolution: float = 2.0
+    expected_rpm: float = 180.0
     saturation_percent: float = 2.0
     duty_low_percent: float = 0.0
     duty_high_percent: float = 100.0
     current_limit_amps: float = math.inf
     settle_s: float = 3.0
     run_in: tuple[float, float] = (60.0, 240.0)
+
+    @property
+    def longest_gap_s(self) -> float:
+        return max(GAP_S, GAP_INTERVALS * 60.0 / (self.pulses_per_revolution * self.expected_rpm))
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,7 +81,7 @@ class Counts:
 
 def warm_plant(motor: MotorTruth, condition: Condition, procedure: Procedure, seed: tuple[int, ...]) -> Plant:
     """A plant after its run-in, turning, seeded by `seed`."""
-    plant = Plant(motor, 1.0, np.random.default_rng(seed))
+    plant = Plant(motor, procedure.pulses_per_revolution, np.random.default_rng(seed))
     plant.set_supply(condition.supply_v, procedure.current_limit_amps, True)
     _launch(plant, condition.pwm_hz, procedure.run_in[0], procedure.run_in[1])
     return plant
@@ -91,25 +99,31 @@ def _launch(plant: Plant, pwm_hz: float, duty: float, seconds: float) -> None:
 
 
 def falling_trial(plant: Plant, pwm_hz: float, duty: float, p: Procedure) -> tuple[bool, float, float, float]:
-    """One hold on the falling branch → (stopped, rad turned, V·s across the motor, s), the sums while settled."""
+    """One hold on the falling branch → (stopped, rad turned, V·s across the motor, s), the sums while settled.
+
+    Stopped is the first gap between tachometer edges longer than allowed, or a mean speed below the lowest measurable;
+    a catch that the rotor frees itself from within that gap is no stop, but ends the sums.
+    """
     _launch(plant, pwm_hz, min(p.duty_high_percent, duty + p.relaunch_above_percent), p.relaunch_s)
     plant.set_drive(pwm_hz, duty, True)
-    began, stops = plant.now, plant.stops
+    began, stops, angle = plant.now, plant.stops, plant.angle
     looks = max(1, round(p.hold_time_s / LOOK_S))
     first: tuple[float, float, float] | None = None
     last = first
+    stopped = False
     for look in range(1, looks + 1):
         plant.advance(began + p.hold_time_s * look / looks)
-        if not plant.turning and plant.now - plant.stopped_at >= GAP_S:
-            break
-        if plant.stops == stops and plant.now - began >= p.settle_s:
+        if plant.stops != stops:
+            stopped = plant.now - max(began, plant.last_edge_at) > p.longest_gap_s
+            if stopped:
+                break
+        elif plant.now - began >= p.settle_s:
             last = (plant.now, plant.angle, plant.motor_volt_seconds)
             first = first or last
-    stopped = not plant.turning
+    stopped = stopped or (plant.angle - angle) / (plant.now - began) * RPM < p.lowest_rpm
     if first is None or last is None or last == first:
         return stopped, 0.0, 0.0, 0.0
-    seconds, radians, volts = last[0] - first[0], last[1] - first[1], last[2] - first[2]
-    return stopped or radians / seconds * RPM < p.lowest_rpm, radians, volts, seconds
+    return stopped, last[1] - first[1], last[2] - first[2], last[0] - first[0]
 
 
 def start_trial(plant: Plant, pwm_hz: float, duty: float, p: Procedure) -> bool:

@@ -1,7 +1,7 @@
 """Benchmarks: each figure is one JSON object a line. Never a test, never fails a build.
 
-    ONLY=night python tests/figures/run.py        one group
-    FULL=1 python tests/figures/run.py            the long forms
+ONLY=night python tests/figures/run.py        one group
+FULL=1 python tests/figures/run.py            the long forms
 """
 
 from __future__ import annotations
