@@ -64,6 +64,7 @@ class Plan:
     duty_low_percent   lowest and highest duty that rig and motor allow
     time_constant_s    the motor's longest mechanical or electrical time constant, as stated in its file
     lowest_rpm         the rig's lowest measurable speed
+    limits             finding → (at least, at most), in the finding's unit: what the motor file asks of it
     duty_step_percent  one step of the drive (resolution of the commanded duty) for each condition, same order
     """
 
@@ -85,6 +86,7 @@ class Plan:
     current_at: str = "supply_lead"
     switch_delay_s: float = 0.0
     duty_step_percent: tuple[float, ...] = ()
+    limits: Mapping[str, tuple[float | None, float | None]] = field(default_factory=dict)
     deadline_utc: float | None = None
     session: int = 1
     attended: bool = False

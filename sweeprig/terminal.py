@@ -9,6 +9,9 @@ from typing import Any
 
 from sweeprig.conduct.states import Event
 
+MOST_NAMED = 3
+"""A remark on more findings than this says how many; the report names each."""
+
 SIMULATED = "SIMULATED: no real motor was moved; these numbers describe an invented one."
 
 
@@ -167,7 +170,7 @@ def findings_text(findings: Mapping[str, Any]) -> str:
     if findings["simulated"]:
         title = f"{title}\n{SIMULATED}"
     labels = [tables.condition_label(condition, fields) for condition in conditions]
-    lines = [table(title, ["95 % intervals", *labels], body), *_remarks(by_condition, labels)]
+    lines = [table(title, ["95 % intervals", *labels], body), *_verdicts(findings), *_remarks(by_condition, labels)]
     return "\n".join(lines)
 
 
@@ -177,6 +180,21 @@ def _cell(row: Any) -> str:
     if row.interval in ("–", "") or row.interval.startswith("one-sided"):
         return str(row.value)
     return f"{row.value}\n({row.interval})" if "±" not in row.value else str(row.value)
+
+
+def _verdicts(findings: Mapping[str, Any]) -> list[str]:
+    """Each limit with its verdict first, as a word."""
+    from sweeprig.report.catalogue import meaning
+    from sweeprig.report.context import limit_text
+    from sweeprig.report.tables import condition_label, telling_fields
+
+    fields = telling_fields(findings["conditions"])
+    lines = []
+    for row in findings["limits"]:
+        about, where = meaning(row["finding"]), condition_label(row["condition"], fields)
+        verdict, limit = row["verdict"].replace("_", " "), limit_text(row["limit"], about.unit)
+        lines.append(f"  {verdict}: {about.name}, {limit} ({where}); {row['rule']}")
+    return ["", "Against the limits", *lines] if lines else []
 
 
 def _remarks(by_condition: Sequence[Sequence[Any]], labels: Sequence[str]) -> list[str]:
@@ -190,11 +208,17 @@ def _remarks(by_condition: Sequence[Sequence[Any]], labels: Sequence[str]) -> li
         return []
     lines = ["", "Remarks"]
     for remark, found in where.items():
-        places = "; ".join(
-            name if len(at) == len(labels) else f"{name} ({', '.join(at)})" for name, at in found.items()
-        )
-        lines.append(f"  {remark}: {places}")
+        if len(found) > MOST_NAMED:
+            at = list(dict.fromkeys(label for labels_of_one in found.values() for label in labels_of_one))
+            lines.append(f"  {remark}: {len(found)} findings{_where(at, labels)}")
+        else:
+            lines.append(f"  {remark}: " + "; ".join(f"{name}{_where(at, labels)}" for name, at in found.items()))
     return lines
+
+
+def _where(at: Sequence[str], labels: Sequence[str]) -> str:
+    """The conditions in brackets; nothing where it is all of them."""
+    return "" if len(at) == len(labels) else f" ({', '.join(at)})"
 
 
 def status_text(value: Mapping[str, Any]) -> str:

@@ -175,3 +175,18 @@ def test_help_names_every_command(sweeprig: Command) -> None:
     text = sweeprig("--help").stdout
     for command in ("preview", "run", "resume", "status", "fit", "report", "export", "off", "simbench", "manual"):
         assert f"\n  {command} " in text
+
+
+@pytest.mark.parametrize(("limit", "code", "verdict"), [("90 %", 0, "pass"), ("1 %", 1, "fail")])
+def test_a_limit_decides_the_exit_code(
+    short_job: Path, tmp_path: Path, sweeprig: Command, limit: str, code: int, verdict: str
+) -> None:
+    """A limit in the motor file is judged: pass exits 0, fail exits 1, and the verdict is printed."""
+    with (short_job.parent / "aspirator-fan.toml").open("a", encoding="utf-8") as file:
+        file.write(f'\n[limits.stall_duty_percent]\nat_most = "{limit}"\n')
+    done = sweeprig("run", short_job, "--runs", tmp_path / "runs")
+    assert done.returncode == code, done.stderr
+    assert f"{verdict}:" in done.stdout
+    (path,) = (tmp_path / "runs").iterdir()
+    (row,) = json.loads((path / "findings.json").read_text("utf-8"))["limits"]
+    assert row["verdict"] == verdict

@@ -23,6 +23,7 @@ from sweeprig.characterise.evidence import (
     voltage_points,
 )
 from sweeprig.characterise.findings import ConditionFindings, Findings, SpeedCurve, not_found
+from sweeprig.characterise.limits import judge_all
 from sweeprig.errors import ConfigError
 from sweeprig.holds import Approach, Condition, Outcome, Status
 from sweeprig.plan import Plan
@@ -42,16 +43,18 @@ def characterise(plan: Plan, outcomes: Sequence[Outcome], about: Mapping[str, ob
     done = [outcome for outcome in outcomes if outcome.status is Status.DONE]
     turned = turning_before(outcomes)
     others = sorted({o.hold.condition for o in done} - set(plan.conditions))
+    conditions = tuple(
+        of_condition(plan, condition, [o for o in done if o.hold.condition == condition], turned)
+        for condition in (*plan.conditions, *others)
+    )
     return Findings(
         job_hash=str(about["job_hash"]),
         simulated=bool(about["simulated"]),
         motor=about["motor"],
         rig=about["rig"],
         software=about["software"],
-        conditions=tuple(
-            of_condition(plan, condition, [o for o in done if o.hold.condition == condition], turned)
-            for condition in (*plan.conditions, *others)
-        ),
+        conditions=conditions,
+        limits=judge_all(plan, conditions),
     )
 
 

@@ -144,7 +144,7 @@ RANGE_NAMES = tuple(f.name for f in fields(UsableRange))
 FINDING_NAMES = tuple(
     f.name for f in fields(ConditionFindings) if f.name not in {"condition", "usable_range", "speed_curve", *TIME_NAMES}
 )
-_LOW_IS_WORST = frozenset({"top_speed_rpm", "high_speed_rpm", "turndown"})
+_LOW_IS_WORST = frozenset({"top_speed_rpm", "high_speed_rpm", "high_duty_percent", "turndown"})
 
 
 @dataclass(frozen=True, slots=True)
@@ -176,7 +176,7 @@ class Findings:
         return next((one for one in self.conditions if one.condition == condition), None)
 
     def worst_case(self, name: str) -> WorstCase:
-        """The worst over the conditions: the lowest of top speed, high speed and turndown, the highest of all else."""
+        """The worst over the conditions: lowest for top speed, high duty and speed, turndown; else the highest."""
         pairs = [(one.condition, one.finding(name)) for one in self.conditions]
         missing = tuple(condition for condition, finding in pairs if not finding.found)
         sign = -1.0 if name in _LOW_IS_WORST else 1.0

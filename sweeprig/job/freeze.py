@@ -50,10 +50,16 @@ def freeze(job: Job, session: int = 1, began_utc: float | None = None) -> Plan:
         current_at=rig.current_at or "supply_lead",
         switch_delay_s=rig.switch_delay or 0.0,
         duty_step_percent=_duty_steps(job, conditions),
+        limits={name: (_plain(limit.at_least), _plain(limit.at_most)) for name, limit in motor.limits.items()},
         deadline_utc=deadline,
         session=session,
         extra={} if hours is None else {"deadline_hours": hours},
     )
+
+
+def _plain(limit: float | None) -> float | None:
+    """A limit without the unit that it remembers for being written again."""
+    return None if limit is None else float(limit)
 
 
 def with_deadline(job: Job, began_utc: float) -> Job:

@@ -6,33 +6,14 @@ Nothing of conduct, schedule, characterise or the dialects may be imported here:
 from __future__ import annotations
 
 import heapq
-import random
-import zlib
 from collections.abc import Callable
-from dataclasses import fields
 from itertools import count
-from typing import TYPE_CHECKING, NamedTuple, Protocol
+from typing import NamedTuple, Protocol
 
-from sweeprig.errors import ConfigError, SweeprigError, UnknownAdapter
-from sweeprig.simbench.board import Board
+from sweeprig.errors import SweeprigError
 from sweeprig.simbench.chopper import Wave
 from sweeprig.simbench.clock import START_UTC, BenchClock
-from sweeprig.simbench.instrument import Instrument, Setup
-from sweeprig.simbench.motor_truth import MotorTruth
-from sweeprig.simbench.multimeter import Multimeter
 from sweeprig.simbench.port import Callback, Port
-from sweeprig.simbench.scope import Scope
-from sweeprig.simbench.supply import Supply
-
-if TYPE_CHECKING:
-    from sweeprig.job import Job
-
-SIMULATED_BY_ADAPTER: dict[str, type[Instrument]] = {
-    "scpi-multimeter": Multimeter,
-    "scpi-scope": Scope,
-    "scpi-supply": Supply,
-    "board": Board,
-}
 
 
 class Machine(Protocol):
@@ -57,6 +38,18 @@ class Machine(Protocol):
     def advance(self, to: float) -> None: ...
     def wave(self) -> Wave | None: ...
     def pwm_phase_s(self) -> float: ...
+
+
+class OnBench(Protocol):
+    """An instrument, as the bench sees it."""
+
+    name: str
+    port: Port
+    changes: int
+    byte_s: float
+
+    def identity(self) -> str: ...
+    def power_on(self) -> None: ...
 
 
 class Happened(NamedTuple):
@@ -106,14 +99,14 @@ class Bench:
         self.now = began
         self.clock = BenchClock(self, START_UTC + began if began_utc is None else began_utc)
         self.signal = DriveSignal()
-        self.instruments: dict[str, Instrument] = {}
+        self.instruments: dict[str, OnBench] = {}
         self.ports: dict[str, Port] = {}
         self.record: list[Happened] = []
         self.on_record: Callable[[Happened], None] | None = None
         self._queue: list[tuple[float, int, Callback, object]] = []
         self._order = count()
 
-    def add(self, instrument: Instrument) -> None:
+    def add(self, instrument: OnBench) -> None:
         self.instruments[instrument.name] = instrument
         self.ports[instrument.name] = instrument.port
 
@@ -163,64 +156,3 @@ class Bench:
         self.record.append(happened)
         if self.on_record is not None:
             self.on_record(happened)
-
-
-def build(job: Job, session: int = 1, began: float = 0.0, began_utc: float | None = None, ripple: bool = True) -> Bench:
-    """The bench of a job: its simulated motor, cold and still, and one instrument for each in the rig.
-
-    session    seeds friction and reading noise; the instruments' own errors are the same in every session
-    began      bench time, s, at which it begins (a resumed run goes on there); began_utc: UTC seconds at that moment
-    Errors: ConfigError without a `[simulated]` table in the motor file; UnknownAdapter for an adapter that no
-    simulated instrument stands in for.
-    """
-    import numpy as np
-
-    from sweeprig.simbench.plant import Plant
-
-    rng = np.random.default_rng([job.sweep.seed, session])
-    plant = Plant(motor_truth(job), job.motor.pulses_per_revolution, rng, now=began, ripple=ripple)
-    return assemble(job, plant, session, began, began_utc)
-
-
-def assemble(job: Job, plant: Machine, session: int = 1, began: float = 0.0, began_utc: float | None = None) -> Bench:
-    """The rig's instruments around any plant."""
-    bench = Bench(plant, began, began_utc)
-    for name, instrument in job.rig.instruments.items():
-        simulated = SIMULATED_BY_ADAPTER.get(instrument.adapter)
-        if simulated is None:
-            raise UnknownAdapter(
-                f"no simulated instrument stands in for the adapter of {name}",
-                value=instrument.adapter,
-                allowed=", ".join(SIMULATED_BY_ADAPTER),
-                topic="simbench",
-            )
-        bench.add(simulated(setup(job, name, session), bench))
-    return bench
-
-
-def setup(job: Job, name: str, session: int) -> Setup:
-    """What the instrument of this name is built from."""
-    instrument, seed = job.rig.instruments[name], job.sweep.seed
-    return Setup(
-        name=name,
-        serial=f"SIM{zlib.crc32(f'{job.rig.name}/{name}'.encode()):08X}",
-        errors_rng=random.Random(f"{seed}/{name}/errors"),
-        noise=random.Random(f"{seed}/{session}/{name}/noise"),
-        connected_to=instrument.connected_to,
-        accuracy=instrument.accuracies(),
-        options=instrument.options,
-        errors=job.rig.simulated.get(name, {}),
-        terminator=instrument.terminator_bytes,
-    )
-
-
-def motor_truth(job: Job) -> MotorTruth:
-    """The true motor from the motor file's `[simulated]` table."""
-    simulated = job.motor.simulated
-    if simulated is None:
-        raise ConfigError(
-            f"the motor {job.motor.name!r} has no true values for the simulated bench",
-            remedy="Add a [simulated] table to the motor file, or run on real instruments",
-            topic="simbench",
-        )
-    return MotorTruth(**{field.name: float(getattr(simulated, field.name)) for field in fields(MotorTruth)})

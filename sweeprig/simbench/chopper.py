@@ -36,7 +36,7 @@ class Chopper:
 
 @dataclass(frozen=True, slots=True)
 class Wave:
-    """The periodic steady state at one back-EMF. Phase 0 is the moment the switch closes; SI units, percent of nothing.
+    """The periodic steady state at one back-EMF. Phase 0 is the moment the switch closes; SI units.
 
     conduction_s       from phase 0 until the current is zero; the whole period in continuous operation
     mean_motor_volts   mean over the period across the motor, with freewheel drop and the back-EMF in the gap

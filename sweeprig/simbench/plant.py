@@ -47,8 +47,8 @@ class Plant:
     ripple   False: the peak torque is the mean torque, as if the current were smooth (for tests of the trend)
 
     Attributes to read: `now`, `pwm_hz`, `duty_percent`, `drive_on` (the gate signal, as commanded), `supply_volts`,
-    `supply_current_limit_amps`, `supply_on`, `turning`, `stops` and `stopped_at` (how often, and when last, the rotor
-    came to rest; −inf before). All else are properties, valid at `now`.
+    `supply_current_limit_amps`, `supply_on`; and, as of the last cell edge, `turning`, `stops` and `stopped_at` (how
+    often, and when last, the rotor came to rest; −inf before). All else are properties, valid at `now`.
     """
 
     def __init__(

@@ -18,8 +18,9 @@ from typing import TYPE_CHECKING
 from sweeprig.errors import ConfigError
 from sweeprig.job.frozen_text import rig_document
 from sweeprig.quantities import parse_quantity, show_quantity
-from sweeprig.simbench.bench import Bench, Happened, build
+from sweeprig.simbench.bench import Bench, Happened
 from sweeprig.simbench.board import DEFAULT_HEARTBEAT_S
+from sweeprig.simbench.build import build
 from sweeprig.simbench.endpoints import Endpoint, endpoint
 
 if TYPE_CHECKING:

@@ -9,7 +9,7 @@ from typing import Any
 
 from sweeprig.errors import ConfigError
 from sweeprig.job import Job, freeze
-from sweeprig.simbench.bench import motor_truth
+from sweeprig.simbench.build import motor_truth
 from sweeprig.simbench.truth import truth
 
 TRIALS = 6000

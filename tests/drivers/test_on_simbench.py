@@ -19,7 +19,8 @@ from sweeprig.link.registry import open_link
 from sweeprig.link.together import together
 from sweeprig.quantities import Reading
 from sweeprig.roles import Adapter, AdapterSetup, DriveSetting, Steps, SupplySetting, Window
-from sweeprig.simbench.bench import Bench, build
+from sweeprig.simbench.bench import Bench
+from sweeprig.simbench.build import build
 
 KINDS: dict[str, Callable[[AdapterSetup], Adapter]] = {
     "meter": ScpiMultimeter, "scope": ScpiScope, "supply": ScpiSupply, "board": Board,

@@ -131,11 +131,10 @@ def test_another_session_has_other_noise_and_the_same_instruments(demo: jobs.Job
     """Session 2: identities and the instruments' own errors as before, every reading stream different."""
     first, second = build(demo, 1), build(demo, 2)
     for name in first.instruments:
+        one, other = (vars(bench.instruments[name])["setup"] for bench in (first, second))
         assert first.instruments[name].identity() == second.instruments[name].identity()
-        assert (
-            first.instruments[name].setup.errors_rng.getstate() == second.instruments[name].setup.errors_rng.getstate()
-        )
-        assert first.instruments[name].setup.noise.getstate() != second.instruments[name].setup.noise.getstate()
+        assert one.errors_rng.getstate() == other.errors_rng.getstate()
+        assert one.noise.getstate() != other.noise.getstate()
     assert vars(first.instruments["meter"])["_scale"] == vars(second.instruments["meter"])["_scale"]
     said = zip(everything(demo, 1), everything(demo, 2), strict=True)
     assert sum(one != other for one, other in said) >= 20

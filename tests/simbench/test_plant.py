@@ -258,7 +258,7 @@ def start_duty(pwm_hz: float, ripple: bool) -> float:
 
 
 def test_ripple_helps_to_start() -> None:
-    """With ripple the fan starts at lower duty the lower the frequency; with smooth current only the mean torque counts."""
+    """With ripple, lower frequency starts at lower duty; with smooth current only the mean torque counts."""
     assert start_duty(300.0, True) < start_duty(1000.0, True) - 3.0 < start_duty(25e3, True) - 6.0
     # the mean current at standstill must give the breakaway torque: D·(V + Vf) − Vf = R·T/K in continuous current
     smooth = (11.4 * 6.9e-3 / 0.031 + 0.5) / 12.5 * 100.0
