@@ -26,7 +26,7 @@ time = "2 s"
 duty = "60 %"
 time = "10 s"
 [curve]
-points = 6
+duties = ["100 %", "60 %", "30 %", "20 %", "16 %", "14 %", "12 %"]
 least = "2 s"
 most = "8 s"
 [stall]
@@ -41,7 +41,7 @@ search = "ladder"
 start_time = "5 s"
 rest_time = "2 s"
 step = "1 %"
-trials = 4
+trials = 5
 [settle]
 tolerance = "2 %"
 """

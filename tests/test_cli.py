@@ -63,7 +63,7 @@ def test_preview_says_what_a_night_would_do(short_job: Path, sweeprig: Command) 
     assert done.returncode == 0
     assert "5 stall" in done.stdout
     assert "together: 8.5 s" in done.stdout
-    assert json.loads(sweeprig("preview", short_job, "--json").stdout)["holds"]["start"] == 4
+    assert json.loads(sweeprig("preview", short_job, "--json").stdout)["holds"]["start"] == 5
 
 
 def test_no_such_job(tmp_path: Path, sweeprig: Command) -> None:

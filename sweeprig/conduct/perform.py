@@ -134,7 +134,7 @@ class Performer:
         names = (self.rig.source["speed"], *self._guarded())
         while clock.now() < until:
             track.take(self.cycle(names, min(BOUNDS["trial_window_s"], seconds), hold, done))
-        if not track.turning(clock.now()):
+        if not track.turning():
             self.still_driven()
             drive_off(self.rig)
             raise Spoiled(f"the rotor did not turn after {seconds:g} s at {duty:g} %")
@@ -171,18 +171,21 @@ class Performer:
             track.take(readings)
             now = clock.now()
             exposed = now - track.began
-            if track.stopped_at is not None or (exposed >= hold.least_s and not track.turning(now)):
+            if track.stopped_at is not None or (exposed >= hold.least_s and not track.turning()):
                 self._stopped(track, exposed, done)
                 return
-            if not track.turning(now):
+            if not track.turning():
                 continue
             cycles.append(readings)
             reached = settled([speed for _, speed in track.speeds[1:]], self.plan.settle.tolerance_percent)
-            if reached is None or exposed < hold.least_s or not (reached.decided or exposed >= hold.most_s):
+            if exposed < hold.least_s or not ((reached is not None and reached.decided) or exposed >= hold.most_s):
                 continue
             self._turning(track, exposed, done)
-            done.means.update(means_of(cycles[1 + reached.first :]))
-            if not reached.decided:
+            first = len(cycles) // 2 if reached is None else 1 + reached.first
+            done.means.update(means_of(cycles[first:]))
+            if reached is None:
+                done.flags = (*done.flags, "not_settled_to_tolerance:too few speed readings")
+            elif not reached.decided:
                 done.flags = (*done.flags, f"not_settled_to_tolerance:{reached.reached_percent:.2g}%")
             return
 
@@ -200,7 +203,7 @@ class Performer:
             track.take(readings)
             now = clock.now()
             exposed = now - track.began
-            at_rest = not track.turning(now) and not (from_rest and exposed < grace)
+            at_rest = not track.turning() and not (from_rest and exposed < grace)
             if track.stopped_at is not None or at_rest:
                 self._stopped(track, exposed, done)
                 done.means.update(means_of(cycles[:-1]))
@@ -224,7 +227,7 @@ class Performer:
             cycles.append(self.cycle(names, window_s, hold, done))
             track.take(cycles[-1])
         now = clock.now()
-        started = track.turning(now) and track.revolutions >= BOUNDS["start_revolutions"]
+        started = track.turning() and track.revolutions >= BOUNDS["start_revolutions"]
         done.verdict = Verdict.STARTED if started else Verdict.DID_NOT_START
         done.exposed_s, done.restarts = now - track.began, track.restarts
         done.event_between_s = (done.exposed_s, None)
@@ -248,8 +251,8 @@ class Performer:
         drive_off(self.rig)
         done.verdict, done.exposed_s, done.restarts = Verdict.STOPPED, exposed, track.restarts
         if track.stopped_at is None:
-            # It never turned: it stopped (or stayed at rest) before the first look could tell.
-            done.event_between_s = (0.0, exposed)
+            # It stopped (or stayed at rest) before a speed could be told: known up to the last edge only.
+            done.event_between_s = (max(track.last_edge - track.began, 0.0), exposed)
             return
         good, missing = track.stopped_at
         done.event_between_s = (max(good - track.began, 0.0), max(missing - track.began, 0.0))
@@ -262,7 +265,7 @@ class Performer:
         done.event_between_s = (max(min(track.last_edge - track.began, exposed), 0.0), None)
         done.restarts = track.restarts
         last = [speed for _, speed in track.speeds[-LEAST_READINGS:]]
-        slow = sum(last) / len(last) < self.plan.lowest_rpm
+        slow = not last or sum(last) / len(last) < self.plan.lowest_rpm
         done.verdict = Verdict.UNDECIDED if slow else Verdict.TURNING
         if slow:
             done.flags = (*done.flags, "below_lowest_speed")

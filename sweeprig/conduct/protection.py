@@ -12,6 +12,9 @@ from typing import Protocol
 
 from sweeprig.quantities import Reading, show_quantity
 
+NO_READING = "no_reading"
+"""The rule of a protected channel that fell silent."""
+
 
 @dataclass(frozen=True, slots=True)
 class Trip:
@@ -139,6 +142,6 @@ class Guard:
                 if isinstance(policy, LockedRotor):
                     return Trip(policy.rule, f"drive on and no rotation seen for {age:.2f} s")
                 return Trip(
-                    "no_reading", f"{channel} gave no reading for {age:.2f} s, longest {policy.longest_age_s:g} s"
+                    NO_READING, f"{channel} gave no reading for {age:.2f} s, longest {policy.longest_age_s:g} s"
                 )
         return None

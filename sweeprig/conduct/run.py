@@ -10,6 +10,7 @@ from dataclasses import dataclass, replace
 
 from sweeprig.conduct.heal import broken, heal
 from sweeprig.conduct.perform import Performed, Performer, Spoiled
+from sweeprig.conduct.protection import NO_READING
 from sweeprig.conduct.rig import OpenRig, configure
 from sweeprig.conduct.states import Event, OnEvent, Orders, State
 from sweeprig.conduct.switch_off import prove_off, switch_off
@@ -121,8 +122,12 @@ class _Session:
             status, reason = Status.DISCARDED, "switched off by order"
             ending = Ending(State.PARKED, "switched off by order")
         except TripSeen as seen:
-            status, reason = Status.TRIPPED, f"{seen.trip.rule}: {seen.trip.evidence}"
-            ending = Ending(State.TRIPPED, reason)
+            reason = f"{seen.trip.rule}: {seen.trip.evidence}"
+            if seen.trip.rule == NO_READING:
+                # A channel that fell silent is trouble with its link: off, heal, go on. Anything else ends the run.
+                status, failed = Status.DISCARDED, True
+            else:
+                status, ending = Status.TRIPPED, Ending(State.TRIPPED, reason)
         except (LinkError, RigError) as error:
             status, reason, failed = Status.DISCARDED, str(error), True
         if ending is not None or failed:

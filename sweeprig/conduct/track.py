@@ -72,5 +72,6 @@ class Track:
         expected = 0.0 if self.interval_s is None else BOUNDS["gap_intervals"] * self.interval_s
         return max(expected, BOUNDS["least_gap_s"])
 
-    def turning(self, now: float) -> bool:
-        return self.stopped_at is None and now - self.last_edge <= self.longest_gap_s()
+    def turning(self) -> bool:
+        """As of the last reading: what has happened since then is not known yet."""
+        return self.stopped_at is None and self._upto - self.last_edge <= self.longest_gap_s()

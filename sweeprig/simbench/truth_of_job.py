@@ -12,7 +12,7 @@ from sweeprig.job import Job, freeze
 from sweeprig.simbench.build import motor_truth
 from sweeprig.simbench.truth import truth
 
-TRIALS = 6000
+TRIALS = 3000
 
 
 def truth_of(job: Job, trials: int = TRIALS, workers: int | None = None) -> dict[str, Any]:
@@ -36,6 +36,7 @@ def truth_of(job: Job, trials: int = TRIALS, workers: int | None = None) -> dict
         rest_time_s=plan.start.rest_time_s,
         relaunch=(plan.stall.relaunch_above_percent, plan.stall.relaunch_s),
         lowest_rpm=plan.lowest_rpm,
+        pulses_per_revolution=job.motor.pulses_per_revolution,
         saturation_percent=plan.saturation_percent,
         duty_range=(plan.duty_low_percent, plan.duty_high_percent),
         current_limit_amps=job.limits().current,

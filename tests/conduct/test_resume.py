@@ -41,7 +41,7 @@ def check_whole(path: Path, sessions: int) -> None:
     assert numbers == list(range(1, len(numbers) + 1))
     assert run.unfinished == []
     done = Counter(o.hold.purpose for o in run.outcomes if o.status is Status.DONE)
-    assert (done[Purpose.STALL], done[Purpose.START]) == (5, 4)
+    assert (done[Purpose.STALL], done[Purpose.START]) == (5, 5)
     assert done[Purpose.ZERO] == done[Purpose.RUN_IN] == sessions
     settings = Counter((o.hold.approach, o.hold.duty_percent) for o in run.outcomes
                        if o.status is Status.DONE and o.hold.purpose is Purpose.CURVE)  # fmt: skip
@@ -113,9 +113,10 @@ def test_the_clock_goes_on_and_noise_is_new(short_job: Path, tmp_path: Path) -> 
     )
     assert second.began > max(o.ended for o in run.outcomes if o.session == 1)
     volts = run.readings[run.readings["channel"] == "meter.volts"]
-    values = [set(volts[volts["hold"] == outcome.number]["value"].dropna()) for outcome in (first, second)]
-    assert values[0]
-    assert not values[0] & values[1]
+    values = [list(volts[volts["hold"] == outcome.number]["value"].dropna()) for outcome in (first, second)]
+    same = sum(one == other for one, other in zip(*values, strict=False))
+    assert min(map(len, values)) >= 10
+    assert same <= 2  # readings have a last digit: two streams may now and then agree by chance
 
 
 _VICTIM = """

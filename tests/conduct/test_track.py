@@ -23,7 +23,7 @@ def test_turning_while_edges_come() -> None:
     rotor = track()
     for at in (0.5, 1.0, 1.5):
         rotor.take(cycle(at, 600.0, 0.02, 0.05))
-    assert rotor.turning(1.5)
+    assert rotor.turning()
     assert [speed for _, speed in rotor.speeds] == [600.0] * 3
     assert rotor.revolutions == 600.0 / 60.0 * 1.5
 
