@@ -6,7 +6,7 @@ Within a session: zero check, run-in; then for each condition the curve falling 
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 
 from sweeprig.holds import (
     Approach,
@@ -93,18 +93,17 @@ def _curve(plan: Plan, condition: Condition, tally: Tally, past: Tallies, number
 def _next_falling(curve: CurvePlan, tally: Tally) -> float | None:
     """The next lower duty; none below one where the rotor stopped."""
     for duty in sorted(curve.duties_percent, reverse=True):
-        turned = tally.turned.get((Approach.FALLING, round(duty, 6)))
+        turned = tally.falling.get(round(duty, 6))
         if turned is False:
             return None
-        if turned is None and not tally.passed_over((Purpose.CURVE, Approach.FALLING, round(duty, 6))):
+        if turned is None and not tally.passed_over(Purpose.CURVE, Approach.FALLING, duty):
             return duty
     return None
 
 
 def _next_rising(curve: CurvePlan, tally: Tally) -> float | None:
     for duty in sorted(curve.duties_percent):
-        key = round(duty, 6)
-        if (Approach.RISING, key) not in tally.turned and not tally.passed_over((Purpose.CURVE, Approach.RISING, key)):
+        if round(duty, 6) not in tally.rising and not tally.passed_over(Purpose.CURVE, Approach.RISING, duty):
             return duty
     return None
 
@@ -151,7 +150,7 @@ def _relaunch(plan: Plan, duty: float) -> tuple[tuple[float, float], ...]:
 
 def _stall(plan: Plan, condition: Condition, tally: Tally, number: int) -> Hold | None:
     stall = plan.stall
-    if stall is None or tally.trials.get(Purpose.STALL, 0) >= stall.holds:
+    if stall is None or tally.stall.count >= stall.holds:
         return None
     duty = _stall_duty(plan, stall, tally)
     if duty is None:
@@ -161,29 +160,29 @@ def _stall(plan: Plan, condition: Condition, tally: Tally, number: int) -> Hold 
 
 def _stall_duty(plan: Plan, stall: StallPlan, tally: Tally) -> float | None:
     low, high, step = plan.duty_low_percent, plan.duty_high_percent, stall.step_percent
-    last = tally.last.get(Purpose.STALL)
+    last = tally.stall.last
     if last is not None:
         duty = next_duty(last.hold.duty_percent, last.verdict is Verdict.TURNING, step, low, high)
     else:
-        duty = on_grid(_lowest_that_turned(tally, Approach.FALLING, high), step, low, high)
+        duty = on_grid(_lowest_that_turned(tally.falling, high), step, low, high)
     return _usable_trial(tally, Purpose.STALL, Approach.FALLING, duty, step, low, high)
 
 
-def _lowest_that_turned(tally: Tally, approach: Approach, otherwise: float) -> float:
-    turned = [duty for (way, duty), did in tally.turned.items() if did and way is approach]
-    return min(turned, default=otherwise)
+def _lowest_that_turned(branch: Mapping[float, bool], otherwise: float) -> float:
+    return min((duty for duty, turned in branch.items() if turned), default=otherwise)
 
 
 def _usable_trial(
     tally: Tally, purpose: Purpose, approach: Approach, duty: float, step: float, low: float, high: float
 ) -> float | None:
     """Step past settings that were discarded three times; None when the search is stuck at an end of the range."""
-    while tally.passed_over((purpose, approach, round(duty, 6))):
+    while tally.passed_over(purpose, approach, duty):
         duty = round(duty + step, 9)
         if duty > high:
             return None
     at_edge = duty <= low or duty >= high
-    if at_edge and tally.at.get((purpose, approach, round(duty, 6)), 0) >= AT_THE_EDGE:
+    trials = tally.stall if purpose is Purpose.STALL else tally.start
+    if at_edge and trials.at.get(round(duty, 6), 0) >= AT_THE_EDGE:
         return None
     return duty
 
@@ -202,7 +201,7 @@ def _stall_hold(plan: Plan, stall: StallPlan, condition: Condition, duty: float,
 
 def _start(plan: Plan, condition: Condition, tally: Tally, number: int) -> Hold | None:
     start = plan.start
-    if start is None or tally.trials.get(Purpose.START, 0) >= start.trials:
+    if start is None or tally.start.count >= start.trials:
         return None
     duty = _start_duty(plan, start, tally)
     if duty is None:
@@ -218,10 +217,10 @@ def _start(plan: Plan, condition: Condition, tally: Tally, number: int) -> Hold 
 
 def _start_duty(plan: Plan, start: StartPlan, tally: Tally) -> float | None:
     low, high, step = plan.duty_low_percent, plan.duty_high_percent, start.step_percent
-    last = tally.last.get(Purpose.START)
+    last = tally.start.last
     if last is not None:
         duty = next_duty(last.hold.duty_percent, last.verdict is Verdict.STARTED, step, low, high)
     else:
-        coarse = _lowest_that_turned(tally, Approach.RISING, _lowest_that_turned(tally, Approach.FALLING, high))
+        coarse = _lowest_that_turned(tally.rising, _lowest_that_turned(tally.falling, high))
         duty = on_grid(coarse, step, low, high)
     return _usable_trial(tally, Purpose.START, Approach.FROM_REST, duty, step, low, high)

@@ -17,48 +17,65 @@ def setting_of(hold: Hold) -> Setting:
     return hold.purpose, hold.approach, round(hold.duty_percent, 6)
 
 
+# Looking a member up in its class costs more than all else here, and this runs once an outcome at every decision.
+_ZERO, _RUN_IN, _CURVE, _STALL, _START = Purpose.ZERO, Purpose.RUN_IN, Purpose.CURVE, Purpose.STALL, Purpose.START
+_DONE, _FALLING, _TURNING = Status.DONE, Approach.FALLING, Verdict.TURNING
+
+
+@dataclass(slots=True)
+class Trials:
+    """Done stall or start trials: how many, the latest, and how many at each duty (rounded to 1e-6 %)."""
+
+    count: int = 0
+    last: Outcome | None = None
+    at: dict[float, int] = field(default_factory=dict)
+
+    def add(self, outcome: Outcome, duty: float) -> None:
+        self.count += 1
+        self.at[duty] = self.at.get(duty, 0) + 1
+        if self.last is None or outcome.number > self.last.number:
+            self.last = outcome
+
+
 @dataclass(slots=True)
 class Tally:
     """What is known about one condition.
 
-    turned     curve settings → did the rotor turn, by (approach, duty)
-    trials     done stall or start trials, by purpose
-    last       the latest done trial, by purpose
-    at         done trials by setting
-    strikes    discarded or abandoned holds by setting
+    falling, rising   curve settings → did the rotor turn, by duty (rounded to 1e-6 %)
+    strikes           discarded or abandoned holds by setting
     """
 
-    turned: dict[tuple[Approach, float], bool] = field(default_factory=dict)
-    trials: dict[Purpose, int] = field(default_factory=dict)
-    last: dict[Purpose, Outcome] = field(default_factory=dict)
-    at: dict[Setting, int] = field(default_factory=dict)
+    falling: dict[float, bool] = field(default_factory=dict)
+    rising: dict[float, bool] = field(default_factory=dict)
+    stall: Trials = field(default_factory=Trials)
+    start: Trials = field(default_factory=Trials)
     strikes: dict[Setting, int] = field(default_factory=dict)
 
-    def passed_over(self, setting: Setting) -> bool:
-        return self.strikes.get(setting, 0) >= STRIKES
+    def passed_over(self, purpose: Purpose, approach: Approach, duty_percent: float) -> bool:
+        return self.strikes.get((purpose, approach, round(duty_percent, 6)), 0) >= STRIKES
 
     def add(self, outcome: Outcome) -> None:
         hold = outcome.hold
-        setting = setting_of(hold)
-        if outcome.status is not Status.DONE:
+        if outcome.status is not _DONE:
+            setting = setting_of(hold)
             self.strikes[setting] = self.strikes.get(setting, 0) + 1
             return
-        purpose = hold.purpose
-        if purpose is Purpose.CURVE:
-            self.turned[(hold.approach, setting[2])] = outcome.verdict is Verdict.TURNING
-        elif purpose is Purpose.STALL or purpose is Purpose.START:
-            self.trials[purpose] = self.trials.get(purpose, 0) + 1
-            self.at[setting] = self.at.get(setting, 0) + 1
-            latest = self.last.get(purpose)
-            if latest is None or outcome.number > latest.number:
-                self.last[purpose] = outcome
+        purpose, duty = hold.purpose, round(hold.duty_percent, 6)
+        if purpose is _STALL:
+            self.stall.add(outcome, duty)
+        elif purpose is _START:
+            self.start.add(outcome, duty)
+        elif purpose is _CURVE:
+            branch = self.falling if hold.approach is _FALLING else self.rising
+            branch[duty] = outcome.verdict is _TURNING
 
 
 @dataclass(slots=True)
 class Tallies:
     """Everything `next_hold` wants to know about the past.
 
-    this_session   purposes done in the session that asks, with the holds that failed counted by purpose
+    done_this_session      purposes done in the session that asks
+    strikes_this_session   zero checks and run-ins that failed in it, by purpose
     """
 
     conditions: dict[Condition, Tally]
@@ -69,8 +86,9 @@ class Tallies:
 
 
 def tallies(outcomes: Sequence[Outcome], session: int) -> Tallies:
-    """Count `outcomes`, in any order; O(n) with a few dictionary operations each."""
+    """Count `outcomes`, in any order; one short step for each."""
     conditions: dict[Condition, Tally] = {}
+    known: dict[int, Tally] = {}  # by identity: most outcomes share their condition object
     done: set[Purpose] = set()
     strikes: dict[Purpose, int] = {}
     last: Outcome | None = None
@@ -79,15 +97,16 @@ def tallies(outcomes: Sequence[Outcome], session: int) -> Tallies:
         hold = outcome.hold
         if outcome.number > highest:
             highest, last = outcome.number, outcome
-        if hold.purpose is Purpose.ZERO or hold.purpose is Purpose.RUN_IN:
+        if hold.purpose is _ZERO or hold.purpose is _RUN_IN:
             if outcome.session == session:
-                if outcome.status is Status.DONE:
+                if outcome.status is _DONE:
                     done.add(hold.purpose)
                 else:
                     strikes[hold.purpose] = strikes.get(hold.purpose, 0) + 1
             continue
-        tally = conditions.get(hold.condition)
+        condition = hold.condition
+        tally = known.get(id(condition))
         if tally is None:
-            tally = conditions[hold.condition] = Tally()
+            tally = known[id(condition)] = conditions.setdefault(condition, Tally())
         tally.add(outcome)
     return Tallies(conditions, done, strikes, last, highest)
