@@ -22,6 +22,10 @@ LEAST_TIME_CONSTANTS = 5.0
 _SHORTEST_GAP_S = 1e-3
 
 
+NORMAL_99 = 2.576
+"""Normal quantile of 0.995: 99 % of a normal quantity lie within so many standard deviations."""
+
+
 @dataclass(frozen=True, slots=True)
 class Duties:
     """Duty of each hold by its number, percent; u is common to all (accuracy), so it does not average away."""
@@ -189,14 +193,18 @@ def start_trials(known: Duties, outcomes: Sequence[Outcome]) -> Chosen:
 
 
 def speed_points(plan: Plan, known: Duties, outcomes: Sequence[Outcome], branch: Approach) -> tuple[Point, ...]:
-    """Settled speeds on one branch, rpm: of curve holds, and on the falling branch of stall holds too."""
+    """Settled speeds on one branch, rpm: of curve holds, and on the falling branch of stall holds too.
+
+    "Settled" promises the final value to the sweep's tolerance with 99 % confidence, no more: what creeps on (a winding
+    that goes on warming) may be so far off, alike in every hold. u of that: tolerance / 2.576 (JCGM 100:2008, 4.3.4).
+    """
     channel, points = plan.roles.get("speed"), []
+    creep = plan.settle.tolerance_percent / 100.0 / NORMAL_99
     for outcome in _settled(plan, outcomes, branch):
         reading = None if channel is None else outcome.means.get(channel)
         if reading is not None and reading.value is not None:
-            points.append(
-                Point(outcome.number, known.of[outcome.number], reading.value, reading.u, _weight(plan, outcome))
-            )
+            u = math.hypot(reading.u, creep * reading.value)
+            points.append(Point(outcome.number, known.of[outcome.number], reading.value, u, _weight(plan, outcome)))
     return tuple(points)
 
 

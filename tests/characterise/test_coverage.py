@@ -36,13 +36,15 @@ class CheapMotor:
         self.start_duty = self.stall_duty + rng.uniform(4.0, 8.0)
         self.start_spread = math.exp(rng.uniform(math.log(0.3), math.log(2.0)))
         self.duty_error, self.speed_error = rng.normal(0.0, DUTY_U), rng.normal(0.0, SPEED_U)
+        # What "settled within 1 % with 99 % confidence" leaves open, the same all night.
+        self.creep = 1.0 + rng.normal(0.0, 0.01 / 2.576)
         self.made: list[Outcome] = []
 
     def speed(self, duty: float) -> float:
         return 4000.0 * (1.0 - math.exp(-(duty - 5.0) / 40.0))
 
     def read(self, duty: float) -> dict[str, tuple[float, float, str]]:
-        speed = self.speed(duty) + self.speed_error + self.rng.normal(0.0, SPEED_SCATTER)
+        speed = self.speed(duty) * self.creep + self.speed_error + self.rng.normal(0.0, SPEED_SCATTER)
         return {"scope.duty": (duty + self.duty_error, DUTY_U, "%"), "board.speed": (speed, SPEED_U, "rpm")}
 
     def add(self, purpose: Purpose, duty: float, verdict: Verdict, **more: object) -> None:
