@@ -70,28 +70,31 @@ def main() -> None:
 def _job(given: str) -> Job:
     """A job file's path, or the name of a job that ships with sweeprig."""
     from sweeprig.job import load, shipped
-    from sweeprig.job.shipped import shipped_names
 
     path = Path(given)
-    if not path.exists() and given in shipped_names():
-        path = shipped(given)
+    if not path.exists() and path.name == given and not path.suffix:
+        path = shipped(given)  # says which there are
     return load(path)
 
 
-@cli.command()
+@cli.command(short_help="What a night would do; nothing is opened or moved.")
 @click.argument("job")
 @as_json
 def preview(job: str, json_out: bool) -> None:
-    """What a night would do: holds, time, what can and cannot be found with this rig, what needs a person."""
+    """What a night would do: holds, time, what can and cannot be found with this rig, what needs a person.
+
+    Everything is checked that can be checked with nothing connected; nothing is opened or moved.
+    """
     from dataclasses import asdict
 
     from sweeprig.conduct.unattended import locked_rotor_sum, refusals
     from sweeprig.job import freeze
-    from sweeprig.launch import in_process
+    from sweeprig.launch import check_rig, in_process
     from sweeprig.schedule import preview as look_ahead
     from sweeprig.terminal import preview_text
 
     checked = _job(job)
+    check_rig(checked)
     night = look_ahead(freeze(checked), 0.0)
     sums, refused = locked_rotor_sum(checked), refusals(checked)
     simulated = in_process(checked) or checked.rig.rate is not None
@@ -103,7 +106,7 @@ def preview(job: str, json_out: bool) -> None:
     click.echo(preview_text(night, f"{title}{'  (SIMULATED)' if simulated else ''}", sums, refused))
 
 
-@cli.command()
+@cli.command(short_help="Perform a job: sweep, findings, report.")
 @click.argument("job")
 @click.option("--runs", type=click.Path(path_type=Path), default=Path("runs"), show_default=True,
               help="Folder in which the run's own folder is made.")  # fmt: skip
@@ -121,7 +124,7 @@ def run(job: str, runs: Path, attended: bool, plain: bool, undecided_ok: bool, j
         checked, runs, attended=attended, on_event=on_event, orders=orders))  # fmt: skip
 
 
-@cli.command()
+@cli.command(short_help="Go on with a run that was stopped or killed.")
 @run_argument
 @click.option("--attended", is_flag=True, help="A person stays with the rig.")
 @click.option("--plain", is_flag=True, help="Plain lines instead of a status line.")
@@ -152,7 +155,7 @@ def _allowed(job: Job, attended: bool) -> None:
     if refused and not attended:
         raise ConfigError(
             "this job may not run unattended: " + "; ".join(refused),
-            remedy="mend the rig file, or start with --attended and stay with the rig",
+            remedy="Mend the rig file, or start with --attended and stay with the rig",
             topic="safety",
         )
 
@@ -172,6 +175,7 @@ def _perform(
         launched = work(show, orders)
     done = results(launched.path)
     _answer(done.findings.as_json(), launched.path, done.report_path, json_out)
+    _say_what_is_no_data(launched.path)
     state, reason = launched.ending.state, launched.ending.reason
     if state is State.TRIPPED:
         click.echo(f"sweeprig: protection switched the drive off: {reason}", err=True)
@@ -182,6 +186,20 @@ def _perform(
     verdicts = [limit["verdict"] for limit in done.findings.as_json()["limits"]]
     if "fail" in verdicts or ("not_decided" in verdicts and not undecided_ok):
         sys.exit(1)
+
+
+def _say_what_is_no_data(path: Path) -> None:
+    """A night may end well and yet have lost holds: that must not be found out from the report only."""
+    from collections import Counter
+
+    from sweeprig.opened import open_run
+
+    counts = Counter(str(outcome.status) for outcome in open_run(path).outcomes)
+    lost = {status: count for status, count in counts.items() if status != "done"}
+    if lost:
+        kinds = ", ".join(f"{count} {status}" for status, count in lost.items())
+        total = sum(counts.values())
+        click.echo(f"sweeprig: {kinds} of {total} holds: no data. The report lists each with its cause", err=True)
 
 
 @contextmanager
@@ -209,12 +227,13 @@ def _interrupts(orders: Orders, say: Callable[[str], None]) -> Iterator[None]:
 
 
 def _answer(findings: dict[str, Any], folder: Path, report_path: Path | None, json_out: bool) -> None:
-    from sweeprig.terminal import findings_text
+    from sweeprig.terminal import findings_text, width_of_output
 
     if json_out:
-        click.echo(json.dumps({"run": str(folder), "report": str(report_path), "findings": findings}))
+        written = None if report_path is None else str(report_path)
+        click.echo(json.dumps({"run": str(folder), "report": written, "findings": findings}))
         return
-    click.echo(findings_text(findings))
+    click.echo(findings_text(findings, width_of_output()))
     click.echo(f"\nrun     {folder}")
     if report_path is not None:
         click.echo(f"report  {report_path}")
@@ -223,7 +242,7 @@ def _answer(findings: dict[str, Any], folder: Path, report_path: Path | None, js
 # -- runs ------------------------------------------------------------------------------------------------------------
 
 
-@cli.command()
+@cli.command(short_help="Where a run stands.")
 @run_argument
 @as_json
 def status(run: Path, json_out: bool) -> None:
@@ -236,7 +255,7 @@ def status(run: Path, json_out: bool) -> None:
     click.echo(json.dumps(value) if json_out else status_text(value))
 
 
-@cli.command()
+@cli.command(short_help="Work the findings out again.")
 @run_argument
 @as_json
 def fit(run: Path, json_out: bool) -> None:
@@ -275,7 +294,7 @@ def export(run: Path, folder: Path | None, json_out: bool) -> None:
     click.echo(json.dumps({"files": written}) if json_out else "\n".join(written))
 
 
-@cli.command()
+@cli.command(short_help="Switch a rig off, and prove it.")
 @click.argument("rig")
 @as_json
 def off(rig: str, json_out: bool) -> None:
@@ -294,7 +313,7 @@ def off(rig: str, json_out: bool) -> None:
         raise ConfigError(
             "this rig is simulated inside the process that uses it; there is nothing to switch off from here",
             where=Where(rig),
-            remedy="give the file of a real rig or of a served simulated bench",
+            remedy="Give the file of a real rig or of a served simulated bench",
             topic="simbench",
         )
     done = switch_off(use, SystemClock(use.rig.rate or 1.0))
@@ -308,7 +327,7 @@ def off(rig: str, json_out: bool) -> None:
 # -- the simulated bench ---------------------------------------------------------------------------------------------
 
 
-@cli.group()
+@cli.group(short_help="The simulated bench: serve it, or ask what is true of it.")
 def simbench() -> None:
     """The simulated bench: serve it over sockets and a serial port, or ask what is true of its motor."""
 
@@ -330,19 +349,29 @@ def serve(job: str, rate: float, write: Path | None, record: Path | None) -> Non
             click.echo(f"{name}  {address}")
         click.echo("serving, SIMULATED; Ctrl-C ends", err=True)
 
-    serve_bench(_job(job), rate, write, ready=ready, record=record)
+    served = _job(job)
+    try:
+        serve_bench(served, rate, write, ready=ready, record=record)
+    except OSError as error:
+        if error.filename is None or isinstance(error, SweeprigError):
+            raise
+        where, remedy = Where(str(error.filename)), "Name a file in a folder that is there and in which you may write"
+        raise ConfigError("the file cannot be written", value=error.strerror, where=where, remedy=remedy) from error
 
 
-@simbench.command()
+@simbench.command(short_help="What is true of the simulated motor.")
 @click.argument("job")
+@click.option("--rare", is_flag=True, help="Also stops too rare to count, by splitting; takes several minutes.")
 @as_json
-def truth(job: str, json_out: bool) -> None:
+def truth(job: str, rare: bool, json_out: bool) -> None:
     """The simulated motor's parameters and what is true of it, found by brute force: for comparison with findings."""
-    from sweeprig.simbench.truth_of_job import truth_of
-    from sweeprig.terminal import truth_text
+    from sweeprig.simbench.truth_of_job import RARE_TRIALS, truth_of
+    from sweeprig.terminal import truth_text, width_of_output
 
-    value = truth_of(_job(job))
-    click.echo(json.dumps(value) if json_out else truth_text(value))
+    asked = _job(job)
+    click.echo("trying the simulated motor some thousand times at each threshold; this takes a while …", err=True)
+    value = truth_of(asked, rare_trials=RARE_TRIALS if rare else 0)
+    click.echo(json.dumps(value) if json_out else truth_text(value, width_of_output()))
 
 
 # -- the manual ------------------------------------------------------------------------------------------------------
@@ -354,14 +383,16 @@ def truth(job: str, json_out: bool) -> None:
 def manual(topic: str | None, json_out: bool) -> None:
     """Read the manual: a TOPIC, or the list of topics."""
     from sweeprig import manual as pages
+    from sweeprig.terminal import page_text
 
     if topic is None:
         names = pages.topics()
         click.echo(
             json.dumps(list(names))
             if json_out
-            else "sweeprig manual TOPIC, with TOPIC one of:\n  " + "\n  ".join(names)
+            else "sweeprig manual TOPIC, with TOPIC one of:\n"
+            + "\n".join(f"  {name:<12}{pages.heading(name)}" for name in names)
         )
         return
     text = pages.text(topic)
-    click.echo(json.dumps({"topic": topic, "text": text}) if json_out else text)
+    click.echo(json.dumps({"topic": topic, "text": text}) if json_out else page_text(text))

@@ -9,7 +9,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from enum import StrEnum
 
-from sweeprig.quantities import Reading
+from sweeprig.quantities import Reading, show_quantity
 
 
 class Purpose(StrEnum):
@@ -71,7 +71,8 @@ class Condition:
 
     def label(self) -> str:
         """Short text for tables: what differs in most sweeps comes first."""
-        return f"{self.pwm_hz:g} Hz, {self.supply_v:g} V, {self.direction}, {self.load}, {self.thermal}"
+        pwm, supply = show_quantity(self.pwm_hz, "Hz"), show_quantity(self.supply_v, "V")
+        return f"{pwm}, {supply}, {self.direction}, {self.load}, {self.thermal}"
 
 
 @dataclass(frozen=True, slots=True)

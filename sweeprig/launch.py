@@ -13,13 +13,14 @@ from pathlib import Path
 from typing import Any
 
 from sweeprig.clock import Clock, SystemClock
-from sweeprig.conduct.rig import RigUse, build_adapters, open_rig, require_heartbeat, same_instruments
+from sweeprig.conduct.rig import RigUse, assemble, open_rig, require_heartbeat, same_instruments
 from sweeprig.conduct.run import Ending, run
 from sweeprig.conduct.states import OnEvent, Orders
+from sweeprig.errors import ConfigError, RoleMissing
 from sweeprig.job import Job, document, freeze, job_hash, load
 from sweeprig.job.freeze import with_deadline
 from sweeprig.logbook import Logbook
-from sweeprig.logbook.run_folder import FINDINGS, JOB, LOGBOOK, REPORT, TRAFFIC, create_run_folder
+from sweeprig.logbook.run_folder import FINDINGS, JOB, LOGBOOK, REPORT, TRAFFIC, create_run_folder, folder_of
 from sweeprig.logbook.traffic import TrafficLog
 
 
@@ -54,9 +55,9 @@ def start(
     """
     if not isinstance(job, Job):
         job = load(job)
-    build_adapters(RigUse.of_job(job))  # unknown adapters and bad options are found before a folder is made
+    check_rig(job)
     now = SystemClock().utc()
-    job = with_deadline(job, now)
+    job = with_deadline(job, _first_utc(job, now))
     text = document(job)
     folder = create_run_folder(Path(runs), job.motor.name, now, text)
     _keep_dialects(job, folder)
@@ -69,13 +70,51 @@ def resume(
     path: Path | str, *, attended: bool = False, on_event: OnEvent = _nobody, orders: Orders | None = None
 ) -> Launched:
     """Go on with a run that ended or was killed: a new session, warm-up done again, nothing lost, nothing doubled."""
-    folder = Path(path)
+    folder = folder_of(path)
     job = load(folder / JOB)
     for stale in (FINDINGS, REPORT):
         (folder / stale).unlink(missing_ok=True)
     traffic = TrafficLog(folder / TRAFFIC)
     logbook = Logbook.open(folder / LOGBOOK, traffic=traffic)
     return Launched(folder, _session(job, logbook, traffic, attended, on_event, orders or Orders()))
+
+
+def check_rig(job: Job) -> None:
+    """Refuse what cannot work once the links are open, with nothing opened and no folder made.
+
+    ConfigError for an unknown adapter, dialect or option, or an address that the simulated bench does not serve;
+    RoleMissing for a role whose instrument has no such channel.
+    """
+    rig, named = assemble(RigUse.of_job(job), SystemClock()), job.rig.instruments
+    for role, given in job.rig.roles.items():
+        name, _, quantity = given.partition(".")
+        channels = rig.adapters[name].channels
+        if quantity and quantity not in channels:
+            raise RoleMissing(
+                f"the instrument {name!r} has no channel for the role {role}",
+                value=given,
+                allowed=", ".join(f"{name}.{channel}" for channel in channels),
+                remedy="Correct [roles] in the rig file, or set the instrument's option that adds the channel",
+                topic="rig",
+            )
+    for name, instrument in named.items():
+        if instrument.in_process and instrument.address.partition(":")[2] not in named:
+            raise ConfigError(
+                f"the simulated bench has no instrument for the address of {name}",
+                value=instrument.address,
+                allowed=", ".join(f"simbench:{each}" for each in named),
+                remedy="Behind simbench: stands the name of an instrument of this rig file",
+                topic="simbench",
+            )
+
+
+def _first_utc(job: Job, now: float) -> float:
+    """UTC seconds at which the run's own clock begins: the simulated bench's is not that of the computer."""
+    if not in_process(job):
+        return now
+    from sweeprig.simbench.clock import START_UTC
+
+    return START_UTC
 
 
 def _keep_dialects(job: Job, folder: Path) -> None:

@@ -28,9 +28,12 @@ if TYPE_CHECKING:
 
 _KEPT = ("job", "plan", "outcomes", "holds", "readings", "events", "instruments", "sessions", "findings", "unfinished")
 
+_AT_REST = ("finished", "parked", "tripped")
+"""States in which a session ends: no process is looked for."""
+
 
 def open_run(path: Path | str) -> Run:
-    """The run in the folder `path` (or whose logbook `path` is). RunError where there is none."""
+    """The run in the folder `path` (or of which `path` is a file). RunError where there is none."""
     return Run(path)
 
 
@@ -38,8 +41,7 @@ class Run:
     """One run, read-only. `path`: its folder; `contents`: the logbook's reader, for what has no frame."""
 
     def __init__(self, path: Path | str) -> None:
-        given = Path(path)
-        self.path = given.parent if given.name == run_folder.LOGBOOK else given
+        self.path = run_folder.folder_of(path)
         self.contents = Reader(self.path / run_folder.LOGBOOK)
 
     def reload(self) -> None:
@@ -154,18 +156,22 @@ class Run:
         }
 
     def status(self) -> dict[str, object]:
-        """Where the run stands, as plain values: state, sessions, run clock (s), outcomes by status, hold in hand, last
-        outcome. A hold in hand is one that was begun and has no outcome: of a running run, or of a killed one."""
+        """Where the run stands, as plain values: state, whether a process works on it, sessions, run clock (s),
+        outcomes by status, hold in hand, last outcome. A hold in hand was begun and has no outcome: of a running run,
+        or of a killed one."""
         states = [event for event in self.contents.events() if event.kind == "state"]
         last = self.outcomes[-1] if self.outcomes else None
         in_hand = self.unfinished[0].hold if self.unfinished else None
         times = self.contents.last_times()
+        state = str(states[-1].data["state"]) if states else "not begun"
+        working = state not in _AT_REST and run_folder.FolderLock(self.path, "logbook").held()
         return {
             "run": str(self.path),
             "motor": self.job.motor.name,
             "rig": self.job.rig.name,
             "simulated": self.simulated,
-            "state": str(states[-1].data["state"]) if states else "not begun",
+            "state": state,
+            "working": working,
             "sessions": len(self.contents.sessions()),
             "run_clock_s": (times[0] - self.contents.sessions()[0].began) if times else 0.0,
             "outcomes": dict(Counter(str(outcome.status) for outcome in self.outcomes)),

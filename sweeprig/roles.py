@@ -36,9 +36,13 @@ UNIT_OF_ROLE = {
 
 
 class Reply(Enum):
+    """STREAM: the next whole line that begins after the ask, from an instrument that sends by itself; what came before
+    is passed over. Its ask may have an empty message: then nothing is sent. Such an instrument takes no other asks."""
+
     NOTHING = "nothing"
     LINE = "line"
     BLOCK = "block"
+    STREAM = "stream"
 
 
 @dataclass(frozen=True, slots=True)

@@ -3,12 +3,20 @@ with rich, without one as plain lines."""
 
 from __future__ import annotations
 
+import math
+import shutil
 import sys
 from collections.abc import Mapping, Sequence
 from typing import Any
 
 from sweeprig.conduct.states import Event
 
+WIDTH_ELSEWHERE = 120
+"""Columns of a table that goes to a file or a pipe."""
+WIDEST_PAGE = 100
+"""Longer lines of running text are hard to read."""
+GAP = 3
+"""Columns that a table spends between two of its own."""
 MOST_NAMED = 3
 """A remark on more findings than this says how many; the report names each."""
 
@@ -69,8 +77,10 @@ class Lines:
             return f"TRIPPED: {data['evidence']}. The drive was switched off."
         if event.kind == "off" and data.get("proved"):
             return "drive and supply off, and shown to be off"
-        if event.kind in ("link", "notice"):
-            return "  " + " ".join(str(value) for value in data.values() if value)
+        if event.kind == "link":
+            return f"  {data['instrument']}: {data['what']}" if data["instrument"] else f"  {data['what']}"
+        if event.kind == "notice":
+            return f"  {data['text']}"
         if event.kind == "finished":
             return f"finished: {data['reason']}"
         return None
@@ -114,21 +124,64 @@ def progress(expected_s: float, plain: bool) -> Lines:
     return Lines(expected_s) if plain or not sys.stderr.isatty() else Screen(expected_s)
 
 
-def table(title: str, columns: Sequence[str], rows: Sequence[Sequence[str]]) -> str:
-    """A table as text. Columns keep their full words; a narrow terminal folds them."""
+def width_of_output() -> int:
+    """Columns of the terminal that standard output is; `WIDTH_ELSEWHERE` where it is none."""
+    return shutil.get_terminal_size((WIDTH_ELSEWHERE, 24)).columns if sys.stdout.isatty() else WIDTH_ELSEWHERE
+
+
+def table(columns: Sequence[str], rows: Sequence[Sequence[str]], width: int) -> str:
+    """A table as text, in as many blocks one under the other as `width` asks for; the first column heads each.
+
+    Nothing is folded where a block of one column fits.
+    """
+    from rich.markup import escape
+
+    cells = [[escape(cell) for cell in line] for line in (columns, *rows)]
+    widths = [max(len(part) for line in (columns, *rows) for part in line[index].split("\n")) for index in
+              range(len(columns))]  # fmt: skip
+    blocks = _blocks(widths, width)
+    return "\n\n".join(_block([[line[index] for index in (0, *block)] for line in cells], width) for block in blocks)
+
+
+def _blocks(widths: Sequence[int], width: int) -> list[list[int]]:
+    """Which columns stand side by side: the fewest blocks, as even as they come."""
+    others = list(range(1, len(widths)))
+    for each in range(len(others), 1, -1):
+        even = math.ceil(len(others) / math.ceil(len(others) / each))
+        blocks = [others[first : first + even] for first in range(0, len(others), even)]
+        if all(widths[0] + sum(widths[index] + GAP for index in block) <= width for block in blocks):
+            return blocks
+    return [[index] for index in others]
+
+
+def _block(cells: Sequence[Sequence[str]], width: int) -> str:
+    """Rows of cells, the first row the head, with a line under it; no blanks at the ends of lines."""
     from rich.box import SIMPLE_HEAD
     from rich.console import Console
     from rich.table import Table
 
-    grid = Table(title=title, title_justify="left", box=SIMPLE_HEAD, pad_edge=False)
-    for index, column in enumerate(columns):
+    grid = Table(box=SIMPLE_HEAD, pad_edge=False)
+    for index, column in enumerate(cells[0]):
         grid.add_column(column, justify="left" if index == 0 else "right", overflow="fold")
-    for row in rows:
-        grid.add_row(*(str(cell) for cell in row))
-    console = Console(width=None if sys.stdout.isatty() else 110, markup=False, highlight=False)
+    for row in cells[1:]:
+        grid.add_row(*row)
+    console = Console(width=width, highlight=False, color_system=None)
     with console.capture() as captured:
-        console.print(grid, markup=False)
-    return captured.get().rstrip()
+        console.print(grid)
+    return "\n".join(line.rstrip() for line in captured.get().splitlines() if line.strip())
+
+
+def page_text(markdown: str) -> str:
+    """A page of the manual: laid out for the terminal that standard output is, else as it was written."""
+    if not sys.stdout.isatty():
+        return markdown
+    from rich.console import Console
+    from rich.markdown import Markdown
+
+    console = Console(width=min(width_of_output(), WIDEST_PAGE))
+    with console.capture() as captured:
+        console.print(Markdown(markdown, code_theme="bw"))
+    return captured.get()
 
 
 def preview_text(night: Any, title: str, sums: Mapping[str, float], refused: Sequence[str]) -> str:
@@ -146,11 +199,11 @@ def preview_text(night: Any, title: str, sums: Mapping[str, float], refused: Seq
     lines += [f"  {name}: {show_time(value) if value >= 60 else f'{value:.1f} s'}" for name, value in sums.items()]
     if refused:
         lines += ["", "Refused, until this is mended:"] + [f"  {line}" for line in refused]
-    lines += ["", "The prediction guesses: " + "; ".join(night.guesses) + "."]
+    lines += ["", "The prediction guesses:"] + [f"  {line}" for line in night.guesses]
     return "\n".join(lines)
 
 
-def findings_text(findings: Mapping[str, Any]) -> str:
+def findings_text(findings: Mapping[str, Any], width: int = WIDTH_ELSEWHERE) -> str:
     """The answer: a line a finding, a column a condition; then what was flagged, each remark once."""
     from sweeprig.report import tables
 
@@ -164,14 +217,16 @@ def findings_text(findings: Mapping[str, Any]) -> str:
     for name in names:
         cells = {index: row for index, rows in enumerate(by_condition) for row in rows if row.finding == name}
         some = next(iter(cells.values()))
-        unit = "" if some.unit == "1" else f", {some.unit}"
-        body.append([f"{some.name}{unit}", *(_cell(cells.get(index)) for index in range(len(conditions)))])
-    title = f"{findings['motor']} on {findings['rig']}"
-    if findings["simulated"]:
-        title = f"{title}\n{SIMULATED}"
+        body.append([_titled(some.name, some.unit), *(_cell(cells.get(index)) for index in range(len(conditions)))])
     labels = [tables.condition_label(condition, fields) for condition in conditions]
-    lines = [table(title, ["95 % intervals", *labels], body), *_verdicts(findings), *_remarks(by_condition, labels)]
-    return "\n".join(lines)
+    lines = [f"{findings['motor']} on {findings['rig']}", *([SIMULATED] if findings["simulated"] else [])]
+    lines += ["", table(["95 % intervals", *labels], body, width)]
+    return "\n".join([*lines, *_verdicts(findings), *_remarks(by_condition, labels)])
+
+
+def _titled(name: str, unit: str) -> str:
+    """'Stall duty (%)'; the name alone where there is no unit."""
+    return name if unit in ("", "1") else f"{name} ({unit})"
 
 
 def _cell(row: Any) -> str:
@@ -224,33 +279,60 @@ def _where(at: Sequence[str], labels: Sequence[str]) -> str:
 def status_text(value: Mapping[str, Any]) -> str:
     """A run's status as a few sentences."""
     counts = ", ".join(f"{count} {status}" for status, count in value["outcomes"].items()) or "none yet"
+    sessions = "1 session" if value["sessions"] == 1 else f"{value['sessions']} sessions"
     lines = [
         f"{value['motor']} on {value['rig']}: {value['state']}" + ("  (SIMULATED)" if value["simulated"] else ""),
-        f"{value['sessions']} session(s), {show_time(value['run_clock_s'])} on the run clock; holds: {counts}",
+        f"{sessions}, {show_time(value['run_clock_s'])} on the run clock; holds: {counts}",
     ]
     if value["in_hand"] is not None:
         lines.append(f"hold {value['in_hand']['number']} was begun and has no outcome: {value['in_hand']['why']}")
     if value["last"] is not None:
         last = value["last"]
-        lines.append(
-            f"last hold {last['number']} ({last['purpose']}): {last['status']}, {last['verdict']} {last['reason']}"
-        )
-    return "\n".join(line.rstrip() for line in lines)
+        ended = last["reason"] or last["verdict"].replace("_", " ")
+        lines.append(f"last hold: {last['number']}, {last['purpose'].replace('_', ' ')}; {last['status']}: {ended}")
+    if value["state"] != "finished" and not value["working"]:
+        before = "Find the cause of the trip, then go on" if value["state"] == "tripped" else "Go on"
+        lines.append(f"No process works on it. {before} with: sweeprig resume {value['run']}")
+    return "\n".join(lines)
 
 
-def truth_text(value: Mapping[str, Any]) -> str:
+def truth_text(value: Mapping[str, Any], width: int = WIDTH_ELSEWHERE) -> str:
     """The simulated motor's parameters and true findings as two tables."""
-    parameters = [[name.replace("_", " "), f"{number:g}"] for name, number in value["motor"].items()]
-    columns = [condition["label"] for condition in value["conditions"]]
-    names = list(dict.fromkeys(name for condition in value["conditions"] for name in condition["findings"]))
+    from sweeprig.report.catalogue import meaning
+    from sweeprig.report.tables import condition_label, telling_fields
+
+    conditions = value["conditions"]
+    parameters = [
+        [_parameter(name), f"{x:g}" if isinstance(x, float) else str(x)] for name, x in value["motor"].items()
+    ]
+    labels = [condition_label(condition, telling_fields(conditions)) for condition in conditions]
+    if len(set(labels)) < len(labels):
+        labels = [condition["label"] for condition in conditions]
     rows = []
-    for name in names:
-        cells = [condition["findings"].get(name) for condition in value["conditions"]]
-        rows.append([name.replace("_", " "), *(_true(cell) for cell in cells)])
-    title = f"What is true of the simulated motor, by {value['trials']} trials a threshold; ± is this counting's 2 u"
+    for name in dict.fromkeys(name for condition in conditions for name in condition["findings"]):
+        about = meaning(name)
+        cells = (_true(condition["findings"].get(name)) for condition in conditions)
+        rows.append([_titled(about.name, about.unit), *cells])
+    heading = f"What is true of the simulated motor, by {value['trials']} trials a threshold; ± is this counting's 2 u"
     return "\n\n".join(
-        (f"{SIMULATED}\n\n{table('Parameters', ['', 'value'], parameters)}", table(title, ["", *columns], rows))
+        (SIMULATED, table(["Parameters", "value"], parameters, width), heading, table(["True", *labels], rows, width))
     )
+
+
+_PARAMETER_UNITS = {
+    "k_per_w": "K/W", "kg_m2": "kg m²", "nm_per_a": "N m/A", "nm_s2": "N m s²", "nm_s": "N m s", "nm": "N m",
+    "ohm": "ohm", "henry": "H", "farad": "F", "percent": "%", "rad": "rad", "amps": "A", "volts": "V", "rpm": "rpm",
+    "rpm_per_s": "rpm/s", "percent_per_hour": "%/h", "per_hour": "1/h", "s": "s",
+}  # fmt: skip
+
+
+def _parameter(name: str) -> str:
+    """'inertia_kg_m2' → 'inertia (kg m²)'."""
+    ends = [end for end in _PARAMETER_UNITS if name.endswith(f"_{end}")]
+    if not ends:
+        return name.replace("_", " ")
+    end = max(ends, key=len)
+    return _titled(name.removesuffix(f"_{end}").replace("_", " "), _PARAMETER_UNITS[end])
 
 
 def _true(cell: Mapping[str, Any] | None) -> str:

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import importlib.util
 import os
 import shutil
 import subprocess
 import sys
 from collections.abc import Callable
 from pathlib import Path
+from typing import Any
 
 import pytest
 
@@ -61,6 +63,24 @@ def short_job(tmp_path: Path) -> Path:
         'title = "short"\nrig = "shelter-bench.toml"\nmotor = "aspirator-fan.toml"\nsweep = "short.toml"\n', "utf-8"
     )
     return job
+
+
+@pytest.fixture(scope="session")
+def reference() -> Callable[[str], Any]:
+    """`reference("circuits")`: a reference of the figures' folder, by its path, for neither folder is a package."""
+
+    def loaded(name: str) -> Any:
+        known = f"reference_{name}"
+        if known not in sys.modules:
+            spec = importlib.util.spec_from_file_location(known, Path(__file__).parent / "figures" / f"{name}.py")
+            assert spec is not None
+            assert spec.loader is not None
+            module = importlib.util.module_from_spec(spec)
+            sys.modules[known] = module  # dataclasses look their module up
+            spec.loader.exec_module(module)
+        return sys.modules[known]
+
+    return loaded
 
 
 def command_path() -> str:

@@ -15,7 +15,7 @@ from sweeprig.errors import ConfigError
 
 LONGEST_COMMAND = 255
 _PLACE = re.compile(r"\{([a-z_]+)\}")
-_TOP_KEYS = ("kind", "about", "reply", "no_value", "commands", "values")
+_TOP_KEYS = ("kind", "about", "reply", "no_value", "commands", "values", "texts")
 
 
 @dataclass(frozen=True, slots=True)
@@ -68,6 +68,7 @@ class Dialect:
     kind      what the table must be written for: "multimeter", "supply", "scope"
     commands  the commands it must (or may) have, each with its Form
     values    numbers it must have, each with its least and greatest value
+    texts     texts it must have that are never sent: patterns, units
 
     Every fault is a ConfigError that names the instrument and the key.
     """
@@ -79,18 +80,23 @@ class Dialect:
         kind: str,
         commands: Mapping[str, Form],
         values: Mapping[str, tuple[float, float]] | None = None,
+        texts: tuple[str, ...] = (),
     ) -> None:
         self._name = name
         self._check_top(table, kind)
         self.no_value = self._markers(table.get("no_value", []))
         self._commands = self._checked(self._table(table, "commands"), commands)
         self._values = self._numbers(self._table(table, "values"), values or {})
+        self._texts = self._words(self._table(table, "texts"), texts)
 
     def has(self, key: str) -> bool:
         return key in self._commands
 
     def value(self, key: str) -> float:
         return self._values[key]
+
+    def text(self, key: str) -> str:
+        return self._texts[key]
 
     def command(self, key: str, **filled: str) -> bytes:
         """The message for `key` with its places filled in.
@@ -169,6 +175,18 @@ class Dialect:
             kind = "a query: its header ends in ?" if form.query else "a command: its header does not end in ?"
             raise self._wrong(key, "is of the wrong kind", text, kind)
         return text
+
+    def _words(self, found: Mapping[str, object], wanted: tuple[str, ...]) -> dict[str, str]:
+        for key in found:
+            if key not in wanted:
+                raise self._wrong(f"texts.{key}", "is not known", allowed=", ".join(wanted) or "none")
+        checked = {}
+        for key in wanted:
+            text = found.get(key)
+            if not isinstance(text, str) or not text or len(text) > LONGEST_COMMAND:
+                raise self._wrong(f"texts.{key}", "is missing or no text", text, f"1 to {LONGEST_COMMAND} characters")
+            checked[key] = text
+        return checked
 
     def _numbers(self, found: Mapping[str, object], wanted: Mapping[str, tuple[float, float]]) -> dict[str, float]:
         for key in found:

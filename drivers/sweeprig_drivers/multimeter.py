@@ -1,4 +1,4 @@
-"""A multimeter that averages a DC voltage over a settable aperture, one reading a query.
+"""A multimeter that averages a DC voltage or current over a settable aperture, one reading a query.
 
 The mean over whole PWM periods is what it is asked for; what a broken period costs is in the reading's u.
 """
@@ -24,8 +24,15 @@ COMMANDS = {
     "autorange_query": Form(query=True, optional=True),
     "aperture": Form(("aperture",)),
     "aperture_query": Form(query=True),
+    "amps_function": Form(("range",), optional=True),
+    "amps_range_query": Form(query=True, optional=True),
+    "amps_autorange_query": Form(query=True, optional=True),
+    "amps_aperture": Form(("aperture",), optional=True),
+    "amps_aperture_query": Form(query=True, optional=True),
     "read": Form(query=True),
 }
+RANGES = {"volts": ("V", 1e-3, 1000.0), "amps": ("A", 1e-6, 100.0)}
+"""What the option `function` chooses: the channel, its unit, the least and greatest range."""
 SETTING_TOLERANCE = 0.01
 """Range and aperture must read back within 1 %: another range or aperture than the one asked for is refused."""
 BROKEN_PERIOD_TOLERANCE = 1e-4
@@ -45,31 +52,48 @@ def broken_period(aperture_s: float, pwm_hz: float) -> float:
 
 
 class ScpiMultimeter:
-    """Options: `range` (V) and `aperture` (s), both required. Channels: volts.
+    """Options: `function` ("volts", or "amps" where the dialect has its commands), `range` (V or A) and `aperture` (s),
+    these two required. Channels: volts, or amps. The range is fixed: an autoranging ammeter interrupts the motor.
 
     `measure` averages round(window / aperture) readings, at least one.
     """
 
     def __init__(self, setup: AdapterSetup) -> None:
         self.name = name = setup.name
-        self.channels: Mapping[str, str] = {"volts": "V"}
-        common.check_accuracy(setup, self.channels)
         options = common.Options(setup)
-        self._range_v = options.quantity("range", "V", 1e-3, 1000.0)
+        self._quantity = options.choice("function", tuple(RANGES))
+        self._unit, least, most = RANGES[self._quantity]
+        self.channels: Mapping[str, str] = {self._quantity: self._unit}
+        common.check_accuracy(setup, self.channels)
+        self._full = options.quantity("range", self._unit, least, most)
         self._aperture_s = aperture_s = options.quantity("aperture", "s", 1e-4, 10.0)
         options.done()
         dialect = Dialect(name, setup.dialect, "multimeter", COMMANDS)
         self._identity = query(dialect.command("identity"), early=True)
         self._clear, self._error = tell(dialect.command("clear")), query(dialect.command("error"))
-        self._function = tell(dialect.command("function", range=number_text(self._range_v)))
-        self._range_query = query(dialect.command("range_query"))
-        self._autorange = query(dialect.command("autorange_query")) if dialect.has("autorange_query") else None
-        self._aperture = tell(dialect.command("aperture", aperture=number_text(aperture_s)))
-        self._aperture_query = query(dialect.command("aperture_query"))
+        head = "" if self._quantity == "volts" else "amps_"
+        self._require(dialect, [f"{head}{key}" for key in ("function", "range_query", "aperture", "aperture_query")])
+        autorange = f"{head}autorange_query"
+        self._function = tell(dialect.command(f"{head}function", range=number_text(self._full)))
+        self._range_query = query(dialect.command(f"{head}range_query"))
+        self._autorange = query(dialect.command(autorange)) if dialect.has(autorange) else None
+        self._aperture = tell(dialect.command(f"{head}aperture", aperture=number_text(aperture_s)))
+        self._aperture_query = query(dialect.command(f"{head}aperture_query"))
         self._read = query(dialect.command("read"), within_s=aperture_s + 1.0)
         self._no_value = dialect.no_value
-        self._accuracy = setup.accuracy.get("volts", common.NO_ACCURACY)
-        self._channel = f"{name}.volts"
+        self._accuracy = setup.accuracy.get(self._quantity, common.NO_ACCURACY)
+        self._channel = f"{name}.{self._quantity}"
+
+    def _require(self, dialect: Dialect, keys: list[str]) -> None:
+        for key in keys:
+            if not dialect.has(key):
+                raise ConfigError(
+                    f"{self.name}: the dialect does not say how this function is spelt",
+                    value=self._quantity,
+                    allowed=f"a dialect with the command {key}",
+                    remedy="choose another function or dialect in the rig file",
+                    topic="dialects",
+                )
 
     def identify(self) -> Steps[Identity]:
         return common.identify(self.name, self._identity)
@@ -79,8 +103,8 @@ class ScpiMultimeter:
         name, error = self.name, self._error
         standing = yield from common.begin(name, self._clear, error)
         near = SETTING_TOLERANCE
-        wanted = self._range_v
-        yield from common.confirm(name, "range", self._function, self._range_query, error, wanted, near * wanted, "V")
+        wanted, unit = self._full, self._unit
+        yield from common.confirm(name, "range", self._function, self._range_query, error, wanted, near * wanted, unit)
         if self._autorange is not None:
             answer = yield self._autorange
             if common.is_on(name, answer.raw):
@@ -93,7 +117,7 @@ class ScpiMultimeter:
 
     def settings(self) -> Steps[dict[str, str]]:
         found = {}
-        for key, ask in (("range_volts", self._range_query), ("aperture_s", self._aperture_query)):
+        for key, ask in ((f"range_{self._quantity}", self._range_query), ("aperture_s", self._aperture_query)):
             answer = yield ask
             found[key] = common.shown(answer.raw)
         return found
@@ -114,7 +138,7 @@ class ScpiMultimeter:
         )
 
     def measure(self, window: Window) -> Steps[dict[str, Reading]]:
-        """volts: the mean of the readings. One without a value makes the whole mean no data: leaving it out would
+        """The mean of the readings. One without a value makes the whole mean no data: leaving it out would
         bias the mean towards what the meter could read. With `window.pwm_hz` the broken period's part is in u, and
         the flag `aperture_not_whole_periods` says when it matters."""
         ask, name, no_value = self._read, self.name, self._no_value
@@ -131,24 +155,25 @@ class ScpiMultimeter:
                 total += value
         raw = b" ".join(raws).decode("latin-1")
         if lost:
-            return {"volts": Reading(None, 0.0, "V", answer.at, self._channel, (lost,), raw)}
+            return {self._quantity: Reading(None, 0.0, self._unit, answer.at, self._channel, (lost,), raw)}
         mean = total / count
         u = self._accuracy.u(mean)
         flags: tuple[str, ...] = ()
         if window.pwm_hz is not None:
             u, flags = self._with_broken_period(mean, u, window.pwm_hz)
-        return {"volts": Reading(mean, u, "V", answer.at, self._channel, flags, raw)}
+        return {self._quantity: Reading(mean, u, self._unit, answer.at, self._channel, flags, raw)}
 
     def _with_broken_period(self, mean: float, u: float, pwm_hz: float) -> tuple[float, tuple[str, ...]]:
         """u with the broken period's part, and the flags.
 
-        The amplitude V is not known to a meter. Two bounds hold for any wave from 0 to V: V is below the fixed range
-        (else the reading is an overload), and for fT > 1 the error is below (true mean)·(1 − D)/(fT), with the true
-        mean below |reading|/(1 − 1/(fT)), that is below |reading|/(fT − 1). The smaller is the half-width of a
-        rectangle: u = bound/√3. The n readings of one window keep a phase relation, so the bound is not divided.
+        The amplitude V (of a current: its peak) is not known to a meter. Two bounds hold for any wave from 0 to V: V is
+        below the fixed range (else the reading is an overload), and for fT > 1 the error is below
+        (true mean)·(1 − D)/(fT), with the true mean below |reading|/(1 − 1/(fT)), that is below |reading|/(fT − 1).
+        The smaller is the half-width of a rectangle: u = bound/√3. The n readings of one window keep a phase relation,
+        so the bound is not divided.
         """
         share = broken_period(self._aperture_s, pwm_hz)
-        bound = share * self._range_v
+        bound = share * self._full
         periods = self._aperture_s * pwm_hz
         if periods > 1.0:
             bound = min(bound, abs(mean) / (periods - 1.0))

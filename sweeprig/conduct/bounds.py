@@ -21,8 +21,13 @@ TABLE: Mapping[str, tuple[float, str]] = {
     "start_revolutions": (10.0, "whole revolutions that a start must show; a twitch is no start"),
     "debounce_readings": (2.0, "readings in a row above a limit before it trips"),
     "slept_s": (2.0, "UTC against monotonic time: more than this apart, the machine slept or its clock was stepped"),
-    "heal_attempts": (3.0, "times a link is brought back within one session before the run gives up"),
-    "heal_pause_s": (1.0, "pause before a link is opened again"),
+    "heal_attempts": (5.0, "times an instrument's link is brought back before the run gives up"),
+    "heal_forgets_after": (5.0, "… counted anew once so many holds in a row were done: a night may have many glitches"),
+    "heal_pause_s": (1.0, "pause before a link is opened again; doubled each time, so 15 s in all"),
+    "discards_in_a_row": (
+        6.0,
+        "discarded holds in a row that park the run: something is wrong that no repeat will mend",
+    ),
     "look_s": (0.05, "the longest time between two looks at protection and orders"),
 }
 

@@ -1,15 +1,18 @@
-"""Bringing links back: resynchronise or reopen, ask who it is, check that it is the same one, configure, prove off.
+"""Bringing a rig into order: broken links back, everyone the same one as before and configured, off proved.
 
-Everything here happens with the drive told to be off. Within one session each instrument is brought back at most
-`heal_attempts` times; then the run gives up and says so.
+Everything here happens with the drive told to be off. Each instrument is brought back at most `heal_attempts` times,
+counted anew after holds that went well; then the run gives up and says so.
 """
 
 from __future__ import annotations
 
 from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.conduct.rig import OpenRig, configure, identify, named, same_instruments
-from sweeprig.conduct.switch_off import prove_off, switch_off
-from sweeprig.errors import LinkError, RigError
+from sweeprig.conduct.switch_off import drive_off, prove_off, switch_off
+from sweeprig.errors import InstrumentRefused, LinkError, RigError
+
+_REFUSED = "a refused setting"
+"""Counted beside the instruments' names, which have no blanks."""
 
 
 def broken(rig: OpenRig) -> list[str]:
@@ -18,21 +21,35 @@ def broken(rig: OpenRig) -> list[str]:
 
 
 def heal(rig: OpenRig, used: dict[str, int]) -> list[str]:
-    """Bring back every broken link; `used` counts the attempts of this session by instrument. Returns their names.
+    """Bring back every broken link, configure everyone, prove off. `used` counts the attempts of this session by
+    instrument. Returns the names of those brought back; with none broken it is how a session begins.
 
-    Raises the last link error when an instrument cannot be brought back within its attempts.
+    A link that breaks on the way is brought back too: each round costs an attempt, so this ends. Raises the last link
+    error when an instrument cannot be brought back within its attempts, and every error that is no link's.
     """
-    switch_off(rig)
-    names = broken(rig)
-    saved = dict(rig.identities)
-    for name in names:
-        _bring_back(rig, name, used)
-    identify(rig, names)
-    same_instruments(rig, saved)
-    configure(rig)
-    switch_off(rig)
-    prove_off(rig)
-    return names
+    saved, names = dict(rig.identities), dict[str, None]()
+    while True:
+        switch_off(rig)
+        waiting = broken(rig)
+        names.update(dict.fromkeys(waiting))
+        for name in waiting:
+            _bring_back(rig, name, used)
+        try:
+            identify(rig, waiting)
+            same_instruments(rig, saved)
+            configure(rig)
+            drive_off(rig, supply_too=True)
+            prove_off(rig)
+        except InstrumentRefused:
+            # One that restarts while it is configured reads back wrong; one that goes on refusing is not to be healed.
+            used[_REFUSED] = used.get(_REFUSED, 0) + 1
+            if used[_REFUSED] >= BOUNDS["heal_attempts"]:
+                raise
+        except RigError:
+            if not broken(rig):
+                raise
+        else:
+            return list(names)
 
 
 def _bring_back(rig: OpenRig, name: str, used: dict[str, int]) -> None:
@@ -41,7 +58,7 @@ def _bring_back(rig: OpenRig, name: str, used: dict[str, int]) -> None:
         used[name] = used.get(name, 0) + 1
         if used[name] > BOUNDS["heal_attempts"]:
             raise RigError(
-                f"{name}: the link was lost {used[name]} times in this session and is given up",
+                f"{name}: the link was lost {used[name]} times with hardly a hold between and is given up",
                 value=link.dirty or "silent",
                 remedy="look at the cable and the instrument, then resume the run",
                 topic="links",
@@ -52,6 +69,6 @@ def _bring_back(rig: OpenRig, name: str, used: dict[str, int]) -> None:
         except LinkError as error:
             if used[name] >= BOUNDS["heal_attempts"]:
                 raise named(name, error) from error
-            clock.wait(clock.now() + BOUNDS["heal_pause_s"])
+            clock.wait(clock.now() + BOUNDS["heal_pause_s"] * 2.0 ** (used[name] - 1))
         else:
             return

@@ -11,7 +11,7 @@ from typing import Any
 from sweeprig.clock import Clock
 from sweeprig.conduct.rig import RigUse, assemble, identify, open_link
 from sweeprig.conduct.switch_off import Off, prove_off, switch_off
-from sweeprig.errors import LinkError, OffNotProved
+from sweeprig.errors import OffNotProved, SweeprigError
 
 
 def off(use: RigUse, clock: Clock, ports: Mapping[str, Any] | None = None) -> Off:
@@ -26,7 +26,7 @@ def off(use: RigUse, clock: Clock, ports: Mapping[str, Any] | None = None) -> Of
         for name in actuators:
             try:
                 open_link(rig, name, ports)
-            except LinkError as error:
+            except SweeprigError as error:
                 silent[name] = str(error)
         done = switch_off(rig)
         silent |= done.silent

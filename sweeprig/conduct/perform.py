@@ -10,8 +10,9 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass, field
 
+from sweeprig.conduct.as_set import changed, restarted
 from sweeprig.conduct.bounds import BOUNDS
-from sweeprig.conduct.rig import OpenRig, by_channel
+from sweeprig.conduct.rig import OpenRig, by_channel, value_of
 from sweeprig.conduct.settle import LEAST_READINGS, mean_and_u, settled
 from sweeprig.conduct.switch_off import drive_off, still_on
 from sweeprig.conduct.track import Track
@@ -19,7 +20,7 @@ from sweeprig.conduct.watchman import Watchman
 from sweeprig.holds import Approach, Condition, Hold, Purpose, Verdict
 from sweeprig.plan import Plan
 from sweeprig.quantities import Reading
-from sweeprig.roles import DriveSetting, SupplySetting, Window
+from sweeprig.roles import ACTUATORS, DriveSetting, SupplySetting, Window
 
 
 class Spoiled(Exception):
@@ -48,6 +49,7 @@ class Performer:
         self.watch = watch
         self.beat = beat
         self.supply_v: float | None = None
+        self.supply_set: dict[str, str] = {}
 
     # -- the drive and the supply --------------------------------------------------------------------------------
 
@@ -57,22 +59,44 @@ class Performer:
         if supply is None or self.supply_v == condition.supply_v:
             return
         if self.rig.guard.on:
-            drive_off(self.rig)
+            self.off()
         name, limits = self.rig.source["supply"], self.rig.use.limits
         self.rig.tell(name, supply.apply(SupplySetting(condition.supply_v, limits.current)), self.watch.look)
-        self.rig.tell(name, supply.switch_on(), self.watch.look)
+        if not self.rig.off_is_supply_off:
+            self._supply_on()
         self.supply_v = condition.supply_v
+
+    def _supply_on(self) -> None:
+        supply = self.rig.supply
+        if supply is not None:
+            name = self.rig.source["supply"]
+            self.rig.tell(name, supply.switch_on(), self.watch.look)
+            self.supply_set = self.rig.tell(name, supply.settings(), self.watch.look)
+
+    def off(self) -> None:
+        """The drive off between holds; with a control input the supply, which keeps its voltage and limit."""
+        drive_off(self.rig)
+        if self.rig.off_is_supply_off:
+            self.supply_set = {}
+
+    def unpowered(self) -> None:
+        """The supply was told to be off: what it was set to holds no more."""
+        self.supply_v, self.supply_set = None, {}
 
     def apply(self, condition: Condition, duty_percent: float, done: Performed) -> None:
         rig, drive, name = self.rig, self.rig.drive, self.rig.source["drive"]
         setting = DriveSetting(condition.pwm_hz, duty_percent)
         # From here on the rotor must be seen turning: the ages count before the first edge of power.
         was_on = rig.guard.on
+        if not was_on:
+            self.still_set((name,))  # a board that restarted at rest has lost its heartbeat setting
         rig.guard.drive_on(rig.clock.now())
         set_values = rig.tell(name, drive.apply(setting), self.watch.look)
         if not was_on:
             # Never "on" again on a drive that should be on: that would hide a lapse of its heartbeat.
             rig.tell(name, drive.switch_on(), self.watch.look)
+            if rig.off_is_supply_off:
+                self._supply_on()  # last: the input says the duty before the fan can run
         done.readings.extend(set_values.values())
         done.means.update(by_channel(set_values))
 
@@ -93,7 +117,9 @@ class Performer:
                 self._rest(hold, seconds, done)
             else:
                 self._turn_at(hold, duty, seconds, done)
-        if hold.duty_percent == 0 or hold.purpose in (Purpose.ZERO, Purpose.REST):
+        # A control input at duty 0 is a setting like any other: some fans turn there.
+        unpowered = hold.duty_percent == 0 and not self.rig.off_is_supply_off
+        if unpowered or hold.purpose in (Purpose.ZERO, Purpose.REST):
             self._stay_off(hold, done)
         elif hold.purpose is Purpose.CURVE:
             self._settle(hold, done)
@@ -111,7 +137,7 @@ class Performer:
 
     def _rest(self, hold: Hold, seconds: float, done: Performed) -> None:
         """Drive off until no edge came for `seconds`."""
-        drive_off(self.rig)
+        self.off()
         clock, age = self.rig.clock, self.rig.rotation_channel
         until = clock.now() + seconds + BOUNDS["coast_s"]
         began = clock.now()
@@ -136,7 +162,7 @@ class Performer:
             track.take(self.cycle(names, min(BOUNDS["trial_window_s"], seconds), hold, done))
         if not track.turning():
             self.still_driven()
-            drive_off(self.rig)
+            self.off()
             raise Spoiled(f"the rotor did not turn after {seconds:g} s at {duty:g} %")
 
     def _guarded(self) -> tuple[str, ...]:
@@ -147,8 +173,8 @@ class Performer:
     def _stay_off(self, hold: Hold, done: Performed) -> None:
         """Zero check and rest: everything must say off, all the time."""
         if self.rig.guard.on:
-            drive_off(self.rig)
-        clock, names = self.rig.clock, self.rig.serving(hold.roles)
+            self.off()
+        clock, names = self.rig.clock, self.rig.serving((*hold.roles, "supply"))
         began = clock.now()
         cycles = []
         while clock.now() - began < hold.most_s:
@@ -234,21 +260,35 @@ class Performer:
         done.means.update(means_of(cycles[-2:]))
         if not started:
             self.still_driven()
-            drive_off(self.rig)
+            self.off()
             if track.revolutions > 0:
                 done.flags = (*done.flags, "twitched")
 
     # -- how it ended --------------------------------------------------------------------------------------------
 
     def still_driven(self) -> None:
-        """The drive says that it is on. Off by itself (its heartbeat lapsed) is no stop of the rotor: Spoiled."""
-        rig, name = self.rig, self.rig.source["drive"]
-        if rig.guard.on and rig.tell(name, rig.drive.settings(), self.watch.look).get("output", "1") in ("0", "OFF"):
+        """What a stop of the rotor is asked first: drive and supply are as they were set (see `still_set`)."""
+        self.still_set(tuple({self.rig.source[role]: None for role in ACTUATORS if role in self.rig.source}))
+
+    def still_set(self, names: tuple[str, ...]) -> None:
+        """Ask `names`, side by side, whether they are as they were set. InstrumentRefused for one that restarted or was
+        turned by hand: its settings are lost. Spoiled for a drive that is off by itself (its heartbeat lapsed)."""
+        rig = self.rig
+        found = rig.ask({name: rig.adapters[name].settings() for name in names}, BOUNDS["exchange_s"], self.watch.look)
+        settings = {name: value_of(name, result) for name, result in found.items()}
+        for name, now in settings.items():
+            restarted(name, now)
+            if name == rig.source.get("supply"):
+                changed(name, self.supply_set, now)
+            elif name != rig.source["drive"]:
+                changed(name, rig.settings[name], now)
+        drive = settings.get(rig.source["drive"], {})
+        if rig.guard.on and drive.get("output", "1") in ("0", "OFF"):
             raise Spoiled("heartbeat: the drive switched itself off during the hold, the host was silent for too long")
 
     def _stopped(self, track: Track, exposed: float, done: Performed) -> None:
         self.still_driven()
-        drive_off(self.rig)
+        self.off()
         done.verdict, done.exposed_s, done.restarts = Verdict.STOPPED, exposed, track.restarts
         if track.stopped_at is None:
             # It stopped (or stayed at rest) before a speed could be told: known up to the last edge only.

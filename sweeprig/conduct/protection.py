@@ -15,6 +15,10 @@ from sweeprig.quantities import Reading, show_quantity
 NO_READING = "no_reading"
 """The rule of a protected channel that fell silent."""
 
+TELLING = frozenset({"no_data:no_edges", "no_data:overload"})
+"""No value, and yet a reading: the rotor rests; more than the range (judged as above). Any other one without a value
+says nothing, and the channel's age goes on: an ammeter that answers "no value" all night protects nothing."""
+
 
 @dataclass(frozen=True, slots=True)
 class Trip:
@@ -116,7 +120,8 @@ class Guard:
                 trip = policy.judge(reading)
                 if trip is not None and self.trip is None:
                     self.trip = trip
-                self._ages[channel] = reading.at
+                if reading.value is not None or not TELLING.isdisjoint(reading.flags):
+                    self._ages[channel] = reading.at
         if self.on:
             self._set_due()
 

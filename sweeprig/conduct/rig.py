@@ -23,6 +23,7 @@ from sweeprig.link.link import Link
 from sweeprig.link.together import Result, together
 from sweeprig.quantities import Reading
 from sweeprig.roles import (
+    ACTUATORS,
     Adapter,
     AdapterSetup,
     Drive,
@@ -68,6 +69,8 @@ class OpenRig:
     guard: Guard
     traffic: Traffic | None = None
     identities: dict[str, Identity] = field(default_factory=dict)
+    settings: dict[str, dict[str, str]] = field(default_factory=dict)
+    """Instrument → what it said of itself when it was last configured."""
 
     @property
     def drive(self) -> Drive:
@@ -77,6 +80,11 @@ class OpenRig:
     def supply(self) -> Supply | None:
         name = self.source.get("supply")
         return None if name is None else cast(Supply, self.adapters[name])
+
+    @property
+    def off_is_supply_off(self) -> bool:
+        """A control input that is let go means full speed: such a fan is off without supply only."""
+        return self.use.rig.drive_kind == "control_input"
 
     @property
     def rotation_channel(self) -> str:
@@ -94,6 +102,17 @@ class OpenRig:
     def tell(self, name: str, steps: Steps[Any], look: Look | None = None) -> Any:
         """Steps on one instrument; its error is raised with the instrument's name."""
         return value_of(name, self.ask({name: steps}, BOUNDS["exchange_s"], look)[name])
+
+    def ask_off(self, roles: Iterable[str]) -> dict[str, Result]:
+        """Switch off, on every link that is there, at once and blind where it must be; one result each, none raised.
+
+        What listens to the traffic may be what failed: when it raises, everything is sent again without it."""
+        names = dict.fromkeys(self.source[role] for role in roles if self.source.get(role) in self.links)
+        try:
+            return self.ask({name: self.adapters[name].switch_off() for name in names}, BOUNDS["off_s"])
+        except Exception:  # noqa: BLE001 - whatever a listener raises, the drive goes off
+            self.traffic = None
+            return self.ask({name: self.adapters[name].switch_off() for name in names}, BOUNDS["off_s"])
 
     def read(self, names: Iterable[str], window: Window, look: Look) -> dict[str, Reading]:
         """One cycle: all `names` measure side by side over one window. Every reading passes the guard as it comes."""
@@ -152,15 +171,26 @@ def open_rig(
 ) -> OpenRig:
     """Build the adapters, open the links, ask everyone who they are. Nothing is set yet.
 
+    Drive and supply come first and are told to be off before anything else is waited for: whoever drove this rig
+    before may have left it driving. What they answer is not looked at here; off is proved when the session opens.
+
     `ports`: the in-process ports of a simulated bench, for `simbench:` addresses. A failed opening closes all.
     """
     rig = assemble(use, clock, traffic)
     try:
-        for name in rig.adapters:
+        actuators = {rig.source[role]: None for role in ACTUATORS if role in rig.source}
+        for name in actuators:
             open_link(rig, name, ports)
+        rig.ask_off(ACTUATORS)
+        for name in rig.adapters:
+            if name not in actuators:
+                open_link(rig, name, ports)
         identify(rig, rig.adapters)
     except BaseException:
-        rig.close()
+        try:
+            rig.ask_off(ACTUATORS)
+        finally:
+            rig.close()
         raise
     return rig
 
@@ -254,7 +284,14 @@ def identify(rig: OpenRig, names: Iterable[str]) -> None:
             elif not isinstance(error, LinkError) or rig.clock.now() >= until:
                 raise named(name, error)
             else:
-                rig.links[name].resynchronise(rig.clock.now() + BOUNDS["open_s"])
+                _resynchronise(rig, name)
+
+
+def _resynchronise(rig: OpenRig, name: str) -> None:
+    try:
+        rig.links[name].resynchronise(rig.clock.now() + BOUNDS["open_s"])
+    except LinkError as error:
+        raise named(name, error) from error
 
 
 def configure(rig: OpenRig) -> dict[str, dict[str, str]]:
@@ -263,7 +300,8 @@ def configure(rig: OpenRig) -> dict[str, dict[str, str]]:
     for name, result in rig.ask({n: rig.adapters[n].configure() for n in names}, BOUNDS["configure_s"]).items():
         value_of(name, result)
     results = rig.ask({n: rig.adapters[n].settings() for n in names}, BOUNDS["configure_s"])
-    return {name: value_of(name, result) for name, result in results.items()}
+    rig.settings = {name: value_of(name, result) for name, result in results.items()}
+    return rig.settings
 
 
 def same_instruments(rig: OpenRig, saved: Mapping[str, Identity]) -> None:

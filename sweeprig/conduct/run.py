@@ -5,17 +5,17 @@ In process and, later, inside the runner process: the same loop, the same events
 
 from __future__ import annotations
 
-import contextlib
 from dataclasses import dataclass, replace
 
+from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.conduct.heal import broken, heal
 from sweeprig.conduct.perform import Performed, Performer, Spoiled
 from sweeprig.conduct.protection import NO_READING
-from sweeprig.conduct.rig import OpenRig, configure
+from sweeprig.conduct.rig import OpenRig
 from sweeprig.conduct.states import Event, OnEvent, Orders, State
-from sweeprig.conduct.switch_off import prove_off, switch_off
+from sweeprig.conduct.switch_off import drive_off, prove_off, switch_off
 from sweeprig.conduct.watchman import MachineSlept, OffOrdered, TripSeen, Watchman
-from sweeprig.errors import LinkError, OffNotProved, RigError
+from sweeprig.errors import LinkError, RigError
 from sweeprig.holds import Decision, Finished, Hold, NeedsPerson, Outcome, Status, Verdict
 from sweeprig.logbook import Logbook
 from sweeprig.plan import Plan
@@ -60,13 +60,11 @@ class _Session:
 
     def open(self) -> None:
         """Everyone is identified (by `open_rig`): configure, prove off, conclude what an earlier session left."""
+        switch_off(self.rig)  # before anyone is told that the drive is off
         self.tell("session", session=self.session, simulated=self.rig.simulated)
-        self.enter(State.PROVING_OFF)
-        switch_off(self.rig)
-        settings = configure(self.rig)
+        self._heal("links broke while the rig was made ready")
         for name, identity in self.rig.identities.items():
-            self.logbook.instrument(self.session, name, identity, settings[name], self.clock.now())
-        self._off(told=True)
+            self.logbook.instrument(self.session, name, identity, self.rig.settings[name], self.clock.now())
         self._conclude_abandoned()
 
     def _conclude_abandoned(self) -> None:
@@ -92,9 +90,9 @@ class _Session:
                 return Ending(State.FINISHED, decision.reason)
             if isinstance(decision, NeedsPerson):
                 return Ending(State.WAITING_FOR_PERSON, f"{decision.what} ({decision.why})")
-            if self.orders.finish:
+            if self.orders.finish or self.orders.off:
                 return Ending(State.PARKED, "stopped by request after a completed hold")
-            ending = self._one(decision)
+            ending = self._one(decision) or self._hopeless()
             if ending is not None:
                 return ending
 
@@ -107,11 +105,7 @@ class _Session:
         done = Performed()
         status, reason, ending, failed = Status.DONE, "", None, False
         try:
-            self.performer.perform(hold, done)
-            self.performer.still_driven()
-        except Spoiled as spoiled:
-            status, reason = Status.DISCARDED, str(spoiled)
-            self._drive_is_off()
+            status, reason = self._perform(hold, done)
         except MachineSlept:
             status, reason, failed = (
                 Status.DISCARDED,
@@ -139,9 +133,43 @@ class _Session:
             self._heal(f"a hold was discarded: {reason}")
         return ending
 
+    def _hopeless(self) -> Ending | None:
+        """Parked when hold after hold is discarded: no repeat will mend that. Healing counts anew after good holds."""
+        in_a_row = 0
+        for outcome in reversed(self.outcomes):
+            if outcome.session != self.session or outcome.status is not Status.DISCARDED:
+                break
+            in_a_row += 1
+        if in_a_row >= BOUNDS["discards_in_a_row"]:
+            return Ending(
+                State.PARKED, f"{in_a_row} holds in a row were discarded, the last one: {self.outcomes[-1].reason}"
+            )
+        good = self.outcomes[-int(BOUNDS["heal_forgets_after"]) :]
+        if all(outcome.status is Status.DONE for outcome in good):
+            self.healed.clear()
+        return None
+
+    def _perform(self, hold: Hold, done: Performed) -> tuple[Status, str]:
+        """A hold counts only when every instrument is still as it was set at its end; one that is not is also what
+        spoils holds, and must not be taken for a motor that does not turn."""
+        try:
+            self.performer.perform(hold, done)
+        except Spoiled as spoiled:
+            self._drive_is_off()
+            self.performer.still_set(tuple(self.rig.adapters))
+            return Status.DISCARDED, str(spoiled)
+        try:
+            self.performer.still_set(tuple(self.rig.adapters))
+        except Spoiled as spoiled:
+            self._drive_is_off()
+            return Status.DISCARDED, str(spoiled)
+        return Status.DONE, ""
+
     def _conclude(
         self, hold: Hold, done: Performed, status: Status, reason: str, began: float, began_utc: float
     ) -> None:
+        if status is not Status.DONE:
+            done.verdict = Verdict.UNDECIDED
         outcome = Outcome(
             hold.number, hold, self.session, status, done.verdict, began, self.clock.now(), began_utc, self.clock.utc(),
             done.exposed_s, done.event_between_s, done.restarts, done.means, done.flags, reason,
@@ -159,35 +187,55 @@ class _Session:
     def _off_now(self) -> None:
         """At once, without the proof: the links may be broken; the proof comes with healing or at the end."""
         off = switch_off(self.rig)
-        self.performer.supply_v = None
+        self.performer.unpowered()
         self.tell("off", proved=False, took_s=off.took_s, told=list(off.told), silent=dict(off.silent))
 
     def _drive_is_off(self) -> None:
         if self.rig.guard.on:
             self._off_now()
 
-    def _off(self, told: bool = False) -> None:
-        """Off and proved."""
-        began = self.clock.now()
-        if not told:
-            switch_off(self.rig)
-        self.performer.supply_v = None
-        prove_off(self.rig)
-        self.tell("off", proved=True, took_s=self.clock.now() - began)
-
     def _heal(self, reason: str) -> None:
-        self.tell("link", instrument="", what=reason)
+        """Links back, settings applied, off proved. `reason` is told when there is a link to bring back."""
+        began = self.clock.now()
+        self.performer.unpowered()
+        self.enter(State.PROVING_OFF)
+        before = broken(self.rig)
+        if before:
+            self.tell("link", instrument=", ".join(before), what=reason)
         for name in heal(self.rig, self.healed):
             self.tell("link", instrument=name, what="the link is back, same instrument, settings applied, off proved")
         self.rig.guard.trip = None
+        self.tell("off", proved=True, took_s=self.clock.now() - began)
 
     def close(self) -> None:
         """The last act of every session. A wait that was broken off leaves links dirty: they are brought back, so that
         off can be proved and not only told."""
+        began = self.clock.now()
         switch_off(self.rig)
-        if broken(self.rig):
+        self.enter(State.PROVING_OFF)
+        try:
+            drive_off(self.rig, supply_too=True)
+            prove_off(self.rig)
+        except RigError:
+            if not broken(self.rig):
+                raise
             self._heal("links were left in the middle of an exchange")
-        self._off(told=True)
+        else:
+            self.tell("off", proved=True, took_s=self.clock.now() - began)
+
+    def leave(self, first: BaseException) -> None:
+        """Something escaped: off all the same. It may be the listener that failed, so nobody listens any more; what
+        goes wrong now is a note on the first error, which is the one to show."""
+        self.on_event = _nobody
+        try:
+            self.close()
+        except BaseException as second:  # noqa: BLE001 - also an impatient interrupt: the drive goes off first
+            switch_off(self.rig)
+            first.add_note(f"and then, while switching off: {second or type(second).__name__}")
+
+
+def _nobody(event: Event) -> None:
+    del event
 
 
 def run(plan: Plan, rig: OpenRig, logbook: Logbook, session: int, on_event: OnEvent, orders: Orders) -> Ending:
@@ -200,11 +248,13 @@ def run(plan: Plan, rig: OpenRig, logbook: Logbook, session: int, on_event: OnEv
     try:
         at_work.open()
         ending = at_work.work()
-    except BaseException:
-        # Whatever it is, the drive goes off first; the first error is the one to show.
-        with contextlib.suppress(RigError, OffNotProved):
-            at_work.close()
+    except BaseException as first:
+        at_work.leave(first)
         raise
-    at_work.close()
+    try:
+        at_work.close()
+    except BaseException:
+        switch_off(rig)
+        raise
     at_work.enter(ending.state, reason=ending.reason)
     return ending

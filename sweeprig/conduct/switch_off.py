@@ -6,7 +6,7 @@ Sent blind where it must be: also on a link that is dirty or has not yet said wh
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.conduct.rig import OpenRig, by_channel
@@ -28,9 +28,8 @@ def switch_off(rig: OpenRig, supply_too: bool = True) -> Off:
     """Tell drive (and supply) to be off, all links at once. Never raises: what did not answer is in the result."""
     began = rig.clock.now()
     roles = ("drive", "supply") if supply_too else ("drive",)
-    names = [rig.source[role] for role in roles if role in rig.source and rig.source[role] in rig.links]
     try:
-        results = rig.ask({name: rig.adapters[name].switch_off() for name in names}, BOUNDS["off_s"])
+        results = rig.ask_off(roles)
     finally:
         rig.guard.drive_off()
     silent = {name: str(result.error) for name, result in results.items() if result.error is not None}
@@ -38,11 +37,15 @@ def switch_off(rig: OpenRig, supply_too: bool = True) -> Off:
     return Off(told, silent, rig.clock.now() - began)
 
 
-def drive_off(rig: OpenRig) -> None:
-    """The drive off between holds, supply left on; raises when it does not confirm."""
-    off = switch_off(rig, supply_too=False)
+def drive_off(rig: OpenRig, supply_too: bool = False) -> None:
+    """The drive off between holds, supply left on unless it is meant too; raises when one does not confirm."""
+    off = switch_off(rig, supply_too or rig.off_is_supply_off)
     for name, why in off.silent.items():
-        raise OffNotProved(f"the drive '{name}' did not confirm that it is off: {why}", topic="safety")
+        raise OffNotProved(
+            f"'{name}' did not confirm that it is off: {why}",
+            remedy="cut the supply by hand before touching anything, then look at the link and the instrument",
+            topic="safety",
+        )
 
 
 def prove_off(rig: OpenRig) -> dict[str, Reading]:
@@ -51,7 +54,7 @@ def prove_off(rig: OpenRig) -> dict[str, Reading]:
     A spinning motor is still a generator: voltage and speed get `coast_s` to die down, and must not rise meanwhile.
     """
     until = rig.clock.now() + BOUNDS["coast_s"]
-    roles = [role for role in ("speed", "motor_voltage", "current") if role in rig.source]
+    roles = [role for role in ("speed", "motor_voltage", "current", "supply") if role in rig.source]
     while True:
         readings = _read_blind(rig, roles)
         wrong = still_on(rig, readings)
@@ -69,18 +72,30 @@ def still_on(rig: OpenRig, readings: Mapping[str, Reading]) -> list[str]:
     """What contradicts "off", in words; empty when nothing does."""
     wrong = []
     for role, limit in (("motor_voltage", BOUNDS["off_volts"]), ("current", BOUNDS["off_amps"])):
-        channel = rig.roles.get(role)
-        reading = None if channel is None else readings.get(channel)
+        reading = across_motor(rig, readings) if role == "motor_voltage" else readings.get(rig.roles.get(role, ""))
         if reading is None:
             continue
         value = reading.value
         if value is None or abs(value) > limit:
             shown = "more than its range" if value is None else show_quantity(value, reading.unit)
-            wrong.append(f"{channel} reads {shown} (off is below {show_quantity(limit, reading.unit)})")
+            wrong.append(f"{reading.channel} reads {shown} (off is below {show_quantity(limit, reading.unit)})")
     age = readings[rig.rotation_channel]
     if age.value is not None and age.value < BOUNDS["least_gap_s"]:
         wrong.append(f"the rotor still turns (last tachometer edge {age.value:.2f} s ago)")
     return wrong
+
+
+def across_motor(rig: OpenRig, readings: Mapping[str, Reading]) -> Reading | None:
+    """The motor's voltage: as read, or from the switch node as supply less node (the motor hangs on the supply's plus).
+
+    None where it was not read, or where the node was and nobody reads the supply."""
+    reading = readings.get(rig.roles.get("motor_voltage", ""))
+    if reading is None or rig.use.rig.voltage_at != "switch_node":
+        return reading
+    supply = readings.get(f"{rig.source.get('supply', '')}.volts")
+    if supply is None or supply.value is None or reading.value is None:
+        return reading if reading.value is None else None
+    return replace(reading, value=supply.value - reading.value, channel=f"{supply.channel} less {reading.channel}")
 
 
 def _read_blind(rig: OpenRig, roles: Sequence[str]) -> dict[str, Reading]:

@@ -54,7 +54,7 @@ def over_link(link: Link, clock: Clock) -> Exchange:
             clock.wait(last + ask.after_s)
         one: dict[str, tuple[Link, Steps[Answer]]] = {"instrument": (link, _one(ask))}
         answer: Answer = together(one, clock, clock.now() + ask.within_s)["instrument"].get()
-        if ask.early and ask.reply is Reply.LINE:
+        if ask.early and ask.reply in (Reply.LINE, Reply.STREAM):
             link.identified = True
         last = answer.at
         return answer

@@ -25,7 +25,8 @@ def identity_is_asked_first_early_and_alone(bed: Bed) -> str:
     watch = Watch(bed.exchange())
     identity = perform(bed.adapter().identify(), watch)
     need(len(watch.asks) == 1, f"identify sends {len(watch.asks)} messages")
-    need(watch.asks[0].early and watch.asks[0].reply is Reply.LINE, f"not an early query: {watch.asks[0]}")
+    asked = watch.asks[0].reply in (Reply.LINE, Reply.STREAM)
+    need(watch.asks[0].early and asked, f"not an early query: {watch.asks[0]}")
     need(isinstance(identity, Identity), f"identify returned {identity!r}")
     return f"{identity.maker}, {identity.model}, serial {identity.serial}"
 
@@ -48,7 +49,8 @@ def asks_are_bounded(bed: Bed) -> str:
 
 def messages_are_clean(bed: Bed) -> str:
     for method, ask in _all_asks(bed):
-        clean = bool(ask.message) and all(0x20 <= byte <= 0x7E for byte in ask.message)
+        said = bool(ask.message) or ask.reply is Reply.STREAM
+        clean = said and all(0x20 <= byte <= 0x7E for byte in ask.message)
         need(clean, f"{method}: {ask.message!r} has bytes that are not printable ASCII")
     return "printable ASCII only, terminators left to the link"
 
@@ -268,7 +270,7 @@ def _replies_of_measure(bed: Bed) -> list[int]:
     adapter, exchange = bed.ready()
     watch = Watch(exchange)
     perform(adapter.measure(bed.window), watch)
-    return [index for index, ask in enumerate(watch.asks) if ask.reply is Reply.LINE]
+    return [index for index, ask in enumerate(watch.asks) if ask.reply in (Reply.LINE, Reply.STREAM)]
 
 
 def _spoilt(bed: Bed, which: int, spoil: Callable[[bytes], bytes]) -> str:

@@ -11,9 +11,11 @@ from collections.abc import Iterator
 from sweeprig.errors import ConfigError, RoleMissing
 from sweeprig.job.amounts import shown
 from sweeprig.job.freeze import curve_low
+from sweeprig.job.kind_checks import kind_checks
 from sweeprig.job.models import Job
 from sweeprig.job.motor_models import FINDING_UNITS
 from sweeprig.job.problems import Sources, misfit
+from sweeprig.job.simulated_models import BrushedValues, SimulatedElectronic
 from sweeprig.job.toml_source import KeyPath
 from sweeprig.job.wiring_checks import wiring_checks
 
@@ -25,7 +27,7 @@ _SLACK = 1.0 + 1e-9  # 5 × 0.6 s must not fail for its last bit
 
 def cross_checks(job: Job, sources: Sources) -> list[ConfigError]:
     """All that does not fit, the rig's wiring first; empty when the job may be run."""
-    checks = (wiring_checks, _roles, _voltages, _duties, _curve, _times, _limits, _findings, _deadline)
+    checks = (wiring_checks, _roles, _voltages, _duties, _curve, _times, _limits, _findings, _deadline, kind_checks)
     return [error for check in checks for error in check(job, sources)]
 
 
@@ -203,11 +205,12 @@ def _limits(job: Job, sources: Sources) -> Iterator[ConfigError]:
             "State the slowest speed that still counts as turning",
         )  # fmt: skip
     true = job.motor.simulated
-    if true is not None and true.breakaway_friction_nm < true.running_friction_nm:
+    rough = true if isinstance(true, BrushedValues | SimulatedElectronic) else None
+    if rough is not None and rough.breakaway_friction_nm < rough.running_friction_nm:
         yield misfit(
             sources, ("motor", "simulated", "breakaway_friction_nm"),
             "a rotor sticks at least as hard at rest as turning",
-            f"{true.running_friction_nm:g} or more (running_friction_nm)", "Raise it",
+            f"{rough.running_friction_nm:g} or more (running_friction_nm)", "Raise it",
         )  # fmt: skip
 
 

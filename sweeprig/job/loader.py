@@ -17,6 +17,16 @@ from sweeprig.job.problems import PARTS, Sources, problems
 from sweeprig.job.rig_models import Rig
 from sweeprig.job.toml_source import Source, parse, read
 
+_MARKS = {
+    "instruments": "rig",
+    "nominal_voltage": "motor",
+    "pwm": "sweep",
+    "rig": "job",
+    "motor": "job",
+    "sweep": "job",
+}
+"""Keys that stand in one kind of file only."""
+
 
 def load(path: Path | str) -> Job:
     """Read and check the job at `path`. `rig`, `motor` and `sweep` name files relative to it, or are tables in it.
@@ -83,15 +93,30 @@ def _part(source: Source, name: str, named: str, folder: Path) -> Source:
     if not named.strip() or not named.isprintable():
         remedy = f'Write for example {name} = "{name}s/….toml"'
         raise ConfigError(f"no path of a {name} file", value=as_written(named), where=where, remedy=remedy)
-    return read(folder / named, where)
+    part = read(folder / named, where)
+    kind = _kind_of(part)
+    if kind not in (None, name):
+        raise ConfigError(
+            f"this is a {kind} file, and a {name} file is wanted",
+            value=str(folder / named),
+            where=where,
+            remedy=f'Write for example {name} = "{name}s/….toml"',
+            topic="job-files",
+        )
+    return part
+
+
+def _kind_of(source: Source) -> str | None:
+    """What kind of file this is by its telling keys; None where they do not say."""
+    found = {kind for mark, kind in _MARKS.items() if mark in source.data}
+    return found.pop() if len(found) == 1 else None
 
 
 def _refuse_parts(source: Source) -> None:
     """A rig, motor or sweep file where a job is wanted is a common slip: say so instead of listing its keys."""
     if any(name in source.data for name in PARTS):
         return
-    marks = {"instruments": "rig", "nominal_voltage": "motor", "pwm": "sweep"}
-    for mark, name in marks.items():
+    for mark, name in _MARKS.items():
         if mark in source.data:
             remedy = f"Give a job file, which names this one: {name} = …, beside the other two of {', '.join(PARTS)}"
             raise ConfigError(

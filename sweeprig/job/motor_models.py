@@ -11,6 +11,7 @@ from typing import Annotated, Literal
 from pydantic import AfterValidator, Field, PlainSerializer, PlainValidator, WithJsonSchema
 
 from sweeprig.job.amounts import Amount, Measure, Number, Strict, Words, problem, read_measure, write_measure
+from sweeprig.job.simulated_models import Simulated
 
 FINDING_UNITS = {
     "stall_duty_percent": "%", "sustain_99_duty_percent": "%", "start_duty_percent": "%",
@@ -44,30 +45,6 @@ def _known_finding(name: str) -> str:
         remedy = f'Did you mean "{near[0]}"?' if near else "Look up the name under findings"
         raise problem("no finding of that name can carry a limit", name, ", ".join(FINDING_UNITS), remedy)
     return name
-
-
-_Positive = Annotated[float, Number(0.0, 1e6, "A motor has none of nothing", above=True)]
-_OrZero = Annotated[float, Number(0.0, 1e6, "It cannot be negative")]
-_Spread = Annotated[float, Number(0.0, 50.0, "A standard deviation in percent of the mean")]
-
-
-class SimulatedMotor(Strict):
-    """The true motor of the simulated bench: bare SI numbers, each unit in its name."""
-
-    resistance_ohm: _Positive
-    inductance_henry: _Positive
-    torque_constant_nm_per_a: _Positive
-    inertia_kg_m2: _Positive
-    quadratic_load_nm_s2: _OrZero
-    viscous_friction_nm_s: _OrZero
-    running_friction_nm: _OrZero
-    running_friction_spread_percent: _Spread
-    breakaway_friction_nm: _OrZero
-    breakaway_friction_spread_percent: _Spread
-    friction_correlation_s: _Positive
-    barrier_angle_rad: _OrZero
-    thermal_resistance_k_per_w: _OrZero
-    thermal_time_constant_s: _Positive
 
 
 _Voltage = Annotated[float, Amount("V", 0.0, 100.0, "sweeprig is for small motors on extra-low voltage", above=True)]
@@ -110,4 +87,4 @@ class Motor(Strict):
     hours_before: Annotated[float, Number(0.0, 1e6, "Hours it had run before this job")] | None = None
     starts_before: Annotated[float, Number(0.0, 1e9, "Starts it had made before this job")] | None = None
     limits: dict[Annotated[str, AfterValidator(_known_finding)], FindingLimit] = Field(default_factory=dict)
-    simulated: SimulatedMotor | None = None
+    simulated: Simulated | None = None

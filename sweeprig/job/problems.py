@@ -11,7 +11,7 @@ import typing
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 
-from pydantic import BaseModel, ValidationError
+from pydantic import BaseModel, Tag, ValidationError
 from pydantic_core import ErrorDetails
 
 from sweeprig.errors import ConfigError, Where
@@ -106,21 +106,35 @@ def _line_of(error: ConfigError) -> int:
 
 
 def _path(detail: ErrorDetails) -> KeyPath:
-    """The library's location without the marks it adds for mapping keys."""
+    """The library's location without the marks it adds for mapping keys; marks of kinds stay, see `_written`."""
     return tuple(part for part in detail["loc"] if part != "[key]")
+
+
+def _is_mark(part: str | int) -> bool:
+    """The mark of one model among several, "[brushed]": it says whose keys these are and stands in no file."""
+    return isinstance(part, str) and part.startswith("[") and part.endswith("]")
+
+
+def _written(path: KeyPath) -> KeyPath:
+    """The path as the file has it."""
+    return tuple(part for part in path if not _is_mark(part))
 
 
 def _problem(detail: ErrorDetails, path: KeyPath, sources: Sources, model: type[BaseModel]) -> ConfigError:
     kind, context = detail["type"], detail.get("ctx", {})
-    where = sources.where(path)
+    where = sources.where(_written(path))
     if kind == PROBLEM:
         value, allowed, remedy = (str(context[name]) or None for name in ("value", "allowed", "remedy"))
-        value = value or sources.written(path) or None
+        value = value or sources.written(_written(path)) or None
         return ConfigError(str(context["what"]), value=value, allowed=allowed, where=where, remedy=remedy, topic=TOPIC)
     if kind == "extra_forbidden":
         return _unknown_key(path, where, model)
     if kind == "missing":
         return _missing(path, where, model)
+    if kind == "union_tag_invalid":
+        words = tuple(tag[2:-2] for tag in str(context["expected_tags"]).split(", "))  # quotes and brackets off
+        word = detail["input"]["kind"]
+        return _no_such_word(as_written(word), str(word), words, sources.where((*_written(path), "kind")))
     value = as_written(detail["input"])
     if kind == "literal_error":
         return _no_such_word(value, str(detail["input"]), _literals(model, path), where)
@@ -147,7 +161,8 @@ def _unknown_key(path: KeyPath, where: Where, model: type[BaseModel]) -> ConfigE
     holder = _model_at(model, path[:-1])
     known = list(holder.model_fields) if holder else []
     near = _nearest(model, path)
-    elsewhere = [place for place in _places(model, str(path[-1])) if place[:1] == path[:1]]
+    here = _written(path)[:-1]
+    elsewhere = [p for p in _places(model, str(path[-1])) if p[:1] == path[:1] and p[:-1] != here]
     if near is not None:
         remedy = f'Did you mean "{near}"?'
     elif elsewhere:
@@ -164,7 +179,7 @@ def _unknown_key(path: KeyPath, where: Where, model: type[BaseModel]) -> ConfigE
 
 def _missing(path: KeyPath, where: Where, model: type[BaseModel]) -> ConfigError:
     inner = _model_at(model, path)
-    name = dotted(path[-1:])
+    name = dotted(_written(path)[-1:])
     if len(path) == 1 and inner is not None:
         remedy = f'Name its file, {name} = "{name}s/….toml", or write the table [{name}]'
     elif inner is not None:
@@ -212,6 +227,9 @@ def _annotation_at(model: type[BaseModel], path: KeyPath) -> object:
     """The annotation of the value at `path`, walking through models, mappings and lists."""
     annotation: object = model
     for part in path:
+        if _is_mark(part):
+            annotation = _marked(annotation, str(part))
+            continue
         annotation = _bare(annotation)
         if isinstance(annotation, type) and issubclass(annotation, BaseModel):
             info = annotation.model_fields.get(str(part))
@@ -224,6 +242,14 @@ def _annotation_at(model: type[BaseModel], path: KeyPath) -> object:
         else:
             return None
     return annotation
+
+
+def _marked(annotation: object, mark: str) -> object:
+    """The arm of a union of models that carries `mark`."""
+    arguments = typing.get_args(annotation)
+    if any(isinstance(entry, Tag) and entry.tag == mark for entry in arguments):
+        return arguments[0]
+    return next((found for arm in arguments if (found := _marked(arm, mark)) is not None), None)
 
 
 def _bare(annotation: object) -> object:

@@ -31,6 +31,9 @@ from sweeprig.job.amounts import (
     read_measure,
     write_measure,
 )
+from sweeprig.job.fault_models import SimulatedFault
+from sweeprig.job.stage_models import SimulatedSource, SimulatedStage
+from sweeprig.job.timer_models import PwmTimer
 from sweeprig.quantities import Accuracy
 from sweeprig.roles import ACTUATORS, SENSORS
 
@@ -208,6 +211,7 @@ class Rig(Strict):
     ) = None
     drive_step: Annotated[float, Amount("%", 0.0, 10.0, "One step of the commanded duty", above=True)] | None = None
     rate: Annotated[float, Number(1.0, 1000.0, "Bench seconds in one real second")] | None = None
+    pwm_timer: PwmTimer | None = None
     limits: Limits
     roles: dict[
         Annotated[str, StringConstraints(), AfterValidator(_read_role)], Annotated[str, Words(80, ascii_only=True)]
@@ -224,6 +228,9 @@ class Rig(Strict):
             WithJsonSchema({"type": "object", "additionalProperties": {"type": ["number", "string"]}}),
         ],
     ] = Field(default_factory=dict)
+    simulated_faults: Annotated[tuple[SimulatedFault, ...], Field(max_length=64, strict=False)] | None = None
+    simulated_stage: SimulatedStage | None = None
+    simulated_source: SimulatedSource | None = None
 
     @property
     def in_process(self) -> bool:

@@ -12,14 +12,20 @@ from pydantic_core import PydanticCustomError
 
 from sweeprig.errors import ConfigError
 from sweeprig.job.amounts import Amount, as_written, shown
+from sweeprig.job.fault_checks import fault_checks
 from sweeprig.job.models import Job
 from sweeprig.job.problems import Sources, misfit
 from sweeprig.job.rig_models import Instrument
+from sweeprig.job.stage_checks import stage_checks
+from sweeprig.job.timer_models import timer_checks
 from sweeprig.job.toml_source import KeyPath
 from sweeprig.roles import ACTUATORS, UNIT_OF_ROLE
 
 SHORTEST_HEARTBEAT_S = 0.05
 """Real seconds: below this an ordinary machine's scheduling fakes a lost heartbeat."""
+
+SERVED_LINKS = "/sweeprig-served-"
+"""Begins the folder in which a served terminal that may move has the link that stays."""
 
 _HEARTBEAT = Amount("s", 0.1, 10.0, "What the board's firmware takes")
 _FIRMWARE_HEARTBEAT_S = 1.0  # drivers/firmware/README.md: the default of SYST:COMM:TIM
@@ -34,6 +40,7 @@ def wiring_checks(job: Job, sources: Sources) -> Iterator[ConfigError]:
     yield from _stated(job, sources)
     yield from _addresses(job, sources)
     yield from _heartbeat(job, sources)
+    yield from _pwm_timer(job, sources)
     yield from _simulated(job, sources)
 
 
@@ -135,7 +142,7 @@ def _served(address: str) -> bool:
     upper = address.upper()
     if upper.startswith("TCPIP"):
         return any(host in upper for host in _LOOPBACK)
-    return address.startswith(("serial:/dev/pts/", "serial:/dev/tty"))
+    return address.startswith(("serial:/dev/pts/", "serial:/dev/tty")) or SERVED_LINKS in address
 
 
 def _heartbeat(job: Job, sources: Sources) -> Iterator[ConfigError]:
@@ -167,6 +174,11 @@ def _heartbeat(job: Job, sources: Sources) -> Iterator[ConfigError]:
         yield _error(sources, ("rig", "rate"), what, allowed, "Serve the bench at a lower rate", topic="simbench")
 
 
+def _pwm_timer(job: Job, sources: Sources) -> Iterator[ConfigError]:
+    drive = job.rig.instruments.get(job.rig.roles.get("drive", ""))
+    yield from timer_checks(job.rig.pwm_timer, None if drive is None else drive.adapter, sources)
+
+
 def _simulated(job: Job, sources: Sources) -> Iterator[ConfigError]:
     """Simulated instruments turn a simulated motor; faults belong to instruments that are there."""
     if job.motor.simulated is None and any(entry.in_process for entry in job.rig.instruments.values()):
@@ -182,6 +194,8 @@ def _simulated(job: Job, sources: Sources) -> Iterator[ConfigError]:
             near = difflib.get_close_matches(name, job.rig.instruments, 1, 0.5)
             remedy = f'Did you mean "{near[0]}"?' if near else "Remove the table"
             yield _error(sources, path, f"no instrument is called {as_written(name)}", allowed, remedy)
+    yield from fault_checks(job.rig, sources)
+    yield from stage_checks(job, sources)
 
 
 def _error(sources: Sources, path: KeyPath, what: str, allowed: str, remedy: str, topic: str = "rig") -> ConfigError:

@@ -46,6 +46,7 @@ class BaseLink(ABC):
         self._blind = False
         self._owed = b""
         self._is_open = False
+        self._streams = self._headless = False
 
     @abstractmethod
     def _open(self, deadline: float) -> None: ...
@@ -82,9 +83,12 @@ class BaseLink(ABC):
         try:
             if data := self._read():
                 self._buffer += data
-            if self._buffer:
+            if reply is Reply.STREAM:
+                self._pass_over()
+            elif self._buffer:
                 blind = self._before_send(early) or blind
-            self._write(message + self._terminator, deadline)
+            if message:
+                self._write(message + self._terminator, deadline)
         except Exception as error:
             raise self._failed(error) from error
         if reply is not Reply.NOTHING:
@@ -102,12 +106,16 @@ class BaseLink(ABC):
                 return None
             buffer = self._buffer
             buffer += data
-            if self._owed or buffer[0] in b"\r\n":
+            if self._headless:
+                self._drop_tail()
+            if self._owed or (buffer and buffer[0] in b"\r\n"):
                 self._skip_empty()
             used, message = parse(awaiting, buffer)
             if message is None:
                 return None
-            if used == len(buffer):
+            if awaiting is Reply.STREAM:
+                self._pass_over(used)
+            elif used == len(buffer):
                 self._owed = still_owed(awaiting, buffer, used, message)
                 buffer.clear()
             else:
@@ -130,7 +138,12 @@ class BaseLink(ABC):
         self.open(deadline)
 
     def _fall_silent(self, deadline: float) -> None:
-        """Drain until nothing has come for QUIET_S, then begin clean. LinkLost if it never falls silent."""
+        """Drain until nothing has come for QUIET_S, then begin clean. LinkLost if it never falls silent.
+
+        An instrument that sends by itself never does, and each of its lines stands for itself: nothing to drain."""
+        if self._streams:
+            self._start_clean()
+            return
         try:
             now = self._clock.now()
             quiet_at = now + QUIET_S
@@ -165,6 +178,7 @@ class BaseLink(ABC):
         self._awaiting = None
         self._blind = False
         self._owed = b""
+        self._headless = False
         self.identified = False
         self.dirty = ""
 
@@ -221,6 +235,20 @@ class BaseLink(ABC):
     def _refuse_stray(self) -> None:
         if self._buffer:
             raise LinkGarbled(f"bytes came that nobody asked for: {show(self._buffer)}")
+
+    def _pass_over(self, used: int = 0) -> None:
+        """A stream: what has come is dropped behind the `used` bytes of a message; of a line begun, the rest too."""
+        self._streams = True
+        if len(self._buffer) > used:
+            self._headless = self._buffer[-1] not in b"\r\n"
+        self._buffer.clear()
+        self._owed = b""
+
+    def _drop_tail(self) -> None:
+        """The rest of a line whose beginning was passed over is no line."""
+        used, message = parse_line(self._buffer)
+        del self._buffer[: used if message is not None else len(self._buffer)]
+        self._headless = message is None
 
     def _skip_empty(self) -> None:
         buffer = self._buffer

@@ -18,7 +18,7 @@ Parsed = tuple[int, bytes | None]
 
 def parse(reply: Reply, buffer: Buffer) -> Parsed:
     """`parse_line` or `parse_block`, by the reply awaited (never NOTHING)."""
-    return parse_line(buffer) if reply is Reply.LINE else parse_block(buffer)
+    return parse_block(buffer) if reply is Reply.BLOCK else parse_line(buffer)
 
 
 def parse_line(buffer: Buffer, largest: int = LARGEST_LINE) -> Parsed:

@@ -193,6 +193,8 @@ class _Loop:
         if self.traffic is not None:
             self.traffic(talk.name, ">", ask.message, now)
         write_limit = now + LOOK_S
+        # Before the bytes go out: an interrupt on the next line must find the link with a reply outstanding.
+        was_awaiting, talk.awaiting = talk.awaiting, True
         try:
             talk.send(ask.message, ask.reply, until if until < write_limit else write_limit, ask.early)
         except Exception as error:  # noqa: BLE001 - a faulty link must not keep the others from switching off
@@ -203,8 +205,7 @@ class _Loop:
             self.pause(talk, now)
             return
         talk.until = until
-        if not talk.awaiting:
-            talk.awaiting = True
+        if not was_awaiting:
             self.regroup = True
 
     def pause(self, talk: _Talk, until: float) -> None:

@@ -11,7 +11,11 @@ from contextlib import closing, contextmanager
 from pathlib import Path
 
 from sweeprig.errors import DiskFull, RunError, RunInUse, Where
+from sweeprig.logbook.run_folder import runs_near
 from sweeprig.logbook.schema import APPLICATION, BUSY_MS, FORMAT
+
+MOST_NAMED = 3
+"""Runs that an error text names, newest first."""
 
 _LOCKED = (sqlite3.SQLITE_BUSY, sqlite3.SQLITE_LOCKED)
 _NOT_WRITTEN = (sqlite3.SQLITE_READONLY, sqlite3.SQLITE_IOERR, sqlite3.SQLITE_CANTOPEN, sqlite3.SQLITE_PERM)
@@ -125,7 +129,20 @@ def check_format(connection: sqlite3.Connection, path: Path) -> None:
 
 
 def require(path: Path) -> None:
-    """RunError where there is no file at `path`."""
-    if not path.is_file():
-        remedy = "Name a run folder; a run that ended before its first hold has no logbook: start it anew"
-        raise RunError("there is no logbook here", where=Where(str(path)), remedy=remedy)
+    """RunError where there is no file at `path`; the runs that lie near are named."""
+    if path.is_file():
+        return
+    folder = path.parent
+    if folder.is_dir():
+        what, where = "there is no logbook here", path
+    elif folder.exists():
+        what, where = "this is a file, and a run folder is wanted", folder
+    else:
+        what, where = "there is no such run folder", folder
+    remedy = "Name a run folder; a run that ended before its first hold has no logbook: start it anew"
+    near = runs_near(folder)
+    if near is not None:
+        place, names = near
+        more = f" and {len(names) - MOST_NAMED} older" if len(names) > MOST_NAMED else ""
+        remedy = f"Name a run folder; in {place} lie: {', '.join(names[:MOST_NAMED])}{more}"
+    raise RunError(what, where=Where(str(where)), remedy=remedy, topic="resume")

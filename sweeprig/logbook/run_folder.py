@@ -89,6 +89,25 @@ def put_in_place(beside: Path, path: Path) -> None:
         _sync_folder(path.parent)
 
 
+def folder_of(given: Path | str) -> Path:
+    """The run folder that a person means: the folder itself, or one of the run's own files in it."""
+    path = Path(given)
+    return path.parent if path.name in (LOGBOOK, JOB, FINDINGS, REPORT) else path
+
+
+def runs_near(folder: Path) -> tuple[Path, list[str]] | None:
+    """Where runs lie that may be meant instead of `folder`, and their names, newest first; None where there are none.
+
+    Looked for in `folder` itself, beside it, and in `runs` here.
+    """
+    for place in (folder, folder.parent, Path("runs")):
+        with suppress(OSError):
+            names = sorted((entry.parent.name for entry in place.glob(f"*/{LOGBOOK}")), reverse=True)
+            if names:
+                return place, names
+    return None
+
+
 class FolderLock:
     """One process at a time: an operating system's lock on `<name>.lock`, and who has it in `<name>.holder`.
 
@@ -126,6 +145,22 @@ class FolderLock:
             with suppress(OSError):
                 self._holder.unlink(missing_ok=True)
             lock.release()
+
+    def held(self) -> bool:
+        """Whether a process has the lock at this moment. Asked by taking it for an instant: never ask in a loop."""
+        from filelock import FileLock, Timeout
+
+        if not self._path.exists():
+            return False
+        lock = FileLock(self._path, thread_local=False)
+        try:
+            lock.acquire(blocking=False)
+        except Timeout:
+            return True
+        except OSError:
+            return False  # a copy in a place where nobody may write, and so nobody works on
+        lock.release()
+        return False
 
     def holder(self) -> dict[str, object]:
         """`pid` and `host` of the last holder that did not release, {} where nothing is known."""
@@ -227,4 +262,5 @@ def os_errors_at(path: Path) -> Iterator[None]:
             remedy = "Make room, or name a folder on another disk"
             raise DiskFull("the disk is full", where=where, remedy=remedy) from error
         remedy = "Name a folder on a local disk in which you may write"
-        raise RunError("this folder cannot be used", value=str(error), where=where, remedy=remedy) from error
+        value = error.strerror or str(error)
+        raise RunError("this folder cannot be used", value=value, where=where, remedy=remedy) from error

@@ -13,6 +13,8 @@ CAP_BYTES = 64_000_000
 """About one night of polling; the logbook itself has no cap."""
 
 _BUFFER = 1 << 16
+_REMEMBERED = 1 << 8
+"""Messages whose text is kept: what is asked is nearly always asked again."""
 
 
 class TrafficLog:
@@ -27,6 +29,7 @@ class TrafficLog:
         self.failed = ""
         self._file: TextIO | None = None
         self._left = 0
+        self._shown: dict[bytes, str] = {}
         try:
             self._file = path.open("a", encoding="ascii", errors="backslashreplace", newline="\n", buffering=_BUFFER)
             self._left = cap_bytes - path.stat().st_size
@@ -37,10 +40,18 @@ class TrafficLog:
         """Note one message. Never raises; buffered until `flush`."""
         if self._file is None:
             return
+        text = self._shown.get(data)
+        if text is None:
+            text = self._show(data)
+        self.line(f"{at:.4f} {name} {direction} {text}\n")
+
+    def _show(self, data: bytes) -> str:
         text = data.decode("latin-1")
         if not (text.isascii() and text.isprintable()) or "\\" in text:
             text = text.encode("unicode_escape").decode("ascii")
-        self.line(f"{at:.4f} {name} {direction} {text}\n")
+        if len(self._shown) < _REMEMBERED:
+            self._shown[data] = text
+        return text
 
     def line(self, line: str) -> None:
         """Write a finished line, or end with a note when the cap is reached."""

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import re
 from importlib.resources import files
 
 from sweeprig.errors import ConfigError
@@ -25,10 +26,23 @@ def text(topic: str) -> str:
     """The Markdown of one topic, or of the one that answers for it (`ALSO`). ConfigError for an unknown one."""
     topic = ALSO.get(topic, topic)
     if topic not in _ORDER:
-        near = difflib.get_close_matches(topic, _ORDER, n=1)
-        hint = f"Did you mean '{near[0]}'?" if near else "Run 'sweeprig manual' for the list."
+        near = difflib.get_close_matches(topic, _ORDER, n=1, cutoff=0.75)
+        pages = pages_with(topic)
+        if near:
+            hint = f"Did you mean '{near[0]}'?"
+        elif pages:
+            hint = f"The word stands in: {', '.join(pages)}"
+        else:
+            hint = "Run 'sweeprig manual' for the list"
         raise ConfigError("no such topic in the manual", value=topic, allowed=", ".join(_ORDER), remedy=hint)
     return files(__name__).joinpath(f"{topic}.md").read_text(encoding="utf-8")
+
+
+def pages_with(word: str) -> list[str]:
+    """The topics in which a word stands, most often first; equal counts in the manual's order."""
+    pattern = re.compile(rf"(?<!\w){re.escape(word)}(?!\w)", re.IGNORECASE)
+    counts = {topic: len(pattern.findall(text(topic))) for topic in _ORDER}
+    return sorted((topic for topic in _ORDER if counts[topic]), key=lambda topic: -counts[topic])
 
 
 def heading(topic: str) -> str:

@@ -17,7 +17,7 @@ from matplotlib.ticker import FixedLocator, FuncFormatter, NullLocator
 from sweeprig.holds import Approach, Condition, Outcome, Purpose, Status, Verdict
 from sweeprig.quantities import Reading, show_quantity
 from sweeprig.report import marks
-from sweeprig.report.tables import condition_label
+from sweeprig.report.tables import condition_label, telling_fields
 
 Json = Mapping[str, Any]
 K = 2.0
@@ -63,8 +63,18 @@ def thresholds(run: Any, ax: Axes | None = None) -> Axes:
     _frequency_axis(ax, frequencies)
     ax.set_ylim(bottom=0)
     _missing_note(ax, conditions)
-    ax.legend(frameon=False, fontsize=8, loc="upper left", bbox_to_anchor=(1.0, 1.0))
+    ax.legend(
+        frameon=False, fontsize=8, loc="upper left", bbox_to_anchor=(1.0, 1.0), title=_side_by_side(conditions),
+        title_fontsize=7, alignment="left",
+    )  # fmt: skip
     return ax
+
+
+def _side_by_side(conditions: Sequence[Json]) -> str | None:
+    """Which condition is which where several share a frequency, in their order from left to right."""
+    fields = [field for field in telling_fields(conditions) if field != "pwm_hz"]
+    labels = list(dict.fromkeys(condition_label(entry, fields) for entry in conditions))
+    return "left to right:\n" + "\n".join(labels) if fields and len(labels) > 1 else None
 
 
 def voltages(run: Any, ax: Axes | None = None) -> Axes:

@@ -15,6 +15,7 @@ from sweeprig.holds import (
     EndsWhen,
     Finished,
     Hold,
+    NeedsPerson,
     Outcome,
     Purpose,
     Status,
@@ -37,9 +38,9 @@ def next_hold(plan: Plan, outcomes: Sequence[Outcome], now: float) -> Decision:
     if plan.deadline_utc is not None and now >= plan.deadline_utc:
         return Finished("the deadline has come")
     number = past.highest_number + 1
-    hold = _opening(plan, past, number)
-    if hold is not None:
-        return hold
+    opening = _opening(plan, past, number)
+    if opening is not None:
+        return opening
     for condition in plan.conditions:
         tally = past.conditions.get(condition) or Tally()
         hold = (
@@ -56,19 +57,26 @@ def _offered(plan: Plan, wanted: tuple[str, ...]) -> tuple[str, ...]:
     return tuple(role for role in wanted if role in plan.roles)
 
 
-def _opening(plan: Plan, past: Tallies, number: int) -> Hold | None:
-    """The zero check and the run-in that begin every session, also after a resume: the motor has cooled."""
+def _opening(plan: Plan, past: Tallies, number: int) -> Hold | NeedsPerson | None:
+    """The zero check and the run-in that begin every session, also after a resume: the motor has cooled.
 
-    def due(purpose: Purpose) -> bool:
-        return purpose not in past.done_this_session and past.strikes_this_session.get(purpose, 0) < STRIKES
-
+    One that failed three times in the session is for a person: nothing that follows would mean anything."""
     roles, first = _offered(plan, _SENSORS), plan.conditions[0]
-    if plan.zero_time_s > 0 and due(Purpose.ZERO):
+    if plan.zero_time_s > 0 and Purpose.ZERO not in past.done_this_session:
+        if past.strikes_this_session.get(Purpose.ZERO, 0) >= STRIKES:
+            return NeedsPerson(
+                "see why the rig does not read zero with the drive off", f"the zero check failed {STRIKES} times"
+            )
         why = "Zero check: with the drive off, voltage, current and speed must read zero."
         time_s = plan.zero_time_s
         return Hold(number, Purpose.ZERO, Approach.FROM_REST, first, 0.0, time_s, time_s, EndsWhen.TIME, roles, why)
-    if plan.run_in is not None and due(Purpose.RUN_IN):
+    if plan.run_in is not None and Purpose.RUN_IN not in past.done_this_session:
         duty, time_s = plan.run_in.duty_percent, plan.run_in.time_s
+        if past.strikes_this_session.get(Purpose.RUN_IN, 0) >= STRIKES:
+            return NeedsPerson(
+                "see why the rotor does not turn: supply, wiring, switch, tachometer",
+                f"the run-in at {duty:g} % failed {STRIKES} times",
+            )
         why = f"Run-in: {time_s:g} s at {duty:g} % so that friction and winding are warm before anything counts."
         return Hold(number, Purpose.RUN_IN, Approach.FROM_REST, first, duty, time_s, time_s, EndsWhen.TIME, roles, why)
     return None

@@ -22,8 +22,14 @@ _NEEDS: dict[str, tuple[str, ...]] = {
     "start duty, start_99": ("speed",),
     "mean motor voltage and stall voltage": ("motor_voltage",),
     "current, and protection by current": ("current",),
-    "duty as measured (otherwise as commanded, and marked)": ("duty",),
+    "duty as measured": ("duty",),
     "PWM frequency as measured": ("pwm_frequency",),
+}
+
+
+_INSTEAD = {
+    "duty as measured": "; the commanded duty is taken, and marked",
+    "PWM frequency as measured": "; the commanded frequency is taken",
 }
 
 
@@ -86,7 +92,9 @@ def _what_can_be_found(plan: Plan) -> tuple[tuple[str, ...], tuple[str, ...]]:
     for what, roles in wanted.items():
         lacking = [role for role in roles if role not in plan.roles]
         if lacking:
-            missing.append(f"{what}: the rig offers no {', '.join(lacking)}")
+            shown = ", ".join(role.replace("_", " ") for role in lacking)
+            instead = _INSTEAD.get(what, "")
+            missing.append(f"{what}: no instrument of the rig has the role {shown}{instead}")
     return can, tuple(missing)
 
 

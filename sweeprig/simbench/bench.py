@@ -11,9 +11,9 @@ from itertools import count
 from typing import NamedTuple, Protocol
 
 from sweeprig.errors import SweeprigError
-from sweeprig.simbench.chopper import Wave
 from sweeprig.simbench.clock import START_UTC, BenchClock
 from sweeprig.simbench.port import Callback, Port
+from sweeprig.simbench.waveform import Waveform
 
 
 class Machine(Protocol):
@@ -28,7 +28,13 @@ class Machine(Protocol):
     @property
     def motor_volt_seconds(self) -> float: ...
     @property
+    def motor_amp_seconds(self) -> float: ...
+    @property
     def supply_amp_seconds(self) -> float: ...
+    @property
+    def switch_amp_seconds(self) -> float: ...
+    @property
+    def node_volt_seconds(self) -> float: ...
     @property
     def supply_volt_seconds(self) -> float: ...
     @property
@@ -36,7 +42,7 @@ class Machine(Protocol):
     def set_drive(self, pwm_hz: float, duty_percent: float, on: bool) -> None: ...
     def set_supply(self, volts: float, current_limit_amps: float, on: bool) -> None: ...
     def advance(self, to: float) -> None: ...
-    def wave(self) -> Wave | None: ...
+    def wave(self) -> Waveform | None: ...
     def pwm_phase_s(self) -> float: ...
 
 
@@ -60,8 +66,17 @@ class Happened(NamedTuple):
     why: str
 
 
+class Struck(NamedTuple):
+    """A simulated fault that acted: `instrument` is "" for a fault of the rig, `exchange` then 0."""
+
+    at: float
+    kind: str
+    instrument: str
+    exchange: int
+
+
 class DriveSignal:
-    """The signal at the switch's gate, as the board makes it."""
+    """The signal at the switch's gate, as the PWM source makes it that is wired to it."""
 
     def __init__(self) -> None:
         self.pwm_hz = 0.0
@@ -92,6 +107,8 @@ class Bench:
     ports        instrument name → its byte port
     record       what the drive really did, in order; the truth that tests of safety look at
     on_record    called with each new entry of `record`
+    struck       the simulated faults that acted, in order
+    gate_from    the instrument whose output is wired to the gate; "": the board, where there is one
     """
 
     def __init__(self, plant: Machine, began: float = 0.0, began_utc: float | None = None) -> None:
@@ -99,10 +116,12 @@ class Bench:
         self.now = began
         self.clock = BenchClock(self, START_UTC + began if began_utc is None else began_utc)
         self.signal = DriveSignal()
+        self.gate_from = ""
         self.instruments: dict[str, OnBench] = {}
         self.ports: dict[str, Port] = {}
         self.record: list[Happened] = []
         self.on_record: Callable[[Happened], None] | None = None
+        self.struck: list[Struck] = []
         self._queue: list[tuple[float, int, Callback, object]] = []
         self._order = count()
 

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING
 
 from sweeprig.simbench.counter import GATE_S, PWM_HZ, GateCounter, quantise
 from sweeprig.simbench.instrument import Instrument, Setup, draw_scale_error
+from sweeprig.simbench.pwm_timer import REFERENCE_DEGC
 from sweeprig.simbench.scpi import NOT_A_NUMBER, Refused, boolean, integer, nr1, nr3, number
 
 if TYPE_CHECKING:
@@ -52,9 +53,12 @@ class Board(Instrument):
     latency_s = 3e-4
     """Time for a command in the firmware; a prototype took 0.18 to 0.35 ms."""
     longest_line = 128
+    error_keys = ("timer_degc",)
 
     def __init__(self, setup: Setup, bench: Bench) -> None:
         super().__init__(setup, bench)
+        self._pwm_timer = setup.pwm_timer
+        self._timer_degc = setup.error("timer_degc", REFERENCE_DEGC)
         self._crystal = draw_scale_error(setup, "speed").gain
         self.counter = GateCounter(bench, self._crystal)
         self._pwm_hz, self._duty_percent = DEFAULT_PWM_HZ, 0.0
@@ -149,6 +153,10 @@ class Board(Instrument):
         if due > self.bench.now:
             self.bench.at(due, self._heartbeat_due, watch)
             return
+        self.lapse()
+
+    def lapse(self) -> None:
+        """The heartbeat is lost: the output goes off, an error is queued."""
         self._switch(False, "heartbeat")
         self.error(-365, "heartbeat")
 
@@ -164,6 +172,8 @@ class Board(Instrument):
 
     def _set_tap(self, parameters: tuple[str, ...]) -> None:
         self._tap = integer(parameters[0], 0, HIGHEST_TAP)
+        if self._pwm_timer is not None:
+            self._apply()
 
     def _set_output(self, parameters: tuple[str, ...]) -> None:
         on = boolean(parameters[0])
@@ -176,16 +186,28 @@ class Board(Instrument):
         self._last_valid = self.bench.now
         self._apply()
         self._watch_heartbeat()
-        self.bench.note("drive_on" if on else "drive_off", why)
+        if self._at_gate:
+            self.bench.note("drive_on" if on else "drive_off", why)
         if on:
             self.counter.start(forget=True, watch=True)
 
+    @property
+    def _at_gate(self) -> bool:
+        return self.bench.gate_from in ("", self.name)
+
     def _apply(self) -> None:
-        """Put the nearest possible frequency and duty on the pin. Another prescaler starts the intervals anew."""
+        """Put the nearest possible frequency and duty on the pin. Another prescaler starts the intervals anew.
+
+        With a timer the pin only releases its reset: what the gate sees is the timer's.
+        """
         self._timer = quantise(self._pwm_hz, self._duty_percent)
-        true_hz = self._timer.pwm_hz * self._crystal
-        self.bench.plant_now().set_drive(true_hz, self._timer.duty_percent, self._on)
-        self.bench.signal.change(self.bench.now, true_hz, self._timer.duty_percent, self._on)
+        true_hz, duty_percent = self._timer.pwm_hz * self._crystal, self._timer.duty_percent
+        if self._pwm_timer is not None:
+            true_hz = self._pwm_timer.pwm_hz(self._tap, self._timer_degc)
+            duty_percent = self._pwm_timer.duty_percent(self._tap)
+        if self._at_gate:
+            self.bench.plant_now().set_drive(true_hz, duty_percent, self._on)
+            self.bench.signal.change(self.bench.now, true_hz, duty_percent, self._on)
         if self.counter.set_clock(self._timer.clock_hz) and self.counter.running:
             self.counter.start(forget=True, watch=self._on)
 

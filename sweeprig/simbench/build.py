@@ -11,18 +11,31 @@ from dataclasses import fields
 
 from sweeprig.errors import ConfigError, UnknownAdapter
 from sweeprig.job import Job
+from sweeprig.job.simulated_models import SimulatedMotor
 from sweeprig.simbench.bench import Bench, Machine
 from sweeprig.simbench.board import Board
+from sweeprig.simbench.details import detailed_truth
+from sweeprig.simbench.faults import fit_port, with_rig_faults
+from sweeprig.simbench.generator import Generator
 from sweeprig.simbench.instrument import Instrument, Setup
+from sweeprig.simbench.kinds.choose import other_kind
 from sweeprig.simbench.motor_truth import MotorTruth
 from sweeprig.simbench.multimeter import Multimeter
+from sweeprig.simbench.pwm_timer import DRIFTS, PwmTimer
 from sweeprig.simbench.scope import Scope
+from sweeprig.simbench.sound_meter import SoundMeter
 from sweeprig.simbench.supply import Supply
+from sweeprig.simbench.tachometer import LineTachometer
+from sweeprig.simbench.thermometer import Thermometer
 
 SIMULATED_BY_ADAPTER: dict[str, type[Instrument]] = {
     "scpi-multimeter": Multimeter,
     "scpi-scope": Scope,
     "scpi-supply": Supply,
+    "scpi-generator": Generator,
+    "scpi-thermometer": Thermometer,
+    "scpi-sound-meter": SoundMeter,
+    "line-tachometer": LineTachometer,
     "board": Board,
 }
 
@@ -37,16 +50,24 @@ def build(job: Job, session: int = 1, began: float = 0.0, began_utc: float | Non
     """
     import numpy as np
 
-    from sweeprig.simbench.plant import Plant
+    from sweeprig.simbench.build_plant import plant_of
 
     rng = np.random.default_rng([job.sweep.seed, session])
-    plant = Plant(motor_truth(job), job.motor.pulses_per_revolution, rng, now=began, ripple=ripple)
+    other = other_kind(job.motor, rng, began)
+    if other is not None:
+        return assemble(job, other, session, began, began_utc)
+    plant = plant_of(job.rig, motor_truth(job), job.motor.pulses_per_revolution, rng, now=began, ripple=ripple)
     return assemble(job, plant, session, began, began_utc)
 
 
 def assemble(job: Job, plant: Machine, session: int = 1, began: float = 0.0, began_utc: float | None = None) -> Bench:
     """The rig's instruments around any plant."""
     bench = Bench(plant, began, began_utc)
+    bench.plant = with_rig_faults(job, plant, session, bench.struck)
+    bench.gate_from = gate_from(job)
+    if all(instrument.adapter != "scpi-supply" for instrument in job.rig.instruments.values()):
+        # A supply that no instrument controls was set by hand, and is on.
+        bench.plant.set_supply(job.sweep.supply[0], job.limits().current, True)
     for name, instrument in job.rig.instruments.items():
         simulated = SIMULATED_BY_ADAPTER.get(instrument.adapter)
         if simulated is None:
@@ -56,8 +77,19 @@ def assemble(job: Job, plant: Machine, session: int = 1, began: float = 0.0, beg
                 allowed=", ".join(SIMULATED_BY_ADAPTER),
                 topic="simbench",
             )
-        bench.add(simulated(setup(job, name, session), bench))
+        made = simulated(setup(job, name, session), bench)
+        fit_port(job, made, session)
+        bench.add(made)
     return bench
+
+
+def gate_from(job: Job) -> str:
+    """The instrument whose output the rig file wires to the gate; "" for the board's own pin."""
+    wired = (
+        name for name, one in job.rig.instruments.items()
+        if one.adapter == "scpi-generator" and one.connected_to == "drive_signal"
+    )  # fmt: skip
+    return next(wired, "")
 
 
 def setup(job: Job, name: str, session: int) -> Setup:
@@ -73,6 +105,24 @@ def setup(job: Job, name: str, session: int) -> Setup:
         options=instrument.options,
         errors=job.rig.simulated.get(name, {}),
         terminator=instrument.terminator_bytes,
+        pwm_timer=pwm_timer(job) if instrument.adapter == "board" else None,
+    )
+
+
+def pwm_timer(job: Job) -> PwmTimer | None:
+    """The rig's timer with digital potentiometer, its parts exactly as the rig file names them."""
+    parts = job.rig.pwm_timer
+    if parts is None:
+        return None
+    ppm, percent = DRIFTS[parts.kind]
+    return PwmTimer(
+        potentiometer_ohm=parts.potentiometer,
+        capacitor_farad=parts.capacitor_farad,
+        supply_volts=parts.supply,
+        end_ohm=parts.end_resistor,
+        diode_volts=parts.diode_drop,
+        timer_ppm_per_k=ppm,
+        timer_percent_per_volt=percent,
     )
 
 
@@ -85,4 +135,13 @@ def motor_truth(job: Job) -> MotorTruth:
             remedy="Add a [simulated] table to the motor file, or run on real instruments",
             topic="simbench",
         )
-    return MotorTruth(**{field.name: float(getattr(simulated, field.name)) for field in fields(MotorTruth)})
+    if not isinstance(simulated, SimulatedMotor):
+        raise ConfigError(
+            f"the truth of the simulated motor {job.motor.name!r} is not found by trials: they know one kind only",
+            value=simulated.kind,
+            allowed="brushed",
+            remedy="Compare with the values in its [simulated] table instead",
+            topic="simbench",
+        )
+    plain = {field.name: float(getattr(simulated, field.name)) for field in fields(MotorTruth)}
+    return detailed_truth(plain, simulated) or MotorTruth(**plain)

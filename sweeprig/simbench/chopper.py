@@ -1,12 +1,16 @@
 """One PWM period of a winding with back-EMF on a low-side switch with a freewheel diode (slow decay), exactly.
 
-Pure functions of plain floats, continuous and current-free (discontinuous) operation. No mechanics, no time series.
+Pure functions of plain floats, continuous and current-free (discontinuous) operation; the plain stage, in closed form.
+Stages with resistance, dead time or a bridge are `bridge`'s. No mechanics, no time series.
 """
 
 from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import ClassVar
+
+from sweeprig.simbench.waveform import Place, Segment, Waveform
 
 DIODE_DROP_V = 0.5
 """Forward drop of the freewheel diode (common practice, no source: a Schottky at some 100 mA)."""
@@ -33,31 +37,90 @@ class Chopper:
     crest: float
     boundary_emf: float
 
+    @property
+    def supply_volts(self) -> float:
+        """At the supply's terminals, V: this plain stage has no resistance in its leads."""
+        return self.on_volts
+
+    supply_ohms: ClassVar[float] = 0.0
+
+    def mean_current(self, emf_v: float) -> tuple[float, float]:
+        """(mean motor current in A, its derivative by the back-EMF in A/V): `wave` cut down to what the rotor needs."""
+        c = self
+        if emf_v < c.boundary_emf:
+            volts = (c.on_volts + c.diode_drop_v) * c.on_s / c.period_s - c.diode_drop_v
+            return (volts - emf_v) / c.resistance_ohm, -1.0 / c.resistance_ohm
+        if c.on_s == 0.0 or emf_v >= c.on_volts:
+            return 0.0, 0.0
+        below = emf_v + c.diode_drop_v
+        swing = (c.on_volts - emf_v) * c.rise / below
+        conduction = c.on_s + c.tau_s * math.log1p(swing)
+        slope = -c.tau_s * c.rise * (c.on_volts + c.diode_drop_v) / (below * below * (1.0 + swing))
+        scale = c.resistance_ohm * c.period_s
+        current = ((c.on_volts + c.diode_drop_v) * c.on_s - below * conduction) / scale
+        return current, -(conduction + below * slope) / scale
+
+    def mean_supply_current(self, emf_v: float) -> float:
+        """Mean supply current, A: linear in the back-EMF on either side of the boundary of conduction."""
+        c = self
+        if c.on_s == 0.0 or emf_v >= c.on_volts:
+            return 0.0
+        rising = (c.on_volts - emf_v) / c.resistance_ohm
+        valley = 0.0
+        if emf_v < c.boundary_emf:
+            valley = ((c.on_volts + c.diode_drop_v) * c.carry - emf_v - c.diode_drop_v) / c.resistance_ohm
+        return (rising * c.on_s + (valley - rising) * c.tau_s * c.rise) / c.period_s
+
+    def wave(self, emf_v: float) -> Wave:
+        return wave(self, emf_v)
+
+    def at_volts(self, volts: float) -> Chopper:
+        """The same setting on another on-voltage, V."""
+        c = self
+        boundary = (volts + c.diode_drop_v) * c.carry - c.diode_drop_v
+        return Chopper(
+            volts, c.resistance_ohm, c.tau_s, c.period_s, c.on_s, c.diode_drop_v, c.rise, c.carry, c.crest, boundary
+        )
+
+    def limited(self, emf_v: float, limit_amps: float) -> Chopper:
+        """The same setting on the lower voltage that a supply leaves when its mean current is held at the limit, A."""
+        return self.at_volts(on_volts_at_limit(self, emf_v, limit_amps))
+
 
 @dataclass(frozen=True, slots=True)
-class Wave:
-    """The periodic steady state at one back-EMF. Phase 0 is the moment the switch closes; SI units.
+class Wave(Waveform):
+    """The waveform of a chopper, in closed form.
 
     conduction_s       from phase 0 until the current is zero; the whole period in continuous operation
-    mean_motor_volts   mean over the period across the motor, with freewheel drop and the back-EMF in the gap
-    mean_supply_amps   mean over the period of what the supply gives (it flows in the on-time only)
-    mean_square_amps   mean of the squared motor current, A²: what heats the winding
     """
 
     chopper: Chopper
-    emf_v: float
     conduction_s: float
-    valley_amps: float
-    peak_amps: float
-    mean_motor_volts: float
-    mean_motor_amps: float
-    mean_supply_amps: float
-    mean_square_amps: float
+
+    @property
+    def period_s(self) -> float:
+        return self.chopper.period_s
 
     @property
     def discontinuous(self) -> bool:
         """The current is zero for a part of the period."""
         return self.conduction_s < self.chopper.period_s
+
+    def segments(self) -> tuple[Segment, ...]:
+        """On-time, freewheeling, current-free gap; the motor hangs between supply plus and the node."""
+        c, emf, gap = self.chopper, self.emf_v, self.conduction_s
+        on, tau, volts, drop = min(c.on_s, gap), c.tau_s, c.on_volts, c.diode_drop_v
+        up, down = (volts - emf) / c.resistance_ohm, -(emf + drop) / c.resistance_ohm
+        return (
+            Segment(0.0, on, up, self.valley_amps - up, tau, volts, 0.0, 0.0, 0.0, 1.0, volts, 0.0),
+            Segment(on, gap - on, down, self.peak_amps - down, tau, -drop, 0.0, volts + drop, 0.0, 0.0, volts, 0.0),
+            Segment(gap, c.period_s - gap, 0.0, 0.0, tau, emf, 0.0, volts - emf, 0.0, 0.0, volts, 0.0),
+        )
+
+    def integral(self, place: Place, phase_from_s: float, phase_to_s: float) -> float:
+        if place == "across_motor":
+            return motor_voltage_integral(self, phase_from_s, phase_to_s)
+        return Waveform.integral(self, place, phase_from_s, phase_to_s)
 
 
 def chopper(
@@ -85,13 +148,14 @@ def chopper(
 
 
 def wave(setting: Chopper, emf_v: float) -> Wave:
-    """The waveform at a back-EMF (V, zero or more). With the back-EMF at or above the supply no current flows.
+    """The waveform at a back-EMF (V). With the back-EMF at or above the supply no current flows; turned backwards
+    beyond the diode drop, the motor feeds its freewheel diode even without any on-time.
 
     The mean current follows from the mean voltage, Ī = (V̄ − E) / R: the inductance takes no mean voltage.
     """
     c, period = setting, setting.period_s
-    if c.on_s == 0.0 or emf_v >= c.on_volts:
-        return Wave(c, emf_v, 0.0, 0.0, 0.0, emf_v, 0.0, 0.0, 0.0)
+    if emf_v >= c.on_volts or (c.on_s == 0.0 and emf_v >= -c.diode_drop_v):
+        return Wave(emf_v, 0.0, 0.0, emf_v, 0.0, 0.0, 0.0, c, 0.0)
     r, tau = c.resistance_ohm, c.tau_s
     if emf_v < c.boundary_emf:
         valley = ((c.on_volts + c.diode_drop_v) * c.carry - emf_v - c.diode_drop_v) / r
@@ -106,7 +170,7 @@ def wave(setting: Chopper, emf_v: float) -> Wave:
     falling = -(emf_v + c.diode_drop_v) / r
     supply = (rising * c.on_s + (valley - rising) * tau * c.rise) / period
     square = _square(rising, valley - rising, c.on_s, tau) + _square(falling, peak - falling, freewheel, tau)
-    return Wave(c, emf_v, conduction, valley, peak, volts, (volts - emf_v) / r, supply, square / period)
+    return Wave(emf_v, valley, peak, volts, (volts - emf_v) / r, supply, square / period, c, conduction)
 
 
 def _square(level: float, start: float, seconds: float, tau: float) -> float:
@@ -116,32 +180,13 @@ def _square(level: float, start: float, seconds: float, tau: float) -> float:
 
 
 def mean_current(setting: Chopper, emf_v: float) -> tuple[float, float]:
-    """(mean motor current in A, its derivative by the back-EMF in A/V): `wave` cut down to what the rotor needs."""
-    c = setting
-    if emf_v < c.boundary_emf:
-        volts = (c.on_volts + c.diode_drop_v) * c.on_s / c.period_s - c.diode_drop_v
-        return (volts - emf_v) / c.resistance_ohm, -1.0 / c.resistance_ohm
-    if c.on_s == 0.0 or emf_v >= c.on_volts:
-        return 0.0, 0.0
-    below = emf_v + c.diode_drop_v
-    swing = (c.on_volts - emf_v) * c.rise / below
-    conduction = c.on_s + c.tau_s * math.log1p(swing)
-    slope = -c.tau_s * c.rise * (c.on_volts + c.diode_drop_v) / (below * below * (1.0 + swing))
-    scale = c.resistance_ohm * c.period_s
-    current = ((c.on_volts + c.diode_drop_v) * c.on_s - below * conduction) / scale
-    return current, -(conduction + below * slope) / scale
+    """(mean motor current in A, its derivative by the back-EMF in A/V)."""
+    return setting.mean_current(emf_v)
 
 
 def mean_supply_current(setting: Chopper, emf_v: float) -> float:
-    """Mean supply current, A: linear in the back-EMF on either side of the boundary of conduction."""
-    c = setting
-    if c.on_s == 0.0 or emf_v >= c.on_volts:
-        return 0.0
-    rising = (c.on_volts - emf_v) / c.resistance_ohm
-    valley = 0.0
-    if emf_v < c.boundary_emf:
-        valley = ((c.on_volts + c.diode_drop_v) * c.carry - emf_v - c.diode_drop_v) / c.resistance_ohm
-    return (rising * c.on_s + (valley - rising) * c.tau_s * c.rise) / c.period_s
+    """Mean supply current, A."""
+    return setting.mean_supply_current(emf_v)
 
 
 def on_volts_at_limit(setting: Chopper, emf_v: float, limit_amps: float) -> float:

@@ -39,14 +39,14 @@ class WanderingFriction:
     process", from memory): x ← e^(−Δ/τ)·x + sqrt(1 − e^(−2Δ/τ))·n.
     """
 
-    __slots__ = ("_carry", "_cell_s", "_draw", "_fresh", "_scale", "_sigma", "_tau", "_x", "torque")
+    __slots__ = ("_carry", "_cell_s", "_draw", "_fresh", "_mean_scale", "_scale", "_sigma", "_tau", "_x", "torque")
 
     def __init__(
         self, mean_nm: float, spread_percent: float, correlation_s: float, cell_s: float, draw: Callable[[], float]
     ) -> None:
         variance = math.log1p((spread_percent / 100.0) ** 2)
         self._sigma = math.sqrt(variance)
-        self._scale = mean_nm * math.exp(-0.5 * variance)
+        self._scale = self._mean_scale = mean_nm * math.exp(-0.5 * variance)
         self._tau = correlation_s
         self._cell_s = cell_s
         self._carry = math.exp(-cell_s / correlation_s)
@@ -68,3 +68,8 @@ class WanderingFriction:
             self._x = math.exp(-gap) * self._x + math.sqrt(-math.expm1(-2.0 * gap)) * self._draw()
             self.torque = self._scale * math.exp(self._sigma * self._x)
         return self.torque
+
+    def rescale(self, factor: float) -> None:
+        """From now on the mean torque is `factor` times the one it began with; the wandering goes on as it was."""
+        self._scale = self._mean_scale * factor
+        self.torque = self._scale * math.exp(self._sigma * self._x)

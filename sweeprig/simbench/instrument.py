@@ -7,13 +7,14 @@ from __future__ import annotations
 
 import random
 from collections import deque
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, TypeVar
 
 from sweeprig.errors import ConfigError
 from sweeprig.quantities import Accuracy
-from sweeprig.simbench.port import Port
+from sweeprig.simbench.port import Port, Receiver
+from sweeprig.simbench.pwm_timer import PwmTimer
 from sweeprig.simbench.scpi import (
     CommandTree,
     Later,
@@ -28,6 +29,8 @@ from sweeprig.simbench.scpi import (
 
 if TYPE_CHECKING:
     from sweeprig.simbench.bench import Bench
+
+PortKind = TypeVar("PortKind", bound=Port)
 
 MAKER = "SIMULATED"
 FIRMWARE = "1.0"
@@ -52,6 +55,7 @@ class Setup:
     errors_rng    seeded by (sweep seed, name): the same instrument in every session
     noise         seeded by (sweep seed, session, name): never the same noise twice
     terminator    that ends its messages and answers
+    pwm_timer     for the board: the timer whose potentiometer it steps; then the gate is the timer's, not the pin's
     """
 
     name: str
@@ -63,6 +67,7 @@ class Setup:
     options: Mapping[str, object] = field(default_factory=dict)
     errors: Mapping[str, float] = field(default_factory=dict)
     terminator: bytes = b"\n"
+    pwm_timer: PwmTimer | None = None
 
     def error(self, key: str, default: float) -> float:
         return float(self.errors.get(key, default))
@@ -134,6 +139,7 @@ class Instrument:
     changes      state-changing message units obeyed so far; queries do not count
     quantities   what it measures with a gain and an offset error
     error_keys   further keys that its `[simulated.NAME]` table may have
+    hasty        says that operations are complete before they are; a fault sets it
     """
 
     model = "instrument"
@@ -150,9 +156,8 @@ class Instrument:
         self.bench = bench
         self.changes = 0
         self.tree = CommandTree()
-        self.port = Port(
-            bench, self, setup.error("latency", self.latency_s), self.byte_s, self.longest_line, setup.terminator
-        )
+        self.port = self.new_port(Port, self)
+        self.hasty = False
         self._programs: dict[bytes, tuple[Unit, ...]] = {}
         self._waiting: _Waiting | None = None
         self._held: deque[bytes] = deque()
@@ -162,6 +167,11 @@ class Instrument:
         self._event_enable = 0
         self._service_enable = 0
         self._add_common()
+
+    def new_port(self, kind: Callable[..., PortKind], receiver: Receiver) -> PortKind:
+        """A port with this instrument's latency, line and terminator, in front of `receiver`."""
+        latency_s = self.setup.error("latency", self.latency_s)
+        return kind(self.bench, receiver, latency_s, self.byte_s, self.longest_line, self.setup.terminator)
 
     # what subclasses say
 
@@ -304,7 +314,7 @@ class Instrument:
         return status | (64 if status & self._service_enable else 0)
 
     def _operation_complete(self, _: tuple[str, ...]) -> None:
-        until = self.pending_until()
+        until = 0.0 if self.hasty else self.pending_until()
         if until <= self.bench.now:
             self._complete(None)
         else:
@@ -314,7 +324,7 @@ class Instrument:
         self._event_status |= OPERATION_COMPLETE
 
     def _when_complete(self, answer: str | None) -> str | Later | None:
-        until = self.pending_until()
+        until = 0.0 if self.hasty else self.pending_until()
         return answer if until <= self.bench.now else Later(until, lambda: answer)
 
     def _next_error(self, _: tuple[str, ...]) -> str:

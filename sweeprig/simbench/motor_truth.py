@@ -8,6 +8,10 @@ from __future__ import annotations
 from dataclasses import dataclass, fields
 
 from sweeprig.errors import ConfigError
+from sweeprig.simbench.cogging import Cogging
+from sweeprig.simbench.drift import Drift
+from sweeprig.simbench.heat import TwoBodies
+from sweeprig.simbench.load import Load
 
 _MAY_BE_ZERO = (
     "quadratic_load_nm_s2", "viscous_friction_nm_s", "running_friction_nm", "running_friction_spread_percent",
@@ -47,7 +51,7 @@ class MotorTruth:
 
     def __post_init__(self) -> None:
         """ConfigError for a negative value, or a zero where the physics would divide by it."""
-        for field in fields(self):
+        for field in fields(MotorTruth):
             value: float = getattr(self, field.name)
             zero_is_fine = field.name in _MAY_BE_ZERO
             if not (value > 0.0 or (value == 0.0 and zero_is_fine)):
@@ -57,3 +61,16 @@ class MotorTruth:
                     allowed="zero or more" if zero_is_fine else "more than zero",
                     remedy="Correct the [simulated] table of the motor file",
                 )
+
+
+@dataclass(frozen=True, slots=True)
+class DetailedTruth(MotorTruth):
+    """A brushed motor whose mechanics or heat are known more closely; each part is a table under `[simulated]`.
+
+    heat      in place of the two thermal values above; cogging in place of the rough spots and their barrier angle
+    """
+
+    heat: TwoBodies | None = None
+    cogging: Cogging | None = None
+    load: Load | None = None
+    drift: Drift | None = None

@@ -13,10 +13,11 @@ from dataclasses import dataclass
 import numpy as np
 
 from sweeprig.errors import SweeprigError
-from sweeprig.simbench.chopper import Chopper, Wave, chopper, mean_current, mean_supply_current, on_volts_at_limit, wave
 from sweeprig.simbench.friction import WanderingFriction, normal_source
 from sweeprig.simbench.motor_truth import MotorTruth
 from sweeprig.simbench.rotor import Motion, after, caught, motion, starts, time_to_stop, time_to_turn
+from sweeprig.simbench.stage import PlainLowSide, Setting, Stage
+from sweeprig.simbench.waveform import Waveform
 
 CELL_S = 0.02
 """Grid of the random friction and of the look whether the rotor is caught or starts."""
@@ -45,11 +46,15 @@ class Plant:
     rng      draws the frictions; give the plant a generator of its own, for it draws ahead in blocks
     now      run clock at the beginning, s
     ripple   False: the peak torque is the mean torque, as if the current were smooth (for tests of the trend)
+    stage    the power stage and its supply; without it the plain low-side switch on an ideal supply
 
     Attributes to read: `now`, `pwm_hz`, `duty_percent`, `drive_on` (the gate signal, as commanded), `supply_volts`,
     `supply_current_limit_amps`, `supply_on`; and, as of the last cell edge, `turning`, `stops` and `stopped_at` (how
     often, and when last, the rotor came to rest; −inf before). All else are properties, valid at `now`.
     """
+
+    _limits_at_once = True
+    """The supply lowers its voltage without delay when its current limit acts."""
 
     def __init__(
         self,
@@ -58,8 +63,10 @@ class Plant:
         rng: np.random.Generator | random.Random,
         now: float = 0.0,
         ripple: bool = True,
+        stage: Stage | None = None,
     ) -> None:
         self.truth = truth
+        self._stage: Stage = PlainLowSide() if stage is None else stage
         self.now = now
         self.ripple = ripple
         self.pwm_hz, self.duty_percent, self.drive_on = 1000.0, 0.0, False
@@ -76,6 +83,7 @@ class Plant:
         self._origin = self._at = self._heated_at = self._pwm_since = now
         self._cell = self._friction_cell = 0
         self._sums = _Sums()
+        self._bound_nm = 0.0
         self._edges_per_rad = pulses_per_revolution / (2.0 * math.pi)
         self._edges = 0
         self._edge_step: tuple[float, float, float, Motion] | None = None
@@ -91,11 +99,8 @@ class Plant:
         if (pwm_hz, duty_percent, on) == (self.pwm_hz, self.duty_percent, self.drive_on):
             return
         if not (pwm_hz > 0.0 and 0.0 <= duty_percent <= 100.0):
-            raise SweeprigError(
-                "the simulated drive cannot do this",
-                value=f"{pwm_hz:g} Hz, {duty_percent:g} %",
-                allowed="more than 0 Hz, 0 to 100 %",
-            )
+            what, value = "the simulated drive cannot do this", f"{pwm_hz:g} Hz, {duty_percent:g} %"
+            raise SweeprigError(what, value=value, allowed="more than 0 Hz, 0 to 100 %")
         self._commit()
         if pwm_hz != self.pwm_hz or (on and not self.drive_on):
             self._pwm_since = self.now
@@ -107,14 +112,26 @@ class Plant:
         if (volts, current_limit_amps, on) == (self.supply_volts, self.supply_current_limit_amps, self.supply_on):
             return
         if not (volts >= 0.0 and current_limit_amps >= 0.0):
-            raise SweeprigError(
-                "the simulated supply cannot do this",
-                value=f"{volts:g} V, {current_limit_amps:g} A",
-                allowed="zero or more",
-            )
+            what, value = "the simulated supply cannot do this", f"{volts:g} V, {current_limit_amps:g} A"
+            raise SweeprigError(what, value=value, allowed="zero or more")
         self._commit()
         self.supply_volts, self.supply_current_limit_amps, self.supply_on = volts, current_limit_amps, on
         self._settings_changed()
+
+    def bind(self, extra_nm: float) -> None:
+        """A torque on top of both frictions from `now` on, Nm; infinite: the rotor is seized. For faults of the rig."""
+        self._commit()
+        self._bound_nm = extra_nm
+        if self.turning and extra_nm == math.inf:
+            self._stop()
+        self._settings_changed()
+
+    def use_stage(self, stage: Stage) -> Stage:
+        """Another power stage from `now` on; returns the one before. For faults of the rig."""
+        self._commit()
+        before, self._stage = self._stage, stage
+        self._settings_changed()
+        return before
 
     def advance(self, to: float) -> None:
         """Let the physics run until `to` (run clock, s)."""
@@ -180,20 +197,31 @@ class Plant:
         return self._look()[0].supply_vs
 
     @property
+    def switch_amp_seconds(self) -> float:
+        """∫ mean current in the switch's shunt dt: what the stage takes, with nothing smoothing it."""
+        return self._look()[0].supply_as
+
+    @property
+    def node_volt_seconds(self) -> float:
+        """∫ mean voltage of the switch node to supply minus dt."""
+        sums, (of_supply, of_motor, ohms) = self._look()[0], self._stage.node
+        return of_supply * sums.supply_vs + of_motor * sums.motor_vs + ohms * sums.motor_as
+
+    @property
     def supply_limited(self) -> bool:
         """The supply does not hold its voltage now: the current limit acts."""
         emf = self.truth.torque_constant_nm_per_a * self.omega
-        return self._may_limit and mean_supply_current(self._electric, emf) > self.supply_current_limit_amps
+        return self._may_limit and self._electric.mean_supply_current(emf) > self.supply_current_limit_amps
 
     @property
     def winding_degc(self) -> float:
         """Winding temperature, degC."""
         return self._winding_at(self.now)
 
-    def wave(self) -> Wave:
+    def wave(self) -> Waveform:
         """The present waveform of motor voltage and current, for instruments that resolve the PWM period."""
         emf = self.truth.torque_constant_nm_per_a * self.omega
-        return wave(self._electric_at(emf), emf)
+        return self._electric_at(emf).wave(emf)
 
     def pwm_phase_s(self) -> float:
         """Seconds since the gate signal last went on, 0 up to one period."""
@@ -203,7 +231,16 @@ class Plant:
 
     @property
     def _driven(self) -> bool:
-        return self.drive_on and self.supply_on and self.duty_percent > 0.0 and self.supply_volts > 0.0
+        return self._stage.conducts(self._rail_volts, self.duty_percent, self.drive_on)
+
+    @property
+    def _rail_volts(self) -> float:
+        """What the stage is fed with, V; an ideal supply's own voltage."""
+        return self.supply_volts if self.supply_on else 0.0
+
+    def _setting_now(self) -> Setting:
+        volts, henry = self._rail_volts, self.truth.inductance_henry
+        return self._stage.setting(volts, self._resistance, henry, self.pwm_hz, self.duty_percent, self._driven)
 
     def _settings_changed(self) -> None:
         self._renew_electric(self._omega_committed)
@@ -218,39 +255,37 @@ class Plant:
         t = self.truth
         self._omega_committed = omega
         self._resistance = t.resistance_ohm * (1.0 + COPPER_PER_K * (self._winding_degc - AMBIENT_DEGC))
-        duty = self.duty_percent if self._driven else 0.0
-        self._electric = self._chopper(self.supply_volts if self.supply_on else 0.0, duty)
-        at_rest = mean_supply_current(self._electric, 0.0)
-        self._may_limit = at_rest > self.supply_current_limit_amps
-        standing = wave(self._electric_at(0.0), 0.0)
+        self._electric = self._setting_now()
+        at_rest = self._electric.mean_supply_current(0.0)
+        self._may_limit = self._limits_at_once and at_rest > self.supply_current_limit_amps
+        still = self._electric_at(0.0)
+        standing = still.wave(0.0)
+        self._standing_volts = still.supply_volts - still.supply_ohms * standing.mean_supply_amps
         self._mean_nm = t.torque_constant_nm_per_a * standing.mean_motor_amps
         self._peak_nm = t.torque_constant_nm_per_a * standing.peak_amps if self.ripple else self._mean_nm
         self._standing = standing
         emf = t.torque_constant_nm_per_a * omega
-        present = standing if emf == 0.0 else wave(self._electric_at(emf), emf)
+        present = standing if emf == 0.0 else self._electric_at(emf).wave(emf)
         self._heat_watts = self._resistance * present.mean_square_amps
         self._idle = not self.turning and not self._driven
         self._relinearise()
 
-    def _chopper(self, volts: float, duty_percent: float) -> Chopper:
-        return chopper(volts, self._resistance, self.truth.inductance_henry, self.pwm_hz, duty_percent)
-
-    def _electric_at(self, emf: float) -> Chopper:
+    def _electric_at(self, emf: float) -> Setting:
         """The coefficients at this back-EMF: with a lower voltage where the supply's current limit acts."""
         c = self._electric
-        if not self._may_limit or mean_supply_current(c, emf) <= self.supply_current_limit_amps:
+        if not self._may_limit or c.mean_supply_current(emf) <= self.supply_current_limit_amps:
             return c
-        return self._chopper(on_volts_at_limit(c, emf, self.supply_current_limit_amps), self.duty_percent)
+        return c.limited(emf, self.supply_current_limit_amps)
 
     def _relinearise(self) -> None:
         omega, k = self._omega_committed, self.truth.torque_constant_nm_per_a
         electric = self._electric_at(k * omega)
-        self._motion = how = motion(self.truth, electric, omega, self._running.torque)
+        self._motion = how = motion(self.truth, electric, omega, self._running.torque + self._bound_nm)
         if electric is self._electric:
             return
         # the supply's voltage rises with the back-EMF while its limit acts: the slope is that of both together
         aside = k * omega + 1e-3
-        slope = (mean_current(self._electric_at(aside), aside)[0] - how.amps) / 1e-3 * k
+        slope = (self._electric_at(aside).mean_current(aside)[0] - how.amps) / 1e-3 * k
         rate = how.rate + k * (slope - how.amps_slope) / self.truth.inertia_kg_m2
         self._motion = how._replace(rate=rate, amps_slope=slope)
 
@@ -283,26 +318,20 @@ class Plant:
         charge = how.amps * moving + how.amps_slope * (turned - how.speed * moving)
         emf = k * turned / moving if moving > 0.0 else 0.0
         electric = self._electric_at(emf)
-        drawn = mean_supply_current(electric, emf) * moving
+        drawn = electric.mean_supply_current(emf) * moving
         flowed = _Sums(
-            s.angle + turned,
-            s.motor_vs + self._resistance * charge + k * turned,
-            s.motor_as + charge,
-            s.supply_as + drawn,
-            s.supply_vs + electric.on_volts * moving,
-        )
+            s.angle + turned, s.motor_vs + self._resistance * charge + k * turned, s.motor_as + charge,
+            s.supply_as + drawn, s.supply_vs + electric.supply_volts * moving - electric.supply_ohms * drawn,
+        )  # fmt: skip
         return (flowed if moving == seconds else self._rest(flowed, seconds - moving)), omega
 
     def _rest(self, s: _Sums, seconds: float) -> _Sums:
         """Integrals over `seconds` at standstill."""
         w = self._standing
         return _Sums(
-            s.angle,
-            s.motor_vs + w.mean_motor_volts * seconds,
-            s.motor_as + w.mean_motor_amps * seconds,
-            s.supply_as + w.mean_supply_amps * seconds,
-            s.supply_vs + w.chopper.on_volts * seconds,
-        )
+            s.angle, s.motor_vs + w.mean_motor_volts * seconds, s.motor_as + w.mean_motor_amps * seconds,
+            s.supply_as + w.mean_supply_amps * seconds, s.supply_vs + self._standing_volts * seconds,
+        )  # fmt: skip
 
     def _enter_next_cell(self) -> None:
         self._cell += 1
@@ -311,7 +340,7 @@ class Plant:
             self._renew_electric(self._omega_committed)
         self._friction_cell = self._cell
         self._running.next_cell()
-        rough = self._breakaway.next_cell()
+        rough = self._breakaway.next_cell() + self._bound_nm
         if not self.turning:
             self._try_start()
         elif self._omega_committed <= 0.0 or caught(self.truth, self._omega_committed, rough, self._peak_nm):
@@ -320,7 +349,8 @@ class Plant:
             self._relinearise()
 
     def _try_start(self) -> None:
-        if starts(self._breakaway.torque, self._peak_nm, self._mean_nm, self._running.torque):
+        more = self._bound_nm
+        if starts(self._breakaway.torque + more, self._peak_nm, self._mean_nm, self._running.torque + more):
             self.turning = True
             self._heat()
             self._renew_electric(0.0)

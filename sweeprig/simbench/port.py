@@ -65,6 +65,16 @@ class Port:
         self._answers: deque[tuple[float, bytes]] = deque()
         self.is_open = False
 
+    @property
+    def accepts(self) -> bool:
+        """Whether a new client finds anybody: False while the instrument's end is not there at all."""
+        return True
+
+    @property
+    def may_vanish(self) -> bool:
+        """It may go and come back, so a served terminal needs a name that stays."""
+        return False
+
     def open(self) -> None:
         """Opening flushes what an earlier client left unread, and its unfinished line."""
         self.flush()
@@ -116,10 +126,15 @@ class Port:
         self._receiver.overrun()
 
     def send(self, text: str) -> None:
-        """An answer of the instrument, formed now; the terminator is added. Lost when nobody holds the port open."""
+        """An answer of the instrument, formed now, one letter a byte (Latin-1: a block may hold any byte).
+
+        The terminator is added. Lost when nobody holds the port open."""
+        self.put(text.encode("latin-1") + self._terminator)
+
+    def put(self, raw: bytes) -> None:
+        """These bytes, terminator and all, become readable when latency and line have let them through."""
         if not self.is_open:
             return
-        raw = text.encode("ascii") + self._terminator
         ready = self._bench.now + self._latency_s
         if self._byte_s:
             ready = self._sent_until = max(ready, self._sent_until) + len(raw) * self._byte_s

@@ -8,8 +8,8 @@ from __future__ import annotations
 import math
 from typing import NamedTuple
 
-from sweeprig.simbench.chopper import Chopper, mean_current
 from sweeprig.simbench.motor_truth import MotorTruth
+from sweeprig.simbench.stage import Setting
 
 
 class Motion(NamedTuple):
@@ -26,10 +26,10 @@ class Motion(NamedTuple):
     amps_slope: float
 
 
-def motion(motor: MotorTruth, electric: Chopper, speed: float, friction_nm: float) -> Motion:
-    """J·dω/dt = K·Ī(ω) − T_run − c·ω − q·ω², linearised at `speed`; Ī from the chopper at back-EMF K·ω."""
+def motion(motor: MotorTruth, electric: Setting, speed: float, friction_nm: float) -> Motion:
+    """J·dω/dt = K·Ī(ω) − T_run − c·ω − q·ω², linearised at `speed`; Ī from the stage at back-EMF K·ω."""
     k = motor.torque_constant_nm_per_a
-    amps, per_volt = mean_current(electric, k * speed)
+    amps, per_volt = electric.mean_current(k * speed)
     slope = per_volt * k
     c, q, j = motor.viscous_friction_nm_s, motor.quadratic_load_nm_s2, motor.inertia_kg_m2
     drag = q * speed

@@ -30,6 +30,7 @@ ERROR_TEXTS: Mapping[int, str] = {
     -222: "Data out of range",
     -224: "Illegal parameter value",
     -230: "Data corrupt or stale",
+    -240: "Hardware error",
     -350: "Queue overflow",
     -361: "Parity error in program message",
     -363: "Input buffer overrun",
@@ -309,6 +310,12 @@ def nr1(value: int) -> str:
 def nr3(value: float, digits: int = 8) -> str:
     """A number with point and signed exponent (IEEE 488.2, 8.7.4), `digits` after the point."""
     return f"{value:.{digits}E}"
+
+
+def block(data: bytes) -> str:
+    """A definite-length block, `#nL…L<data>` (IEEE 488.2, 8.7.9), each byte as the Latin-1 letter of its number."""
+    length = str(len(data))
+    return f"#{len(length)}{length}{data.decode('latin-1')}"
 
 
 def error_answer(error: tuple[int, str]) -> str:

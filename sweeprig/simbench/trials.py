@@ -6,12 +6,17 @@ They act on the plant alone, with no instrument in between; counting them and dr
 from __future__ import annotations
 
 import math
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
 from sweeprig.holds import Condition
-from sweeprig.simbench.motor_truth import MotorTruth
+from sweeprig.job.rig_models import Rig
+from sweeprig.simbench.build_plant import plant_of
+from sweeprig.simbench.detailed import DetailedPlant
+from sweeprig.simbench.motor_truth import DetailedTruth, MotorTruth
 from sweeprig.simbench.plant import Plant
 
 RPM = 30.0 / math.pi
@@ -23,6 +28,10 @@ LOOK_S = 0.1
 WHOLE_REVOLUTIONS = 10.0
 SPEED_HOLDS = 12
 """Holds behind one true speed; its standard error is from the scatter between them."""
+
+Finding = dict[str, Any]
+"""{"value", "u"}, or {"value": None, "reason"}."""
+Map = Callable[[Callable[[Any], Any], Iterable[Any]], Iterable[Any]]
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,7 +65,10 @@ class Procedure:
 
 @dataclass(frozen=True, slots=True)
 class Task:
-    """Trials of one kind at one duty; `seed` is the entropy of their generator."""
+    """Trials of one kind at one duty; `seed` is the entropy of their generator.
+
+    rig   whose power stage and supply the motor hangs on; None: an ideal low-side switch on an ideal supply
+    """
 
     motor: MotorTruth
     condition: Condition
@@ -65,6 +77,7 @@ class Task:
     duty: float
     trials: int
     seed: tuple[int, ...]
+    rig: Rig | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -79,15 +92,25 @@ class Counts:
     seconds: float = 0.0
 
 
-def warm_plant(motor: MotorTruth, condition: Condition, procedure: Procedure, seed: tuple[int, ...]) -> Plant:
-    """A plant after its run-in, turning, seeded by `seed`."""
-    plant = Plant(motor, procedure.pulses_per_revolution, np.random.default_rng(seed))
-    plant.set_supply(condition.supply_v, procedure.current_limit_amps, True)
-    _launch(plant, condition.pwm_hz, procedure.run_in[0], procedure.run_in[1])
+def cold_plant(task: Task) -> Plant:
+    """The task's plant as it is built, switched off, seeded by its seed."""
+    rng, pulses = np.random.default_rng(task.seed), task.procedure.pulses_per_revolution
+    if task.rig is not None:
+        return plant_of(task.rig, task.motor, pulses, rng)
+    if isinstance(task.motor, DetailedTruth):
+        return DetailedPlant(task.motor, pulses, rng)
+    return Plant(task.motor, pulses, rng)
+
+
+def warm_plant(task: Task) -> Plant:
+    """The task's plant after its run-in, turning."""
+    plant, p = cold_plant(task), task.procedure
+    plant.set_supply(task.condition.supply_v, p.current_limit_amps, True)
+    launch(plant, task.condition.pwm_hz, p.run_in[0], p.run_in[1])
     return plant
 
 
-def _launch(plant: Plant, pwm_hz: float, duty: float, seconds: float) -> None:
+def launch(plant: Plant, pwm_hz: float, duty: float, seconds: float) -> None:
     """`seconds` at `duty`; where that does not start the rotor, a kick at full duty and then once more."""
     plant.set_drive(pwm_hz, duty, True)
     plant.advance(plant.now + seconds)
@@ -104,7 +127,7 @@ def falling_trial(plant: Plant, pwm_hz: float, duty: float, p: Procedure) -> tup
     Stopped is the first gap between tachometer edges longer than allowed, or a mean speed below the lowest measurable;
     a catch that the rotor frees itself from within that gap is no stop, but ends the sums.
     """
-    _launch(plant, pwm_hz, min(p.duty_high_percent, duty + p.relaunch_above_percent), p.relaunch_s)
+    launch(plant, pwm_hz, min(p.duty_high_percent, duty + p.relaunch_above_percent), p.relaunch_s)
     plant.set_drive(pwm_hz, duty, True)
     began, stops, angle = plant.now, plant.stops, plant.angle
     looks = max(1, round(p.hold_time_s / LOOK_S))
@@ -126,12 +149,17 @@ def falling_trial(plant: Plant, pwm_hz: float, duty: float, p: Procedure) -> tup
     return stopped, last[1] - first[1], last[2] - first[2], last[0] - first[0]
 
 
-def start_trial(plant: Plant, pwm_hz: float, duty: float, p: Procedure) -> bool:
-    """Coast to rest, rest, one step to `duty`: ten whole revolutions in time, and still turning at its end."""
+def rest(plant: Plant, pwm_hz: float, seconds: float) -> None:
+    """Coast down to rest, then rest for `seconds`."""
     plant.set_drive(pwm_hz, 0.0, False)
     while plant.turning:
         plant.advance(plant.now + LOOK_S)
-    plant.advance(plant.now + p.rest_time_s)
+    plant.advance(plant.now + seconds)
+
+
+def start_trial(plant: Plant, pwm_hz: float, duty: float, p: Procedure) -> bool:
+    """Coast to rest, rest, one step to `duty`: ten whole revolutions in time, and still turning at its end."""
+    rest(plant, pwm_hz, p.rest_time_s)
     before = plant.angle
     plant.set_drive(pwm_hz, duty, True)
     plant.advance(plant.now + p.start_time_s)
@@ -139,7 +167,7 @@ def start_trial(plant: Plant, pwm_hz: float, duty: float, p: Procedure) -> bool:
 
 
 def perform(task: Task) -> Counts:
-    plant = warm_plant(task.motor, task.condition, task.procedure, task.seed)
+    plant = warm_plant(task)
     pwm = task.condition.pwm_hz
     if task.kind == "start":
         started = sum(start_trial(plant, pwm, task.duty, task.procedure) for _ in range(task.trials))
@@ -149,12 +177,10 @@ def perform(task: Task) -> Counts:
     return Counts(task.duty, task.trials, int(stopped), radians, volts, seconds)
 
 
-def true_speed(
-    motor: MotorTruth, condition: Condition, duty_percent: float, procedure: Procedure, seed: tuple[int, ...] = (1,)
-) -> tuple[float, float, float]:
+def true_speed(task: Task) -> tuple[float, float, float]:
     """Mean settled speed on the falling branch, while it turns → (rpm, its standard error, mean motor voltage V)."""
-    plant = warm_plant(motor, condition, procedure, seed)
-    holds = [falling_trial(plant, condition.pwm_hz, duty_percent, procedure)[1:] for _ in range(SPEED_HOLDS)]
+    plant, procedure = warm_plant(task), task.procedure
+    holds = [falling_trial(plant, task.condition.pwm_hz, task.duty, procedure)[1:] for _ in range(SPEED_HOLDS)]
     radians, volts, seconds = np.array(holds).T
     total = float(seconds.sum())
     if total <= 0.0:

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 import multiprocessing
-from collections.abc import Callable, Iterable, Iterator, Sequence
+from collections.abc import Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor
 from contextlib import contextmanager
 from dataclasses import asdict, dataclass, replace
@@ -20,14 +20,13 @@ from scipy.optimize import brentq
 
 from sweeprig.errors import SweeprigError
 from sweeprig.holds import Condition
+from sweeprig.job.rig_models import Rig
 from sweeprig.simbench.motor_truth import MotorTruth
-from sweeprig.simbench.trials import Counts, Procedure, Task, perform, true_speed
+from sweeprig.simbench.trials import Counts, Finding, Map, Procedure, Task, perform, true_speed
+from sweeprig.simbench.truth_rare import long_run
 
 BLOCK_TRIALS = 50
 """Trials on one plant, one after the other, after its run-in; blocks are what the processes share out."""
-
-Finding = dict[str, Any]
-Map = Callable[[Callable[[Any], Any], Iterable[Any]], Iterable[Any]]
 
 
 # ---- the whole -------------------------------------------------------------------------------------------------------
@@ -37,37 +36,30 @@ def truth(
     motor: MotorTruth,
     conditions: Sequence[Condition],
     *,
-    hold_time_s: float,
-    start_time_s: float,
-    rest_time_s: float,
-    relaunch: tuple[float, float] = (12.0, 4.0),
-    lowest_rpm: float = 60.0,
-    pulses_per_revolution: float = 2.0,
-    saturation_percent: float = 2.0,
-    duty_range: tuple[float, float] = (0.0, 100.0),
-    current_limit_amps: float = math.inf,
-    run_in: tuple[float, float] = (60.0, 240.0),
+    procedure: Procedure,
     seed: int = 1,
     runs: int = 3000,
     workers: int = 1,
+    rig: Rig | None = None,
+    rare_trials: int = 0,
 ) -> list[dict[str, Any]]:
     """The true findings, one JSON-able dict a condition, under the names of findings.json.
 
     Each finding is {"value", "u"} (u: the standard error of this counting) or {"value": None, "reason"}.
 
-    relaunch   (percent above the trial duty, s) before each falling approach
-    duty_range lowest and highest duty allowed, percent
-    run_in     (duty percent, s) that warm the motor before each block of trials
+    procedure  how a trial is done
     runs       trials per threshold (stall and start each), shared over about twenty duties
     workers    processes; more than one starts fresh interpreters. The result does not depend on it.
+    rig        the rig whose power stage and supply the motor hangs on; without it an ideal low-side switch
+    rare_trials  forks a rung of the splitting behind `long_run_duty_percent` and `stop_tail`; 0: those are left out
     """
-    low, high = duty_range
-    p = Procedure(hold_time_s, start_time_s, rest_time_s, *relaunch, lowest_rpm, pulses_per_revolution)
-    p = replace(p, saturation_percent=saturation_percent, current_limit_amps=current_limit_amps, run_in=run_in)
-    p = replace(p, duty_low_percent=low, duty_high_percent=high)
-    tasks = [Task(motor, one, p, "stall", 0.0, 1, (seed, number)) for number, one in enumerate(conditions)]
+    tasks = [Task(motor, one, procedure, "stall", 0.0, 1, (seed, number), rig) for number, one in enumerate(conditions)]
     with _workers(workers) as spread:
-        return [_condition(task, runs, spread) for task in tasks]
+        found = [_condition(task, runs, spread) for task in tasks]
+        if rare_trials:
+            for task, one in zip(tasks, found, strict=True):
+                _add_rare(replace(task, trials=rare_trials), one, spread)
+    return found
 
 
 @contextmanager
@@ -106,6 +98,17 @@ def _condition(task: Task, runs: int, spread: Map) -> dict[str, Any]:
     result |= speeds | {"top_speed_rpm": upper["top_speed_rpm"]}
     ends = {"low_speed_rpm": speeds["lowest_reliable_speed_rpm"], "turndown": turndown}
     return result | {"usable_range": low | high | ends, "speed_curve": curve}
+
+
+def _add_rare(task: Task, found: dict[str, Any], spread: Map) -> None:
+    """What only the splitting reaches, where stops begin within the allowed duties."""
+    sustain, width = found["sustain_99_duty_percent"], found["stall_spread_percent"]
+    if sustain["value"] is None:
+        found["long_run_duty_percent"] = sustain
+        return
+    found["long_run_duty_percent"], tail = long_run(task, sustain["value"], width["value"], spread)
+    if "chance" in tail:
+        found["stop_tail"] = tail
 
 
 def _threshold(task: Task, runs: int, spread: Map, record: dict[str, Any]) -> tuple[Finding, Finding, Finding]:
@@ -298,10 +301,6 @@ def _fit_degree(z: Any, n: Any, k: Any, degree: int) -> tuple[Any, Any, float]:
 # ---- speeds ----------------------------------------------------------------------------------------------------------
 
 
-def _speed_of(task: Task) -> tuple[float, float, float]:
-    return true_speed(task.motor, task.condition, task.duty, task.procedure, task.seed)
-
-
 def _finding(value: float, u: float) -> Finding:
     return {"value": float(value), "u": float(u)}
 
@@ -310,14 +309,14 @@ def _curve(task: Task, low: float, spread: Map) -> tuple[Finding, dict[str, Find
     """The speed curve from `low` upwards and, from it, top speed and upper end of the usable range."""
     p = task.procedure
     duties = [float(d) for d in np.linspace(low, p.duty_high_percent, 15)]
-    speeds = list(spread(_speed_of, [replace(task, duty=d, seed=(*task.seed, 20, i)) for i, d in enumerate(duties)]))
+    speeds = list(spread(true_speed, [replace(task, duty=d, seed=(*task.seed, 20, i)) for i, d in enumerate(duties)]))
     rpm = [s[0] for s in speeds]
     top = max(range(len(rpm)), key=rpm.__getitem__)
     wanted = rpm[top] * (1.0 - p.saturation_percent / 100.0)
     above = next(i for i, speed in enumerate(rpm) if speed >= wanted)
     left, right = (duties[above - 1], duties[above]) if above else (duties[0], duties[1])
     fine = [float(d) for d in np.linspace(left, right, 7)]
-    near = list(spread(_speed_of, [replace(task, duty=d, seed=(*task.seed, 21, i)) for i, d in enumerate(fine)]))
+    near = list(spread(true_speed, [replace(task, duty=d, seed=(*task.seed, 21, i)) for i, d in enumerate(fine)]))
     quadratic = np.polyfit(np.array(fine) - left, [s[0] for s in near], 2)
     dense = np.linspace(0.0, right - left, 2001)
     reached = np.polyval(quadratic, dense) >= wanted
@@ -336,7 +335,7 @@ def _speed_finding(task: Task, duty: float, u_duty: float, spread: Map) -> tuple
     """(speed, mean motor voltage) at a duty that is itself known to `u_duty`."""
     step = max(0.2, 2.0 * u_duty)
     tasks = [replace(task, duty=duty + d, seed=(*task.seed, 30, i)) for i, d in enumerate((0.0, step, -step, 0.0))]
-    at, above, below, again = spread(_speed_of, tasks)
+    at, above, below, again = spread(true_speed, tasks)
     rpm, volts = 0.5 * (at[0] + again[0]), 0.5 * (at[2] + again[2])
     speed_slope, volt_slope = (above[0] - below[0]) / (2.0 * step), (above[2] - below[2]) / (2.0 * step)
     u_rpm = math.hypot(at[1] / math.sqrt(2.0), speed_slope * u_duty)

@@ -9,15 +9,27 @@ from typing import Any
 
 from sweeprig.errors import ConfigError
 from sweeprig.job import Job, freeze
+from sweeprig.job.simulated_models import SimulatedPrescribed
+from sweeprig.plan import Plan
 from sweeprig.simbench.build import motor_truth
+from sweeprig.simbench.kinds.choose import values
+from sweeprig.simbench.kinds.prescribed import PrescribedTruth
+from sweeprig.simbench.trials import Procedure
 from sweeprig.simbench.truth import truth
+from sweeprig.simbench.truth_prescribed import prescribed_truth
 
 TRIALS = 3000
+RARE_TRIALS = 100
+"""Forks a rung behind the duty of long service."""
 
 
-def truth_of(job: Job, trials: int = TRIALS, workers: int | None = None) -> dict[str, Any]:
+def truth_of(
+    job: Job, trials: int = TRIALS, workers: int | None = None, rare_trials: int = RARE_TRIALS
+) -> dict[str, Any]:
     """{"motor": parameters, "trials": n, "conditions": [{"label", "pwm_hz", …, "findings": {name: {value, u}}}]}.
 
+    trials       a threshold, counted; of a motor with a prescribed law none are needed
+    rare_trials  behind what counting cannot reach (`truth.truth`); 0 leaves that out
     ConfigError where the motor file has no [simulated] table, or the sweep no stall or start trials to take times from.
     """
     plan = freeze(job)
@@ -27,22 +39,20 @@ def truth_of(job: Job, trials: int = TRIALS, workers: int | None = None) -> dict
             remedy="add [stall] and [start] to the sweep file",
             topic="simbench",
         )
-    motor = motor_truth(job)
-    found = truth(
-        motor,
-        plan.conditions,
-        hold_time_s=plan.stall.hold_time_s,
-        start_time_s=plan.start.start_time_s,
-        rest_time_s=plan.start.rest_time_s,
-        relaunch=(plan.stall.relaunch_above_percent, plan.stall.relaunch_s),
-        lowest_rpm=plan.lowest_rpm,
-        pulses_per_revolution=job.motor.pulses_per_revolution,
-        saturation_percent=plan.saturation_percent,
-        duty_range=(plan.duty_low_percent, plan.duty_high_percent),
-        current_limit_amps=job.limits().current,
-        runs=trials,
-        workers=workers or min(2, os.cpu_count() or 1),
-    )
+    if isinstance(job.motor.simulated, SimulatedPrescribed):
+        motor: Any = values(PrescribedTruth, job.motor.simulated)
+        trials, found = 0, [prescribed_truth(motor, one, _procedure(job, plan)) for one in plan.conditions]
+    else:
+        motor = motor_truth(job)
+        found = truth(
+            motor,
+            plan.conditions,
+            procedure=_procedure(job, plan),
+            runs=trials,
+            workers=workers or min(2, os.cpu_count() or 1),
+            rig=job.rig,
+            rare_trials=rare_trials,
+        )
     conditions = [
         {
             "label": condition.label(),
@@ -50,10 +60,30 @@ def truth_of(job: Job, trials: int = TRIALS, workers: int | None = None) -> dict
             "supply_v": condition.supply_v,
             "findings": _flat(one),
             "speed_curve": one["speed_curve"],
+            **({"stop_tail": one["stop_tail"]} if "stop_tail" in one else {}),
         }
         for condition, one in zip(plan.conditions, found, strict=True)
     ]
     return {"motor": asdict(motor), "trials": trials, "conditions": conditions}
+
+
+def _procedure(job: Job, plan: Plan) -> Procedure:
+    """How the sweep does its trials."""
+    assert plan.stall is not None
+    assert plan.start is not None
+    return Procedure(
+        hold_time_s=plan.stall.hold_time_s,
+        start_time_s=plan.start.start_time_s,
+        rest_time_s=plan.start.rest_time_s,
+        relaunch_above_percent=plan.stall.relaunch_above_percent,
+        relaunch_s=plan.stall.relaunch_s,
+        lowest_rpm=plan.lowest_rpm,
+        pulses_per_revolution=job.motor.pulses_per_revolution,
+        saturation_percent=plan.saturation_percent,
+        duty_low_percent=plan.duty_low_percent,
+        duty_high_percent=plan.duty_high_percent,
+        current_limit_amps=job.limits().current,
+    )
 
 
 def _flat(found: Mapping[str, Any]) -> dict[str, Any]:

@@ -97,3 +97,14 @@ def test_the_first_trip_stays() -> None:
     trip = watch.check(100.0)
     assert trip is not None
     assert trip.rule == "over_current"
+
+
+def test_a_reading_that_says_nothing_keeps_no_channel_alive() -> None:
+    """An ammeter that answers without a value protects nothing: its age goes on. Overload and a rotor at rest do say
+    something."""
+    for flag, trips in (("no_data:marker", True), ("no_data:empty", True), ("no_data:no_edges", False)):
+        watch = Guard([Above("over_current", "meter.amps", 1.5, 2.0)])
+        watch.drive_on(10.0)
+        watch.take(reading("meter.amps", None, 11.5, (flag,)))
+        trip = watch.check(12.0)
+        assert (trip is not None and trip.rule == "no_reading") is trips

@@ -208,3 +208,15 @@ def test_every_hold_is_told_before_the_drive_moves(night: Night) -> None:
         if happened.what == "drive_on":
             assert any(began <= happened.at <= ended for began, ended in spans)
     assert math.isfinite(spans[-1][1])
+
+
+def test_a_hopeless_rig_parks(short_job: Path, tmp_path: Path) -> None:
+    """A rotor that seizes for good: holds are discarded, and after six in a row the run parks with the reason; off."""
+    with (short_job.parent / "shelter-bench.toml").open("a", encoding="utf-8") as rig:
+        rig.write('\n[[simulated_faults]]\nkind = "seized_rotor"\nstart = "40 s"\nlasts = "10 h"\n')
+    night = Night(short_job, tmp_path)
+    ending = night.work()
+    assert ending.state is State.PARKED
+    assert "6 holds in a row" in ending.reason
+    assert [outcome.status for outcome in night.outcomes[-6:]] == [Status.DISCARDED] * 6
+    assert night.drive_is_off()

@@ -10,16 +10,20 @@ from pathlib import Path
 from typing import Any
 
 import pytest
-from sweeprig_drivers import multimeter, scope, supply
+from sweeprig_drivers import generator, line_tachometer, multimeter, scope, sound_meter, supply, thermometer
 from sweeprig_drivers.dialect import Dialect, Form, number_text, refusal
 
 from sweeprig.dialects import GROUP, find_dialect, known_dialects
 from sweeprig.errors import ConfigError, UnknownAdapter
 
-SHIPPED: dict[str, tuple[str, Mapping[str, Form], Mapping[str, tuple[float, float]]]] = {
-    "read-aperture": ("multimeter", multimeter.COMMANDS, {}),
-    "source-and-measure": ("supply", supply.COMMANDS, supply.VALUES),
-    "measure-channel-list": ("scope", scope.COMMANDS, {}),
+SHIPPED: dict[str, tuple[str, Mapping[str, Form], Mapping[str, tuple[float, float]], tuple[str, ...]]] = {
+    "read-aperture": ("multimeter", multimeter.COMMANDS, {}, ()),
+    "source-and-measure": ("supply", supply.COMMANDS, supply.VALUES, ()),
+    "measure-channel-list": ("scope", scope.COMMANDS, {}, ()),
+    "pulse-two-levels": ("generator", generator.COMMANDS, {}, generator.TEXTS),
+    "temperature-channel-list": ("thermometer", thermometer.COMMANDS, {}, ()),
+    "sound-level-average": ("sound-meter", sound_meter.COMMANDS, {}, ()),
+    "speed-lines": ("line-tachometer", line_tachometer.COMMANDS, line_tachometer.VALUES, line_tachometer.TEXTS),
 }
 GOOD = 'kind = "scope"\n[commands]\nidentity = "*IDN?"\n'
 
@@ -44,9 +48,9 @@ def package(tmp_path: Path, monkeypatch: pytest.MonkeyPatch, request: pytest.Fix
 def test_every_shipped_dialect_is_whole() -> None:
     """Each file that is installed passes the check of the adapter it is for, and there is no file beyond these."""
     assert set(known_dialects(None)) == set(SHIPPED)
-    for name, (kind, commands, values) in SHIPPED.items():
+    for name, (kind, commands, values, texts) in SHIPPED.items():
         table = find_dialect(name, None)
-        dialect = Dialect(name, table, kind, commands, values)
+        dialect = Dialect(name, table, kind, commands, values, texts)
         assert all(dialect.has(key) for key in commands)
         assert table["about"]
 
@@ -71,9 +75,9 @@ def test_an_unknown_name_lists_the_known(tmp_path: Path) -> None:
     with pytest.raises(UnknownAdapter) as caught:
         find_dialect("read-apperture", write(tmp_path, "mine"))
     assert str(caught.value) == (
-        "no dialect has this name: 'read-apperture' (allowed: measure-channel-list, mine, read-aperture, "
-        "source-and-measure). write dialects/read-apperture.toml beside the rig file, or correct the name "
-        "(sweeprig manual dialects)"
+        "no dialect has this name: 'read-apperture' (allowed: measure-channel-list, mine, pulse-two-levels, "
+        "read-aperture, sound-level-average, source-and-measure, speed-lines, temperature-channel-list). "
+        "write dialects/read-apperture.toml beside the rig file, or correct the name (sweeprig manual dialects)"
     )
 
 

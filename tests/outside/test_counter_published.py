@@ -18,6 +18,7 @@ class Turning:
 
     supply_limited = False
     motor_volt_seconds = supply_volt_seconds = supply_amp_seconds = 0.0
+    motor_amp_seconds = switch_amp_seconds = node_volt_seconds = 0.0
 
     def __init__(self, pulse_hz: float, first_at: float) -> None:
         self.now = 0.0

@@ -28,6 +28,7 @@ class Still:
 
     supply_limited = False
     motor_volt_seconds = supply_volt_seconds = supply_amp_seconds = 0.0
+    motor_amp_seconds = switch_amp_seconds = node_volt_seconds = 0.0
     edges = 0
     last_edge_at = -math.inf
 

@@ -109,3 +109,58 @@ def test_maxon_mechanical_time_constant() -> None:
     assert -1.0 / start.rate == pytest.approx(3.2590e-3, rel=1e-4)
     speed, _ = after(start, 3.2590e-3)
     assert speed == pytest.approx((1.0 - math.exp(-1.0)) * 9.0 / 6.95e-3, rel=1e-4)
+
+
+def test_ctms_motor_position() -> None:
+    """The Control Tutorials' positioning motor: pole at 59.226 1/s and 35.8268 rad/s per volt.
+
+    Inputs from memory (CTMS "DC Motor Position"), values recomputed from K/(bR + K²) and the exact poles; the averaged
+    mechanics leaves L out, which moves this pole by less than 1e-4.
+    """
+    motor = steady_motor(4.0, 2.75e-6, 0.0274, 3.2284e-6, 0.0, viscous=3.5077e-6)
+    start = motion(motor, chopper(1.0, 4.0, 2.75e-6, 1000.0, 100.0), 0.0, 0.0)
+    assert -start.rate == pytest.approx(59.2260, rel=1e-4)
+    assert settled(motor, 1.0, 2.0).omega == pytest.approx(35.8268, rel=1e-5)
+
+
+def test_gate_2020_motor() -> None:
+    """A motor of gain 2 and time constant 0.5 s reaches 6.32 rad/s at 0.5 s of a 5 V step and settles at 10 rad/s.
+
+    Certified: GATE 2020 EE Q34, published figures, recomputed 10·(1 − 1/e) = 6.3212. K = 0.4, R = 1, b = 0.04, J = 0.1.
+    """
+    motor = steady_motor(1.0, 1e-6, 0.4, 0.1, 0.0, viscous=0.04)
+    assert settled(motor, 5.0, 0.5).omega == pytest.approx(6.32, abs=5e-3)
+    assert settled(motor, 5.0, 0.5).omega == pytest.approx(6.3212, abs=1e-4)
+    assert settled(motor, 5.0, 10.0).omega == pytest.approx(10.0, rel=1e-6)
+
+
+@pytest.mark.parametrize(("line_amps", "rpm"), [(100.0, 1173.0), (200.0, 1144.0), (300.0, 1115.0)])
+def test_chapman_shunt_motor(line_amps: float, rpm: float) -> None:
+    """Chapman's 250 V, 1200 rpm shunt motor turns at 1173, 1144 and 1115 rpm for 100, 200 and 300 A from the line.
+
+    From memory (Electric Machinery Fundamentals, Ex. 9-1), recomputed; 5 A of the line current go to the field.
+    """
+    k = 250.0 / (1200.0 / 30.0 * math.pi)
+    loaded = settled(steady_motor(0.06, 1e-4, k, 1.0, k * (line_amps - 5.0)), 250.0, 20.0)
+    assert loaded.omega * 30.0 / math.pi == pytest.approx(rpm, abs=0.6)
+
+
+def test_nise_motor_constants() -> None:
+    """Nise's motor with Kt/Ra = 5, Kb = 2, J = 12, D = 10 has the transfer function 0.417/(s(s + 1.667)).
+
+    From memory (Control Systems Engineering, Ex. 2.23), recomputed 0.41667 and 1.66667: K = 2, R = 0.4.
+    """
+    motor = steady_motor(0.4, 1e-6, 2.0, 12.0, 0.0, viscous=10.0)
+    start = motion(motor, chopper(1.0, 0.4, 1e-6, 1000.0, 100.0), 0.0, 0.0)
+    assert (start.acceleration, -start.rate) == pytest.approx((0.417, 1.667), abs=5e-4)
+    assert (start.acceleration, -start.rate) == pytest.approx((0.41667, 1.66667), abs=5e-6)
+
+
+def test_bimbhra_speed_range() -> None:
+    """A 220 V motor at 30 A through 0.5 ohm, 0.1 V per rpm, turns at 2050 rpm at full duty.
+
+    Certified: Bimbhra, Power Electronics, Ex. 7.27, published and recomputed.
+    """
+    k = 0.1 * 30.0 / math.pi
+    loaded = settled(steady_motor(0.5, 1e-4, k, 0.1, k * 30.0), 220.0, 20.0)
+    assert loaded.omega * 30.0 / math.pi == pytest.approx(2050.0, rel=1e-6)

@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import copy
 import io
 from collections.abc import Callable
 from dataclasses import replace
+from types import SimpleNamespace
 from typing import Any
 
 import numpy as np
@@ -73,6 +75,16 @@ def test_thresholds_say_what_is_missing(run: Any) -> None:
     """A threshold that was not found at a frequency is named on the figure."""
     texts = [text.get_text() for text in figures.thresholds(run).texts]
     assert any("start duty (50 %): not found at 25 kHz" in text for text in texts)
+
+
+def test_thresholds_say_which_supply_is_which(run: Any) -> None:
+    """Two supply voltages at one frequency are told apart by the legend's title; one voltage needs none."""
+    value = copy.deepcopy(run.findings.as_json())
+    value["conditions"] += [entry | {"supply_v": 10.8} for entry in value["conditions"]]
+    both = SimpleNamespace(findings=SimpleNamespace(as_json=lambda: value))
+    legends = [figures.thresholds(each).get_legend() for each in (both, run)]
+    titles = [legend.get_title().get_text() for legend in legends if legend is not None]
+    assert titles == ["left to right:\n12 V\n10.8 V", ""]
 
 
 def test_usable_range_is_shaded_where_all_conditions_have_it(run: Any) -> None:

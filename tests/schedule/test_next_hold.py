@@ -62,7 +62,7 @@ def work(plan: Plan, outcomes: list[Outcome], most: int = 500) -> list[Outcome]:
     for _ in range(most):
         decision = next_hold(plan, outcomes, 0.0)
         if not isinstance(decision, Hold):
-            assert isinstance(decision, Finished)
+            assert isinstance(decision, (Finished, NeedsPerson))
             return outcomes
         outcomes.append(outcome_of(decision, plan))
     raise AssertionError(f"not finished after {most} holds")
@@ -220,3 +220,18 @@ def test_same_question_same_answer(number: int) -> None:
     plan = a_plan()
     history = work(plan, [])[:number]
     assert next_hold(plan, history, 0.0) == next_hold(plan, history, 0.0)
+
+
+@pytest.mark.parametrize(("purpose", "number"), [(Purpose.ZERO, 0), (Purpose.RUN_IN, 1)])
+def test_a_session_that_cannot_open_needs_a_person(purpose: Purpose, number: int) -> None:
+    """A zero check or a run-in that failed three times in a session: nothing that follows would mean anything."""
+    plan = a_plan()
+    outcomes = work(plan, [])[:number]
+    for _ in range(3):
+        hold = hold_of(next_hold(plan, outcomes, 0.0))
+        assert hold.purpose is purpose
+        outcomes.append(outcome_of(hold, plan, Status.DISCARDED))
+    decision = next_hold(plan, outcomes, 0.0)
+    assert isinstance(decision, NeedsPerson)
+    assert "3 times" in decision.why
+    assert hold_of(next_hold(replace(plan, session=2), outcomes, 0.0)).purpose is Purpose.ZERO

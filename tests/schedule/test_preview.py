@@ -28,5 +28,5 @@ def test_counts_and_time() -> None:
 def test_it_says_what_is_missing() -> None:
     """A rig without a voltmeter is told so, by the finding it will not get and the role that is missing."""
     night = preview(a_plan({"drive": "board", "speed": "board.speed", "current": "supply.amps"}), 0.0)
-    assert any("stall voltage" in line and "motor_voltage" in line for line in night.cannot)
+    assert any("stall voltage" in line and "motor voltage" in line for line in night.cannot)
     assert any(line.startswith("current") for line in night.can)

@@ -15,6 +15,7 @@ from sweeprig.simbench.board import Board
 from sweeprig.simbench.chopper import Wave
 from sweeprig.simbench.instrument import Instrument, Setup
 from sweeprig.simbench.multimeter import Multimeter
+from sweeprig.simbench.pwm_timer import PwmTimer
 from sweeprig.simbench.scope import Scope
 from sweeprig.simbench.supply import Supply
 
@@ -37,6 +38,9 @@ class FakePlant:
         self.motor_volt_seconds = 0.0
         self.supply_volt_seconds = 0.0
         self.supply_amp_seconds = 0.0
+        self.motor_amp_seconds = self.switch_amp_seconds = self.node_volt_seconds = 0.0
+        self.means: dict[str, float] = {}
+        self.winding_degc = 20.0
         self.present_wave: Wave | None = None
         self.phase_of: Callable[[float], float] = lambda _: 0.0
 
@@ -54,7 +58,10 @@ class FakePlant:
         duty = self.drive[1] / 100.0 if self.drive[2] else 0.0
         self.motor_volt_seconds += volts * duty * seconds
         self.supply_volt_seconds += volts * seconds
+        self.node_volt_seconds += volts * (1.0 - duty) * seconds
         self.supply_amp_seconds += 0.25 * duty * seconds
+        for name, mean in self.means.items():
+            setattr(self, name, getattr(self, name) + mean * seconds)
         self.now = to
 
     @property
@@ -93,6 +100,7 @@ class Bed:
         accuracy: dict[str, Accuracy] | None = None,
         options: dict[str, object] | None = None,
         errors: dict[str, float] | None = None,
+        pwm_timer: PwmTimer | None = None,
     ) -> Kind:
         name = kind.model
         instrument = kind(
@@ -105,6 +113,7 @@ class Bed:
                 accuracy=accuracy or {},
                 options=options or {},
                 errors=errors or {},
+                pwm_timer=pwm_timer,
             ),
             self.bench,
         )

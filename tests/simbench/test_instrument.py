@@ -150,10 +150,10 @@ def test_an_error_key_that_would_be_ignored_is_refused(bed: Bed) -> None:
 
 
 def test_a_place_that_cannot_be_measured_is_refused(bed: Bed) -> None:
-    """A voltmeter in the motor lead is refused with the places it could be at."""
+    """A multimeter on the drive signal is refused with the places it could be at."""
     with pytest.raises(ConfigError) as refused:
-        bed.multimeter(connected_to="motor_lead")
-    assert "motor_lead" in str(refused.value)
+        bed.multimeter(connected_to="drive_signal")
+    assert "drive_signal" in str(refused.value)
     assert "across_motor" in str(refused.value)
 
 

@@ -9,7 +9,7 @@ import pytest
 from scipy import stats
 
 from sweeprig.errors import SweeprigError
-from sweeprig.simbench.chopper import wave
+from sweeprig.simbench.chopper import Wave, wave
 from sweeprig.simbench.friction import WanderingFriction, normal_source
 from sweeprig.simbench.motor_truth import MotorTruth
 from sweeprig.simbench.plant import CELL_S, COPPER_PER_K, Plant
@@ -352,7 +352,9 @@ def test_locked_rotor_heats_as_copper_says() -> None:
         r = R * (1.0 + (theta - 20.0) / 254.5)
         theta = 20.0 + 12.0 * r * ((0.5 * 12.5 - 0.5) / r) ** 2
     assert plant.winding_degc == pytest.approx(theta, rel=2e-3)
-    assert plant.wave().chopper.resistance_ohm == pytest.approx(R * (1.0 + COPPER_PER_K * (theta - 20.0)), rel=1e-3)
+    shape = plant.wave()
+    assert isinstance(shape, Wave)
+    assert shape.chopper.resistance_ohm == pytest.approx(R * (1.0 + COPPER_PER_K * (theta - 20.0)), rel=1e-3)
     plant.set_drive(25e3, 50.0, False)
     plant.advance(3840.0)
     assert plant.winding_degc - 20.0 == pytest.approx((theta - 20.0) / math.e, rel=3e-3)
@@ -366,6 +368,7 @@ def test_wave_and_phase_follow_the_gate() -> None:
     plant.advance(0.512)
     assert plant.pwm_phase_s() == pytest.approx(0.6 / 300.0, abs=1e-12)  # 0.502 s are 150.6 periods
     shape = plant.wave()
+    assert isinstance(shape, Wave)
     assert shape == wave(shape.chopper, K * plant.omega)
     assert (shape.chopper.on_volts, shape.chopper.on_s) == pytest.approx((12.0, 1e-3))
 

@@ -43,6 +43,11 @@ QUICK = Procedure(hold_time_s=5.0, start_time_s=2.0, rest_time_s=1.0, run_in=(60
 FAST = Condition(25e3, 12.0)
 
 
+def task_at(duty: float, seed: tuple[int, ...]) -> Task:
+    """Stall trials of the fan, one at a duty."""
+    return Task(FAN, FAST, QUICK, "stall", duty, 1, seed)
+
+
 def counted(
     law: "list[float]", duties: "np.ndarray[tuple[int], np.dtype[np.float64]]", trials: int, seed: int
 ) -> list[Counts]:
@@ -93,7 +98,7 @@ def test_a_level_that_was_not_reached_is_refused() -> None:
 
 def test_falling_trial_of_a_reliable_duty() -> None:
     """Far above the stall duty a hold survives, and its sums are speed and voltage over the settled time."""
-    plant = warm_plant(FAN, FAST, QUICK, (1,))
+    plant = warm_plant(task_at(0.0, (1,)))
     stopped, radians, volts, seconds = falling_trial(plant, 25e3, 40.0, QUICK)
     assert not stopped
     assert seconds == pytest.approx(5.0 - QUICK.settle_s, abs=0.01)
@@ -103,13 +108,13 @@ def test_falling_trial_of_a_reliable_duty() -> None:
 
 def test_falling_trial_far_too_low_stops() -> None:
     """Far below the stall duty the hold ends with a stop, and nothing is averaged."""
-    plant = warm_plant(FAN, FAST, QUICK, (1,))
+    plant = warm_plant(task_at(0.0, (1,)))
     assert falling_trial(plant, 25e3, 5.0, QUICK) == (True, 0.0, 0.0, 0.0)
 
 
 def test_start_needs_ten_revolutions_in_time() -> None:
     """A rotor that turns but not ten revolutions within the start time has not started."""
-    plant = warm_plant(FAN, FAST, QUICK, (1,))
+    plant = warm_plant(task_at(0.0, (1,)))
     assert start_trial(plant, 25e3, 60.0, QUICK)
     assert not start_trial(plant, 25e3, 60.0, replace(QUICK, start_time_s=0.1))
     assert plant.turning
@@ -118,23 +123,13 @@ def test_start_needs_ten_revolutions_in_time() -> None:
 
 def test_speed_below_the_lowest_counts_as_stopped() -> None:
     """A mean speed that the rig could not measure is a stop."""
-    plant = warm_plant(FAN, FAST, QUICK, (1,))
+    plant = warm_plant(task_at(0.0, (1,)))
     assert falling_trial(plant, 25e3, 40.0, replace(QUICK, lowest_rpm=5000.0))[0]
 
 
 def short_truth(motor: MotorTruth, runs: int, workers: int, low: float = 0.0) -> dict[str, Any]:
-    return truth(
-        motor,
-        [FAST],
-        hold_time_s=5.0,
-        start_time_s=2.0,
-        rest_time_s=1.0,
-        duty_range=(low, 100.0),
-        run_in=QUICK.run_in,
-        seed=5,
-        runs=runs,
-        workers=workers,
-    )[0]
+    procedure = replace(QUICK, duty_low_percent=low)
+    return truth(motor, [FAST], procedure=procedure, seed=5, runs=runs, workers=workers)[0]
 
 
 @pytest.fixture(scope="module")
@@ -176,9 +171,9 @@ def test_truth_is_json_and_consistent(found: dict[str, Any]) -> None:
     assert usable["low_duty_from_rest_percent"] == again["start_99_duty_percent"]
     gap = again["start_duty_percent"]["value"] - again["stall_duty_percent"]["value"]
     assert again["start_stall_hysteresis_percent"]["value"] == pytest.approx(gap)
-    at_high = true_speed(FAN, FAST, usable["high_duty_percent"]["value"], QUICK, (99,))
+    at_high = true_speed(task_at(usable["high_duty_percent"]["value"], (99,)))
     assert at_high[0] == pytest.approx(high, rel=3e-3)
-    at_stall = true_speed(FAN, FAST, again["stall_duty_percent"]["value"], QUICK, (98,))
+    at_stall = true_speed(task_at(again["stall_duty_percent"]["value"], (98,)))
     speed = again["stall_speed_rpm"]
     assert at_stall[0] == pytest.approx(speed["value"], abs=4.5 * math.hypot(speed["u"], at_stall[1]))
     assert at_stall[2] == pytest.approx(again["stall_voltage_volts"]["value"], rel=0.03)
