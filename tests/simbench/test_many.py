@@ -1,12 +1,20 @@
 """Many motors by one call: order, seeds, errors, and the same answer with any number of processes."""
 
+import sys
 from functools import partial
+from pathlib import Path
 
 import numpy as np
 import pytest
 
 from sweeprig.errors import SweeprigError
 from sweeprig.simbench.many import many
+
+
+@pytest.fixture(autouse=True)
+def findable(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Fresh processes find this file's functions by its name; last on the path, so that the installed package is used."""
+    monkeypatch.setattr(sys, "path", [*sys.path, str(Path(__file__).parents[2])])
 
 
 def drawn(unit: float, pair: tuple[int, int]) -> tuple[float, float]:
