@@ -15,7 +15,7 @@ demo: $(VENV)/.installed
 	$(BIN)/sweeprig run demo --runs runs
 
 test: $(VENV)/.dev
-	$(BIN)/pytest -n 2 -p no:cacheprovider
+	$(BIN)/pytest -n 2 -rs -p no:cacheprovider
 
 lint: $(VENV)/.dev
 	$(BIN)/ruff check .

@@ -16,7 +16,7 @@ from sweeprig.conduct.states import State
 from sweeprig.launch import start
 from sweeprig.opened import Run, open_run
 
-RATE = 20
+RATE = 12
 pytestmark = pytest.mark.skipif(
     sys.platform == "win32", reason="no pseudo-terminals on Windows: served runs untested there"
 )

@@ -13,7 +13,7 @@ from sweeprig.simbench.many import many
 
 @pytest.fixture(autouse=True)
 def findable(monkeypatch: pytest.MonkeyPatch) -> None:
-    """Fresh processes find this file's functions by its name; last on the path, so that the installed package is used."""
+    """Fresh processes find this file by its name; last on the path, so that the installed package is used."""
     monkeypatch.setattr(sys, "path", [*sys.path, str(Path(__file__).parents[2])])
 
 
