@@ -270,14 +270,22 @@ def policies(use: RigUse, source: Mapping[str, str]) -> list[Policy]:
 def identify(rig: OpenRig, names: Iterable[str]) -> None:
     """Ask who they are, all at once; one that does not answer is asked again after a resynchronise, within `wake_s`.
 
-    A board that resets when its port is opened answers only after a second or two (manual: links)."""
+    A board that resets when its port is opened answers only after a second or two (manual: links). One that says to be
+    another than before is asked once more: noise in one answer is no other instrument."""
     until = rig.clock.now() + BOUNDS["wake_s"]
-    waiting = list(names)
+    waiting, doubted = list(names), set[str]()
     while waiting:
         results = rig.ask({name: rig.adapters[name].identify() for name in waiting}, BOUNDS["exchange_s"])
         for name in list(waiting):
             error = results[name].error
-            if error is None:
+            if (
+                error is None
+                and name not in doubted
+                and rig.identities.get(name, results[name].value) != results[name].value
+            ):
+                doubted.add(name)
+                _resynchronise(rig, name)
+            elif error is None:
                 rig.identities[name] = results[name].value
                 rig.links[name].identified = True
                 waiting.remove(name)

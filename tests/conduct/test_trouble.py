@@ -34,6 +34,25 @@ class Silent:
             self.port.write(data)  # type: ignore[attr-defined]  # a byte port, by its protocol
 
 
+class NoisyIdentity(Silent):
+    """Silent for one message; and the first identity it tells after that begins with noise."""
+
+    def __init__(self, port: object, first: int) -> None:
+        super().__init__(port, first, first)
+        self.noise = b""
+
+    def write(self, data: bytes) -> None:
+        super().write(data)
+        if self.count > self.last and data.startswith(b"*IDN?") and self.noise == b"":
+            self.noise = b"#x!"
+
+    def read(self) -> bytes:
+        data: bytes = self.port.read()  # type: ignore[attr-defined]  # a byte port, by its protocol
+        if data and self.noise not in (b"", b"told"):
+            data, self.noise = self.noise + data, b"told"
+        return data
+
+
 class Night:
     """A short job on a bench of its own, with its ports in the test's hands."""
 
@@ -84,6 +103,14 @@ def test_a_silent_instrument_is_brought_back(night: Night, name: str) -> None:
     assert repeated
     assert any(event.kind == "link" and event.data["instrument"] == name for event in night.events)
     assert night.drive_is_off()
+
+
+def test_noise_in_an_identity_is_no_other_instrument(night: Night) -> None:
+    """An identity that differs from the known one is asked once more before the run is ended for it."""
+    port = NoisyIdentity(night.bench.ports["meter"], 150)
+    night.ports["meter"] = port
+    assert night.work().state is State.FINISHED
+    assert port.noise == b"told"
 
 
 def test_an_instrument_gone_for_good_ends_the_run(night: Night) -> None:
