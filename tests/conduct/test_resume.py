@@ -101,6 +101,19 @@ def test_off_at_once(short_job: Path, tmp_path: Path) -> None:
     assert launched.ending.state is State.PARKED
 
 
+def test_off_between_two_holds(short_job: Path, tmp_path: Path) -> None:
+    """An off order that comes between two holds ends the session before the next one; nothing is discarded."""
+    orders = Orders()
+
+    def listen(event: Event) -> None:
+        if event.kind == "hold_ended" and event.data["number"] == 5:
+            orders.off = True
+
+    launched = start(short_job, tmp_path / "runs", on_event=listen, orders=orders)
+    assert launched.ending.state is State.PARKED
+    assert [outcome.status for outcome in open_run(launched.path).outcomes] == [Status.DONE] * 5
+
+
 def test_the_clock_goes_on_and_noise_is_new(short_job: Path, tmp_path: Path) -> None:
     """A resumed simulated bench goes on in time, starts cold and still, and never repeats a session's noise."""
     with pytest.raises(Killed):
