@@ -1,4 +1,4 @@
-"""Every wait and bound of conduct in one table: name → (default, why). The manual's `bounds` page shows it."""
+"""Every wait and bound of conduct in one table: name → (default, why). The manual's page `bounds` shows it, tested."""
 
 from __future__ import annotations
 
@@ -28,7 +28,6 @@ TABLE: Mapping[str, tuple[float, str]] = {
         6.0,
         "discarded holds in a row that park the run: something is wrong that no repeat will mend",
     ),
-    "look_s": (0.05, "the longest time between two looks at protection and orders"),
 }
 
 BOUNDS: Mapping[str, float] = {name: default for name, (default, _) in TABLE.items()}

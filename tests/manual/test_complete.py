@@ -15,6 +15,7 @@ from pydantic import BaseModel
 import sweeprig
 from sweeprig import errors, manual
 from sweeprig.cli import cli
+from sweeprig.conduct.bounds import TABLE
 from sweeprig.holds import Approach, Purpose, Status, Verdict
 from sweeprig.job import Job
 from sweeprig.report.catalogue import MEANINGS
@@ -163,3 +164,10 @@ def test_public_names_in_the_library_topic_exist() -> None:
     """Each `sweeprig.NAME` in `library` is a public name of the package or one of its rooms."""
     used = set(re.findall(r"\bsweeprig\.([A-Za-z_]+)", manual.text("library"))) - {"report"}
     assert used <= set(sweeprig.__all__)
+
+
+def test_every_bound_stands_with_its_value_and_reason() -> None:
+    """The page of bounds is the table of conduct, row by row, and nothing else."""
+    page = manual.text("bounds")
+    rows = [f"| `{name}` | {default:g} | {why} |" for name, (default, why) in TABLE.items()]
+    assert [line for line in page.splitlines() if line.startswith("| `")] == rows
