@@ -14,7 +14,7 @@ import pytest
 from sweeprig import manual
 from sweeprig.errors import ConfigError
 from sweeprig.quantities import Accuracy
-from sweeprig.roles import AdapterSetup, Answer, Window
+from sweeprig.roles import Adapter, AdapterSetup, Answer, Window
 
 
 def test_every_text_that_ships_is_a_topic() -> None:
@@ -62,6 +62,17 @@ def test_adapter_example_works() -> None:
     assert (reading.value, reading.unit, reading.at, reading.channel) == (23.5, "degC", 4.0, "hut.temperature")
     with pytest.raises(ConfigError, match="no options"):
         room["Thermometer"](AdapterSetup("hut", options={"gate": "1 s"}))
+
+
+def test_adapter_example_keeps_the_contract(capsys: pytest.CaptureFixture[str]) -> None:
+    """The thermometer of `adapters` passes the whole suite, by the lines that the page shows, and has every method."""
+    room: dict[str, Any] = {"setup": AdapterSetup("hut")}
+    exec(block_with("adapters", "class Thermometer"), room)
+    exec(block_with("adapters", "import Scripted, checks"), room)
+    said = capsys.readouterr().out.splitlines()
+    assert len(said) >= 15
+    assert [line for line in said if not line.startswith("kept")] == []
+    assert isinstance(room["Thermometer"](room["setup"]), Adapter)
 
 
 def test_heartbeat_example_works(sweeprig_bench: Callable[..., Any]) -> None:
