@@ -13,7 +13,8 @@
     │   │   └── LinkMisuse          the caller broke the link's contract
     │   ├── InstrumentRefused       an error in its queue, or the read-back differs from the set
     │   ├── WrongInstrument         another one answers than the saved run had
-    │   └── OffNotProved            the drive was told to be off and could not be shown to be
+    │   ├── OffNotProved            the drive was told to be off and could not be shown to be
+    │   └── RigInUse                another process has an instrument of the rig; `holder` says which
     ├── RunError                    a run folder cannot be used                                     exit 3
     │   ├── RunInUse                another process holds it
     │   └── DiskFull                the logbook could not be written            (also OSError)
@@ -42,7 +43,10 @@ class Where:
 
 
 class SweeprigError(Exception):
-    """Base of all. Its text says what is wrong; `remedy` what to do; `topic` names a manual page."""
+    """Base of all. Its text says what is wrong; `remedy` what to do; `topic` names a manual page.
+
+    `run`: the folder of the run that it ended, where there is one that can be resumed.
+    """
 
     exit_code = 70
 
@@ -63,6 +67,7 @@ class SweeprigError(Exception):
         self.where = where
         self.remedy = remedy
         self.topic = topic
+        self.run: str | None = None
 
     def __str__(self) -> str:
         """`file:line, key: what: value (allowed: …). Remedy (manual: topic)`, leaving out what is not known."""
@@ -133,6 +138,11 @@ class WrongInstrument(RigError):
 
 class OffNotProved(RigError):
     pass
+
+
+class RigInUse(RigError):
+    holder: object = None
+    """What is known of the process that has it (`conduct.locks.Holder`)."""
 
 
 class RunError(SweeprigError):

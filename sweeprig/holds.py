@@ -142,8 +142,11 @@ class Outcome:
 
 @dataclass(frozen=True, slots=True)
 class NeedsPerson:
+    """what, why: in words; hands: what will have been set by hand once it is done, None where the plan does not care."""
+
     what: str
     why: str
+    hands: str | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -6,22 +6,21 @@ The one place that chooses between real links, a served simulated bench and the 
 from __future__ import annotations
 
 import shutil
-from collections.abc import Mapping
 from contextlib import closing
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
 
-from sweeprig.clock import Clock, SystemClock
-from sweeprig.conduct.rig import RigUse, assemble, open_rig, require_heartbeat, same_instruments
-from sweeprig.conduct.run import Ending, run
-from sweeprig.conduct.states import OnEvent, Orders
-from sweeprig.errors import ConfigError, RoleMissing
-from sweeprig.job import Job, document, freeze, job_hash, load
+from sweeprig.clock import SystemClock
+from sweeprig.conduct.locks import COMMAND, RigLock
+from sweeprig.conduct.opening import open_run_for_work, software
+from sweeprig.conduct.rig import RigUse, assemble
+from sweeprig.conduct.sessions import Opening, work
+from sweeprig.conduct.states import Ending, OnEvent, Orders
+from sweeprig.conduct.supervise import Supervisor, runner_command
+from sweeprig.errors import ConfigError, RoleMissing, SweeprigError
+from sweeprig.job import Job, document, load
 from sweeprig.job.freeze import with_deadline
-from sweeprig.logbook import Logbook
-from sweeprig.logbook.run_folder import FINDINGS, JOB, LOGBOOK, REPORT, TRAFFIC, create_run_folder, folder_of
-from sweeprig.logbook.traffic import TrafficLog
+from sweeprig.logbook.run_folder import JOB, LOGBOOK, FolderLock, create_run_folder, folder_of
 
 
 @dataclass(frozen=True, slots=True)
@@ -49,21 +48,21 @@ def start(
     on_event: OnEvent = _nobody,
     orders: Orders | None = None,
 ) -> Launched:
-    """Begin a new run in a new folder under `runs` and work it to the end of its first session.
+    """Begin a new run in a new folder under `runs` and work it to the end.
 
-    Errors: ConfigError before anything moves; RigError, DiskFull with the drive off; nothing concluded is lost.
+    On real links this process becomes the supervisor, and a runner of its own performs the holds. Errors: ConfigError
+    and RigInUse before anything moves; RigError, DiskFull with the drive off; nothing concluded is lost.
     """
     if not isinstance(job, Job):
         job = load(job)
     check_rig(job)
     now = SystemClock().utc()
     job = with_deadline(job, _first_utc(job, now))
-    text = document(job)
-    folder = create_run_folder(Path(runs), job.motor.name, now, text)
-    _keep_dialects(job, folder)
-    traffic = TrafficLog(folder / TRAFFIC)
-    logbook = Logbook.create(folder / LOGBOOK, text, job_hash(text), software(), traffic=traffic)
-    return Launched(folder, _session(job, logbook, traffic, attended, on_event, orders or Orders()))
+    with rig_lock(job) as lock:
+        folder = create_run_folder(Path(runs), job.motor.name, now, document(job))
+        _keep_dialects(job, folder)
+        lock.works_on(folder)
+        return _work(job, folder, attended, on_event, orders or Orders())
 
 
 def resume(
@@ -72,11 +71,27 @@ def resume(
     """Go on with a run that ended or was killed: a new session, warm-up done again, nothing lost, nothing doubled."""
     folder = folder_of(path)
     job = load(folder / JOB)
-    for stale in (FINDINGS, REPORT):
-        (folder / stale).unlink(missing_ok=True)
-    traffic = TrafficLog(folder / TRAFFIC)
-    logbook = Logbook.open(folder / LOGBOOK, traffic=traffic)
-    return Launched(folder, _session(job, logbook, traffic, attended, on_event, orders or Orders()))
+    with rig_lock(job) as lock:
+        lock.works_on(folder)
+        return _work(job, folder, attended, on_event, orders or Orders())
+
+
+def rig_lock(job: Job) -> RigLock:
+    """Nobody else may command any instrument of this rig meanwhile; the simulated bench inside needs no lock."""
+    return RigLock((each.address for each in job.rig.instruments.values()), COMMAND, "works on")
+
+
+def _work(job: Job, folder: Path, attended: bool, on_event: OnEvent, orders: Orders) -> Launched:
+    """The run's own lock, then sessions inside this process or a supervisor with its runner."""
+    with FolderLock(folder):
+        try:
+            if in_process(job):
+                return Launched(folder, _inside(folder, attended, on_event, orders))
+            use, command = RigUse.of_job(load(folder / JOB)), runner_command(folder, attended)
+            return Launched(folder, Supervisor(folder, use, command, on_event, orders).run())
+        except SweeprigError as error:
+            error.run = str(folder) if (folder / LOGBOOK).exists() else None
+            raise
 
 
 def check_rig(job: Job) -> None:
@@ -128,39 +143,15 @@ def _keep_dialects(job: Job, folder: Path) -> None:
             shutil.copy(own, folder / "dialects")
 
 
-def _session(
-    job: Job, logbook: Logbook, traffic: TrafficLog, attended: bool, on_event: OnEvent, orders: Orders
-) -> Ending:
-    with logbook, closing(traffic):
-        saved = {seen.name: seen.identity for seen in reversed(logbook.instruments())}
-        session, clock, ports = _clock_and_ports(job, logbook, attended)
-        rig = open_rig(RigUse.of_job(job), clock, ports, traffic)
-        try:
-            same_instruments(rig, saved)
-            if not attended:
-                require_heartbeat(rig)
-            return run(freeze(job, session), rig, logbook, session, on_event, orders)
-        finally:
-            rig.close()
-
-
-def _clock_and_ports(job: Job, logbook: Logbook, attended: bool) -> tuple[int, Clock, Mapping[str, Any] | None]:
-    """The session's number, its clock, and the ports of the in-process bench where there is one.
-
-    On the simulated bench the run clock and UTC go on where the last session left them."""
-    info = {"attended": attended, "software": software()}
-    if not in_process(job):
-        clock: Clock = SystemClock(job.rig.rate or 1.0)
-        return logbook.begin_session(clock.now(), clock.utc(), info), clock, None
+def _inside(folder: Path, attended: bool, on_event: OnEvent, orders: Orders) -> Ending:
+    """On the simulated bench of this process. Its run clock and UTC go on where the last session left them."""
     from sweeprig.simbench import build
 
-    began, began_utc = logbook.last_times() or (0.0, None)
-    bench = build(job, session=len(logbook.sessions()) + 1, began=began, began_utc=began_utc)
-    return logbook.begin_session(bench.clock.now(), bench.clock.utc(), info), bench.clock, bench.ports
-
-
-def software() -> str:
-    """Name and version for the record."""
-    from importlib.metadata import version
-
-    return f"sweeprig {version('sweeprig')}"
+    job, logbook, traffic = open_run_for_work(folder)
+    with logbook, closing(traffic):
+        info = {"attended": attended, "software": software()}
+        began, began_utc = logbook.last_times() or (0.0, None)
+        bench = build(job, session=len(logbook.sessions()) + 1, began=began, began_utc=began_utc)
+        number = logbook.begin_session(bench.clock.now(), bench.clock.utc(), info)
+        opening = Opening(number, bench.clock, bench.ports, info, attended)
+        return work(job, folder, logbook, traffic, opening, on_event, orders)

@@ -65,6 +65,8 @@ class Plan:
     time_constant_s    the motor's longest mechanical or electrical time constant, as stated in its file
     lowest_rpm         the rig's lowest measurable speed
     limits             finding → (at least, at most), in the finding's unit: what the motor file asks of it
+    by_hand            fields of a condition that only a person can set; hands: what is set so in this session, as
+                       `set_by_hand` words it, None before anybody has said so
     duty_step_percent  one step of the drive (resolution of the commanded duty) for each condition, same order
     """
 
@@ -90,4 +92,10 @@ class Plan:
     deadline_utc: float | None = None
     session: int = 1
     attended: bool = False
+    by_hand: tuple[str, ...] = ()
+    hands: str | None = None
     extra: Mapping[str, float] = field(default_factory=dict)
+
+    def set_by_hand(self, condition: Condition) -> str:
+        """What a person sets for `condition`, in words: "load free air, direction forward"; empty for nothing."""
+        return ", ".join(f"{name} {getattr(condition, name)}" for name in self.by_hand)

@@ -75,6 +75,8 @@ class Lines:
             return f"  hold {data['number']} {data['status']}: {data['reason']}"
         if event.kind == "trip":
             return f"TRIPPED: {data['evidence']}. The drive was switched off."
+        if event.kind == "state" and data["state"] in ("parked", "waiting for a person"):
+            return f"{str(data['state']).upper()}: {data.get('reason', '')}"
         if event.kind == "off" and data.get("proved"):
             return "drive and supply off, and shown to be off"
         if event.kind == "link":
@@ -89,7 +91,7 @@ class Lines:
 class Screen(Lines):
     """In a terminal: the same sentences in one status line that changes in place; what matters stays above it."""
 
-    KEEP = ("session", "trip", "link", "notice", "finished", "off")
+    KEEP = ("session", "state", "trip", "link", "notice", "finished", "off")
 
     def __enter__(self) -> Screen:
         from rich.console import Console

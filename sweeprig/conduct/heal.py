@@ -7,7 +7,7 @@ counted anew after holds that went well; then the run gives up and says so.
 from __future__ import annotations
 
 from sweeprig.conduct.bounds import BOUNDS
-from sweeprig.conduct.rig import OpenRig, configure, identify, named, same_instruments
+from sweeprig.conduct.rig import Look, OpenRig, configure, identify, named, same_instruments
 from sweeprig.conduct.switch_off import drive_off, prove_off, switch_off
 from sweeprig.errors import InstrumentRefused, LinkError, RigError
 
@@ -20,9 +20,10 @@ def broken(rig: OpenRig) -> list[str]:
     return [name for name, link in rig.links.items() if link.dirty or not link.identified]
 
 
-def heal(rig: OpenRig, used: dict[str, int]) -> list[str]:
+def heal(rig: OpenRig, used: dict[str, int], look: Look) -> list[str]:
     """Bring back every broken link, configure everyone, prove off. `used` counts the attempts of this session by
-    instrument. Returns the names of those brought back; with none broken it is how a session begins.
+    instrument. Returns the names of those brought back; with none broken it is how a session begins. `look` is called
+    before each attempt and while it pauses: what it raises ends the healing.
 
     A link that breaks on the way is brought back too: each round costs an attempt, so this ends. Raises the last link
     error when an instrument cannot be brought back within its attempts, and every error that is no link's.
@@ -33,7 +34,7 @@ def heal(rig: OpenRig, used: dict[str, int]) -> list[str]:
         waiting = broken(rig)
         names.update(dict.fromkeys(waiting))
         for name in waiting:
-            _bring_back(rig, name, used)
+            _bring_back(rig, name, used, look)
         try:
             identify(rig, waiting)
             same_instruments(rig, saved)
@@ -52,9 +53,10 @@ def heal(rig: OpenRig, used: dict[str, int]) -> list[str]:
             return list(names)
 
 
-def _bring_back(rig: OpenRig, name: str, used: dict[str, int]) -> None:
+def _bring_back(rig: OpenRig, name: str, used: dict[str, int], look: Look) -> None:
     link, clock = rig.links[name], rig.clock
     while True:
+        look()
         used[name] = used.get(name, 0) + 1
         if used[name] > BOUNDS["heal_attempts"]:
             raise RigError(
@@ -69,6 +71,9 @@ def _bring_back(rig: OpenRig, name: str, used: dict[str, int]) -> None:
         except LinkError as error:
             if used[name] >= BOUNDS["heal_attempts"]:
                 raise named(name, error) from error
-            clock.wait(clock.now() + BOUNDS["heal_pause_s"] * 2.0 ** (used[name] - 1))
+            until = clock.now() + BOUNDS["heal_pause_s"] * 2.0 ** (used[name] - 1)
+            while clock.now() < until:
+                look()
+                clock.wait(min(until, clock.now() + BOUNDS["beat_s"]))
         else:
             return

@@ -13,6 +13,7 @@ from typing import Any, cast
 
 from sweeprig.clock import Clock
 from sweeprig.conduct.bounds import BOUNDS
+from sweeprig.conduct.locks import LINK, AddressLock
 from sweeprig.conduct.protection import Above, Guard, LockedRotor, Policy
 from sweeprig.dialects import find_dialect
 from sweeprig.errors import ConfigError, LinkError, RoleMissing, SweeprigError, WrongInstrument
@@ -71,6 +72,9 @@ class OpenRig:
     identities: dict[str, Identity] = field(default_factory=dict)
     settings: dict[str, dict[str, str]] = field(default_factory=dict)
     """Instrument → what it said of itself when it was last configured."""
+    pulse: Look | None = None
+    """Called while anything is waited for that nobody watches: the sign of life of this process. It never raises."""
+    locks: list[AddressLock] = field(default_factory=list)
 
     @property
     def drive(self) -> Drive:
@@ -97,7 +101,7 @@ class OpenRig:
     def ask(self, steps: Mapping[str, Steps[Any]], within_s: float, look: Look | None = None) -> dict[str, Result]:
         """Drive steps on several instruments at once; one result each, none raised."""
         pairs = {name: (self.links[name], each) for name, each in steps.items()}
-        return together(pairs, self.clock, self.clock.now() + within_s, look, traffic=self.traffic)
+        return together(pairs, self.clock, self.clock.now() + within_s, look or self.pulse, traffic=self.traffic)
 
     def tell(self, name: str, steps: Steps[Any], look: Look | None = None) -> Any:
         """Steps on one instrument; its error is raised with the instrument's name."""
@@ -146,6 +150,9 @@ class OpenRig:
     def close(self) -> None:
         for link in self.links.values():
             link.close()
+        for lock in self.locks:
+            lock.release()
+        self.locks.clear()
 
 
 def by_channel(measured: Mapping[str, Reading]) -> dict[str, Reading]:
@@ -167,7 +174,11 @@ def value_of(name: str, result: Result) -> Any:
 
 
 def open_rig(
-    use: RigUse, clock: Clock, ports: Mapping[str, Any] | None = None, traffic: Traffic | None = None
+    use: RigUse,
+    clock: Clock,
+    ports: Mapping[str, Any] | None = None,
+    traffic: Traffic | None = None,
+    pulse: Look | None = None,
 ) -> OpenRig:
     """Build the adapters, open the links, ask everyone who they are. Nothing is set yet.
 
@@ -177,6 +188,7 @@ def open_rig(
     `ports`: the in-process ports of a simulated bench, for `simbench:` addresses. A failed opening closes all.
     """
     rig = assemble(use, clock, traffic)
+    rig.pulse = pulse
     try:
         actuators = {rig.source[role]: None for role in ACTUATORS if role in rig.source}
         for name in actuators:
@@ -206,10 +218,31 @@ def assemble(use: RigUse, clock: Clock, traffic: Traffic | None = None) -> OpenR
     return OpenRig(use, clock, adapters, {}, source, use.rig.roles, Guard(policies(use, source)), traffic)
 
 
-def open_link(rig: OpenRig, name: str, ports: Mapping[str, Any] | None = None) -> None:
-    """Open one instrument's link; a LinkError carries the instrument's name."""
-    instrument, deadline = rig.use.rig.instruments[name], rig.clock.now() + BOUNDS["open_s"]
+def assemble_actuators(use: RigUse, clock: Clock) -> OpenRig:
+    """Drive and supply alone, for switching off: what is wrong with a meter must not keep the drive from being told."""
+    source = {role: channel.partition(".")[0] for role, channel in use.rig.roles.items()}
+    adapters = {source[role]: build_adapter(use, source[role]) for role in ACTUATORS if role in source}
+    return OpenRig(use, clock, adapters, {}, source, use.rig.roles, Guard([]))
+
+
+def add_adapters(rig: OpenRig) -> None:
+    """The instruments that `assemble_actuators` left out: for the proof."""
+    for name in rig.use.rig.instruments:
+        if name not in rig.adapters:
+            rig.adapters[name] = build_adapter(rig.use, name)
+    _check_actuators(rig.adapters, rig.source)
+
+
+def open_link(
+    rig: OpenRig, name: str, ports: Mapping[str, Any] | None = None, within_s: float = BOUNDS["open_s"]
+) -> None:
+    """Open one instrument's link; a LinkError carries the instrument's name, RigInUse that of who has it."""
+    instrument, deadline = rig.use.rig.instruments[name], rig.clock.now() + within_s
     end = instrument.terminator_bytes
+    if rig.pulse is not None:
+        rig.pulse()
+    if not instrument.in_process and not any(lock.address == instrument.address for lock in rig.locks):
+        rig.locks.append(AddressLock(instrument.address, LINK, "has the link open").acquire())
     try:
         rig.links[name] = registry.open_link(instrument.address, rig.clock, deadline, ports=ports, terminator=end)
     except LinkError as error:
@@ -218,13 +251,15 @@ def open_link(rig: OpenRig, name: str, ports: Mapping[str, Any] | None = None) -
 
 def build_adapters(use: RigUse) -> dict[str, Adapter]:
     """The adapters of a rig, not connected to anything: unknown names and bad options are refused here."""
-    adapters: dict[str, Adapter] = {}
-    for name, instrument in use.rig.instruments.items():
-        kind = registry.find_adapter(instrument.adapter)
-        dialect = {} if instrument.dialect is None else find_dialect(instrument.dialect, use.folder)
-        setup = AdapterSetup(name, instrument.options, dialect, instrument.accuracies(), use.pulses_per_revolution)
-        adapters[name] = kind(setup)
-    return adapters
+    return {name: build_adapter(use, name) for name in use.rig.instruments}
+
+
+def build_adapter(use: RigUse, name: str) -> Adapter:
+    instrument = use.rig.instruments[name]
+    kind = registry.find_adapter(instrument.adapter)
+    dialect = {} if instrument.dialect is None else find_dialect(instrument.dialect, use.folder)
+    setup = AdapterSetup(name, instrument.options, dialect, instrument.accuracies(), use.pulses_per_revolution)
+    return cast(Adapter, kind(setup))
 
 
 def _check_actuators(adapters: Mapping[str, Adapter], source: Mapping[str, str]) -> None:
@@ -327,10 +362,13 @@ def same_instruments(rig: OpenRig, saved: Mapping[str, Identity]) -> None:
 
 
 def require_heartbeat(rig: OpenRig) -> None:
-    """An unattended real run needs a drive that stops by itself when the host goes silent."""
-    if rig.drive.heartbeat_s is None and not rig.simulated:
+    """Without a heartbeat of the drive only the supervisor ends a hang: that must be within the locked-rotor time."""
+    longest_s = BOUNDS["hang_s"] + BOUNDS["off_s"]
+    if rig.drive.heartbeat_s is None and not rig.simulated and longest_s > rig.use.limits.locked_rotor_time:
         raise ConfigError(
-            "the drive has no heartbeat: it would keep driving if this computer stopped",
-            remedy="start with --attended and stay with the rig, or use a drive with a heartbeat",
+            "the drive has no heartbeat: if the runner hung it could stay on for too long",
+            value=f"{longest_s:g} s until the supervisor has switched it off",
+            allowed=f"the locked-rotor time, {rig.use.limits.locked_rotor_time:g} s",
+            remedy="Start with --attended and stay with the rig, or use a drive with a heartbeat",
             topic="safety",
         )

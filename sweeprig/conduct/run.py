@@ -1,18 +1,18 @@
 """The loop: ask the schedule, commit the intent, perform, commit the outcome, ask again. And off on every way out.
 
-In process and, later, inside the runner process: the same loop, the same events, the same orders.
+In process and inside the runner process: the same loop, the same events, the same orders.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import replace
 
 from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.conduct.heal import broken, heal
 from sweeprig.conduct.perform import Performed, Performer, Spoiled
 from sweeprig.conduct.protection import NO_READING
 from sweeprig.conduct.rig import OpenRig
-from sweeprig.conduct.states import Event, OnEvent, Orders, State
+from sweeprig.conduct.states import Ending, Event, OnEvent, Orders, State
 from sweeprig.conduct.switch_off import drive_off, prove_off, switch_off
 from sweeprig.conduct.watchman import MachineSlept, OffOrdered, TripSeen, Watchman
 from sweeprig.errors import LinkError, RigError
@@ -21,13 +21,7 @@ from sweeprig.logbook import Logbook
 from sweeprig.plan import Plan
 from sweeprig.schedule import next_hold
 
-
-@dataclass(frozen=True, slots=True)
-class Ending:
-    """How a session ended: the state, and why in a sentence."""
-
-    state: State
-    reason: str
+PAUSED = "paused by request; `sweeprig ready RUN` goes on"
 
 
 class _Session:
@@ -39,22 +33,33 @@ class _Session:
         self.plan = replace(plan, session=session)
         self.rig, self.logbook, self.session = rig, logbook, session
         self.clock, self.orders, self.on_event = rig.clock, orders, on_event
-        self.watch = Watchman(rig.clock, rig.guard, orders)
+        self.watch = Watchman(rig.clock, rig.guard, orders, self._pulse)
         self.performer = Performer(rig, self.plan, self.watch, self._beat)
         self.outcomes = logbook.outcomes()
         self.healed: dict[str, int] = {}
 
-    def tell(self, kind: str, **data: object) -> None:
+    def tell(self, kind: str, *, at_once: bool = False, **data: object) -> None:
+        """`at_once`: into the logbook now, because no commit may come for long."""
         event = Event(kind, self.clock.now(), data)
-        if kind != "beat":
-            self.logbook.event(kind, event.at, self.clock.utc(), data)
+        self.logbook.event(kind, event.at, self.clock.utc(), data, now=at_once)
         self.on_event(event)
 
     def _beat(self, number: int) -> None:
         self.on_event(Event("beat", self.clock.now(), {"number": number}))
 
+    def _pulse(self) -> None:
+        if self.rig.pulse is not None:
+            self.rig.pulse()
+
+    def _ordered(self) -> None:
+        """What healing looks at: an order to be off ends it, for the drive was told to be off before."""
+        self._pulse()
+        if why := self.orders.off_because():
+            raise OffOrdered(why)
+
     def enter(self, state: State, **more: object) -> None:
-        self.tell("state", state=state.words, drive_may_be_on=state.drive_may_be_on, **more)
+        at_once = state in (State.WAITING_FOR_PERSON, State.PARKED)
+        self.tell("state", at_once=at_once, state=state.words, drive_may_be_on=state.drive_may_be_on, **more)
 
     # -- opening -------------------------------------------------------------------------------------------------
 
@@ -89,12 +94,21 @@ class _Session:
                 self.tell("finished", reason=decision.reason)
                 return Ending(State.FINISHED, decision.reason)
             if isinstance(decision, NeedsPerson):
-                return Ending(State.WAITING_FOR_PERSON, f"{decision.what} ({decision.why})")
-            if self.orders.finish or self.orders.off:
-                return Ending(State.PARKED, "stopped by request after a completed hold")
+                return Ending(State.WAITING_FOR_PERSON, f"{decision.what} ({decision.why})", hands=decision.hands)
+            if ending := self._asked_to_stop():
+                return ending
             ending = self._one(decision) or self._hopeless()
             if ending is not None:
                 return ending
+
+    def _asked_to_stop(self) -> Ending | None:
+        """Orders that take effect between two holds."""
+        why = self.orders.off_because()
+        if why or self.orders.finish:
+            return Ending(State.PARKED, why or "stopped by request after a completed hold", self.orders.again)
+        if self.orders.pause:
+            return Ending(State.WAITING_FOR_PERSON, PAUSED)
+        return None
 
     def _one(self, hold: Hold) -> Ending | None:
         began, began_utc = self.clock.now(), self.clock.utc()
@@ -112,9 +126,9 @@ class _Session:
                 "the machine slept, or its clock was stepped, during the hold",
                 True,
             )
-        except OffOrdered:
-            status, reason = Status.DISCARDED, "switched off by order"
-            ending = Ending(State.PARKED, "switched off by order")
+        except OffOrdered as order:
+            status, reason = Status.DISCARDED, str(order)
+            ending = Ending(State.PARKED, reason, self.orders.again)
         except TripSeen as seen:
             reason = f"{seen.trip.rule}: {seen.trip.evidence}"
             if seen.trip.rule == NO_READING:
@@ -194,7 +208,7 @@ class _Session:
         if self.rig.guard.on:
             self._off_now()
 
-    def _heal(self, reason: str) -> None:
+    def _heal(self, reason: str, closing: bool = False) -> None:
         """Links back, settings applied, off proved. `reason` is told when there is a link to bring back."""
         began = self.clock.now()
         self.performer.unpowered()
@@ -202,7 +216,7 @@ class _Session:
         before = broken(self.rig)
         if before:
             self.tell("link", instrument=", ".join(before), what=reason)
-        for name in heal(self.rig, self.healed):
+        for name in heal(self.rig, self.healed, self._pulse if closing else self._ordered):
             self.tell("link", instrument=name, what="the link is back, same instrument, settings applied, off proved")
         self.rig.guard.trip = None
         self.tell("off", proved=True, took_s=self.clock.now() - began)
@@ -219,7 +233,7 @@ class _Session:
         except RigError:
             if not broken(self.rig):
                 raise
-            self._heal("links were left in the middle of an exchange")
+            self._heal("links were left in the middle of an exchange", closing=True)
         else:
             self.tell("off", proved=True, took_s=self.clock.now() - began)
 
@@ -248,6 +262,8 @@ def run(plan: Plan, rig: OpenRig, logbook: Logbook, session: int, on_event: OnEv
     try:
         at_work.open()
         ending = at_work.work()
+    except OffOrdered as order:
+        ending = Ending(State.PARKED, str(order), orders.again)
     except BaseException as first:
         at_work.leave(first)
         raise

@@ -49,6 +49,20 @@ class Event:
             raise ValueError(f"unknown event kind {self.kind!r}")
 
 
+@dataclass(frozen=True, slots=True)
+class Ending:
+    """How a session ended: the state, and why in a sentence.
+
+    again   nothing stands against beginning another session at once (the supervisor had only been silent)
+    hands   what a person is asked to set by hand, as a plan names it; None where nothing is
+    """
+
+    state: State
+    reason: str
+    again: bool = False
+    hands: str | None = None
+
+
 OnEvent = Callable[[Event], None]
 
 
@@ -57,13 +71,24 @@ class Orders:
 
     finish   complete the hold in hand, then switch off and stop; the run can be resumed
     off      switch off at once; the hold in hand is discarded
+    pause    complete the hold in hand, then switch off and wait for `ready`
+    ready    a person has done what was asked, or ends a pause
     """
-
-    __slots__ = ("finish", "off")
 
     def __init__(self) -> None:
         self.finish = False
         self.off = False
+        self.pause = False
+        self.ready = False
+
+    def off_because(self) -> str:
+        """Why the drive must be off now; empty when nothing asks for it."""
+        return "switched off by order" if self.off else ""
+
+    @property
+    def again(self) -> bool:
+        """Whether what asks for off is gone once the session is over, so that another may begin."""
+        return False
 
     def interrupt(self) -> None:
         """Ctrl-C: once finishes, twice switches off."""

@@ -5,6 +5,8 @@ Raising is how a look ends the waiting; the loop in `run` turns each cause into 
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 from sweeprig.clock import Clock
 from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.conduct.protection import Guard, Trip
@@ -18,7 +20,7 @@ class TripSeen(Exception):
 
 
 class OffOrdered(Exception):
-    pass
+    """The text says why."""
 
 
 class MachineSlept(Exception):
@@ -28,9 +30,10 @@ class MachineSlept(Exception):
 class Watchman:
     """`look` is the callable that `together` calls; it is cheap while all is well."""
 
-    __slots__ = ("_apart", "clock", "guard", "orders")
+    __slots__ = ("_apart", "_pulse", "clock", "guard", "orders")
 
-    def __init__(self, clock: Clock, guard: Guard, orders: Orders) -> None:
+    def __init__(self, clock: Clock, guard: Guard, orders: Orders, pulse: Callable[[], None]) -> None:
+        self._pulse = pulse
         self.clock = clock
         self.guard = guard
         self.orders = orders
@@ -43,8 +46,10 @@ class Watchman:
             trip = guard.check(now)
             if trip is not None:
                 raise TripSeen(trip)
-        if self.orders.off:
-            raise OffOrdered
+        why = self.orders.off_because()
+        if why:
+            raise OffOrdered(why)
+        self._pulse()
         apart = self.clock.utc() - now
         if apart - self._apart > BOUNDS["slept_s"] or self._apart - apart > BOUNDS["slept_s"]:
             self._apart = apart

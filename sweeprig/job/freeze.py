@@ -53,6 +53,7 @@ def freeze(job: Job, session: int = 1, began_utc: float | None = None) -> Plan:
         limits={name: (_plain(limit.at_least), _plain(limit.at_most)) for name, limit in motor.limits.items()},
         deadline_utc=deadline,
         session=session,
+        by_hand=_by_hand(sweep),
         extra={} if hours is None else {"deadline_hours": hours},
     )
 
@@ -97,6 +98,11 @@ def _conditions(sweep: Sweep) -> tuple[Condition, ...]:
     """The product of the axes; PWM frequency changes fastest, load (by a person) slowest."""
     axes = product(sweep.load, sweep.direction, sweep.supply, sweep.pwm)
     return tuple(Condition(pwm, supply, direction, load) for load, direction, supply, pwm in axes)
+
+
+def _by_hand(sweep: Sweep) -> tuple[str, ...]:
+    """Axes with several values that nothing but a person can set, slowest first."""
+    return tuple(name for name in ("load", "direction") if len(getattr(sweep, name)) > 1)
 
 
 def _duty_steps(job: Job, conditions: tuple[Condition, ...]) -> tuple[float, ...]:

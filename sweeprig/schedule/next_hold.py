@@ -38,9 +38,15 @@ def next_hold(plan: Plan, outcomes: Sequence[Outcome], now: float) -> Decision:
     if plan.deadline_utc is not None and now >= plan.deadline_utc:
         return Finished("the deadline has come")
     number = past.highest_number + 1
-    opening = _opening(plan, past, number)
-    if opening is not None:
-        return opening
+    wanted = _wanted(plan, past, number)
+    first = plan.conditions[0] if wanted is None else wanted.condition
+    if wanted is not None and plan.by_hand and plan.set_by_hand(first) != plan.hands:
+        return _hands(plan, first)
+    return _opening(plan, past, number, first) or wanted or Finished("every hold that the sweep asks for is done")
+
+
+def _wanted(plan: Plan, past: Tallies, number: int) -> Hold | None:
+    """The next hold of the first condition that still wants one."""
     for condition in plan.conditions:
         tally = past.conditions.get(condition) or Tally()
         hold = (
@@ -50,18 +56,26 @@ def next_hold(plan: Plan, outcomes: Sequence[Outcome], now: float) -> Decision:
         )
         if hold is not None:
             return hold
-    return Finished("every hold that the sweep asks for is done")
+    return None
+
+
+def _hands(plan: Plan, condition: Condition) -> NeedsPerson:
+    """What nobody but a person can set is set with the drive off, and a session of its own begins: warm-up again."""
+    wish = plan.set_by_hand(condition)
+    if plan.hands is None:
+        return NeedsPerson(f"see that the rig is set to: {wish}", "only a person can set or see this", wish)
+    return NeedsPerson(f"change the rig by hand to: {wish}", f"done with: {plan.hands}", wish)
 
 
 def _offered(plan: Plan, wanted: tuple[str, ...]) -> tuple[str, ...]:
     return tuple(role for role in wanted if role in plan.roles)
 
 
-def _opening(plan: Plan, past: Tallies, number: int) -> Hold | NeedsPerson | None:
+def _opening(plan: Plan, past: Tallies, number: int, first: Condition) -> Hold | NeedsPerson | None:
     """The zero check and the run-in that begin every session, also after a resume: the motor has cooled.
 
     One that failed three times in the session is for a person: nothing that follows would mean anything."""
-    roles, first = _offered(plan, _SENSORS), plan.conditions[0]
+    roles = _offered(plan, _SENSORS)
     if plan.zero_time_s > 0 and Purpose.ZERO not in past.done_this_session:
         if past.strikes_this_session.get(Purpose.ZERO, 0) >= STRIKES:
             return NeedsPerson(

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from sweeprig.holds import Approach, Finished, Hold, NeedsPerson, Outcome, Purpose, Status, Verdict
 from sweeprig.plan import Plan
@@ -62,7 +62,10 @@ def preview(
             break
         if isinstance(decision, NeedsPerson):
             persons.append(f"{decision.what} ({decision.why})")
-            break
+            if decision.hands is None:
+                break
+            plan = replace(plan, hands=decision.hands, session=plan.session + 1)
+            continue
         outcome = _predicted(decision, plan, clock, now, stall_percent, start_percent)
         outcomes.append(outcome)
         clock = outcome.ended

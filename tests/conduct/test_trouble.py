@@ -10,7 +10,8 @@ from pathlib import Path
 import pytest
 
 from sweeprig.conduct.rig import RigUse, open_rig
-from sweeprig.conduct.run import Ending, run
+from sweeprig.conduct.run import run
+from sweeprig.conduct.states import Ending
 from sweeprig.conduct.states import Event, Orders, State
 from sweeprig.errors import DiskFull, RigError
 from sweeprig.holds import Outcome, Status, Verdict

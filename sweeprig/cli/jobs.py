@@ -1,0 +1,174 @@
+"""Commands that take a job: preview, run, resume."""
+
+from __future__ import annotations
+
+import json
+import signal
+import sys
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from sweeprig.cli.base import answer, as_json, cli, job_named, run_argument
+from sweeprig.errors import ConfigError
+
+if TYPE_CHECKING:
+    from sweeprig.conduct.states import Orders
+    from sweeprig.job import Job
+    from sweeprig.launch import Launched
+
+
+@cli.command(short_help="What a night would do; nothing is opened or moved.")
+@click.argument("job")
+@as_json
+def preview(job: str, json_out: bool) -> None:
+    """What a night would do: holds, time, what can and cannot be found with this rig, what needs a person.
+
+    Everything is checked that can be checked with nothing connected; nothing is opened or moved.
+    """
+    from dataclasses import asdict
+
+    from sweeprig.conduct.unattended import locked_rotor_sum, refusals
+    from sweeprig.job import freeze
+    from sweeprig.launch import check_rig, in_process
+    from sweeprig.schedule import preview as look_ahead
+    from sweeprig.terminal import preview_text
+
+    checked = job_named(job)
+    check_rig(checked)
+    night = look_ahead(freeze(checked), 0.0)
+    sums, refused = locked_rotor_sum(checked), refusals(checked)
+    simulated = in_process(checked) or checked.rig.rate is not None
+    if json_out:
+        value = {**asdict(night), "locked_rotor_seconds": sums, "refused": refused, "simulated": simulated}
+        click.echo(json.dumps(value))
+        return
+    title = f"{checked.title}\n{checked.motor.name} on {checked.rig.name}, sweep {checked.sweep.name}"
+    click.echo(preview_text(night, f"{title}{'  (SIMULATED)' if simulated else ''}", sums, refused))
+
+
+@cli.command(short_help="Perform a job: sweep, findings, report.")
+@click.argument("job")
+@click.option("--runs", type=click.Path(path_type=Path), default=Path("runs"), show_default=True,
+              help="Folder in which the run's own folder is made.")  # fmt: skip
+@click.option("--attended", is_flag=True, help="A person stays with the rig.")
+@click.option("--plain", is_flag=True, help="Plain lines instead of a status line.")
+@click.option("--undecided-ok", is_flag=True, help="Exit 0 also when a limit is not decided.")
+@as_json
+def run(job: str, runs: Path, attended: bool, plain: bool, undecided_ok: bool, json_out: bool) -> None:
+    """Perform a job: sweep, findings, report. Ctrl-C once finishes the hold in hand; twice switches off at once."""
+    from sweeprig.launch import start
+
+    checked = job_named(job)
+    _allowed(checked, attended)
+    _perform(checked, plain, undecided_ok, json_out, lambda on_event, orders: start(
+        checked, runs, attended=attended, on_event=on_event, orders=orders))  # fmt: skip
+
+
+@cli.command(short_help="Go on with a run that was stopped or killed.")
+@run_argument
+@click.option("--attended", is_flag=True, help="A person stays with the rig.")
+@click.option("--plain", is_flag=True, help="Plain lines instead of a status line.")
+@click.option("--undecided-ok", is_flag=True, help="Exit 0 also when a limit is not decided.")
+@as_json
+def resume(run: Path, attended: bool, plain: bool, undecided_ok: bool, json_out: bool) -> None:
+    """Go on with a run that was stopped or killed: nothing is lost, nothing doubled; the warm-up is done again."""
+    from sweeprig.launch import resume as go_on
+    from sweeprig.opened import open_run
+
+    job = open_run(run).job
+    _allowed(job, attended)
+    _perform(job, plain, undecided_ok, json_out, lambda on_event, orders: go_on(
+        run, attended=attended, on_event=on_event, orders=orders))  # fmt: skip
+
+
+def _allowed(job: Job, attended: bool) -> None:
+    """Cautions on a real rig, and the refusals of an unattended run."""
+    from sweeprig.conduct.unattended import refusals
+    from sweeprig.launch import in_process
+    from sweeprig.manual import cautions
+
+    if not in_process(job) and job.rig.rate is None:
+        click.echo("Before power is on:", err=True)
+        for caution in cautions():
+            click.echo(f"  - {caution}", err=True)
+    refused = refusals(job)
+    if refused and not attended:
+        raise ConfigError(
+            "this job may not run unattended: " + "; ".join(refused),
+            remedy="Mend the rig file, or start with --attended and stay with the rig",
+            topic="safety",
+        )
+
+
+def _perform(
+    job: Job, plain: bool, undecided_ok: bool, json_out: bool, work: Callable[[Any, Orders], Launched]
+) -> None:
+    """Work a session with progress and Ctrl-C, then findings and report, then the answer."""
+    from sweeprig.conduct.states import Orders, State
+    from sweeprig.job import freeze
+    from sweeprig.results import results
+    from sweeprig.schedule import preview as look_ahead
+    from sweeprig.terminal import progress
+
+    orders = Orders()
+    with progress(look_ahead(freeze(job), 0.0).seconds, plain) as show, _interrupts(orders, show.say):
+        launched = work(show, orders)
+    done = results(launched.path)
+    answer(done.findings.as_json(), launched.path, done.report_path, json_out)
+    _say_what_is_no_data(launched.path)
+    state, reason = launched.ending.state, launched.ending.reason
+    if state is State.TRIPPED:
+        click.echo(f"sweeprig: protection switched the drive off: {reason}", err=True)
+        sys.exit(4)
+    if state is not State.FINISHED:
+        click.echo(f"sweeprig: {reason}. Go on with: sweeprig resume {launched.path}", err=True)
+        sys.exit(5)
+    verdicts = [limit["verdict"] for limit in done.findings.as_json()["limits"]]
+    if "fail" in verdicts or ("not_decided" in verdicts and not undecided_ok):
+        sys.exit(1)
+
+
+def _say_what_is_no_data(path: Path) -> None:
+    """A night may end well and yet have lost holds: that must not be found out from the report only."""
+    from collections import Counter
+
+    from sweeprig.opened import open_run
+
+    counts = Counter(str(outcome.status) for outcome in open_run(path).outcomes)
+    lost = {status: count for status, count in counts.items() if status != "done"}
+    if lost:
+        kinds = ", ".join(f"{count} {status}" for status, count in lost.items())
+        total = sum(counts.values())
+        click.echo(f"sweeprig: {kinds} of {total} holds: no data. The report lists each with its cause", err=True)
+
+
+@contextmanager
+def _interrupts(orders: Orders, say: Callable[[str], None]) -> Iterator[None]:
+    """Ctrl-C is an order while a run lasts; a termination signal is the stronger one."""
+
+    def asked(number: int, frame: object) -> None:
+        del frame
+        orders.interrupt()
+        if number != signal.SIGINT:
+            orders.finish = orders.off = True
+        say(
+            "switching off now"
+            if orders.off
+            else "finishing the hold in hand, then off; Ctrl-C again switches off at once"
+        )
+
+    kinds = [signal.SIGINT, signal.SIGTERM] + ([signal.SIGHUP] if hasattr(signal, "SIGHUP") else [])
+    before = {kind: signal.signal(kind, asked) for kind in kinds}
+    if hasattr(signal, "SIGTSTP"):  # Ctrl-Z would leave a rig with nobody who watches it
+        before[signal.SIGTSTP] = signal.signal(
+            signal.SIGTSTP, lambda *_: say("a run cannot be put to sleep: `sweeprig pause RUN` pauses it, drive off")
+        )
+    try:
+        yield
+    finally:
+        for kind, handler in before.items():
+            signal.signal(kind, handler)

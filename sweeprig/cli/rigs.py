@@ -1,0 +1,52 @@
+"""Commands that take a rig: off."""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+
+import click
+
+from sweeprig.cli.base import as_json, cli, job_named
+from sweeprig.errors import ConfigError, Where
+
+
+@cli.command(short_help="Switch a rig off, and prove it.")
+@click.argument("rig")
+@click.option("--take-over", is_flag=True, help="Kill the run that holds the rig if it does not obey within 2 s.")
+@as_json
+def off(rig: str, take_over: bool, json_out: bool) -> None:
+    """Switch drive and supply of a rig off, at once on all links, and prove it. RIG: a rig file or a job file.
+
+    A run that holds the rig is ordered off and has two seconds for its proof.
+    """
+    from sweeprig.clock import SystemClock
+    from sweeprig.conduct.off import off_or_order
+    from sweeprig.conduct.rig import RigUse
+    from sweeprig.job.loader import is_rig_file, load_rig
+
+    if Path(rig).exists() and is_rig_file(rig):
+        alone, folder = load_rig(rig)
+        use = RigUse(alone, alone.limits, 1.0, folder)
+    else:
+        use = RigUse.of_job(job_named(rig))
+    if all(instrument.in_process for instrument in use.rig.instruments.values()):
+        raise ConfigError(
+            "this rig is simulated inside the process that uses it; there is nothing to switch off from here",
+            where=Where(rig),
+            remedy="Give the file of a real rig or of a served simulated bench",
+            topic="simbench",
+        )
+    done, holder = off_or_order(use, SystemClock(use.rig.rate or 1.0), SystemClock(), take_over)
+    told = " and ".join(done.told)
+    value = {
+        "off": list(done.told), "took_s": done.took_s, "proved": True, "holder": None if holder is None else str(holder)
+    }  # fmt: skip
+    if json_out:
+        click.echo(json.dumps(value))
+    elif holder is not None and done.took_s == 0.0:
+        click.echo(f"ordered off, and shown to be off, by {holder}")
+    else:
+        click.echo(f"{told} confirmed off after {done.took_s:.2f} s, and shown to be off")
+        if holder is not None:
+            click.echo(f"killed: {holder}", err=True)
