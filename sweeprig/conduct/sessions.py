@@ -110,10 +110,11 @@ class _Work:
                 if isinstance(error, WrongInstrument) or not self._bear(error, before):
                     raise
             else:
-                if not self._waits(ending) or not self._ready(ending):
+                if not self._waits(ending):
                     return ending
+                self._wait_for_ready(ending)
             if why := self.orders.off_because() or ("stopped by request" if self.orders.finish else ""):
-                return Ending(State.PARKED, f"{why}, while parked or waiting", self.orders.again)
+                return Ending(State.PARKED, f"{why}, while the run was parked or waited", self.orders.again)
             info = {**self.opening.info, "hands": self.plan.hands}
             session = self.logbook.begin_session(self.clock.now(), self.clock.utc(), info)
 
@@ -123,21 +124,20 @@ class _Work:
         """An unattended run does not wait for anybody to come, but whoever paused it is there."""
         return ending.state is State.WAITING_FOR_PERSON and (self.opening.attended or ending.reason == PAUSED)
 
-    def _ready(self, ending: Ending) -> bool:
-        """Wait for `ready`, drive and supply off and shown to be off; False when an order ended the waiting."""
+    def _wait_for_ready(self, ending: Ending) -> None:
+        """Wait for `ready`, drive and supply off and shown to be off; or for an order, which ends the run."""
         orders = self.orders
         self.requests.carried_out("pause")
         orders.pause = orders.ready = False
         while not orders.ready:
             if orders.finish or orders.off_because():
-                return False
+                return
             self._wait(BOUNDS["person_s"])
         orders.ready = False
         self.requests.carried_out("ready")
         if ending.hands is not None:
             self.plan = replace(self.plan, hands=ending.hands)
         self.tell("notice", text="a person said ready; a new session begins")
-        return True
 
     def _wait(self, seconds: float) -> None:
         """Real time, for it is a person or a cable that is waited for; the simulated bench's clock goes along."""
