@@ -11,16 +11,20 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from sweeprig.clock import SystemClock
+from sweeprig.conduct.attention import Attention
+from sweeprig.conduct.host import checks, keep_awake, refuse
 from sweeprig.conduct.locks import COMMAND, RigLock
+from sweeprig.conduct.notice_file import read_notices
 from sweeprig.conduct.opening import open_run_for_work, software
 from sweeprig.conduct.rig import RigUse, assemble
 from sweeprig.conduct.sessions import Opening, work
-from sweeprig.conduct.states import Ending, OnEvent, Orders
+from sweeprig.conduct.states import Ending, Event, OnEvent, Orders
 from sweeprig.conduct.supervise import Supervisor, runner_command
 from sweeprig.errors import ConfigError, RoleMissing, SweeprigError
-from sweeprig.job import Job, document, load
+from sweeprig.job import Job, document, freeze, load
 from sweeprig.job.freeze import with_deadline
 from sweeprig.logbook.run_folder import JOB, LOGBOOK, FolderLock, create_run_folder, folder_of
+from sweeprig.schedule import preview
 
 
 @dataclass(frozen=True, slots=True)
@@ -58,6 +62,8 @@ def start(
     check_rig(job)
     now = SystemClock().utc()
     job = with_deadline(job, _first_utc(job, now))
+    if not in_process(job):
+        _check_host(job, Path(runs))
     with rig_lock(job) as lock:
         folder = create_run_folder(Path(runs), job.motor.name, now, document(job))
         _keep_dialects(job, folder)
@@ -83,15 +89,40 @@ def rig_lock(job: Job) -> RigLock:
 
 def _work(job: Job, folder: Path, attended: bool, on_event: OnEvent, orders: Orders) -> Launched:
     """The run's own lock, then sessions inside this process or a supervisor with its runner."""
-    with FolderLock(folder):
+    inside = in_process(job)
+    notices = None if inside else read_notices()
+    simulated = inside or job.rig.rate is not None
+    with FolderLock(folder), Attention(folder, job.motor.name, notices, simulated, on_event) as attention:
         try:
-            if in_process(job):
-                return Launched(folder, _inside(folder, attended, on_event, orders))
-            use, command = RigUse.of_job(load(folder / JOB)), runner_command(folder, attended)
-            return Launched(folder, Supervisor(folder, use, command, on_event, orders).run())
+            ending = (_inside if inside else _supervised)(folder, attended, attention, orders)
         except SweeprigError as error:
             error.run = str(folder) if (folder / LOGBOOK).exists() else None
             raise
+        attention.ended(ending)
+        return Launched(folder, ending)
+
+
+def _supervised(folder: Path, attended: bool, attention: Attention, orders: Orders) -> Ending:
+    job = load(folder / JOB)
+    with keep_awake() as awake:
+        attention(Event("notice", 0.0, {"text": awake.how}))
+        command = runner_command(folder, attended)
+        return Supervisor(folder, RigUse.of_job(job), command, attention, orders, attention.tick).run()
+
+
+def _check_host(job: Job, runs: Path) -> None:
+    """What this machine cannot finish is refused before anything moves: disk, clock, descriptors, deadline."""
+    night = preview(freeze(job), 0.0)
+    until = job.sweep.deadline.until if job.sweep.deadline is not None else None
+    refuse(
+        checks(
+            runs,
+            night.seconds / (job.rig.rate or 1.0),
+            sum(night.holds.values()),
+            instruments=len(job.rig.instruments),
+            deadline_utc=None if until is None else until.timestamp(),
+        )
+    )
 
 
 def check_rig(job: Job) -> None:

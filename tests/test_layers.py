@@ -33,7 +33,7 @@ MAY_IMPORT: dict[str, set[str]] = {
     "opened": VALUES | {"job", "logbook", "characterise", "report"},
     "results": VALUES | {"job", "logbook", "characterise", "report", "opened"},
     "terminal": VALUES | {"conduct", "report"},
-    "launch": GROUND | {"conduct", "job", "logbook", "simbench"},
+    "launch": GROUND | {"conduct", "job", "schedule", "logbook", "simbench"},
     "conformance": GROUND | {"link"},
     "testing": GROUND | {"job", "simbench", "launch", "opened", "conduct"},
     "cli": GROUND

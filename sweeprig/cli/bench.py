@@ -25,7 +25,7 @@ def simbench() -> None:
 )
 @click.option("--record", type=click.Path(path_type=Path), help="Write what the drive really did, one JSON line each.")
 def serve(job: str, rate: float, write: Path | None, record: Path | None) -> None:
-    """Serve the job's instruments on loopback until Ctrl-C."""
+    """Serve the job's instruments on loopback until Ctrl-C, SIGTERM or SIGHUP; exit code 0."""
     from sweeprig.simbench.serve import serve as serve_bench
 
     def ready(addresses: dict[str, str]) -> None:
@@ -35,12 +35,13 @@ def serve(job: str, rate: float, write: Path | None, record: Path | None) -> Non
 
     served = job_named(job)
     try:
-        serve_bench(served, rate, write, ready=ready, record=record)
+        why = serve_bench(served, rate, write, ready=ready, record=record, signals=True)
     except OSError as error:
         if error.filename is None or isinstance(error, SweeprigError):
             raise
         where, remedy = Where(str(error.filename)), "Name a file in a folder that is there and in which you may write"
         raise ConfigError("the file cannot be written", value=error.strerror, where=where, remedy=remedy) from error
+    click.echo(f"ended: {why}; everything is closed", err=True)
 
 
 @simbench.command(short_help="What is true of the simulated motor.")

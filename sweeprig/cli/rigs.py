@@ -1,8 +1,9 @@
-"""Commands that take a rig: off."""
+"""Commands about the rig and the people around it: off, notice."""
 
 from __future__ import annotations
 
 import json
+import sys
 from pathlib import Path
 
 import click
@@ -50,3 +51,15 @@ def off(rig: str, take_over: bool, json_out: bool) -> None:
         click.echo(f"{told} confirmed off after {done.took_s:.2f} s, and shown to be off")
         if holder is not None:
             click.echo(f"killed: {holder}", err=True)
+
+
+@cli.command(short_help="Send a test notice to the services in your notices.toml.")
+@as_json
+def notice(json_out: bool) -> None:
+    """Send a test notice now, to the services that your notices.toml names, and say what became of it."""
+    from sweeprig.conduct import notices
+
+    result = notices.test_notice()
+    click.echo(json.dumps({"ok": result.ok, "words": result.words}) if json_out else result.words)
+    if not result.ok:
+        sys.exit(3)

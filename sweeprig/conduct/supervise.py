@@ -101,10 +101,11 @@ class Supervisor:
         command: Command,
         on_event: OnEvent,
         orders: Orders,
+        tick: Callable[[], None],
         wall: Clock | None = None,
     ) -> None:
         self.folder, self.use, self.command = folder, use, command
-        self.on_event, self.orders = on_event, orders
+        self.on_event, self.orders, self.tick = on_event, orders, tick
         self.wall = wall or SystemClock()
         self.bench = SystemClock(use.rig.rate or 1.0)
         self.tripped = ""
@@ -166,6 +167,7 @@ class Supervisor:
                 heard = now
             looked = now
             if now - beaten >= BOUNDS["beat_s"]:
+                self.tick()
                 runner.tell(BEAT)
                 beaten = now
             for word in ORDERS:

@@ -58,7 +58,7 @@ def commands(group: click.Group, prefix: str = "") -> Iterator[tuple[str, click.
 COMMANDS = dict(commands(cli))
 LINES = {
     name: line for name in COMMANDS for line in manual.text("exit-codes").splitlines()
-    if line.startswith(f"| `sweeprig {name} ")
+    if line.startswith((f"| `sweeprig {name} ", f"| `sweeprig {name}`"))
 }  # fmt: skip
 
 
