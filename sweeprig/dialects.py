@@ -18,7 +18,11 @@ from sweeprig.errors import ConfigError, UnknownAdapter, Where
 
 GROUP = "sweeprig.dialects"
 LARGEST_FILE = 65_536
+MOST_PARTS = 32
+"""Parts of one dotted key: each is a table within the last one, and thousands of them are no dialect but a bomb."""
 _NAME = re.compile(r"[a-z0-9]+(?:-[a-z0-9]+)*")
+_PART = r"(?:[A-Za-z0-9_-]++|\"[^\"\n]*+\"|'[^'\n]*+')"
+_LONG_KEY = re.compile(rf"(?<![A-Za-z0-9_.-]){_PART}(?:[ \t]*+\.[ \t]*+{_PART}){{{MOST_PARTS}}}")
 
 
 def find_dialect(name: str, beside: Path | None, entries: Iterable[EntryPoint] | None = None) -> dict[str, object]:
@@ -102,19 +106,23 @@ def _unknown(name: str, folders: list[tuple[str, Traversable]], broken: list[tup
 
 
 def _load(place: str, file: Traversable) -> dict[str, object]:
-    data = file.read_bytes()
+    with file.open("rb") as stream:
+        data = stream.read(LARGEST_FILE + 1)
     if len(data) > LARGEST_FILE:
         raise ConfigError(
             "the dialect file is too large",
-            value=f"{len(data)} bytes",
+            value=f"more than {LARGEST_FILE} bytes",
             allowed=f"up to {LARGEST_FILE} bytes",
             where=Where(place),
             remedy="name the right file",
             topic="dialects",
         )
     try:
-        return tomllib.loads(data.decode("utf-8"))
-    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as fault:
+        text = data.decode("utf-8")
+        if _LONG_KEY.search(text):
+            raise ValueError(f"a key has more than {MOST_PARTS} parts")
+        return tomllib.loads(text)
+    except (ValueError, RecursionError) as fault:  # no TOML, no UTF-8, an integer too long, nested too deeply
         raise ConfigError(
             "the dialect file is not TOML",
             value=str(fault),
@@ -124,7 +132,7 @@ def _load(place: str, file: Traversable) -> dict[str, object]:
         ) from fault
 
 
-def _line_of(fault: ValueError, data: bytes) -> int | None:
+def _line_of(fault: Exception, data: bytes) -> int | None:
     """The line that the TOML reader names in its text; None where it names none."""
     if "at end of document" in str(fault):
         return data.rstrip(b"\n").count(b"\n") + 1

@@ -7,16 +7,17 @@ use and kept; `reload` forgets them.
 from __future__ import annotations
 
 import html
-import json
 from collections import Counter
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from sweeprig.errors import ConfigError, RunError, Where
-from sweeprig.holds import Outcome
+from sweeprig.holds import Outcome, Status
 from sweeprig.logbook import Intent, Reader, run_folder
 from sweeprig.logbook.export import READING_COLUMNS, hold_columns, reading_lines
+from sweeprig.logbook.findings_file import read_findings
+from sweeprig.logbook.plausible import plausible
 from sweeprig.plan import Plan
 
 if TYPE_CHECKING:
@@ -68,8 +69,8 @@ class Run:
 
     @cached_property
     def outcomes(self) -> list[Outcome]:
-        """All outcomes in number order, whatever their status; only `done` is data."""
-        return self.contents.outcomes()
+        """All outcomes in number order, whatever their status; only `done` is data. RunError for what no run writes."""
+        return plausible(self.contents.outcomes(), Where(str(self.contents.path)))
 
     @cached_property
     def unfinished(self) -> list[Intent]:
@@ -104,7 +105,7 @@ class Run:
             "session": [event.session for event in events],
             "kind": [event.kind for event in events],
             "at (s)": [event.at for event in events],
-            "at (UTC)": pd.to_datetime([event.utc for event in events], unit="s", utc=True),
+            "at (UTC)": _times([event.utc for event in events]),
             "data": [dict(event.data) for event in events],
         })  # fmt: skip
 
@@ -134,7 +135,7 @@ class Run:
         return pd.DataFrame({
             "number": [session.number for session in sessions],
             "began (s)": [session.began for session in sessions],
-            "began (UTC)": pd.to_datetime([session.began_utc for session in sessions], unit="s", utc=True),
+            "began (UTC)": _times([session.began_utc for session in sessions]),
             "info": [dict(session.info) for session in sessions],
         })  # fmt: skip
 
@@ -148,11 +149,11 @@ class Run:
         """What findings say about where they come from: job_hash, simulated, motor, rig, software."""
         head = self.contents.head()
         return {
-            "job_hash": head["job_hash"],
+            "job_hash": head.get("job_hash", ""),
             "simulated": self.simulated,
             "motor": self.job.motor.name,
             "rig": self.job.rig.name,
-            "software": head["software"],
+            "software": head.get("software", ""),
         }
 
     def status(self) -> dict[str, object]:
@@ -163,8 +164,10 @@ class Run:
         last = self.outcomes[-1] if self.outcomes else None
         in_hand = self.unfinished[0].hold if self.unfinished else None
         times = self.contents.last_times()
-        state = str(states[-1].data["state"]) if states else "not begun"
+        state = _visible(str(states[-1].data.get("state", "unknown"))) if states else "not begun"
         working = state not in _AT_REST and run_folder.FolderLock(self.path, "logbook").held()
+        if not working and last is not None and last.status is Status.TRIPPED and self.unfinished == []:
+            state = "tripped"  # also where the process died before it had said so
         return {
             "run": str(self.path),
             "motor": self.job.motor.name,
@@ -175,10 +178,10 @@ class Run:
             "sessions": len(self.contents.sessions()),
             "run_clock_s": (times[0] - self.contents.sessions()[0].began) if times else 0.0,
             "outcomes": dict(Counter(str(outcome.status) for outcome in self.outcomes)),
-            "in_hand": None if in_hand is None else {"number": in_hand.number, "why": in_hand.why},
+            "in_hand": None if in_hand is None else {"number": in_hand.number, "why": _visible(in_hand.why)},
             "last": None if last is None else {
                 "number": last.number, "purpose": str(last.hold.purpose), "status": str(last.status),
-                "verdict": str(last.verdict), "reason": last.reason,
+                "verdict": str(last.verdict), "reason": _visible(last.reason),
             },
         }  # fmt: skip
 
@@ -189,11 +192,9 @@ class Run:
 
         file = self.path / run_folder.FINDINGS
         try:
-            text = file.read_text("utf-8")
+            return Findings.from_json(read_findings(file))
         except FileNotFoundError:
             return characterise(self.plan, self.outcomes, self.about)
-        try:
-            return Findings.from_json(json.loads(text))
         except (ValueError, KeyError, TypeError, AttributeError, ConfigError) as error:
             remedy = "Delete it: it is worked out again from the logbook"
             raise RunError(
@@ -242,3 +243,15 @@ class Run:
         open_holds = len(self.unfinished)
         text = f"{len(self.outcomes)} holds in {len(self.contents.sessions())} sessions"
         return f"{text}, {open_holds} without an outcome" if open_holds else text
+
+
+def _times(seconds: list[float]) -> pd.DatetimeIndex:
+    """UTC seconds as times; NaT for one beyond the calendar."""
+    import pandas as pd
+
+    return pd.to_datetime(seconds, unit="s", utc=True, errors="coerce")
+
+
+def _visible(text: str) -> str:
+    """`text` for a terminal: what would move its cursor or set its title is shown as a mark, and does nothing."""
+    return "".join(c if c.isprintable() else "\N{REPLACEMENT CHARACTER}" for c in text)

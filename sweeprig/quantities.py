@@ -16,8 +16,11 @@ UNITS = ("Hz", "V", "A", "ohm", "s", "%", "rpm", "degC", "W", "1")
 _PREFIXES = {"": 1.0, "u": 1e-6, "m": 1e-3, "k": 1e3, "M": 1e6}
 _NO_PREFIX = ("%", "rpm", "degC", "1")
 _TIMES = {"min": 60.0, "h": 3600.0}
-_QUANTITY = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?)\s*([A-Za-z%µ]*)\s*")
-_NUMBER = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?")
+# One way to match each digit: two would let a long text of digits be tried in as many ways as its length squared.
+_NUMBER_TEXT = r"[+-]?(?:[0-9]+(?:\.[0-9]*)?|\.[0-9]+)(?:[eE][+-]?[0-9]+)?"
+_QUANTITY = re.compile(rf"({_NUMBER_TEXT})\s*([A-Za-z%µ]*)")
+_NUMBER = re.compile(_NUMBER_TEXT)
+_QUOTED = 60
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,9 +65,9 @@ def parse_quantity(text: str, unit: str) -> float:
     Prefixes u (or µ), m, k, M on Hz, V, A, ohm, s, W; also min and h for times. A wrong or missing unit is a
     ValueError that names what was found and what is wanted. The unit "1" takes a bare number.
     """
-    match = _QUANTITY.fullmatch(text)
+    match = _QUANTITY.fullmatch(text.strip())
     if match is None:
-        raise ValueError(f"{text!r} is not a number with a unit; write for example '{_example(unit)}'")
+        raise ValueError(f"{_quoted(text)} is not a number with a unit; write for example '{_example(unit)}'")
     number, found = float(match.group(1)), match.group(2).replace("µ", "u")
     if unit == "1":
         scale = 1.0 if found == "" else None
@@ -73,9 +76,16 @@ def parse_quantity(text: str, unit: str) -> float:
     else:
         scale = _scale(found, unit)
     if scale is None:
-        named = f"the unit '{found}'" if found else "no unit"
-        raise ValueError(f"{text!r} has {named} where {_wanted(unit)} is wanted; write for example '{_example(unit)}'")
+        named = f"the unit {_quoted(found)}" if found else "no unit"
+        raise ValueError(
+            f"{_quoted(text)} has {named} where {_wanted(unit)} is wanted; write for example '{_example(unit)}'"
+        )
     return number * scale
+
+
+def _quoted(text: str) -> str:
+    """`text` for an error text: escaped, and not longer than a line."""
+    return repr(text) if len(text) <= _QUOTED else f"{text[:_QUOTED]!r}…"
 
 
 def _scale(found: str, unit: str) -> float | None:
@@ -121,7 +131,7 @@ def parse_number(text: str, no_value: tuple[str, ...] = ()) -> tuple[float | Non
     if stripped in no_value:
         return None, "no_data:marker"
     if _NUMBER.fullmatch(stripped) is None:
-        raise ValueError(f"{text!r} is not a number")
+        raise ValueError(f"{_quoted(text)} is not a number")
     value = float(stripped)
     if abs(value) >= NO_DATA_MAGNITUDE:
         return None, "no_data:overload"

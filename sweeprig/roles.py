@@ -19,7 +19,7 @@ from __future__ import annotations
 from collections.abc import Generator, Mapping
 from dataclasses import dataclass, field
 from enum import Enum
-from typing import Protocol, TypeVar, runtime_checkable
+from typing import NamedTuple, Protocol, TypeVar, runtime_checkable
 
 from sweeprig.quantities import Accuracy, Reading
 
@@ -62,8 +62,7 @@ class Ask:
     early: bool = False
 
 
-@dataclass(frozen=True, slots=True)
-class Answer:
+class Answer(NamedTuple):
     """raw: the reply without terminator (b"" for NOTHING); at: clock when it was whole."""
 
     raw: bytes

@@ -11,12 +11,17 @@ from collections.abc import Mapping
 from sweeprig.errors import ConfigError, InstrumentRefused, LinkGarbled, OffNotProved
 from sweeprig.quantities import NO_DATA_MAGNITUDE, Accuracy, parse_number, parse_quantity, show_quantity
 from sweeprig.roles import AdapterSetup, Answer, Ask, Identity, Reply, Steps, Window
+from sweeprig_drivers.dialect import Dialect
 
 MOST_ERRORS = 64
 """Entries taken from an error queue before giving up: queues of 16 and 30 were seen, and instruments that never
 run empty because they report a standing error again and again."""
 LONGEST_WINDOW_S = 600.0
+MOST_AVERAGED = 100
+"""Values that an instrument is asked to average in one reading; longer windows take several. Own choice, modest."""
 NO_ACCURACY = Accuracy()
+EVENT_STATUS = "event_status"
+"""The key of `settings`, and the dialect's command: whoever performs a hold looks there for a restart."""
 
 
 def tell(message: bytes | str, early: bool = False) -> Ask:
@@ -185,6 +190,20 @@ def is_on(name: str, raw: bytes) -> bool:
     raise garbled(name, "0 or 1", raw)
 
 
+def status_query(dialect: Dialect) -> Ask | None:
+    """The ask for the event status register (IEEE 488.2, 11.5.1), of which bit 7 says that the instrument started since
+    it was last asked; None where the dialect has no such command. `begin` clears it, and so does asking."""
+    return query(dialect.command(EVENT_STATUS)) if dialect.has(EVENT_STATUS) else None
+
+
+def with_status(name: str, found: dict[str, str], ask: Ask | None) -> Steps[dict[str, str]]:
+    """The settings that were found, and the event status register where it can be asked: one more query."""
+    if ask is not None:
+        answer = yield ask
+        found[EVENT_STATUS] = str(whole_number(name, answer.raw))
+    return found
+
+
 def drain(name: str, error: Ask) -> Steps[tuple[str, ...]]:
     """Take every entry from the error queue, 64 at the most; texts as the instrument wrote them, oldest first.
 
@@ -242,6 +261,54 @@ def confirm(
         found = f"{value:.9g} {unit}" if value is not None else why
         raise refused(name, text, found, f"{wanted:.9g} ± {tolerance:.3g} {unit}", entries)
     return value, answer
+
+
+class Averaging:
+    """The option `averaging`: "host" (several readings a window, their mean taken here) or "instrument" (its own filter
+    takes the mean of so many, one reading a window: fewer messages over the same time).
+
+    It remembers what the filter was last set to, and sets it (read back) when a window needs another number.
+    """
+
+    def __init__(self, name: str, options: Options) -> None:
+        self.name = name
+        self.in_instrument = options.choice("averaging", ("host", "instrument")) == "instrument"
+        self._set = 0
+
+    def forget(self) -> None:
+        """The instrument is about to be configured anew: what its filter is set to is not known."""
+        self._set = 0
+
+    def use(self, dialect: Dialect, error: Ask) -> None:
+        """ConfigError where the dialect does not say how the filter is set."""
+        self._dialect, self._error = dialect, error
+        if self.in_instrument and not (dialect.has("average") and dialect.has("average_query")):
+            raise ConfigError(
+                f"{self.name}: the dialect does not say how this instrument averages",
+                value="averaging = 'instrument'",
+                allowed="a dialect with the commands average and average_query",
+                remedy="leave the option out, or name another dialect in the rig file",
+                topic="dialects",
+            )
+
+    def plan(self, count: int) -> tuple[int, int]:
+        """(readings, values averaged in each) for a window that `count` values fill."""
+        if not self.in_instrument:
+            return count, 1
+        readings = math.ceil(count / MOST_AVERAGED)
+        return readings, round(count / readings)
+
+    def apply(self, each: int) -> Steps[None]:
+        """The filter at `each` values a reading, where it is not so already."""
+        if not self.in_instrument or each == self._set:
+            return
+        self._set = 0
+        send, back = (
+            tell(self._dialect.command("average", count=str(each))),
+            query(self._dialect.command("average_query")),
+        )
+        yield from confirm(self.name, "number averaged", send, back, self._error, each, 0.0, "")
+        self._set = each
 
 
 def turn_on(name: str, on: Ask, state: Ask, error: Ask) -> Steps[None]:

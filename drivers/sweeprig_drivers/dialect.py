@@ -14,6 +14,7 @@ from dataclasses import dataclass
 from sweeprig.errors import ConfigError
 
 LONGEST_COMMAND = 255
+_SHOWN = 70
 _PLACE = re.compile(r"\{([a-z_]+)\}")
 _TOP_KEYS = ("kind", "about", "reply", "no_value", "commands", "values", "texts")
 
@@ -33,6 +34,7 @@ class Form:
 
 
 IDENTITY, CLEAR, ERROR = Form(query=True), Form(), Form(query=True)
+EVENT_STATUS = Form(query=True, optional=True)
 
 
 def refusal(text: str) -> str:
@@ -60,6 +62,15 @@ def number_text(value: float) -> str:
     if not math.isfinite(value):
         raise ValueError(f"{value} is not a finite number")
     return f"{value:.9g}"
+
+
+def _shown(value: object) -> str:
+    """`value` for an error text: escaped, on one line, cut short."""
+    try:
+        text = repr(value)
+    except (ValueError, RecursionError):  # an integer of thousands of digits, or tables in tables without end
+        text = f"a {type(value).__name__} too large to be shown"
+    return text if len(text) <= _SHOWN else f"{text[: _SHOWN - 4]} …"
 
 
 class Dialect:
@@ -108,7 +119,7 @@ class Dialect:
             if why:
                 raise ConfigError(
                     f"{self._name}: the value for '{place}' {why}",
-                    value=repr(value),
+                    value=_shown(value),
                     allowed="printable ASCII without ; # { }",
                     remedy="correct the value in the rig file",
                     topic="dialects",
@@ -118,8 +129,8 @@ class Dialect:
 
     def _wrong(self, key: str, why: str, value: object = None, allowed: str | None = None) -> ConfigError:
         return ConfigError(
-            f"{self._name}: the dialect's '{key}' {why}",
-            value=None if value is None else repr(value),
+            f"{self._name}: the dialect's {_shown(key)} {why}",
+            value=None if value is None else _shown(value),
             allowed=allowed,
             remedy="correct the dialect file",
             topic="dialects",

@@ -12,12 +12,13 @@ from sweeprig.quantities import Reading
 from sweeprig.roles import AdapterSetup, Answer, DriveSetting, Identity, Steps, Window
 from sweeprig_drivers import common
 from sweeprig_drivers.common import query, tell
-from sweeprig_drivers.dialect import CLEAR, ERROR, IDENTITY, Dialect, Form, number_text
+from sweeprig_drivers.dialect import CLEAR, ERROR, EVENT_STATUS, IDENTITY, Dialect, Form, number_text
 
 COMMANDS = {
     "identity": IDENTITY,
     "clear": CLEAR,
     "error": ERROR,
+    "event_status": EVENT_STATUS,
     "load": Form(),
     "load_query": Form(query=True),
     "high": Form(("volts",)),
@@ -74,6 +75,7 @@ class ScpiGenerator:
         self._dialect = dialect = Dialect(name, setup.dialect, "generator", COMMANDS, texts=TEXTS)
         self._identity = query(dialect.command("identity"), early=True)
         self._clear, self._error = tell(dialect.command("clear")), query(dialect.command("error"))
+        self._status = common.status_query(dialect)
         self._shape_query = query(dialect.command("shape_query"))
         self._output = query(dialect.command("output_query"))
         self._accuracy = {key: setup.accuracy.get(key, common.NO_ACCURACY) for key in self.channels}
@@ -102,7 +104,7 @@ class ScpiGenerator:
         for key in ("load", "high", "low", "frequency", "duty", "shape", "level", "output"):
             answer = yield query(self._dialect.command(f"{key}_query"))
             found[key] = common.shown(answer.raw)
-        return found
+        return (yield from common.with_status(self.name, found, self._status))
 
     def check_window(self, window: Window) -> None:
         common.check_window(self.name, window)

@@ -10,15 +10,16 @@ from collections.abc import Mapping
 
 from sweeprig.errors import ConfigError
 from sweeprig.quantities import Reading
-from sweeprig.roles import AdapterSetup, Identity, Steps, Window
+from sweeprig.roles import AdapterSetup, Ask, Identity, Steps, Window
 from sweeprig_drivers import common
 from sweeprig_drivers.common import query, tell
-from sweeprig_drivers.dialect import CLEAR, ERROR, IDENTITY, Dialect, Form, number_text
+from sweeprig_drivers.dialect import CLEAR, ERROR, EVENT_STATUS, IDENTITY, Dialect, Form, number_text
 
 COMMANDS = {
     "identity": IDENTITY,
     "clear": CLEAR,
     "error": ERROR,
+    "event_status": EVENT_STATUS,
     "function": Form(("range",)),
     "range_query": Form(query=True),
     "autorange_query": Form(query=True, optional=True),
@@ -29,6 +30,8 @@ COMMANDS = {
     "amps_autorange_query": Form(query=True, optional=True),
     "amps_aperture": Form(("aperture",), optional=True),
     "amps_aperture_query": Form(query=True, optional=True),
+    "average": Form(("count",), optional=True),
+    "average_query": Form(query=True, optional=True),
     "read": Form(query=True),
 }
 RANGES = {"volts": ("V", 1e-3, 1000.0), "amps": ("A", 1e-6, 100.0)}
@@ -53,9 +56,10 @@ def broken_period(aperture_s: float, pwm_hz: float) -> float:
 
 class ScpiMultimeter:
     """Options: `function` ("volts", or "amps" where the dialect has its commands), `range` (V or A) and `aperture` (s),
-    these two required. Channels: volts, or amps. The range is fixed: an autoranging ammeter interrupts the motor.
+    these two required, `averaging` ("host" or "instrument", who takes the mean over a window). Channels: volts, or
+    amps. The range is fixed: an autoranging ammeter interrupts the motor.
 
-    `measure` averages round(window / aperture) readings, at least one.
+    `measure` averages round(window / aperture) apertures, at least one.
     """
 
     def __init__(self, setup: AdapterSetup) -> None:
@@ -67,10 +71,12 @@ class ScpiMultimeter:
         common.check_accuracy(setup, self.channels)
         self._full = options.quantity("range", self._unit, least, most)
         self._aperture_s = aperture_s = options.quantity("aperture", "s", 1e-4, 10.0)
+        self._averaging = common.Averaging(name, options)
         options.done()
         dialect = Dialect(name, setup.dialect, "multimeter", COMMANDS)
         self._identity = query(dialect.command("identity"), early=True)
         self._clear, self._error = tell(dialect.command("clear")), query(dialect.command("error"))
+        self._status = common.status_query(dialect)
         head = "" if self._quantity == "volts" else "amps_"
         self._require(dialect, [f"{head}{key}" for key in ("function", "range_query", "aperture", "aperture_query")])
         autorange = f"{head}autorange_query"
@@ -79,7 +85,9 @@ class ScpiMultimeter:
         self._autorange = query(dialect.command(autorange)) if dialect.has(autorange) else None
         self._aperture = tell(dialect.command(f"{head}aperture", aperture=number_text(aperture_s)))
         self._aperture_query = query(dialect.command(f"{head}aperture_query"))
+        self._averaging.use(dialect, self._error)
         self._read = query(dialect.command("read"), within_s=aperture_s + 1.0)
+        self._read_longer: dict[int, Ask] = {1: self._read}
         self._no_value = dialect.no_value
         self._accuracy = setup.accuracy.get(self._quantity, common.NO_ACCURACY)
         self._channel = f"{name}.{self._quantity}"
@@ -101,6 +109,7 @@ class ScpiMultimeter:
     def configure(self) -> Steps[None]:
         """Fixed range first (choosing the function presets the aperture), then the aperture; both read back."""
         name, error = self.name, self._error
+        self._averaging.forget()
         standing = yield from common.begin(name, self._clear, error)
         near = SETTING_TOLERANCE
         wanted, unit = self._full, self._unit
@@ -120,7 +129,7 @@ class ScpiMultimeter:
         for key, ask in ((f"range_{self._quantity}", self._range_query), ("aperture_s", self._aperture_query)):
             answer = yield ask
             found[key] = common.shown(answer.raw)
-        return found
+        return (yield from common.with_status(self.name, found, self._status))
 
     def check_window(self, window: Window) -> None:
         """ConfigError when the aperture is not close to a whole number of the window's PWM periods."""
@@ -141,8 +150,10 @@ class ScpiMultimeter:
         """The mean of the readings. One without a value makes the whole mean no data: leaving it out would
         bias the mean towards what the meter could read. With `window.pwm_hz` the broken period's part is in u, and
         the flag `aperture_not_whole_periods` says when it matters."""
-        ask, name, no_value = self._read, self.name, self._no_value
-        count = max(1, round(window.seconds / self._aperture_s))
+        name, no_value = self.name, self._no_value
+        count, each = self._averaging.plan(max(1, round(window.seconds / self._aperture_s)))
+        yield from self._averaging.apply(each)
+        ask = self._read_longer.get(each) or self._longer(each)
         total, lost = 0.0, ""
         raws = []
         for _ in range(count):
@@ -162,6 +173,10 @@ class ScpiMultimeter:
         if window.pwm_hz is not None:
             u, flags = self._with_broken_period(mean, u, window.pwm_hz)
         return {self._quantity: Reading(mean, u, self._unit, answer.at, self._channel, flags, raw)}
+
+    def _longer(self, each: int) -> Ask:
+        ask = self._read_longer[each] = query(self._read.message, within_s=each * self._aperture_s + 1.0)
+        return ask
 
     def _with_broken_period(self, mean: float, u: float, pwm_hz: float) -> tuple[float, tuple[str, ...]]:
         """u with the broken period's part, and the flags.

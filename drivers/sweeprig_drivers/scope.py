@@ -13,12 +13,13 @@ from sweeprig.quantities import Reading
 from sweeprig.roles import AdapterSetup, Ask, Identity, Reply, Steps, Window
 from sweeprig_drivers import common
 from sweeprig_drivers.common import query, tell
-from sweeprig_drivers.dialect import CLEAR, ERROR, IDENTITY, Dialect, Form, number_text
+from sweeprig_drivers.dialect import CLEAR, ERROR, EVENT_STATUS, IDENTITY, Dialect, Form, number_text
 
 COMMANDS = {
     "identity": IDENTITY,
     "clear": CLEAR,
     "error": ERROR,
+    "event_status": EVENT_STATUS,
     "frequency": Form(("channel",), query=True),
     "duty": Form(("channel",), query=True),
     "volts": Form(("channel",), query=True),
@@ -62,6 +63,7 @@ class ScpiScope:
         dialect = Dialect(name, setup.dialect, "scope", COMMANDS)
         self._identity = query(dialect.command("identity"), early=True)
         self._clear, self._error = tell(dialect.command("clear")), query(dialect.command("error"))
+        self._status = common.status_query(dialect)
         self._plan = tuple(
             (quantity, query(dialect.command(quantity, channel=str(number))), UNITS[quantity], f"{name}.{quantity}")
             for quantity, number in wired.items()
@@ -106,9 +108,9 @@ class ScpiScope:
         yield from common.no_new_errors(self.name, self._error, standing)
 
     def settings(self) -> Steps[dict[str, str]]:
-        """Nothing of a scope is set by this adapter; what is asked is on record."""
-        yield from ()
-        return {quantity: ask.message.decode("ascii") for quantity, ask, _, _ in self._plan}
+        """Nothing of a scope is set by this adapter; what is asked is on record, and whether it restarted."""
+        found = {quantity: ask.message.decode("ascii") for quantity, ask, _, _ in self._plan}
+        return (yield from common.with_status(self.name, found, self._status))
 
     def check_window(self, window: Window) -> None:
         common.check_window(self.name, window)

@@ -10,15 +10,16 @@ from collections.abc import Mapping
 
 from sweeprig.errors import ConfigError
 from sweeprig.quantities import Reading
-from sweeprig.roles import AdapterSetup, Identity, Steps, SupplySetting, Window
+from sweeprig.roles import AdapterSetup, Ask, Identity, Steps, SupplySetting, Window
 from sweeprig_drivers import common
 from sweeprig_drivers.common import query, tell
-from sweeprig_drivers.dialect import CLEAR, ERROR, IDENTITY, Dialect, Form, number_text
+from sweeprig_drivers.dialect import CLEAR, ERROR, EVENT_STATUS, IDENTITY, Dialect, Form, number_text
 
 COMMANDS = {
     "identity": IDENTITY,
     "clear": CLEAR,
     "error": ERROR,
+    "event_status": EVENT_STATUS,
     "volts": Form(("volts",)),
     "volts_query": Form(query=True),
     "amps": Form(("amps",)),
@@ -29,6 +30,8 @@ COMMANDS = {
     "measure_volts": Form(query=True),
     "measure_amps": Form(query=True),
     "limiting_query": Form(query=True),
+    "average": Form(("count",), optional=True),
+    "average_query": Form(query=True, optional=True),
 }
 VALUES = {"limiting_mask": (1, 65535), "average_s": (1e-4, 10.0)}
 MOST_VOLTS, MOST_AMPS = 1000.0, 1000.0
@@ -36,7 +39,8 @@ MOST_VOLTS, MOST_AMPS = 1000.0, 1000.0
 
 class ScpiSupply:
     """Options: `volts_resolution`, `amps_resolution` (what a read-back may differ by; 1 mV and 1 mA), `most_readings`
-    (cap on the pairs of readings averaged in one window; none unless given).
+    (cap on the pairs of readings averaged in one window; none unless given), `averaging` ("host" or "instrument", who
+    takes the mean over a window).
 
     Channels: volts, amps (from `measure`), volts_set, amps_limit (from `apply`, the values read back).
     """
@@ -49,6 +53,7 @@ class ScpiSupply:
         self._volts_step = options.quantity("volts_resolution", "V", 1e-6, 1.0, 1e-3)
         self._amps_step = options.quantity("amps_resolution", "A", 1e-6, 1.0, 1e-3)
         self._most = options.whole("most_readings", 1, 1000)
+        self._averaging = common.Averaging(name, options)
         options.done()
         self._dialect = dialect = Dialect(name, setup.dialect, "supply", COMMANDS, VALUES)
         self._mask = int(dialect.value("limiting_mask"))
@@ -56,6 +61,7 @@ class ScpiSupply:
         within_s = 2.0 + dialect.value("average_s")
         self._identity = query(dialect.command("identity"), early=True)
         self._clear, self._error = tell(dialect.command("clear")), query(dialect.command("error"))
+        self._status = common.status_query(dialect)
         self._volts_query, self._amps_query = (
             query(dialect.command("volts_query")),
             query(dialect.command("amps_query")),
@@ -63,8 +69,10 @@ class ScpiSupply:
         self._on, self._output = tell(dialect.command("on")), query(dialect.command("output_query"))
         self._off = tell(dialect.command("off"), early=True)
         self._output_early = query(dialect.command("output_query"), early=True)
+        self._averaging.use(dialect, self._error)
         self._volts = query(dialect.command("measure_volts"), within_s)
         self._amps = query(dialect.command("measure_amps"), within_s)
+        self._pairs: dict[int, tuple[Ask, Ask]] = {1: (self._volts, self._amps)}
         self._limiting = query(dialect.command("limiting_query"))
         self._accuracy = {key: setup.accuracy.get(key, common.NO_ACCURACY) for key in self.channels}
 
@@ -73,6 +81,7 @@ class ScpiSupply:
 
     def configure(self) -> Steps[None]:
         """Status and error queue emptied; nothing is set: voltage, limit and output belong to `apply`."""
+        self._averaging.forget()
         standing = yield from common.begin(self.name, self._clear, self._error)
         yield from common.no_new_errors(self.name, self._error, standing)
 
@@ -82,7 +91,7 @@ class ScpiSupply:
         for key, ask in asks:
             answer = yield ask
             found[key] = common.shown(answer.raw)
-        return found
+        return (yield from common.with_status(self.name, found, self._status))
 
     def check_window(self, window: Window) -> None:
         common.check_window(self.name, window)
@@ -113,18 +122,21 @@ class ScpiSupply:
         count = max(1, round(window.seconds / self._pair_s))
         if self._most is not None:
             count = min(count, self._most)
+        count, each = self._averaging.plan(count)
+        yield from self._averaging.apply(each)
+        ask_volts, ask_amps = self._pairs.get(each) or self._longer(each)
         volts = amps = 0.0
         no_volts = no_amps = ""
         volts_raws, amps_raws = [], []
         for _ in range(count):
-            answer = yield self._volts
+            answer = yield ask_volts
             value, why = common.number(name, answer.raw, no_value)
             volts_raws.append(answer.raw)
             if value is None:
                 no_volts = why
             else:
                 volts += value
-            answer = yield self._amps
+            answer = yield ask_amps
             value, why = common.number(name, answer.raw, no_value)
             amps_raws.append(answer.raw)
             if value is None:
@@ -138,6 +150,12 @@ class ScpiSupply:
             "volts": self._reading("volts", volts / count, no_volts, answer.at, flags, b" ".join(volts_raws)),
             "amps": self._reading("amps", amps / count, no_amps, answer.at, flags, b" ".join(amps_raws)),
         }
+
+    def _longer(self, each: int) -> tuple[Ask, Ask]:
+        within_s = self._volts.within_s + (each - 1) * self._pair_s / 2.0
+        pair = query(self._volts.message, within_s), query(self._amps.message, within_s)
+        self._pairs[each] = pair
+        return pair
 
     def switch_on(self) -> Steps[None]:
         return common.turn_on(self.name, self._on, self._output, self._error)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from contextlib import suppress
 from pathlib import Path
 
 import click
@@ -28,10 +29,14 @@ def serve(job: str, rate: float, write: Path | None, record: Path | None) -> Non
     """Serve the job's instruments on loopback until Ctrl-C, SIGTERM or SIGHUP; exit code 0."""
     from sweeprig.simbench.serve import serve as serve_bench
 
+    def say(text: str) -> None:
+        with suppress(OSError):  # a terminal that hung up takes no words any more
+            click.echo(text, err=True)
+
     def ready(addresses: dict[str, str]) -> None:
         for name, address in addresses.items():
             click.echo(f"{name}  {address}")
-        click.echo("serving, SIMULATED; Ctrl-C ends", err=True)
+        say("serving, SIMULATED; Ctrl-C ends")
 
     served = job_named(job)
     try:
@@ -41,7 +46,7 @@ def serve(job: str, rate: float, write: Path | None, record: Path | None) -> Non
             raise
         where, remedy = Where(str(error.filename)), "Name a file in a folder that is there and in which you may write"
         raise ConfigError("the file cannot be written", value=error.strerror, where=where, remedy=remedy) from error
-    click.echo(f"ended: {why}; everything is closed", err=True)
+    say(f"ended: {why}; everything is closed")
 
 
 @simbench.command(short_help="What is true of the simulated motor.")

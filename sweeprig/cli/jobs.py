@@ -31,7 +31,8 @@ def preview(job: str, json_out: bool) -> None:
     """
     from dataclasses import asdict
 
-    from sweeprig.conduct.unattended import locked_rotor_sum, refusals
+    from sweeprig.clock import SystemClock
+    from sweeprig.conduct.unattended import locked_rotor_sum, points
     from sweeprig.job import freeze
     from sweeprig.launch import check_rig, in_process
     from sweeprig.schedule import preview as look_ahead
@@ -40,14 +41,16 @@ def preview(job: str, json_out: bool) -> None:
     checked = job_named(job)
     check_rig(checked)
     night = look_ahead(freeze(checked), 0.0)
-    sums, refused = locked_rotor_sum(checked), refusals(checked)
+    sums, alone = locked_rotor_sum(checked), points(checked, SystemClock().utc())
+    refused = [point.why for point in alone if not point.met]
     simulated = in_process(checked) or checked.rig.rate is not None
     if json_out:
         value = {**asdict(night), "locked_rotor_seconds": sums, "refused": refused, "simulated": simulated}
+        value["left_alone"] = [{"point": point.words, "met": point.met} for point in alone]
         click.echo(json.dumps(value))
         return
     title = f"{checked.title}\n{checked.motor.name} on {checked.rig.name}, sweep {checked.sweep.name}"
-    click.echo(preview_text(night, f"{title}{'  (SIMULATED)' if simulated else ''}", sums, refused))
+    click.echo(preview_text(night, f"{title}{'  (SIMULATED)' if simulated else ''}", sums, alone))
 
 
 @cli.command(short_help="Perform a job: sweep, findings, report.")
@@ -87,6 +90,7 @@ def resume(run: Path, attended: bool, plain: bool, undecided_ok: bool, json_out:
 
 def _allowed(job: Job, attended: bool) -> None:
     """Cautions on a real rig, and the refusals of an unattended run."""
+    from sweeprig.clock import SystemClock
     from sweeprig.conduct.unattended import refusals
     from sweeprig.launch import in_process
     from sweeprig.manual import cautions
@@ -95,8 +99,8 @@ def _allowed(job: Job, attended: bool) -> None:
         click.echo("Before power is on:", err=True)
         for caution in cautions():
             click.echo(f"  - {caution}", err=True)
-    refused = refusals(job)
-    if refused and not attended:
+    refused = [] if attended else refusals(job, SystemClock().utc())
+    if refused:
         raise ConfigError(
             "this job may not run unattended: " + "; ".join(refused),
             remedy="Mend the rig file, or start with --attended and stay with the rig",
@@ -110,13 +114,14 @@ def _perform(
     """Work a session with progress and Ctrl-C, then findings and report, then the answer."""
     from sweeprig.conduct.states import Orders, State
     from sweeprig.job import freeze
-    from sweeprig.results import results
     from sweeprig.schedule import preview as look_ahead
     from sweeprig.terminal import progress
 
     orders = Orders()
     with progress(look_ahead(freeze(job), 0.0).seconds, plain) as show, _interrupts(orders, show.say):
         launched = work(show, orders)
+    from sweeprig.results import results  # only now: what it loads costs a second and has no part in a night
+
     done = results(launched.path)
     answer(done.findings.as_json(), launched.path, done.report_path, json_out)
     _say_what_is_no_data(launched.path)

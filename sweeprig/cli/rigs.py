@@ -19,7 +19,8 @@ from sweeprig.errors import ConfigError, Where
 def off(rig: str, take_over: bool, json_out: bool) -> None:
     """Switch drive and supply of a rig off, at once on all links, and prove it. RIG: a rig file or a job file.
 
-    A run that holds the rig is ordered off and has two seconds for its proof.
+    A run that holds the rig is ordered off. It has two seconds to have drive and supply confirm; the proof follows
+    once the rotor is at rest.
     """
     from sweeprig.clock import SystemClock
     from sweeprig.conduct.off import off_or_order
@@ -38,19 +39,20 @@ def off(rig: str, take_over: bool, json_out: bool) -> None:
             remedy="Give the file of a real rig or of a served simulated bench",
             topic="simbench",
         )
-    done, holder = off_or_order(use, SystemClock(use.rig.rate or 1.0), SystemClock(), take_over)
-    told = " and ".join(done.told)
-    value = {
-        "off": list(done.told), "took_s": done.took_s, "proved": True, "holder": None if holder is None else str(holder)
-    }  # fmt: skip
+    done = off_or_order(
+        use, SystemClock(use.rig.rate or 1.0), SystemClock(), take_over, lambda text: click.echo(text, err=True)
+    )
+    told = () if done.off is None else done.off.told
+    who = None if done.holder is None else str(done.holder)
     if json_out:
+        value = {"off": list(told), "took_s": done.took_s, "proved": True, "holder": who, "by_holder": done.off is None}
         click.echo(json.dumps(value))
-    elif holder is not None and done.took_s == 0.0:
-        click.echo(f"ordered off, and shown to be off, by {holder}")
+    elif done.off is None:
+        click.echo(f"off, and shown to be off, after {done.took_s:.1f} s by its holder: {who}")
     else:
-        click.echo(f"{told} confirmed off after {done.took_s:.2f} s, and shown to be off")
-        if holder is not None:
-            click.echo(f"killed: {holder}", err=True)
+        click.echo(f"{' and '.join(told)} confirmed off after {done.off.took_s:.2f} s, and shown to be off")
+        if who is not None:
+            click.echo(f"killed: {who}", err=True)
 
 
 @cli.command(short_help="Send a test notice to the services in your notices.toml.")

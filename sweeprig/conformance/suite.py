@@ -11,6 +11,7 @@ from functools import partial
 from typing import Any
 
 from sweeprig.conformance.bed import Bed, Exchange, Failed, NotApplicable, Refusing, Watch, actuator, need, perform
+from sweeprig.conformance.scripted import POWER_ON
 from sweeprig.errors import InstrumentRefused, LinkMisuse, LinkTimeout, RigError
 from sweeprig.quantities import NO_DATA_MAGNITUDE, Reading
 from sweeprig.roles import Adapter, Answer, Ask, Drive, Identity, Reply, Steps, Supply
@@ -68,6 +69,18 @@ def settings_are_texts(bed: Bed) -> str:
     texts = all(isinstance(key, str) and isinstance(value, str) for key, value in found.items())
     need(texts, f"settings returned {found!r}")
     return ", ".join(f"{key} {value}" for key, value in found.items()) or "no settings"
+
+
+def a_restart_shows(bed: Bed) -> str:
+    """Who shows its event status register shows it as whoever looks for a restart reads it, and after `configure` with
+    bit 7 clear: left set, every hold would pass for one in which the instrument restarted."""
+    adapter, exchange = bed.fresh()
+    status = perform(adapter.settings(), exchange).get("event_status")
+    if status is None:
+        raise NotApplicable("its settings show no event_status: a restart that leaves them as they were is not seen")
+    need(status.isdecimal() and int(status) < 256, f"event_status is {status!r}, no register of eight bits in digits")
+    need(not int(status) & POWER_ON, f"event_status {status} after configure: its power-on bit is still set")
+    return f"event_status {status} after configure"
 
 
 def configure_is_confirmed(bed: Bed) -> str:
@@ -213,9 +226,9 @@ SUITE: Mapping[str, Callable[[Bed], str]] = {
     check.__name__: check
     for check in (
         identity_is_asked_first_early_and_alone, no_identity_is_refused, asks_are_bounded, messages_are_clean,
-        asking_sets_nothing, settings_are_texts, configure_is_confirmed, apply_is_confirmed, switch_on_is_confirmed,
-        off_is_early, off_is_proved, every_channel_is_read, no_data_stays_no_data, garbage_is_refused,
-        a_wrong_count_is_refused, steps_can_be_closed_anywhere, link_errors_come_through,
+        asking_sets_nothing, settings_are_texts, a_restart_shows, configure_is_confirmed, apply_is_confirmed,
+        switch_on_is_confirmed, off_is_early, off_is_proved, every_channel_is_read, no_data_stays_no_data,
+        garbage_is_refused, a_wrong_count_is_refused, steps_can_be_closed_anywhere, link_errors_come_through,
     )
 }  # fmt: skip
 

@@ -262,7 +262,7 @@ def _found(text: str) -> str:
     match = _ENDS_IN_UNIT.search(text)
     if match is None:
         return "this is no number with a unit"
-    return f"the unit here is {match.group(1)}" if match.group(1) else "this has no unit"
+    return f"the unit here is {match.group(1)[:20]}" if match.group(1) else "this has no unit"
 
 
 def _noun(unit: str) -> str:

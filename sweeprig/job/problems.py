@@ -172,9 +172,8 @@ def _unknown_key(path: KeyPath, where: Where, model: type[BaseModel]) -> ConfigE
         )
     else:
         remedy = "Remove it, or make it a comment with #"
-    return ConfigError(
-        "unknown key", value=str(path[-1]), allowed=", ".join(known) or None, where=where, remedy=remedy, topic=TOPIC
-    )
+    key, allowed = dotted(path[-1:]), ", ".join(known) or None
+    return ConfigError("unknown key", value=key, allowed=allowed, where=where, remedy=remedy, topic=TOPIC)
 
 
 def _missing(path: KeyPath, where: Where, model: type[BaseModel]) -> ConfigError:

@@ -19,18 +19,32 @@ _PerHour = Annotated[float, Number(-50.0, 100.0, "In percent per hour of turning
 _Corner = Annotated[float, Number(-1e6, 1e6, "A corner of the load curve")]
 
 
-class SimulatedHeat(Strict):
-    """Winding and case as two bodies, in place of the motor's one thermal resistance and time constant.
-
-    magnet_percent_per_k   of the torque constant, by the case's temperature; ferrite about −0.2
-    """
+class TwoBodyHeat(Strict):
+    """Winding and case as two bodies."""
 
     winding_case_k_per_w: _KPerW
     case_ambient_k_per_w: _KPerW
     winding_j_per_k: _JPerK
     case_j_per_k: _JPerK
     ambient_degc: Annotated[float, Number(-60.0, 100.0, "The air around the motor")] = 20.0
+
+
+class SimulatedHeat(TwoBodyHeat):
+    """Of a motor with a winding to reckon with; brushed: in place of one thermal resistance and time constant.
+
+    magnet_percent_per_k   of the torque constant, by the case's temperature; ferrite about −0.2
+    """
+
     magnet_percent_per_k: Annotated[float, Number(-1.0, 0.5, "No magnet fades faster with warmth")] = -0.2
+
+
+class SimulatedInputHeat(TwoBodyHeat):
+    """Of a fan of which only the current is known.
+
+    loss_percent   part of what it draws beyond standstill that warms the winding; the rest moves air
+    """
+
+    loss_percent: Annotated[float, Number(0.0, 100.0, "Part of the driving power that warms the winding")] = 40.0
 
 
 class SimulatedCogging(Strict):

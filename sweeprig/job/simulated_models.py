@@ -10,7 +10,13 @@ from typing import Annotated, Literal
 from pydantic import Discriminator, Field, Tag
 
 from sweeprig.job.amounts import Number, Strict
-from sweeprig.job.simulated_details import SimulatedCogging, SimulatedDrift, SimulatedHeat, SimulatedLoad
+from sweeprig.job.simulated_details import (
+    SimulatedCogging,
+    SimulatedDrift,
+    SimulatedHeat,
+    SimulatedInputHeat,
+    SimulatedLoad,
+)
 
 _Positive = Annotated[float, Number(0.0, 1e6, "A motor has none of nothing", above=True)]
 _OrZero = Annotated[float, Number(0.0, 1e6, "It cannot be negative")]
@@ -97,6 +103,7 @@ class SimulatedElectronic(Strict):
     draught_rpm: Annotated[float, Number(0.0, 10_000.0, "Backwards; 0 for none")] = 0.0
     draught_spread_percent: _Spread = 0.0
     tach_chopped: bool = False
+    heat: SimulatedHeat | None = None
 
 
 class SimulatedControlInput(Strict):
@@ -130,6 +137,7 @@ class SimulatedControlInput(Strict):
     spread_percent: Annotated[float, Number(0.0, 10.0, "A standard deviation in percent duty")] = 0.0
     correlation_s: _Positive = 1.0
     speed_spread_percent: _Spread = 0.0
+    heat: SimulatedInputHeat | None = None
 
 
 class SimulatedPrescribed(Strict):

@@ -30,10 +30,21 @@ def stage_checks(job: Job, sources: Sources) -> Iterator[ConfigError]:
         if stage.dead_time_s > 0.0 and (stage.recirculation == "diode" or rig.stage == "low_side_diode"):
             what, remedy = "dead time is between two switches, and here a diode takes over", "Remove dead_time_s"
             yield _error(sources, "simulated_stage", "dead_time_s", what, "0", remedy)
+        yield from _capacitor(job, sources)
     source, highest = rig.simulated_source, max(job.sweep.supply)
     if source is not None and source.clamp_volts is not None and source.clamp_volts <= highest:
         what, remedy = "the clamp would conduct at the supply's own voltage and burn", "Raise it"
         yield _error(sources, "simulated_source", "clamp_volts", what, f"above {highest:g} (supply)", remedy)
+
+
+def _capacitor(job: Job, sources: Sources) -> Iterator[ConfigError]:
+    """A load capacitor is reckoned with for a motor that hangs on the rig's stage; the other kinds have one inside."""
+    stage, true = job.rig.simulated_stage, job.motor.simulated
+    if stage is None or true is None or stage.load_capacitor_farad is None or true.kind == "brushed":
+        return
+    what = f"the simulated motor is of kind {true.kind}, and only a brushed one is reckoned with a load capacitor"
+    remedy = "Remove it, or name a motor of kind brushed"
+    yield _error(sources, "simulated_stage", "load_capacitor_farad", what, "none with this motor", remedy)
 
 
 def _error(sources: Sources, table: str, key: str, what: str, allowed: str, remedy: str) -> ConfigError:

@@ -19,6 +19,7 @@ class SimulatedStage(Strict):
     recirculation   where the motor's current goes in the off-time: a diode, or a switch (`synchronous`, bridges only)
     decay           H bridge only: `slow` shorts the motor in the off-time, `fast` reverses the bridge
     on_time_error_s the on-time is by so much longer (or shorter) than commanded: switch delays
+    load_capacitor_farad, _ohm  a capacitor across the motor's terminals, and its series resistance
     """
 
     recirculation: Literal["diode", "synchronous"] | None = None
@@ -28,6 +29,11 @@ class SimulatedStage(Strict):
     diode_resistance_ohm: _Ohms = 0.0
     dead_time_s: Annotated[float, Number(0.0, 1e-4, "A longer one would be no PWM stage")] = 0.0
     on_time_error_s: Annotated[float, Number(-1e-3, 1e-3, "A slower switch is no PWM switch")] = 0.0
+    load_capacitor_farad: (
+        Annotated[float, Number(1e-9, 1e-3, "Leave it out for none; a larger one would drive the motor by itself")]
+        | None
+    ) = None
+    load_capacitor_ohm: Annotated[float, Number(1e-3, 100.0, "A charge without resistance has no current")] = 0.1
 
 
 class SimulatedSource(Strict):

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import bisect
 import re
+import stat
 import tomllib
 from dataclasses import dataclass
 from pathlib import Path
@@ -15,6 +16,15 @@ from sweeprig.errors import ConfigError, Where
 
 LARGEST_FILE = 1_000_000
 """Bytes. A job file is a page or two; more is a wrong file, and would only be read to be refused."""
+
+MOST_PLACES = 5_000
+"""Keys and array items of one file. Each may be a problem with a sentence of its own; no job has a tenth of it."""
+
+MOST_PARTS = 32
+"""Parts of one dotted key. Every part is a table within the last one: thousands of them fill the memory."""
+
+LARGEST_INTEGER = 2**63 - 1
+"""TOML 1.0 promises no more than 64 bits; longer ones cannot even be shown in an error text."""
 
 KeyPath = tuple[str | int, ...]
 """Keys and array positions (from 0) from the top of a file down to a value: ("pwm", 1)."""
@@ -26,6 +36,9 @@ _STRING = re.compile(
 )
 _OTHER_VALUE = re.compile(r"[^,\]}\n#]*")
 _AT_LINE = re.compile(r"\(at line (\d+), column (\d+)\)")
+_PART = r"(?:[A-Za-z0-9_-]++|\"[^\"\n]*+\"|'[^'\n]*+')"
+_LONG_KEY = re.compile(rf"(?<![A-Za-z0-9_.-]){_PART}(?:[ \t]*+\.[ \t]*+{_PART}){{{MOST_PARTS}}}")
+_SHOWN_KEY = 70
 
 
 @dataclass(frozen=True, slots=True)
@@ -65,9 +78,11 @@ def read(path: Path, named_by: Where | None = None) -> Source:
     in UTF-8, or no TOML (with the line).
     """
     try:
+        if not stat.S_ISREG(path.stat().st_mode):  # a pipe or a device might never end, or never begin
+            raise IsADirectoryError(0, "it is no ordinary file")
         with path.open("rb") as stream:
             raw = stream.read(LARGEST_FILE + 1)
-    except OSError as error:
+    except (OSError, ValueError) as error:  # ValueError: a NUL in the path
         raise _unreadable(path, named_by, error) from error
     if len(raw) > LARGEST_FILE:
         size = f"more than {LARGEST_FILE:,} bytes"
@@ -85,7 +100,10 @@ def read(path: Path, named_by: Where | None = None) -> Source:
 
 
 def parse(text: str, file: str) -> Source:
-    """Parse a TOML text; `file` is what errors call it. ConfigError with the line where it is no TOML."""
+    """Parse a TOML text; `file` is what errors call it. ConfigError with the line where it is no TOML, or outsized."""
+    if (long := _LONG_KEY.search(text)) is not None:
+        line = text.count("\n", 0, long.start()) + 1
+        raise _outsized("a key has too many parts", f"more than {MOST_PARTS}", f"up to {MOST_PARTS}", Where(file, line))
     try:
         data = tomllib.loads(text)
         lines = _Scanner(text).scan()
@@ -94,7 +112,30 @@ def parse(text: str, file: str) -> Source:
     except RecursionError as error:
         remedy = "No job needs arrays or tables nested hundreds deep"
         raise ConfigError("the file is nested too deeply", where=Where(file), remedy=remedy) from error
-    return Source(file, data, lines)
+    except ValueError as error:  # the interpreter's own bound on the digits of an integer
+        raise _outsized("an integer has too many digits", None, "up to 19 digits", Where(file)) from error
+    source = Source(file, data, lines)
+    _refuse_outsized(source)
+    return source
+
+
+def _refuse_outsized(source: Source) -> None:
+    if len(source.lines) > MOST_PLACES:
+        found, allowed = f"{len(source.lines):,} keys and array items", f"up to {MOST_PLACES:,}"
+        raise _outsized("there is too much in this file", found, allowed, Where(source.file))
+    left: list[tuple[KeyPath, object]] = [((), source.data)]
+    while left:
+        path, value = left.pop()
+        if isinstance(value, int) and abs(value) > LARGEST_INTEGER:
+            raise _outsized("an integer is too large", None, "64 bits", source.where(path))
+        if isinstance(value, dict | list):
+            inner = value.items() if isinstance(value, dict) else enumerate(value)
+            left += [((*path, key), each) for key, each in inner]
+
+
+def _outsized(what: str, value: str | None, allowed: str, where: Where) -> ConfigError:
+    remedy = "Check that this is the file that is meant"
+    return ConfigError(what, value=value, allowed=allowed, where=where, remedy=remedy, topic="job-files")
 
 
 def _no_toml(text: str, file: str, message: str) -> ConfigError:
@@ -111,10 +152,10 @@ def _no_toml(text: str, file: str, message: str) -> ConfigError:
     return ConfigError(what, value=value, where=Where(file, line), remedy=remedy, topic="job-files")
 
 
-def _unreadable(path: Path, named_by: Where | None, error: OSError) -> ConfigError:
+def _unreadable(path: Path, named_by: Where | None, error: OSError | ValueError) -> ConfigError:
     if path.is_dir():
         what = "this is a folder where a file is wanted"
-    elif isinstance(error, FileNotFoundError | NotADirectoryError):
+    elif isinstance(error, FileNotFoundError | NotADirectoryError | ValueError):
         what = "there is no such file"
     else:
         what = f"the file cannot be read ({error.strerror})"
@@ -137,6 +178,7 @@ def _what_lies_in(folder: Path) -> str:
 
 
 def _shown_key(key: str) -> str:
+    key = key if len(key) <= _SHOWN_KEY else f"{key[: _SHOWN_KEY - 4]} …"
     return key if _BARE_KEY.fullmatch(key) else f'"{key if key.isprintable() else ascii(key)[1:-1]}"'
 
 

@@ -13,13 +13,19 @@ from contextlib import suppress
 from sweeprig.clock import Clock
 from sweeprig.errors import LinkError, LinkGarbled, LinkLost, LinkMisuse, LinkTimeout, SweeprigError
 from sweeprig.link.framing import parse, parse_line, show, still_owed
+from sweeprig.link.link import LARGEST_LINE
 from sweeprig.roles import Reply
 
 CHUNK = 65_536
 """Bytes taken from a port at once; with the largest reply it bounds what a link holds."""
 
+REMEMBERED, REMEMBERED_BYTES = 256, 256
+"""Messages that a link keeps with their terminator, and the longest of them."""
+
 QUIET_S = 0.2
 """A line is drained when nothing has come for so long."""
+
+_LINE, _NOTHING, _STREAM = Reply.LINE, Reply.NOTHING, Reply.STREAM
 
 # By name, so that this module imports no library that a rig may not need.
 _TIMEOUT_NAMES = frozenset({"SerialTimeoutException"})
@@ -32,7 +38,11 @@ class BaseLink(ABC):
     Hooks, which raise whatever they meet: `_open(deadline)` opens the handle, and closes it again if that fails;
     `_read()` gives the bytes that are there, b"" for none, and raises ConnectionError when the peer has closed;
     `_write(data, deadline)` writes all or raises; `_shut()` closes the handle, also half-open or already closed.
+
+    knows_when_ready  `ready_at` is what it says, so that `take` need not be tried before
     """
+
+    knows_when_ready = False
 
     def __init__(self, address: str, clock: Clock, terminator: bytes = b"\n") -> None:
         self.address = address
@@ -41,6 +51,7 @@ class BaseLink(ABC):
         self.empty_lines = 0
         self._clock = clock
         self._terminator = terminator
+        self._written: dict[bytes, bytes] = {}
         self._buffer = bytearray()
         self._awaiting: Reply | None = None
         self._blind = False
@@ -83,17 +94,24 @@ class BaseLink(ABC):
         try:
             if data := self._read():
                 self._buffer += data
-            if reply is Reply.STREAM:
+            if reply is _STREAM:
                 self._pass_over()
             elif self._buffer:
                 blind = self._before_send(early) or blind
             if message:
-                self._write(message + self._terminator, deadline)
+                self._write(self._written.get(message) or self._ended(message), deadline)
         except Exception as error:
             raise self._failed(error) from error
-        if reply is not Reply.NOTHING:
+        if reply is not _NOTHING:
             self._awaiting = reply
             self._blind = blind
+
+    def _ended(self, message: bytes) -> bytes:
+        """The message with its terminator. Short ones are remembered: what is asked is nearly always asked again."""
+        data = message + self._terminator
+        if len(self._written) < REMEMBERED and len(data) <= REMEMBERED_BYTES:
+            self._written[message] = data
+        return data
 
     def take(self) -> bytes | None:
         """The whole reply without terminator (of a block: its data), or None for not yet. Never waits."""
@@ -105,6 +123,12 @@ class BaseLink(ABC):
             if not data:
                 return None
             buffer = self._buffer
+            if awaiting is _LINE and not buffer and not self._owed and not self._headless:
+                # nearly every reply: one line that is not empty and its LF, nothing before it and nothing behind it
+                last = len(data) - 1
+                if 0 < last <= LARGEST_LINE and data.find(b"\n") == last and b"\r" not in data:
+                    self._awaiting = None
+                    return data[:last]
             buffer += data
             if self._headless:
                 self._drop_tail()

@@ -40,11 +40,14 @@ class BytePort(Protocol):
 
 
 class InProcessLink(BaseLink):
+    knows_when_ready = True
+
     def __init__(self, address: str, clock: Clock, terminator: bytes, port: BytePort) -> None:
         super().__init__(address, clock, terminator)
         self._port = port
         # asked several times in every exchange: the port's own methods stand in the place of two that only pass on
         self._read = port.read  # type: ignore[method-assign]  # same signature, one call less
+        self._put = port.write
         self.ready_at = port.next_ready  # type: ignore[method-assign]  # same signature, one call less
 
     def resynchronise(self, deadline: float) -> None:
@@ -64,7 +67,7 @@ class InProcessLink(BaseLink):
 
     def _write(self, data: bytes, deadline: float) -> None:
         del deadline
-        self._port.write(data)
+        self._put(data)
 
     def _shut(self) -> None:
         self._port.close()

@@ -2,10 +2,14 @@
 
 Exclusive, and no read or write of it can hang. Opening may reset a board, so resynchronising drains instead of
 reopening while the port is alive. How long a board takes to start again is no business of this module.
+
+A node such as /dev/ttyUSB0 is numbered anew whenever its adapter drops off the bus: the stable name that leads to it is
+noted at the first opening and used from then on.
 """
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from pathlib import Path
 from urllib.parse import parse_qsl
 
@@ -21,6 +25,10 @@ WRITE_S = 0.05
 """Longest time (real seconds) in which the machine must take a message; its buffer holds many, so it takes no time."""
 _READ = 4_096
 
+STABLE_NAMES = (Path("/dev/serial/by-id"), Path("/dev/serial/by-path"))
+"""Folders of links to the nodes, the better one first: an adapter without a serial number shares its name in the first
+with its like; the second names the socket that it is plugged into."""
+
 
 def parse_address(address: str) -> tuple[str, int]:
     """(port, baud); ConfigError where it is no such address."""
@@ -33,12 +41,37 @@ def parse_address(address: str) -> tuple[str, int]:
     return port, int(baud)
 
 
-class SerialLink(BaseLink):
-    """One serial port, 8 data bits, no parity, 1 stop bit. The name is resolved anew at each opening."""
+def stable_name(device: str, folders: Sequence[Path]) -> str:
+    """A name in one of `folders` that leads to the node `device` now; `device` itself where there is none, and where it
+    is a link, whose owner has chosen it for its stability."""
+    node = Path(device)
+    if node.is_symlink():
+        return device
+    for folder in folders:
+        try:
+            links = sorted(folder.iterdir())
+        except OSError:
+            continue  # not Linux, or no port is there
+        for link in links:
+            if link.is_symlink() and link.resolve() == node.resolve():
+                return str(link)
+    return device
 
-    def __init__(self, address: str, clock: Clock, terminator: bytes = b"\n") -> None:
+
+class SerialLink(BaseLink):
+    """One serial port, 8 data bits, no parity, 1 stop bit. The name is resolved anew at each opening.
+
+    stable_names   folders in which a stable name for a plain node is looked for, STABLE_NAMES where not given
+    """
+
+    def __init__(
+        self, address: str, clock: Clock, terminator: bytes = b"\n", stable_names: Sequence[Path] | None = None
+    ) -> None:
         super().__init__(address, clock, terminator)
         self._device, self._baud = parse_address(address)
+        self._given = self._device
+        self._stable_names = STABLE_NAMES if stable_names is None else stable_names
+        self._was_open = False
         self._port: serial.Serial | None = None
         self._handle: int | None = None
 
@@ -63,6 +96,8 @@ class SerialLink(BaseLink):
             self._handle = self._port.fileno()
         except (AttributeError, OSError):
             self._handle = None  # Windows: the clock polls
+        if not self._was_open:
+            self._device, self._was_open = stable_name(self._device, self._stable_names), True
 
     def _read(self) -> bytes:
         if self._port is None:
@@ -85,4 +120,7 @@ class SerialLink(BaseLink):
         # the operating system has one text for both
         if Path(self._device).exists():
             return "The port is there: another program may have it open (a modem manager, a terminal)"
-        return "The port is gone: check the cable and power, then its name"
+        was = (
+            "" if self._device == self._given else f" (first opened as {self._given}, looked for under its stable name)"
+        )
+        return f"The port is gone: check the cable and power, then its name{was}"

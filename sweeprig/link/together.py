@@ -21,6 +21,8 @@ from sweeprig.roles import Answer, Ask, Reply, Steps
 LOOK_S = 0.05
 """`look` is called at least this often; a write that the machine does not take within it is a stuck link."""
 
+_NOTHING = Reply.NOTHING
+
 Traffic: TypeAlias = Callable[[str, str, bytes, float], None]
 
 
@@ -41,7 +43,7 @@ class Result:
 class _Talk:
     """The steps of one instrument. `until`: the deadline of the awaited reply, or when to go on without one."""
 
-    __slots__ = ("ask", "awaiting", "link", "name", "result", "send", "steps", "take", "until", "written")
+    __slots__ = ("ask", "awaiting", "link", "name", "ready_at", "result", "send", "steps", "take", "until", "written")
 
     def __init__(self, name: str, link: Link, steps: Steps[Any]) -> None:
         self.name = name
@@ -49,6 +51,7 @@ class _Talk:
         self.steps = steps
         self.send = link.send
         self.take = link.take
+        self.ready_at: Callable[[], float] = link.ready_at if getattr(link, "knows_when_ready", False) else _any_moment
         self.ask = Ask(b"")
         self.awaiting = False
         self.written = False
@@ -94,7 +97,7 @@ def together(
 class _Loop:
     """What stays the same during one call of `together`."""
 
-    __slots__ = ("clock", "deadline", "on_result", "regroup", "traffic")
+    __slots__ = ("awaited", "clock", "deadline", "ended", "on_result", "traffic")
 
     def __init__(
         self,
@@ -107,7 +110,8 @@ class _Loop:
         self.deadline = deadline
         self.on_result = on_result
         self.traffic = traffic
-        self.regroup = False
+        self.awaited: list[Link] = []
+        self.ended = False
 
     def run(self, talks: list[_Talk], look: Callable[[], None] | None) -> None:
         now_of, wait, serve = self.clock.now, self.clock.wait, self.serve
@@ -117,24 +121,30 @@ class _Loop:
         for talk in talks:
             self.advance(talk, None, now)
         next_look = math.inf if look is None else now + LOOK_S
-        running, on = _groups(talks)
-        self.regroup = False
+        running, on, looked = _running(talks), self.awaited, False
+        nearest = now
         while running:
-            until = next_look
-            for talk in running:
-                if talk.until < until:
-                    until = talk.until
+            until = nearest if nearest < next_look else next_look
             if until > now:
                 wait(until, on)
             now = now_of()
-            for talk in running:
-                serve(talk, now)
-            if self.regroup:
-                self.regroup = False
-                running, on = _groups(running)
-            if look is not None and now >= next_look:
+            if now >= next_look and look is not None and not looked:
+                # what came meanwhile is taken in the next turn, which follows at once and does not look
                 look()
-                next_look = now + LOOK_S
+                next_look, looked = now + LOOK_S, True
+                continue
+            looked = False
+            nearest = math.inf
+            for talk in running:
+                until = talk.until
+                if until <= now or (talk.awaiting and (talk.ready_at() <= now or talk.link.dirty)):
+                    serve(talk, now)
+                    until = talk.until
+                if until < nearest:
+                    nearest = until
+            if self.ended:
+                self.ended = False
+                running = _running(running)
 
     def serve(self, talk: _Talk, now: float) -> None:
         """Take what came, or go on where that is due, or give up what is late."""
@@ -200,20 +210,24 @@ class _Loop:
         except Exception as error:  # noqa: BLE001 - a faulty link must not keep the others from switching off
             self.fail(talk, error, now)
             return
-        if ask.reply is Reply.NOTHING:
+        if ask.reply is _NOTHING:
             talk.written = True
             self.pause(talk, now)
             return
         talk.until = until
         if not was_awaiting:
-            self.regroup = True
+            self.awaited.append(talk.link)
 
     def pause(self, talk: _Talk, until: float) -> None:
         """No reply is outstanding; go on at `until`."""
         talk.until = until
-        if talk.awaiting:
-            talk.awaiting = False
-            self.regroup = True
+        self.rest(talk)
+
+    def rest(self, talk: _Talk) -> None:
+        """Nothing is awaited of it any more."""
+        talk.awaiting = False
+        if talk.link in self.awaited:
+            self.awaited.remove(talk.link)
 
     def give_up(self, talk: _Talk, now: float) -> None:
         partial = talk.link.declare_timeout()
@@ -236,16 +250,20 @@ class _Loop:
 
     def end(self, talk: _Talk, result: Result) -> None:
         talk.result = result
-        talk.awaiting = False
-        self.regroup = True
+        talk.until = math.inf
+        self.rest(talk)
+        self.ended = True
         if self.on_result is not None:
             self.on_result(talk.name, result)
 
 
-def _groups(talks: list[_Talk]) -> tuple[list[_Talk], list[Link]]:
-    """Those still running, and the links on which a reply is awaited."""
-    running = [talk for talk in talks if talk.result is None]
-    return running, [talk.link for talk in running if talk.awaiting]
+def _any_moment() -> float:
+    """When bytes may be there, of a link that does not know."""
+    return -math.inf
+
+
+def _running(talks: list[_Talk]) -> list[_Talk]:
+    return [talk for talk in talks if talk.result is None]
 
 
 def _abandon(talk: _Talk) -> None:

@@ -77,11 +77,17 @@ def export_csv(contents: Contents, folder: Path) -> list[Path]:
     holds, readings = folder / HOLDS, folder / READINGS
     with os_errors_at(folder):
         folder.mkdir(parents=True, exist_ok=True)
-        with holds.open("w", encoding="utf-8", newline="") as file:
+        with _fresh(holds) as file:
             write_holds(contents.outcomes(), file)
-        with readings.open("w", encoding="utf-8", newline="") as file:
+        with _fresh(readings) as file:
             write_readings(contents, file)
     return [holds, readings]
+
+
+def _fresh(path: Path) -> TextIO:
+    """A new file for the CSV writer: a link under that name is replaced, never followed."""
+    path.unlink(missing_ok=True)
+    return path.open("x", encoding="utf-8", newline="")
 
 
 def cell(value: object) -> object:

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING
 from sweeprig.errors import RunError, Where
 from sweeprig.holds import Hold, Outcome
 from sweeprig.logbook import run_folder, schema
-from sweeprig.logbook.database import connect, mapped, open_for_writing, primary_code, require
+from sweeprig.logbook.database import bounded, connect, mapped, open_for_writing, primary_code, require
 from sweeprig.logbook.read import Contents, Row
 from sweeprig.logbook.values import Event, dump, hold_from_json, hold_to_json, load, outcome_to_json, sound
 from sweeprig.quantities import Reading
@@ -159,7 +159,7 @@ class Logbook(Contents):
 
     def _ask(self, sql: str, values: tuple[object, ...] = ()) -> list[Row]:
         with mapped(self.path, writing=True):
-            return self._connection.execute(sql, values).fetchall()
+            return bounded(self._connection.execute(sql, values), self.path)
 
     @contextmanager
     def _transaction(self, events: Sequence[Event] = ()) -> Iterator[sqlite3.Connection]:

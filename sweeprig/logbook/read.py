@@ -13,12 +13,17 @@ from typing import Any, TypeVar
 from sweeprig.errors import RunError, Where
 from sweeprig.holds import Outcome
 from sweeprig.logbook import schema
-from sweeprig.logbook.database import ask_once
+from sweeprig.logbook.database import ask_once, too_much
 from sweeprig.logbook.values import (
     Event,
     InstrumentSeen,
     Intent,
     Session,
+    as_count,
+    as_number,
+    as_table,
+    as_text,
+    as_texts,
     hold_from_json,
     load,
     outcome_from_json,
@@ -30,6 +35,9 @@ Row = tuple[Any, ...]
 Value = TypeVar("Value")
 
 BEFORE_ALL = -1
+
+LARGEST_WHOLE = 256_000_000
+"""Bytes of text of one kind that are held at once: thirty long nights of outcomes."""
 
 
 class Contents(ABC):
@@ -46,7 +54,7 @@ class Contents(ABC):
 
     def head(self) -> dict[str, str]:
         """`job_text`, `job_hash`, `software`."""
-        return dict(self._ask(schema.HEAD))
+        return dict(self._decode(_head, row) for row in self._ask(schema.HEAD))
 
     def sessions(self) -> list[Session]:
         return self._all(schema.SESSIONS, _session)
@@ -73,20 +81,29 @@ class Contents(ABC):
 
     def readings(self, hold: int) -> list[Reading]:
         """All readings of one hold, in the order they were given."""
-        rows = (row for page in self._pages(schema.READINGS_OF_HOLD, BEFORE_ALL, hold) for row in page)
-        return [self._decode(_reading, row) for row in rows]
+        return self._all(schema.READINGS_OF_HOLD, _reading, BEFORE_ALL, hold)
 
     def reading_rows(self) -> Iterator[list[Row]]:
         """Pages of (number, hold, session, channel, unit, value, u, at, flags, raw), as stored: see `flags_of`."""
-        return self._pages(schema.READINGS, BEFORE_ALL)
+        for page in self._pages(schema.READINGS, BEFORE_ALL):
+            # one row of each set of types, and of each text of flags, stands for all: a page has a handful of either
+            for row in {(row[8], *map(type, row)): row for row in page}.values():
+                self._decode(_reading, row)
+            yield page
 
     def last_times(self) -> tuple[float, float] | None:
         """(run clock, UTC) in s of the last thing written; None for a run without a session."""
         rows = self._ask(schema.LAST_TIMES)
-        return (rows[0][0], rows[0][1]) if rows else None
+        return self._decode(_times, rows[0]) if rows else None
 
-    def _all(self, sql: str, decode: Callable[[Row], Value], after: int = BEFORE_ALL) -> list[Value]:
-        return [self._decode(decode, row) for page in self._pages(sql, after) for row in page]
+    def _all(self, sql: str, decode: Callable[[Row], Value], after: int = BEFORE_ALL, *more: object) -> list[Value]:
+        found, left = [], LARGEST_WHOLE
+        for page in self._pages(sql, after, *more):
+            left -= sum(len(value) for row in page for value in row if isinstance(value, str))
+            if left < 0:
+                raise too_much(self.path, LARGEST_WHOLE)
+            found += [self._decode(decode, row) for row in page]
+        return found
 
     def _pages(self, sql: str, after: int, *more: object) -> Iterator[list[Row]]:
         while True:
@@ -100,7 +117,7 @@ class Contents(ABC):
     def _decode(self, decode: Callable[[Row], Value], row: Row) -> Value:
         try:
             return decode(row)
-        except (KeyError, TypeError, ValueError) as error:
+        except (KeyError, TypeError, ValueError, OverflowError) as error:
             raise RunError(
                 f"row {row[0]} of the logbook cannot be read as {decode.__name__.strip('_')}",
                 value=f"{type(error).__name__}: {error}",
@@ -123,17 +140,34 @@ class Reader(Contents):
 
 def flags_of(stored: str) -> tuple[str, ...]:
     """The flags of a reading from their stored text."""
-    return tuple(load(stored)) if stored else ()
+    return as_texts(load(stored)) if stored else ()
+
+
+def _head(row: Row) -> tuple[str, str]:
+    key, value = row
+    return as_text(key), as_text(value)
+
+
+def _real(value: object) -> float:
+    """`value` of a column of numbers: a database also takes a text there."""
+    if isinstance(value, str):
+        raise TypeError("a number is wanted, not a text")
+    return as_number(value)
+
+
+def _times(row: Row) -> tuple[float, float]:
+    at, utc = row
+    return _real(at), _real(utc)
 
 
 def _session(row: Row) -> Session:
     number, began, began_utc, info = row
-    return Session(number, began, began_utc, load(info))
+    return Session(as_count(number), _real(began), _real(began_utc), as_table(load(info)))
 
 
 def _intent(row: Row) -> Intent:
     _, session, began, began_utc, hold = row
-    return Intent(hold_from_json(load(hold)), session, began, began_utc)
+    return Intent(hold_from_json(load(hold)), as_count(session), _real(began), _real(began_utc))
 
 
 def _outcome(row: Row) -> Outcome:
@@ -143,14 +177,18 @@ def _outcome(row: Row) -> Outcome:
 
 def _event(row: Row) -> Event:
     _, session, kind, at, utc, data = row
-    return Event(kind, at, utc, load(data), session)
+    return Event(as_text(kind), _real(at), _real(utc), as_table(load(data)), as_count(session))
 
 
 def _instrument(row: Row) -> InstrumentSeen:
     _, session, name, maker, model, serial, firmware, settings, at = row
-    return InstrumentSeen(session, name, Identity(maker, model, serial, firmware), load(settings), at)
+    who = Identity(as_text(maker), as_text(model), as_text(serial), as_text(firmware))
+    told = {key: as_text(value) for key, value in as_table(load(settings)).items()}
+    return InstrumentSeen(as_count(session), as_text(name), who, told, _real(at))
 
 
 def _reading(row: Row) -> Reading:
-    _, _, _, channel, unit, value, u, at, flags, raw = row
-    return Reading(value, u, unit, at, channel, flags_of(flags), raw)
+    _, hold, session, channel, unit, value, u, at, flags, raw = row
+    as_count(hold), as_count(session)
+    number = None if value is None else _real(value)
+    return Reading(number, _real(u), as_text(unit), _real(at), as_text(channel), flags_of(as_text(flags)), as_text(raw))

@@ -10,13 +10,14 @@ import json
 import os
 import re
 import socket
+import stat
 import sys
 import unicodedata
 from collections.abc import Iterator
 from contextlib import contextmanager, suppress
 from datetime import UTC, datetime
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, TextIO
 
 from sweeprig.errors import DiskFull, RunError, RunInUse, Where
 
@@ -35,6 +36,7 @@ LAST_SEEN = "last-seen"
 
 _LONGEST_NAME = 40
 _MOST_TWINS = 1000
+_LARGEST_HOLDER = 1_000
 _MOUNTS = Path("/proc/mounts")
 _NETWORK = """
 9p afpfs afs beegfs ceph cifs coda davfs glusterfs gpfs lustre ncpfs nfs nfs4 orangefs panfs prl_fs pvfs2 smb2 smb3
@@ -75,11 +77,43 @@ def reduced(name: str) -> str:
 def write_whole(path: Path, text: str) -> None:
     """Write a small text file so that it is there whole or not at all, also after a power cut."""
     beside = path.with_name(path.name + ".new")
-    with os_errors_at(path), beside.open("w", encoding="utf-8", newline="\n") as file:
+    with os_errors_at(path), fresh_file(beside) as file:
         file.write(text)
         file.flush()
         os.fsync(file.fileno())
     put_in_place(beside, path)
+
+
+def fresh_file(path: Path) -> TextIO:
+    """A new, empty text file at `path`, whatever was there before.
+
+    A folder that came from a stranger may hold a link under any name: what a link points to is never written to.
+    """
+    path.unlink(missing_ok=True)
+    return path.open("x", encoding="utf-8", newline="\n")
+
+
+def read_bounded(path: Path, most: int) -> str:
+    """The text of a small file of a run. FileNotFoundError where there is none; ValueError where it is no text of at
+    most `most` bytes; RunError for a pipe or a device, which might never end, and where it cannot be read."""
+    try:
+        mode = path.stat().st_mode
+    except FileNotFoundError:
+        raise
+    except OSError as error:
+        raise _unusable(path, error.strerror or str(error)) from error
+    if not stat.S_ISREG(mode):
+        raise _unusable(path, "it is no ordinary file")
+    with os_errors_at(path), path.open("rb") as file:
+        data = file.read(most + 1)
+    if len(data) > most:
+        raise ValueError(f"more than {most} bytes")
+    return data.decode("utf-8")
+
+
+def _unusable(path: Path, why: str) -> RunError:
+    remedy = "Delete it: what a run leaves for people is made again from its logbook"
+    return RunError("this file of the run cannot be used", value=why, where=Where(str(path)), remedy=remedy)
 
 
 def put_in_place(beside: Path, path: Path) -> None:
@@ -131,7 +165,8 @@ class FolderLock:
             except Timeout as error:
                 raise self._in_use() from error
             try:
-                self._holder.write_text(json.dumps({"pid": os.getpid(), "host": socket.gethostname()}), "utf-8")
+                with fresh_file(self._holder) as file:
+                    json.dump({"pid": os.getpid(), "host": socket.gethostname()}, file)
             except BaseException:
                 lock.release()
                 raise
@@ -165,8 +200,8 @@ class FolderLock:
     def holder(self) -> dict[str, object]:
         """`pid` and `host` of the last holder that did not release, {} where nothing is known."""
         try:
-            data = json.loads(self._holder.read_text("utf-8"))
-        except (OSError, ValueError):
+            data = json.loads(read_bounded(self._holder, _LARGEST_HOLDER))
+        except (OSError, ValueError, RunError, RecursionError):
             return {}
         return data if isinstance(data, dict) else {}
 

@@ -70,9 +70,63 @@ def dump(data: object) -> str:
         return json.dumps(_without_odd_numbers(data), separators=(",", ":"), default=_odd)
 
 
+LARGEST_JSON = 1_000_000
+"""Characters of one JSON text of the logbook; a hold has some three hundred, an outcome some thousand."""
+
+
 def load(text: str) -> Any:
-    """The reverse of `dump`. ValueError on text that is not JSON."""
-    return json.loads(text)
+    """The reverse of `dump`. ValueError on text that is not JSON, is nested without end, or is far too long."""
+    if not isinstance(text, str) or len(text) > LARGEST_JSON:
+        raise ValueError(f"no JSON text of at most {LARGEST_JSON:,} characters")
+    try:
+        return json.loads(text, parse_constant=_no_constant)
+    except RecursionError:
+        raise ValueError("nested too deeply") from None
+
+
+def _no_constant(name: str) -> Any:
+    raise ValueError(f"{name} is no number of JSON")
+
+
+def as_text(value: object) -> str:
+    """`value`, which must be a text."""
+    if not isinstance(value, str):
+        raise TypeError(f"a text is wanted, not {type(value).__name__}")
+    return value
+
+
+def as_number(value: object) -> float:
+    """`value`, a number or one of the texts "inf" and "-inf", as a float; never NaN."""
+    number = (
+        float(value) if isinstance(value, int | float) and not isinstance(value, bool) else _INFINITE.get(str(value))
+    )
+    if number is None or math.isnan(number):
+        raise ValueError(f"a number is wanted, not {str(value)[:20]!r}")
+    return number
+
+
+def as_count(value: object) -> int:
+    """`value`, which must be a whole number."""
+    if not isinstance(value, int) or isinstance(value, bool):
+        raise TypeError(f"a whole number is wanted, not {type(value).__name__}")
+    return value
+
+
+def as_table(value: object) -> Mapping[str, Any]:
+    """`value`, which must be a JSON object."""
+    if not isinstance(value, dict):
+        raise TypeError(f"an object is wanted, not {type(value).__name__}")
+    return value
+
+
+def as_texts(value: object) -> tuple[str, ...]:
+    """`value`, which must be a list of texts."""
+    if not isinstance(value, list | tuple):
+        raise TypeError(f"a list is wanted, not {type(value).__name__}")
+    return tuple(as_text(entry) for entry in value)
+
+
+_INFINITE = {"inf": math.inf, "-inf": -math.inf}
 
 
 def condition_to_json(condition: Condition) -> Json:
@@ -89,12 +143,12 @@ def condition_to_json(condition: Condition) -> Json:
 def condition_from_json(data: Mapping[str, Any]) -> Condition:
     """KeyError or ValueError where `data` is no condition."""
     return Condition(
-        pwm_hz=float(data["pwm_hz"]),
-        supply_v=float(data["supply_v"]),
-        direction=data["direction"],
-        load=data["load"],
-        thermal=data["thermal"],
-        freewheel=data["freewheel"],
+        pwm_hz=as_number(data["pwm_hz"]),
+        supply_v=as_number(data["supply_v"]),
+        direction=as_text(data["direction"]),
+        load=as_text(data["load"]),
+        thermal=as_text(data["thermal"]),
+        freewheel=as_text(data["freewheel"]),
     )
 
 
@@ -116,20 +170,21 @@ def hold_to_json(hold: Hold) -> Json:
 
 
 def hold_from_json(data: Mapping[str, Any]) -> Hold:
-    """KeyError or ValueError where `data` is no hold."""
+    """KeyError, TypeError or ValueError where `data` is no hold."""
+    data = as_table(data)
     return Hold(
-        number=int(data["number"]),
+        number=as_count(data["number"]),
         purpose=Purpose(data["purpose"]),
         approach=Approach(data["approach"]),
-        condition=condition_from_json(data["condition"]),
-        duty_percent=float(data["duty_percent"]),
-        least_s=float(data["least_s"]),
-        most_s=float(data["most_s"]),
+        condition=condition_from_json(as_table(data["condition"])),
+        duty_percent=as_number(data["duty_percent"]),
+        least_s=as_number(data["least_s"]),
+        most_s=as_number(data["most_s"]),
         ends_when=EndsWhen(data["ends_when"]),
-        roles=tuple(data["roles"]),
-        why=data["why"],
-        lead=tuple((float(duty), float(seconds)) for duty, seconds in data.get("lead", ())),
-        tap=data.get("tap"),
+        roles=as_texts(data["roles"]),
+        why=as_text(data["why"]),
+        lead=tuple((as_number(duty), as_number(seconds)) for duty, seconds in data.get("lead", ())),
+        tap=None if data.get("tap") is None else as_count(data["tap"]),
     )
 
 
@@ -147,17 +202,19 @@ def reading_to_json(reading: Reading) -> Json:
 
 
 def reading_from_json(data: Mapping[str, Any]) -> Reading:
-    """KeyError or ValueError where `data` is no reading."""
+    """KeyError, TypeError or ValueError where `data` is no reading. A value that is not finite is no data."""
+    data = as_table(data)
     value = data["value"]
-    return Reading(
-        value=None if value is None else float(value),
-        u=float(data["u"]),
-        unit=data["unit"],
-        at=float(data["at"]),
-        channel=data["channel"],
-        flags=tuple(data.get("flags", ())),
-        raw=data.get("raw", ""),
+    read = Reading(
+        value=None if value is None else as_number(value),
+        u=as_number(data["u"]),
+        unit=as_text(data["unit"]),
+        at=as_number(data["at"]),
+        channel=as_text(data["channel"]),
+        flags=as_texts(data.get("flags", ())),
+        raw=as_text(data.get("raw", "")),
     )
+    return sound(read)
 
 
 def outcome_to_json(outcome: Outcome, *, with_hold: bool = True) -> Json:
@@ -185,24 +242,26 @@ def outcome_to_json(outcome: Outcome, *, with_hold: bool = True) -> Json:
 
 
 def outcome_from_json(data: Mapping[str, Any], hold: Hold | None = None) -> Outcome:
-    """`hold` where the data were written without it. KeyError or ValueError where `data` is no outcome."""
+    """`hold` where the data were written without it. KeyError, TypeError or ValueError where `data` is no
+    outcome."""
+    data = as_table(data)
     after, before = data.get("event_between_s", (0.0, None))
     return Outcome(
-        number=int(data["number"]),
+        number=as_count(data["number"]),
         hold=hold_from_json(data["hold"]) if hold is None else hold,
-        session=int(data["session"]),
+        session=as_count(data["session"]),
         status=Status(data["status"]),
         verdict=Verdict(data["verdict"]),
-        began=float(data["began"]),
-        ended=float(data["ended"]),
-        began_utc=float(data["began_utc"]),
-        ended_utc=float(data["ended_utc"]),
-        exposed_s=float(data.get("exposed_s", 0.0)),
-        event_between_s=(float(after), None if before is None else float(before)),
-        restarts=int(data.get("restarts", 0)),
-        means={channel: reading_from_json(mean) for channel, mean in data.get("means", {}).items()},
-        flags=tuple(data.get("flags", ())),
-        reason=data.get("reason", ""),
+        began=as_number(data["began"]),
+        ended=as_number(data["ended"]),
+        began_utc=as_number(data["began_utc"]),
+        ended_utc=as_number(data["ended_utc"]),
+        exposed_s=as_number(data.get("exposed_s", 0.0)),
+        event_between_s=(as_number(after), None if before is None else as_number(before)),
+        restarts=as_count(data.get("restarts", 0)),
+        means={channel: reading_from_json(mean) for channel, mean in as_table(data.get("means", {})).items()},
+        flags=as_texts(data.get("flags", ())),
+        reason=as_text(data.get("reason", "")),
     )
 
 

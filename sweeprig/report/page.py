@@ -31,6 +31,7 @@ def write(run: Any, path: Path | str) -> Path:
     """Write the page to `path`, whole or not at all (a new file is renamed into place). Returns the path."""
     path = Path(path)
     fresh = path.with_name(path.name + ".new")
+    fresh.unlink(missing_ok=True)  # a link under that name is replaced, never followed
     fresh.write_bytes(render(run).encode("utf-8", "backslashreplace"))
     fresh.replace(path)
     return path

@@ -15,6 +15,8 @@ from sweeprig.simbench.clock import START_UTC, BenchClock
 from sweeprig.simbench.port import Callback, Port
 from sweeprig.simbench.waveform import Waveform
 
+_NEVER = float("inf")
+
 
 class Machine(Protocol):
     """The motor on its stage, as the instruments see it (`plant.Plant`); read-outs are valid at `now`."""
@@ -103,6 +105,9 @@ class Bench:
     """Bench time, the queue of events, the motor and the instruments on it.
 
     now          bench time, s; only `advance`, `step` and the clock move it
+    queue        what happens when: a heap of (time, order, callback, argument)
+    touched      counts what may have changed when a port becomes readable: answers, flushes, broken connections
+    unread       answers under way or not read yet, and broken connections not yet closed, of all ports together
     clock        keeps the Clock contract on this bench
     ports        instrument name → its byte port
     record       what the drive really did, in order; the truth that tests of safety look at
@@ -114,6 +119,7 @@ class Bench:
     def __init__(self, plant: Machine, began: float = 0.0, began_utc: float | None = None) -> None:
         self.plant = plant
         self.now = began
+        self.touched = self.unread = 0
         self.clock = BenchClock(self, START_UTC + began if began_utc is None else began_utc)
         self.signal = DriveSignal()
         self.gate_from = ""
@@ -122,7 +128,7 @@ class Bench:
         self.record: list[Happened] = []
         self.on_record: Callable[[Happened], None] | None = None
         self.struck: list[Struck] = []
-        self._queue: list[tuple[float, int, Callback, object]] = []
+        self.queue: list[tuple[float, int, Callback, object]] = []
         self._order = count()
 
     def add(self, instrument: OnBench) -> None:
@@ -136,26 +142,47 @@ class Bench:
 
     def at(self, time: float, callback: Callback, argument: object) -> None:
         """Call `callback(argument)` when bench time is `time`; equal times in the order of these calls."""
-        heapq.heappush(self._queue, (time, next(self._order), callback, argument))
+        heapq.heappush(self.queue, (time, next(self._order), callback, argument))
 
     def next_event(self) -> float:
         """Bench time of the next event; infinity with none."""
-        return self._queue[0][0] if self._queue else float("inf")
+        return self.queue[0][0] if self.queue else float("inf")
 
     def step(self, to: float) -> bool:
         """Do the next event due by `to` and return True; with none due, go to `to` and return False."""
-        queue = self._queue
+        queue = self.queue
         if queue and queue[0][0] <= to:
             time, _, callback, argument = heapq.heappop(queue)
             if time > self.now:
                 self.now = time
             callback(argument)
             return True
-        if to == float("inf"):
+        self._go_to(to)
+        return False
+
+    def pass_until(self, to: float) -> bool:
+        """Do the events due by `to`, but not past the first that touches a port: True. Else go to `to`: False."""
+        queue, touched, pop = self.queue, self.touched, heapq.heappop
+        while queue and queue[0][0] <= to:
+            time, _, callback, argument = pop(queue)
+            if time > self.now:
+                self.now = time
+            callback(argument)
+            if self.touched != touched:
+                return True
+            if self.now >= to:
+                return False
+        if self.now < to != _NEVER:
+            self.now = to
+        else:
+            self._go_to(to)
+        return False
+
+    def _go_to(self, to: float) -> None:
+        if to == _NEVER:
             raise SweeprigError("the simulated bench was told to wait for ever with nothing going to happen")
         if to > self.now:
             self.now = to
-        return False
 
     def advance(self, to: float) -> None:
         """Let bench time pass up to `to`, s, doing every event due by then. A time that has passed does nothing."""

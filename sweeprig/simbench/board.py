@@ -54,6 +54,7 @@ class Board(Instrument):
     """Time for a command in the firmware; a prototype took 0.18 to 0.35 ms."""
     longest_line = 128
     error_keys = ("timer_degc",)
+    has_panel = False
 
     def __init__(self, setup: Setup, bench: Bench) -> None:
         super().__init__(setup, bench)

@@ -64,6 +64,7 @@ def assemble(job: Job, plant: Machine, session: int = 1, began: float = 0.0, beg
     """The rig's instruments around any plant."""
     bench = Bench(plant, began, began_utc)
     bench.plant = with_rig_faults(job, plant, session, bench.struck)
+    begin_in_time(job, bench)
     bench.gate_from = gate_from(job)
     if all(instrument.adapter != "scpi-supply" for instrument in job.rig.instruments.values()):
         # A supply that no instrument controls was set by hand, and is on.
@@ -81,6 +82,17 @@ def assemble(job: Job, plant: Machine, session: int = 1, began: float = 0.0, beg
         fit_port(job, made, session)
         bench.add(made)
     return bench
+
+
+def begin_in_time(job: Job, bench: Bench) -> None:
+    """Bring the motor up to the beginning of each fault of the rig: it begins then, whether or not anybody looks."""
+
+    def look(_: object) -> None:
+        bench.plant_now()
+
+    for spec in job.rig.simulated_faults or ():
+        if spec.what.place == "rig" and spec.start is not None and spec.start >= bench.now:
+            bench.at(spec.start, look, None)
 
 
 def gate_from(job: Job) -> str:

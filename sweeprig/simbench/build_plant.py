@@ -15,6 +15,7 @@ from sweeprig.job.rig_models import Rig
 from sweeprig.simbench.bridge import SwitchedStage
 from sweeprig.simbench.detailed import DetailedFedPlant, DetailedPlant
 from sweeprig.simbench.fed_plant import FedPlant
+from sweeprig.simbench.load_capacitor import CapacitorStage
 from sweeprig.simbench.motor_truth import DetailedTruth, MotorTruth
 from sweeprig.simbench.plant import Plant
 from sweeprig.simbench.source import Source
@@ -38,7 +39,7 @@ def stage_of(rig: Rig) -> Stage | None:
             "on_time_error_s": parts.on_time_error_s,
         }
     stated = None if parts is None else parts.recirculation
-    return SwitchedStage(
+    switched = SwitchedStage(
         kind,
         synchronous=stated == "synchronous" or (stated is None and kind != "low_side_diode"),
         fast_decay=parts is not None and parts.decay == "fast",
@@ -46,6 +47,9 @@ def stage_of(rig: Rig) -> Stage | None:
         holds_bus=supply is not None,
         **more,
     )
+    if parts is None or parts.load_capacitor_farad is None:
+        return switched
+    return CapacitorStage(switched, parts.load_capacitor_farad, parts.load_capacitor_ohm)
 
 
 def burden_ohm(rig: Rig, place: str) -> float:

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import ClassVar
+from typing import NamedTuple
 
 from sweeprig.simbench.waveform import Place, Segment, Waveform
 
@@ -16,8 +16,7 @@ DIODE_DROP_V = 0.5
 """Forward drop of the freewheel diode (common practice, no source: a Schottky at some 100 mA)."""
 
 
-@dataclass(frozen=True, slots=True)
-class Chopper:
+class Chopper(NamedTuple):
     """What one electrical setting (supply, winding, PWM) makes of any back-EMF: the coefficients computed once.
 
     on_volts      supply less switch drop; drive  on_volts + diode_drop: what switching changes across the winding
@@ -42,34 +41,17 @@ class Chopper:
         """At the supply's terminals, V: this plain stage has no resistance in its leads."""
         return self.on_volts
 
-    supply_ohms: ClassVar[float] = 0.0
+    @property
+    def supply_ohms(self) -> float:
+        return 0.0
 
     def mean_current(self, emf_v: float) -> tuple[float, float]:
         """(mean motor current in A, its derivative by the back-EMF in A/V): `wave` cut down to what the rotor needs."""
-        c = self
-        if emf_v < c.boundary_emf:
-            volts = (c.on_volts + c.diode_drop_v) * c.on_s / c.period_s - c.diode_drop_v
-            return (volts - emf_v) / c.resistance_ohm, -1.0 / c.resistance_ohm
-        if c.on_s == 0.0 or emf_v >= c.on_volts:
-            return 0.0, 0.0
-        below = emf_v + c.diode_drop_v
-        swing = (c.on_volts - emf_v) * c.rise / below
-        conduction = c.on_s + c.tau_s * math.log1p(swing)
-        slope = -c.tau_s * c.rise * (c.on_volts + c.diode_drop_v) / (below * below * (1.0 + swing))
-        scale = c.resistance_ohm * c.period_s
-        current = ((c.on_volts + c.diode_drop_v) * c.on_s - below * conduction) / scale
-        return current, -(conduction + below * slope) / scale
+        return mean_current(self, emf_v)
 
     def mean_supply_current(self, emf_v: float) -> float:
         """Mean supply current, A: linear in the back-EMF on either side of the boundary of conduction."""
-        c = self
-        if c.on_s == 0.0 or emf_v >= c.on_volts:
-            return 0.0
-        rising = (c.on_volts - emf_v) / c.resistance_ohm
-        valley = 0.0
-        if emf_v < c.boundary_emf:
-            valley = ((c.on_volts + c.diode_drop_v) * c.carry - emf_v - c.diode_drop_v) / c.resistance_ohm
-        return (rising * c.on_s + (valley - rising) * c.tau_s * c.rise) / c.period_s
+        return mean_supply_current(self, emf_v)
 
     def wave(self, emf_v: float) -> Wave:
         return wave(self, emf_v)
@@ -179,14 +161,36 @@ def _square(level: float, start: float, seconds: float, tau: float) -> float:
     return level * level * seconds - start * tau * (2.0 * level * math.expm1(x) + 0.5 * start * math.expm1(2.0 * x))
 
 
-def mean_current(setting: Chopper, emf_v: float) -> tuple[float, float]:
+Numbers = tuple[float, float, float, float, float, float, float, float, float, float]
+"""A `Chopper`, or its fields in the same order: what the functions below take, so that they may be compiled."""
+
+
+def mean_current(setting: Numbers, emf_v: float) -> tuple[float, float]:
     """(mean motor current in A, its derivative by the back-EMF in A/V)."""
-    return setting.mean_current(emf_v)
+    on_volts, ohm, tau, period, on, drop, rise, _, _, boundary_emf = setting
+    if emf_v < boundary_emf:
+        volts = (on_volts + drop) * on / period - drop
+        return (volts - emf_v) / ohm, -1.0 / ohm
+    if on == 0.0 or emf_v >= on_volts:
+        return 0.0, 0.0
+    below = emf_v + drop
+    swing = (on_volts - emf_v) * rise / below
+    conduction = on + tau * math.log1p(swing)
+    slope = -tau * rise * (on_volts + drop) / (below * below * (1.0 + swing))
+    scale = ohm * period
+    return ((on_volts + drop) * on - below * conduction) / scale, -(conduction + below * slope) / scale
 
 
-def mean_supply_current(setting: Chopper, emf_v: float) -> float:
+def mean_supply_current(setting: Numbers, emf_v: float) -> float:
     """Mean supply current, A."""
-    return setting.mean_supply_current(emf_v)
+    on_volts, ohm, tau, period, on, drop, rise, carry, _, boundary_emf = setting
+    if on == 0.0 or emf_v >= on_volts:
+        return 0.0
+    rising = (on_volts - emf_v) / ohm
+    valley = 0.0
+    if emf_v < boundary_emf:
+        valley = ((on_volts + drop) * carry - emf_v - drop) / ohm
+    return (rising * on + (valley - rising) * tau * rise) / period
 
 
 def on_volts_at_limit(setting: Chopper, emf_v: float, limit_amps: float) -> float:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from typing import Protocol
+from typing import Any, Protocol
 
 from sweeprig.clock import Waitable
 
@@ -11,20 +11,22 @@ START_UTC = 1_772_474_400.0
 """2026-03-02 18:00:00 UTC: when a simulated night begins unless another start is given."""
 
 
-class Steppable(Protocol):
+class Passing(Protocol):
     """What the clock needs of the bench."""
 
     now: float
+    unread: int
+    queue: list[Any]
 
-    def step(self, to: float) -> bool:
-        """Do the next event due by `to` and return True; with none, go to `to` and return False."""
+    def pass_until(self, to: float) -> bool:
+        """Do the events due by `to`; True as soon as one may have made something readable. Else go to `to`: False."""
         ...
 
 
 class BenchClock:
     """Keeps the Clock contract. `utc()` is the start's UTC plus the bench time that has passed since `began`."""
 
-    def __init__(self, bench: Steppable, began_utc: float) -> None:
+    def __init__(self, bench: Passing, began_utc: float) -> None:
         self._bench = bench
         self._utc_at_zero = began_utc - bench.now
 
@@ -36,11 +38,17 @@ class BenchClock:
 
     def wait(self, until: float, on: Sequence[Waitable] = ()) -> None:
         bench = self._bench
+        if not bench.unread and bench.queue and until < bench.queue[0][0]:
+            # most waits are for the next look alone: nothing can become readable and nothing happens before
+            if until > bench.now:
+                bench.now = until
+            return
         while True:
             ready = until
-            for link in on:
-                at = link.ready_at()
-                if at < ready:
-                    ready = at
-            if ready <= bench.now or not bench.step(ready):
+            if bench.unread:  # else no link has anything to wait for
+                for link in on:
+                    at = link.ready_at()
+                    if at < ready:
+                        ready = at
+            if ready <= bench.now or not bench.pass_until(ready):
                 return

@@ -17,6 +17,8 @@ PWM_HZ = (4.0, 100_000.0)
 GATE_S = (0.01, 10.0)
 WATCH_S = 0.005
 """How often the first edge after switching on is looked for; a later edge of the same look is as good a start."""
+LOOKS_AT_REST = 4
+"""… and a rotor at rest only every so many looks: it must start before it can make an edge."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -112,8 +114,12 @@ class GateCounter:
         plant = self._bench.plant_now()
         if plant.edges != self._edges_at_start:
             self._reference = (plant.last_edge_at, plant.edges)
-        else:
-            self._bench.at(self._bench.now + WATCH_S, self._look_for_first_edge, generation)
+            return
+        due = self._bench.now + WATCH_S
+        if not getattr(plant, "turning", True):
+            for _ in range(LOOKS_AT_REST - 1):  # step by step: the looks stay where they would be
+                due += WATCH_S
+        self._bench.at(due, self._look_for_first_edge, generation)
 
     def _gate_end(self, generation: object) -> None:
         if generation != self._generation:

@@ -18,6 +18,7 @@ from contextlib import suppress
 from pathlib import Path
 from typing import Protocol
 
+from sweeprig.simbench.doorbell import Doorbell
 from sweeprig.simbench.port import Port
 
 if sys.platform != "win32":
@@ -34,13 +35,20 @@ RESET_AT_ONCE = struct.pack("ii", 1, 0)
 
 
 class Endpoint(Protocol):
-    """One served instrument. `address` is what the rig file gets."""
+    """One served instrument. `address` is what the rig file gets; `unsent` is what waits for room to be written."""
 
     address: str
     port: Port
 
+    @property
+    def unsent(self) -> bytes: ...
+
     def handle(self) -> int | None:
-        """What to select for reading; None where only `take` itself can tell."""
+        """What to select for reading; None while there is nothing, or where only `take` itself can tell."""
+        ...
+
+    def unseen(self) -> bool:
+        """Whether a client may come of whom no handle tells: then `take` has to be called now and then."""
         ...
 
     def take(self) -> None:
@@ -59,7 +67,7 @@ class SocketEndpoint:
 
     def __init__(self, port: Port) -> None:
         self.port = port
-        self._unsent = b""
+        self.unsent = b""
         self._client: socket.socket | None = None
         self._listener: socket.socket | None = None
         self._listen((HOST, 0))
@@ -73,6 +81,9 @@ class SocketEndpoint:
     def handle(self) -> int | None:
         channel = self._client or self._listener
         return None if channel is None else channel.fileno()
+
+    def unseen(self) -> bool:
+        return False
 
     def _keep_listener(self) -> None:
         """Nobody listens while the instrument is not there: a client is refused by the system, as by a real one."""
@@ -117,22 +128,22 @@ class SocketEndpoint:
     def give(self) -> None:
         self._keep_listener()
         self._with_port(self._collect)
-        if not self._unsent or self._client is None:
+        if not self.unsent or self._client is None:
             return
         try:
-            sent = self._client.send(self._unsent)
+            sent = self._client.send(self.unsent)
         except BlockingIOError:
             return
         except OSError:
             self._leave()
             return
-        self._unsent = self._unsent[sent:]
+        self.unsent = self.unsent[sent:]
 
     def _collect(self) -> None:
-        self._unsent += self.port.read()
+        self.unsent += self.port.read()
 
     def _leave(self) -> None:
-        client, self._client, self._unsent = self._client, None, b""
+        client, self._client, self.unsent = self._client, None, b""
         self.port.close()
         if client is not None:
             client.close()
@@ -153,10 +164,11 @@ if sys.platform != "win32":
 
         def __init__(self, port: Port) -> None:
             self.port = port
-            self._unsent = b""
+            self.unsent = b""
             self._present = False
             self._folder = Path(tempfile.mkdtemp(prefix=LINKS)) if port.may_vanish else None
             self._master: int | None = None
+            self._bell: Doorbell | None = None
             self._name = ""
             self._appear()
             self.address = f"serial:{self._name if self._folder is None else self._folder / 'port'}"
@@ -167,6 +179,7 @@ if sys.platform != "win32":
                 former, (self._master, name) = self._master, _open_pty()
                 os.close(former)
             self._name = name
+            self._bell = Doorbell(name)
             self._state = select.poll()
             self._state.register(self._master, select.POLLIN)
             if self._folder is not None:
@@ -178,7 +191,9 @@ if sys.platform != "win32":
                 (self._folder / "port").unlink(missing_ok=True)
             if self._master is not None:
                 os.close(self._master)
-            self._master = None
+            if self._bell is not None:
+                self._bell.close()
+            self._master = self._bell = None
             self._leave()
 
         def _is_there(self) -> bool:
@@ -191,12 +206,19 @@ if sys.platform != "win32":
 
         def handle(self) -> int | None:
             # without a client the master always counts as readable: selecting it would spin
-            return self._master if self._present else None
+            if self._present or self._bell is None:
+                return self._master
+            return self._bell.handle
+
+        def unseen(self) -> bool:
+            return not self._present and self._bell is not None and self._bell.handle is None
 
         def take(self) -> None:
             if not self._is_there() or self._master is None:
                 return
             if not self._present:
+                if self._bell is not None:
+                    self._bell.answer()
                 happened = dict(self._state.poll(0)).get(self._master, 0)
                 if happened & select.POLLHUP and not happened & select.POLLIN:
                     return
@@ -226,24 +248,24 @@ if sys.platform != "win32":
             return True
 
         def _collect(self) -> None:
-            self._unsent += self.port.read()
+            self.unsent += self.port.read()
 
         def give(self) -> None:
             if not self._is_there() or not self._with_port(self._collect) or self._master is None:
                 return
-            if not self._unsent or not self._present:
+            if not self.unsent or not self._present:
                 return
             try:
-                sent = os.write(self._master, self._unsent)
+                sent = os.write(self._master, self.unsent)
             except BlockingIOError:
                 return
             except OSError:
                 self._leave()
                 return
-            self._unsent = self._unsent[sent:]
+            self.unsent = self.unsent[sent:]
 
         def _leave(self) -> None:
-            self._present, self._unsent = False, b""
+            self._present, self.unsent = False, b""
             self.port.close()
 
         def close(self) -> None:

@@ -41,6 +41,7 @@ def fit_port(job: Job, instrument: Instrument, session: int) -> None:
         fault = KINDS[spec.kind](spec, When(spec, random.Random(rng.random())), port, rng)
         require_heartbeat(fault)
         port.faults.append(fault)
+        fault.plan()
     instrument.port = port
 
 

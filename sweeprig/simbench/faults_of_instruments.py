@@ -26,7 +26,7 @@ class HasHeartbeat(Protocol):
 
 
 class Restart(Fault):
-    swallows = True
+    swallows = sudden = True
 
     def strike(self) -> None:
         self.port.instrument.power_on()
@@ -105,6 +105,8 @@ class StandingError(Fault):
 
 
 class QueueOverflow(Fault):
+    sudden = True
+
     def strike(self) -> None:
         for _ in range(self.spec.number):
             self.port.instrument.error(MIXED_UP)
@@ -114,10 +116,15 @@ class LocalMode(Fault):
     swallows = True
 
     def concerns(self, line: bytes) -> bool:
-        return b"?" not in line and line.strip().upper() != b"*CLS"
+        """A person cannot bring about local where `SYST:RWL` has locked the key."""
+        panel = self.port.instrument.panel
+        locked = panel is not None and panel.locked
+        return not locked and b"?" not in line and line.strip().upper() != b"*CLS"
 
 
 class HeartbeatLoss(Fault):
+    sudden = True
+
     def strike(self) -> None:
         drive = self.port.instrument
         if isinstance(drive, HasHeartbeat):

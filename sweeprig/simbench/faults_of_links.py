@@ -5,28 +5,30 @@ Each acts on the port alone, whatever the instrument behind it is doing.
 
 from __future__ import annotations
 
-from sweeprig.simbench.faulty_port import Fault
+import math
+
+from sweeprig.simbench.faulty_port import Fault, nothing
 
 EVERY_S = 0.05
 """Interval of the pieces of garbage."""
 
 
 class Close(Fault):
-    swallows = True
+    swallows = sudden = True
 
     def strike(self) -> None:
         self.port.break_off(ConnectionAbortedError("the instrument closed the connection"))
 
 
 class Reset(Fault):
-    swallows = True
+    swallows = sudden = True
 
     def strike(self) -> None:
         self.port.break_off(ConnectionResetError("the instrument reset the connection"))
 
 
 class NodeMoves(Fault):
-    swallows = True
+    swallows = sudden = True
 
     def strike(self) -> None:
         self.port.break_off(ConnectionResetError("the port vanished"))
@@ -34,15 +36,15 @@ class NodeMoves(Fault):
 
 
 class Garbage(Fault):
-    """Begins with a chosen message; ends where its time does, or with the connection."""
+    """Begins at its time or with a chosen message; ends where its time does, or with the connection."""
 
-    swallows = True
+    swallows = sudden = True
     _flowing = -1
 
     def strike(self) -> None:
         if self._flowing != self.port.openings:
             self._flowing = self.port.openings
-            self._ends = self.port.bench.now + (self.spec.lasts or float("inf"))
+            self._ends = self.when.end()
             self._emit(self._flowing)
 
     def _emit(self, opening: object) -> None:
@@ -56,6 +58,13 @@ class Garbage(Fault):
 
 class Refuse(Fault):
     at_opening = True
+
+    def plan(self) -> None:
+        """Given by time alone nobody listens meanwhile: a served bench has to look when that begins and ends."""
+        bench, start = self.port.bench, self.when.start_alone
+        for time in (start, self.when.end()) if start is not None else ():
+            if bench.now < time < math.inf:
+                bench.at(time, nothing, None)
 
     def opening(self) -> None:
         raise ConnectionRefusedError("the instrument refused the connection")

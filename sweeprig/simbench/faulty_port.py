@@ -19,10 +19,15 @@ if TYPE_CHECKING:
     from sweeprig.simbench.instrument import Instrument
 
 
+def nothing(_: object) -> None:
+    """An event for whoever waits for the next one: what `accepts` says changes then."""
+
+
 class When:
     """Which messages (or openings) of one port a fault strikes. Ask once for each one that it could act on."""
 
     def __init__(self, spec: SimulatedFault, rng: random.Random) -> None:
+        self._spec = spec
         self._first = spec.exchange or 1
         self._probability = 1.0 if spec.probability is None else spec.probability / 100.0
         self._start = spec.start or 0.0
@@ -47,6 +52,25 @@ class When:
         self._left -= 1
         return True
 
+    @property
+    def start_alone(self) -> float | None:
+        """Bench time, s, at which it begins where nothing but time decides; None where messages or chance do too."""
+        stated = self._spec.exchange is None and self._spec.probability is None
+        return self._spec.start if stated else None
+
+    def is_over(self, now: float) -> bool:
+        """Whether a fault that is given by time alone has happened, or ended, before now: a later session is spared."""
+        once = self._left < math.inf
+        return self._start < now if once else self._end is not None and self._end <= now
+
+    def end(self) -> float:
+        """Bench time, s, at which it ends; known once it has begun."""
+        return math.inf if self._end is None else self._end
+
+    def take(self) -> None:
+        """One of those that are left has happened, or never will."""
+        self._left -= 1
+
     def give_back(self) -> None:
         """The fault found nothing to act on after all."""
         self._left += 1
@@ -69,9 +93,11 @@ class Fault:
 
     acting    chosen for the message that came last
     swallows  a chosen message does not reach the instrument
+    sudden    given by time alone it happens at that time, between messages too
     """
 
     at_opening = False
+    sudden = False
     on_answer = False
     swallows = False
 
@@ -100,6 +126,22 @@ class Fault:
     def answer(self, pieces: list[Piece]) -> list[Piece]:
         """What becomes of the answer to a chosen message."""
         return pieces
+
+    def plan(self) -> None:
+        """Have it happen at its time, where it is one that does. One whose time was in an earlier session never does
+        again in this one."""
+        start, now = self.when.start_alone, self.port.bench.now
+        if not self.sudden or start is None:
+            return
+        if self.when.is_over(now):
+            self.when.take()
+        else:
+            self.port.bench.at(max(start, now), self._at_its_time, None)
+
+    def _at_its_time(self, _: object) -> None:
+        self.when.take()
+        self.note()
+        self.strike()
 
     def note(self) -> None:
         """Put down that it acted."""
@@ -163,8 +205,13 @@ class FaultyPort(Port):
         self._keep_late(super().open)
 
     def close(self) -> None:
-        self._broken, self._broken_at = None, math.inf
+        self._mend()
         self._keep_late(super().close)
+
+    def _mend(self) -> None:
+        if self._broken is not None:
+            self._broken, self._broken_at = None, math.inf
+            self.bench.unread -= 1
 
     def write(self, data: bytes) -> None:
         if self._broken is not None:
@@ -248,14 +295,20 @@ class FaultyPort(Port):
             super().put(raw)
 
     def break_off(self, error: ConnectionError) -> None:
-        """The connection is gone from now on; what was under way is lost."""
+        """The connection is gone from now on; what was under way is lost. Nothing, where nobody holds one."""
+        if not self.is_open:
+            return
         self.flush()
         self.is_open = False
+        self._mend()
         self._broken, self._broken_at = error, self.bench.now
+        self.bench.unread += 1
+        self.bench.touched += 1
 
     def be_gone(self, seconds: float) -> None:
         """Nobody can open it for so long."""
         self._gone_until = self.bench.now + seconds
+        self.bench.at(self._gone_until, nothing, None)
 
     def be_deaf(self, seconds: float) -> None:
         """Messages are lost for so long, whoever sends them."""

@@ -5,9 +5,11 @@ The process and its random numbers live here; what friction does to the rotor do
 
 from __future__ import annotations
 
+import copy
 import math
 import random
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
+from typing import Self, cast
 
 import numpy as np
 
@@ -15,19 +17,62 @@ BLOCK = 512
 """Normals are drawn this many at a time: one call into numpy costs as much as a whole step of the rotor."""
 
 
-def normal_source(rng: np.random.Generator | random.Random) -> Callable[[], float]:
-    """A function that gives the next standard normal as a plain float; it draws ahead in blocks from `rng`."""
-    pool: list[float] = []
+def gaussian(rng: random.Random, count: int) -> list[float]:
+    """An even number of normals: bit for bit those of so many calls of `rng.gauss(0.0, 1.0)`, in half the time."""
+    if rng.gauss_next is not None:  # type: ignore[attr-defined]  # one was left over: its partner was drawn outside
+        return [rng.gauss(0.0, 1.0) for _ in range(count)]
+    uniform, cos, sin, log, sqrt = rng.random, math.cos, math.sin, math.log, math.sqrt
+    block: list[float] = []
+    for _ in range(count // 2):
+        turn, radius = uniform() * math.tau, sqrt(-2.0 * log(1.0 - uniform()))
+        block += (cos(turn) * radius, sin(turn) * radius)
+    return block
 
-    def draw() -> float:
-        if not pool:
-            if isinstance(rng, random.Random):
-                pool.extend(rng.gauss(0.0, 1.0) for _ in range(BLOCK))
-            else:
-                pool.extend(rng.standard_normal(BLOCK).tolist())
-        return pool.pop()
 
-    return draw
+class Normals:
+    """Standard normals as plain floats, one a call, drawn ahead in blocks from `rng`; may be looked at before use."""
+
+    __slots__ = ("_array", "_array_of", "_more", "_pool")
+
+    def __init__(self, rng: np.random.Generator | random.Random) -> None:
+        self._pool: list[float] = []
+        self._array, self._array_of = np.empty(0), self._pool
+        self._more: Callable[[], list[float]]
+        if isinstance(rng, random.Random):
+            self._more = lambda: gaussian(rng, BLOCK)
+        else:
+            normal = rng.standard_normal
+            self._more = lambda: normal(BLOCK).tolist()
+
+    def __call__(self) -> float:
+        if not self._pool:
+            self._pool = self._more()
+        return self._pool.pop()
+
+    def ahead(self, count: int) -> list[float]:
+        """The next `count`, which stay to be drawn."""
+        while len(self._pool) < count:
+            self._pool = self._more() + self._pool
+        return self._pool[: -count - 1 : -1]
+
+    def stock(self, as_array: bool) -> tuple[Sequence[float], int]:
+        """(numbers, how many of them are left): the next is the last of these, then the one before, to `pass_over`."""
+        pool = self._pool
+        if not as_array:
+            return pool, len(pool)
+        if self._array_of is not pool:
+            self._array, self._array_of = np.array(pool), pool
+        return cast(Sequence[float], self._array), len(pool)
+
+    def pass_over(self, count: int) -> None:
+        """As if `count` of those `ahead` had been drawn."""
+        if count > 0:
+            del self._pool[-count:]
+
+
+def normal_source(rng: np.random.Generator | random.Random) -> Normals:
+    """What gives the next standard normal at each call."""
+    return Normals(rng)
 
 
 class WanderingFriction:
@@ -60,6 +105,31 @@ class WanderingFriction:
         self._x = x = self._carry * self._x + self._fresh * self._draw()
         self.torque = torque = self._scale * math.exp(self._sigma * x)
         return torque
+
+    @property
+    def law(self) -> tuple[float, float, float, float]:
+        """(carry, fresh, sigma, scale): x ← carry·x + fresh·n, torque = scale·exp(sigma·x)."""
+        return self._carry, self._fresh, self._sigma, self._scale
+
+    @property
+    def x(self) -> float:
+        """Where the process stands, in its own spread."""
+        return self._x
+
+    @property
+    def normals(self) -> Callable[[], float]:
+        """Where its numbers come from."""
+        return self._draw
+
+    def go_to(self, x: float, torque: float) -> None:
+        """Where somebody who follows the same law with the same numbers has got to."""
+        self._x, self.torque = x, torque
+
+    def fork(self, draw: Callable[[], float]) -> Self:
+        """The same from here on, with numbers of its own."""
+        twin = copy.copy(self)
+        twin._draw = draw
+        return twin
 
     def skip(self, cells: int) -> float:
         """The torque (N·m) `cells` cells on, in one draw: same law as so many single cells. No cell, no draw."""

@@ -13,10 +13,12 @@ from typing import TYPE_CHECKING, TypeVar
 
 from sweeprig.errors import ConfigError
 from sweeprig.quantities import Accuracy
+from sweeprig.simbench.panel import KEY, Panel
 from sweeprig.simbench.port import Port, Receiver
 from sweeprig.simbench.pwm_timer import PwmTimer
 from sweeprig.simbench.scpi import (
     CommandTree,
+    Finish,
     Later,
     Refused,
     Unit,
@@ -126,11 +128,11 @@ class _Waiting:
 
     __slots__ = ("answers", "finish", "position", "program")
 
-    def __init__(self, program: tuple[Unit, ...], position: int, answers: list[str], later: Later) -> None:
+    def __init__(self, program: tuple[Unit, ...], position: int, answers: list[str], finish: Finish) -> None:
         self.program = program
         self.position = position
         self.answers = answers
-        self.finish = later.finish
+        self.finish = finish
 
 
 class Instrument:
@@ -140,6 +142,7 @@ class Instrument:
     quantities   what it measures with a gain and an offset error
     error_keys   further keys that its `[simulated.NAME]` table may have
     hasty        says that operations are complete before they are; a fault sets it
+    has_panel    a person can turn it too, so it has a remote and a local state (panel.py)
     """
 
     model = "instrument"
@@ -148,14 +151,16 @@ class Instrument:
     byte_s = 0.0
     latency_s = DEFAULT_LATENCY_S
     longest_line = 4096
+    has_panel = True
 
     def __init__(self, setup: Setup, bench: Bench) -> None:
-        check_error_keys(setup, self.quantities, self.error_keys)
+        check_error_keys(setup, self.quantities, (*self.error_keys, *([KEY] if self.has_panel else ())))
         self.setup = setup
         self.name = setup.name
         self.bench = bench
         self.changes = 0
-        self.tree = CommandTree()
+        self.panel = Panel(setup.error(KEY, 0.0) > 0.0) if self.has_panel else None
+        self.tree = self.panel or CommandTree()
         self.port = self.new_port(Port, self)
         self.hasty = False
         self._programs: dict[bytes, tuple[Unit, ...]] = {}
@@ -193,7 +198,23 @@ class Instrument:
         program = self._programs.get(line)
         if program is None:
             program = self._remember(line)
-        self._run(program, 0, [])
+        if len(program) != 1:
+            self._run(program, 0, [])
+            return
+        # what `_run` does, for a message of one unit: nearly all are
+        ((handler, parameters, query),) = program
+        self._answers = []
+        try:
+            answer = handler(parameters)
+        except Refused as refused:
+            self.error(refused.number, refused.detail)
+            return
+        if not query:
+            self.changes += 1
+        if isinstance(answer, str):
+            self.port.send(answer)
+        elif answer is not None:
+            self._wait(program, 1, [], answer)
 
     def overrun(self) -> None:
         self.error(-363)
@@ -213,6 +234,10 @@ class Instrument:
         self.error(-410)
         return True
 
+    def _wait(self, program: tuple[Unit, ...], position: int, answers: list[str], later: Later) -> None:
+        self._waiting = waiting = _Waiting(program, position, answers, later.finish)
+        self.bench.at(later.at, self._resume, waiting)
+
     def _run(self, program: tuple[Unit, ...], position: int, answers: list[str]) -> None:
         self._answers = answers
         for handler, parameters, query in program[position:] if position else program:
@@ -229,8 +254,7 @@ class Instrument:
             if isinstance(answer, str):
                 answers.append(answer)
                 continue
-            self._waiting = _Waiting(program, position, answers, answer)
-            self.bench.at(answer.at, self._resume, self._waiting)
+            self._wait(program, position, answers, answer)
             return
         if answers:
             self.port.send(answers[0] if len(answers) == 1 else ";".join(answers))
@@ -241,9 +265,12 @@ class Instrument:
             return
         self._waiting = None
         answer = waiting.finish()
-        if answer is not None:
-            waiting.answers.append(answer)
-        self._run(waiting.program, waiting.position, waiting.answers)
+        if answer is not None and not waiting.answers and waiting.position == len(waiting.program):
+            self.port.send(answer)
+        else:
+            if answer is not None:
+                waiting.answers.append(answer)
+            self._run(waiting.program, waiting.position, waiting.answers)
         while self._held and self._waiting is None:
             self.receive(self._held.popleft())
 
@@ -264,6 +291,8 @@ class Instrument:
         self._errors.clear()
         self._event_status = POWER_ON
         self._event_enable = self._service_enable = 0
+        if self.panel is not None:
+            self.panel.power_on()
         self.port.flush()
         self.reset()
 

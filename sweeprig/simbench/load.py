@@ -68,6 +68,10 @@ class Load:
             return torque + more, slope + rise
         return torque, slope
 
+    def corners(self) -> list[tuple[float, float]]:
+        """The curve's corners as (rad/s, Nm)."""
+        return [(rpm / RPM, nm) for rpm, nm in zip(self.curve_rpm, self.curve_nm, strict=True)]
+
     def _curve(self, speed: float) -> tuple[float, float]:
         rpm, x, y = speed * RPM, self.curve_rpm, self.curve_nm
         place = bisect_right(x, rpm)

@@ -6,37 +6,31 @@ read in between is computed from there. No instrument, no noise of a reading, no
 
 from __future__ import annotations
 
+import copy
 import math
 import random
-from dataclasses import dataclass
+from collections.abc import Callable
+from typing import Self
 
 import numpy as np
 
 from sweeprig.errors import SweeprigError
+from sweeprig.simbench import stride
 from sweeprig.simbench.friction import WanderingFriction, normal_source
 from sweeprig.simbench.motor_truth import MotorTruth
-from sweeprig.simbench.rotor import Motion, after, caught, motion, starts, time_to_stop, time_to_turn
+from sweeprig.simbench.rotor import Motion, after, caught, linearised, mechanics_of, starts, time_to_stop, time_to_turn
 from sweeprig.simbench.stage import PlainLowSide, Setting, Stage
 from sweeprig.simbench.waveform import Waveform
 
-CELL_S = 0.02
+CELL_S = stride.CELL_S
 """Grid of the random friction and of the look whether the rotor is caught or starts."""
-HEAT_CELLS = 25
+HEAT_CELLS = stride.HEAT_CELLS
 """The winding's heat and resistance are renewed every so many cells, and at every start, stop and changed setting."""
 AMBIENT_DEGC = 20.0
 COPPER_PER_K = 1.0 / 254.5
 """Copper's temperature coefficient of resistance at 20 degC: 1 / (234.5 + 20) (checks 13.1, verified)."""
 
-
-@dataclass(slots=True)
-class _Sums:
-    """Running integrals up to a moment: angle (rad), V·s and A·s."""
-
-    angle: float = 0.0
-    motor_vs: float = 0.0
-    motor_as: float = 0.0
-    supply_as: float = 0.0
-    supply_vs: float = 0.0
+_Sums = stride.Sums
 
 
 class Plant:
@@ -87,8 +81,9 @@ class Plant:
         self._edges_per_rad = pulses_per_revolution / (2.0 * math.pi)
         self._edges = 0
         self._edge_step: tuple[float, float, float, Motion] | None = None
-        self._winding_degc = AMBIENT_DEGC
-        self._heat_watts = 0.0
+        self._strides = type(self) is Plant
+        self._fixed: stride.Still | None = None  # of the setting, once a stride has asked for it
+        self._winding_degc, self._heat_watts = AMBIENT_DEGC, 0.0
         self._peek: tuple[_Sums, float] | None = None
         self._renew_electric(0.0)
 
@@ -144,8 +139,16 @@ class Plant:
             edge = self._origin + (self._cell + 1) * CELL_S
             if edge > to:
                 return
+            if self._strides and self.turning and edge + CELL_S <= to and stride.passed(self, to):
+                continue
             self._flow_to(edge)
             self._enter_next_cell()
+
+    def fork(self, draw: Callable[[], float]) -> Self:
+        """A plant in the same state that goes on by itself, with the normals of `draw`."""
+        twin = copy.copy(self)
+        twin._running, twin._breakaway = self._running.fork(draw), self._breakaway.fork(draw)
+        return twin
 
     # ---- what the bench sees -------------------------------------------------------------------------------------
 
@@ -253,10 +256,11 @@ class Plant:
     def _renew_electric(self, omega: float) -> None:
         """Coefficients, heat and standstill torques after anything they depend on has changed."""
         t = self.truth
-        self._omega_committed = omega
+        self._omega_committed, self._fixed = omega, None
         self._resistance = t.resistance_ohm * (1.0 + COPPER_PER_K * (self._winding_degc - AMBIENT_DEGC))
-        self._electric = self._setting_now()
-        at_rest = self._electric.mean_supply_current(0.0)
+        self._electric = c = self._setting_now()
+        self._feed = c.supply_volts, c.supply_ohms
+        at_rest = c.mean_supply_current(0.0)
         self._may_limit = self._limits_at_once and at_rest > self.supply_current_limit_amps
         still = self._electric_at(0.0)
         standing = still.wave(0.0)
@@ -272,15 +276,16 @@ class Plant:
 
     def _electric_at(self, emf: float) -> Setting:
         """The coefficients at this back-EMF: with a lower voltage where the supply's current limit acts."""
-        c = self._electric
-        if not self._may_limit or c.mean_supply_current(emf) <= self.supply_current_limit_amps:
-            return c
-        return c.limited(emf, self.supply_current_limit_amps)
+        c, limit = self._electric, self.supply_current_limit_amps
+        return c.limited(emf, limit) if self._may_limit and c.mean_supply_current(emf) > limit else c
 
     def _relinearise(self) -> None:
-        omega, k = self._omega_committed, self.truth.torque_constant_nm_per_a
-        electric = self._electric_at(k * omega)
-        self._motion = how = motion(self.truth, electric, omega, self._running.torque + self._bound_nm)
+        omega, mechanics = self._omega_committed, mechanics_of(self.truth)
+        k = mechanics[0]
+        electric = self._electric_at(k * omega) if self._may_limit else self._electric
+        amps, per_volt = electric.mean_current(k * omega)
+        friction = self._running.torque + self._bound_nm
+        self._motion = how = Motion._make(linearised(mechanics, amps, per_volt, omega, friction))
         if electric is self._electric:
             return
         # the supply's voltage rises with the back-EMF while its limit acts: the slope is that of both together
@@ -317,11 +322,13 @@ class Plant:
         k = self.truth.torque_constant_nm_per_a
         charge = how.amps * moving + how.amps_slope * (turned - how.speed * moving)
         emf = k * turned / moving if moving > 0.0 else 0.0
-        electric = self._electric_at(emf)
+        electric, (volts, ohms) = self._electric, self._feed
+        if self._may_limit and (limited := self._electric_at(emf)) is not electric:
+            electric, volts, ohms = limited, limited.supply_volts, limited.supply_ohms
         drawn = electric.mean_supply_current(emf) * moving
         flowed = _Sums(
             s.angle + turned, s.motor_vs + self._resistance * charge + k * turned, s.motor_as + charge,
-            s.supply_as + drawn, s.supply_vs + electric.supply_volts * moving - electric.supply_ohms * drawn,
+            s.supply_as + drawn, s.supply_vs + volts * moving - ohms * drawn,
         )  # fmt: skip
         return (flowed if moving == seconds else self._rest(flowed, seconds - moving)), omega
 
@@ -385,12 +392,7 @@ class Plant:
 
     def _cell_of(self, when: float) -> int:
         """The cell that holds `when`, by the same comparison that `advance` steps with."""
-        cell = int((when - self._origin) / CELL_S)
-        while self._origin + (cell + 1) * CELL_S <= when:
-            cell += 1
-        while cell > 0 and self._origin + cell * CELL_S > when:
-            cell -= 1
-        return cell
+        return stride.cell_at(when, self._origin)
 
     def _look(self) -> tuple[_Sums, float]:
         if self._peek is None:

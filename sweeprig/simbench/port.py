@@ -31,6 +31,8 @@ class Timeline(Protocol):
     """What a port needs of the bench."""
 
     now: float
+    touched: int
+    unread: int
 
     def at(self, time: float, callback: Callback, argument: object) -> None: ...
 
@@ -57,6 +59,7 @@ class Port:
         self._byte_s = byte_s
         self._longest_line = longest_line
         self._terminator = terminator
+        self._ending = terminator.decode("latin-1")
         self._end = terminator[-1:]
         self._partial = b""
         self._dropping = False
@@ -89,13 +92,16 @@ class Port:
         """Drop unfinished input and unread answers."""
         self._partial = b""
         self._dropping = False
+        self._bench.unread -= len(self._answers)
+        self._bench.touched += 1
         self._answers.clear()
 
     def write(self, data: bytes) -> None:
         """Bytes from the client; each whole line reaches the instrument when its last byte has."""
-        plain = self._byte_s == 0.0 and not self._partial and not self._dropping
-        if plain and data.find(self._end) == len(data) - 1 <= self._longest_line:
-            self._receiver.receive(data[:-1] if data[-2:-1] != b"\r" else data[:-2])
+        last = len(data) - 1
+        if data.find(self._end) == last <= self._longest_line and not self._partial and not self._dropping:
+            line = data[:last] if data[last - 1 : last] != b"\r" else data[: last - 1]
+            self._when(self._arrival(last + 1), self._receiver.receive, line)
             return
         start = max(self._bench.now, self._received_until)
         self._received_until = start + len(data) * self._byte_s
@@ -108,6 +114,15 @@ class Port:
         self._partial += rest
         if len(self._partial) > self._longest_line:
             self._partial, self._dropping = b"", True
+
+    def _arrival(self, count: int) -> float:
+        """When the last of so many bytes, sent now, has come through the line."""
+        now = self._bench.now
+        if self._byte_s == 0.0:
+            return now
+        start = now if now > self._received_until else self._received_until
+        self._received_until = arrival = start + count * self._byte_s
+        return arrival
 
     def _deliver(self, time: float, line: bytes) -> None:
         if self._dropping or len(line) > self._longest_line:
@@ -129,16 +144,19 @@ class Port:
         """An answer of the instrument, formed now, one letter a byte (Latin-1: a block may hold any byte).
 
         The terminator is added. Lost when nobody holds the port open."""
-        self.put(text.encode("latin-1") + self._terminator)
+        self.put((text + self._ending).encode("latin-1"))
 
     def put(self, raw: bytes) -> None:
         """These bytes, terminator and all, become readable when latency and line have let them through."""
         if not self.is_open:
             return
-        ready = self._bench.now + self._latency_s
+        bench = self._bench
+        ready = bench.now + self._latency_s
         if self._byte_s:
             ready = self._sent_until = max(ready, self._sent_until) + len(raw) * self._byte_s
         self._answers.append((ready, raw))
+        bench.touched += 1
+        bench.unread += 1
 
     def next_ready(self) -> float:
         """Bench time at which bytes become readable; infinity while no answer is under way."""
@@ -146,10 +164,16 @@ class Port:
 
     def read(self) -> bytes:
         """What is readable now, and nothing of what is still under way."""
-        answers, now = self._answers, self._bench.now
-        if not answers or answers[0][0] > now:
+        answers = self._answers
+        if not answers:
+            return b""
+        bench = self._bench
+        now = bench.now
+        if answers[0][0] > now:
             return b""
         raw = answers.popleft()[1]
+        bench.unread -= 1
         while answers and answers[0][0] <= now:
             raw += answers.popleft()[1]
+            bench.unread -= 1
         return raw

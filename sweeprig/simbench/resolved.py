@@ -1,28 +1,26 @@
 """The rotor step by step through PWM period and cogging: current, speed and angle together, sticking and slipping.
 
-One stretch of constant setting and friction at a time; when a stretch is worth resolving is `detailed`'s to say.
+Plain functions of plain numbers that may be compiled; the winding's current is `winding`'s. One stretch of constant
+setting and friction at a time; when a stretch is worth resolving is `detailed`'s to say.
 """
 
 from __future__ import annotations
 
 import math
-from bisect import bisect_right
-from collections.abc import Callable
-from dataclasses import dataclass
 from typing import NamedTuple
 
-from sweeprig.simbench.chopper import Chopper
-from sweeprig.simbench.cogging import Cogging
-from sweeprig.simbench.stage import Setting
-from sweeprig.simbench.switched import Branch, Phase, SwitchedSetting
+from sweeprig.simbench.compiled import compiled
+from sweeprig.simbench.winding import Numbers, Winding, flow, mean_current, mean_supply_current, pulse
 
-COGGING_STEP = 0.2
-"""Longest step in radians of the cogging's own phase, moving or swinging at its natural frequency."""
-MECHANICAL_STEP = 0.05
+COGGING_STEP = 0.1
+"""Longest step in radians of the cogging's phase near the barrier, and of the swing at its natural frequency."""
+CLEAR_DEPTH, CLEAR_STEP = 0.3, 0.8
+"""A rotor faster than at this cogging depth keeps the step (s) it has there: what a step errs by depends on time only;
+but never more radians of the cogging's phase than this."""
+MECHANICAL_STEP = 0.01
 """Longest step in parts of the mechanical time constant J·R/K²."""
-PHASE_STEPS, PHASE_STEPS_AT_REST = 2, 6
+PHASE_STEPS, PHASE_STEPS_AT_REST = 2.0, 6.0
 """Least number of steps in each part of a PWM period; at rest the moment of breaking away is looked for."""
-_BLOCKED = Branch(math.inf, 0.0, 0.0, 0.0, 0.0)
 
 
 class Moment(NamedTuple):
@@ -40,204 +38,219 @@ class Moment(NamedTuple):
     amps: float
     phase: int
     left_s: float
-    motor_as: float = 0.0
-    supply_as: float = 0.0
+    motor_as: float
+    supply_as: float
 
 
-class Flowed(NamedTuple):
-    """Current at the end, A; charge through the motor and from the supply, A·s."""
-
-    amps: float
-    charge: float
-    drawn: float
-
-
-@dataclass(frozen=True, slots=True)
-class Shaft:
+class Shaft(NamedTuple):
     """What the rotor is and what holds it, within one stretch; SI units.
 
-    against   speed → (outer load, slope); positive hinders forward rotation
-    play_rad  the pointer that drives the tachometer follows this far behind, so that rocking in a detent is no turning
+    cogging_nm, cogging_steps   as `Cogging`; 0 Nm: none
+    viscous .. constant_nm      outer load as in `Load`; its curve, if any, comes beside
+    play_rad                    the pointer that drives the tachometer follows this far behind, so that rocking in a
+                                detent is no turning
+    longest_s, clear_s          longest step, and longest one of a rotor that is clear of its detents
     """
 
     inertia: float
     torque_constant: float
     running_nm: float
     breakaway_nm: float
-    cogging: Cogging | None
-    against: Callable[[float], tuple[float, float]]
+    cogging_nm: float
+    cogging_steps: float
+    viscous: float
+    quadratic: float
+    draught: float
+    constant_nm: float
     play_rad: float
+    longest_s: float
+    clear_s: float
 
 
-class Chopped:
-    """The winding's current as the stage switches it, exact for a constant back-EMF within each part of a period."""
-
-    def __init__(self, setting: Setting, resistance_ohm: float, inductance_henry: float) -> None:
-        self._ohms, self._henry = resistance_ohm, inductance_henry
-        self.phases = phases_of(setting)
-
-    def at(self, phase_s: float) -> tuple[int, float]:
-        """(part of the period, s left of it) at a phase in s."""
-        for number, phase in enumerate(self.phases):
-            left = phase.seconds - phase_s
-            if left > 1e-9 * phase.seconds:
-                return number, left
-            phase_s -= phase.seconds
-        return 0, self.phases[0].seconds
-
-    def longest(self, phase: int) -> float:
-        return self.phases[phase].seconds
-
-    def flow(self, amps: float, emf: float, seconds: float, phase: int) -> Flowed:
-        """The current from `amps` on, through zero where it gets there."""
-        _, forward, reverse = self.phases[phase]
-        charge = drawn = 0.0
-        while seconds > 0.0:
-            if amps > 0.0 or (amps == 0.0 and emf < forward.volts):
-                branch = forward
-            elif amps < 0.0 or emf > reverse.volts:
-                branch = reverse
-            else:
-                break
-            ohms = self._ohms + branch.ohms
-            tau, level = self._henry / ohms, (branch.volts - emf) / ohms
-            part = seconds
-            fallen = -math.expm1(-part / tau)
-            end = amps + (level - amps) * fallen
-            if end * amps < 0.0:
-                part = tau * math.log1p(-amps / level)
-                fallen, end = amps / (amps - level), 0.0
-            gone = level * part + (amps - level) * tau * fallen
-            charge, drawn = charge + gone, drawn + branch.supply * gone
-            amps, seconds = end, seconds - part
-        return Flowed(amps, charge, drawn)
+def longest_steps(inertia: float, cogging_nm: float, cogging_steps: float, mechanical_s: float) -> tuple[float, float]:
+    """(longest step by the mechanical time constant and by the swing in a detent, that of a clear rotor), s."""
+    longest = MECHANICAL_STEP * mechanical_s
+    if cogging_nm == 0.0:
+        return longest, longest
+    swing = math.sqrt(cogging_steps * cogging_nm / inertia)
+    return min(longest, COGGING_STEP / swing), min(longest, COGGING_STEP / swing / math.sqrt(2.0 / CLEAR_DEPTH))
 
 
-class Smooth:
-    """The mean current that belongs to the back-EMF: for a ripple that does not matter, and without any drive."""
-
-    def __init__(self, setting: Setting) -> None:
-        self._setting = setting
-
-    def at(self, phase_s: float) -> tuple[int, float]:
-        del phase_s
-        return 0, math.inf
-
-    def longest(self, phase: int) -> float:
-        del phase
-        return math.inf
-
-    def flow(self, amps: float, emf: float, seconds: float, phase: int) -> Flowed:
-        del amps, phase
-        mean = self._setting.mean_current(emf)[0]
-        return Flowed(mean, mean * seconds, self._setting.mean_supply_current(emf) * seconds)
-
-    phases: tuple[Phase, ...] = ()
+@compiled
+def against(shaft: Shaft, curve: Numbers, speed: float) -> tuple[float, float]:
+    """(outer load in Nm, its slope) at a speed; `curve` is corners as speed, torque, speed, torque … (see `Load`)."""
+    air = speed + shaft.draught
+    drag = shaft.quadratic * abs(air)
+    torque, slope = shaft.viscous * speed + drag * air + shaft.constant_nm, shaft.viscous + 2.0 * drag
+    last = len(curve) - 2
+    if last < 0:
+        return torque, slope
+    if speed < curve[0]:
+        return torque + curve[1], slope
+    place = 0
+    while place < last and speed >= curve[place + 2]:
+        place += 2
+    if place == last:
+        return torque + curve[last + 1], slope
+    rise = (curve[place + 3] - curve[place + 1]) / (curve[place + 2] - curve[place])
+    return torque + curve[place + 1] + rise * (speed - curve[place]), slope + rise
 
 
-def phases_of(setting: Setting) -> tuple[Phase, ...]:
-    """The parts of a period, of the plain stage and of the switched ones: there are no others."""
-    if isinstance(setting, SwitchedSetting):
-        return setting.phases
-    assert isinstance(setting, Chopper)
-    on = Branch(setting.on_volts, 0.0, 0.0, 0.0, 1.0)
-    off = Branch(-setting.diode_drop_v, 0.0, 0.0, 0.0, 0.0)
-    parts = (Phase(setting.on_s, on, _BLOCKED), Phase(setting.period_s - setting.on_s, off, _BLOCKED))
-    return tuple(part for part in parts if part.seconds > 0.0)
+@compiled
+def cog(shaft: Shaft, angle: float) -> float:
+    """Cogging torque against forward rotation, Nm."""
+    if shaft.cogging_nm == 0.0:
+        return 0.0
+    return shaft.cogging_nm * math.sin(shaft.cogging_steps * angle)
 
 
-class Track:
-    """The stretch from a commit on, stepped as far as somebody looks. The steps do not depend on who looks when.
+@compiled
+def leaves(winding: Winding, shaft: Shaft, push: float, least: float, greatest: float) -> float:
+    """+1 or −1: the way in which a standing rotor sets out; 0: it stays. Mean and extreme push in Nm.
 
-    Error: second order in the step. With the step limits above, the way of a rotor that keeps turning is within
-    0.05 % of an adaptive integrator's at 1e-10 after 0.1 s (tested, by a factor of two).
+    Where the ripple is not stepped through, its crest breaks the rotor away and the mean has to keep it going.
     """
+    running = shaft.running_nm if winding.kind != 0 else 0.0
+    if greatest > shaft.breakaway_nm and push > running:
+        return 1.0
+    return -1.0 if least < -shaft.breakaway_nm and push < -running else 0.0
 
-    def __init__(self, shaft: Shaft, current: Chopped | Smooth, begin: Moment, mechanical_s: float) -> None:
-        self._shaft, self._current = shaft, current
-        self.moments = [begin]
-        self._times = [0.0]
-        self._longest = MECHANICAL_STEP * mechanical_s
-        if shaft.cogging is not None and shaft.cogging.amplitude_nm > 0.0:
-            swing = math.sqrt(shaft.cogging.steps_per_revolution * shaft.cogging.amplitude_nm / shaft.inertia)
-            self._longest = min(self._longest, COGGING_STEP / swing)
 
-    def at(self, seconds: float) -> Moment:
-        """How things stand `seconds` after the begin of the stretch."""
-        while self._times[-1] < seconds:
-            last = self.moments[-1]
-            here = self._step(last, self._natural(last))
-            self.moments.append(here)
-            self._times.append(here.seconds)
-        here = self.moments[bisect_right(self._times, seconds) - 1]
-        while here.seconds < seconds:
-            further = self._step(here, seconds - here.seconds)
-            if further.seconds <= here.seconds:
-                break
-            here = further
-        return here
+@compiled
+def slide(
+    winding: Winding, data: Numbers, shaft: Shaft, curve: Numbers, here: Moment, h: float, way: float
+) -> tuple[float, float, float, float, float]:
+    """(speed, position, amps, charge, drawn) after sliding for h: half of the way, all of the push, the other half.
 
-    def when(self, travel: float, seconds: float) -> float:
-        """When within `seconds` the pointer's way was last below `travel`, rad: straight within a step."""
-        later = self.at(seconds)
-        for here in reversed(self.moments[: bisect_right(self._times, seconds)]):
-            if here.travel < travel:
-                part = (travel - here.travel) / (later.travel - here.travel)
-                return here.seconds + part * (later.seconds - here.seconds)
-            later = here
-        return later.seconds
+    Second order, and symplectic in what cogging and inertia exchange; what depends on the speed acts at its middle.
+    """
+    k, j, speed = shaft.torque_constant, shaft.inertia, here.speed
+    halfway = here.position + 0.5 * h * speed
+    held = cog(shaft, halfway) + shaft.running_nm * way
+    load, rise = against(shaft, curve, speed)
+    if winding.kind != 0:
+        amps, per_volt = mean_current(winding, data, k * speed)
+        implicit = 1.0 - 0.5 * h * (k * k * per_volt - rise) / j
+        end = speed + h * (k * amps - load - held) / (j * implicit)
+        middle = 0.5 * (speed + end)
+        charge = h * (amps + per_volt * k * (middle - speed))
+        drawn = h * mean_supply_current(winding, data, k * middle)
+        return end, halfway + 0.5 * h * end, amps, charge, drawn
+    amps, charge, share, amps_slope, charge_slope = pulse(winding, data, here.amps, k * speed, h, here.phase)
+    if share > -1.0:
+        implicit = 1.0 - 0.5 * (k * k * charge_slope - rise * h) / j
+        end = speed + (k * charge - (load + held) * h) / (j * implicit)
+        more = 0.5 * k * (end - speed)
+        if (amps + amps_slope * more) * amps > 0.0:
+            charge += charge_slope * more
+            return end, halfway + 0.5 * h * end, amps + amps_slope * more, charge, share * charge
+    _, charge, _ = flow(winding, data, here.amps, k * speed, h, here.phase)
+    end = speed + (k * charge - (load + held) * h) / j
+    middle = 0.5 * (speed + end)
+    amps, charge, drawn = flow(winding, data, here.amps, k * middle, h, here.phase)
+    load, _ = against(shaft, curve, middle)
+    end = speed + (k * charge - (load + held) * h) / j
+    return end, halfway + 0.5 * h * end, amps, charge, drawn
 
-    def _natural(self, here: Moment) -> float:
-        steps = PHASE_STEPS if here.speed != 0.0 else PHASE_STEPS_AT_REST
-        longest = min(self._longest, here.left_s, self._current.longest(here.phase) / steps)
-        cogging = self._shaft.cogging
-        if cogging is not None and here.speed != 0.0:
-            longest = min(longest, COGGING_STEP / (cogging.steps_per_revolution * abs(here.speed)))
-        return longest
 
-    def _step(self, here: Moment, h: float) -> Moment:
-        """One step of h (s) or less: the stretch's part ends, or the rotor comes to a stand, within it."""
-        shaft, k = self._shaft, self._shaft.torque_constant
-        if here.speed == 0.0:
-            flowed = self._current.flow(here.amps, 0.0, h, here.phase)
-            push = k * flowed.charge / h - shaft.against(0.0)[0] - self._cog(here.position)
-            if abs(push) <= shaft.breakaway_nm:
-                return self._arrived(here, h, 0.0, here.position, flowed)
-            way = math.copysign(1.0, push)
-        else:
-            way = math.copysign(1.0, here.speed)
-        speed, position, flowed = self._slide(here, h, way)
-        if here.speed == 0.0 and speed * way <= 0.0:  # the running friction holds what the breakaway friction let go
-            return self._arrived(here, h, 0.0, here.position, self._current.flow(here.amps, 0.0, h, here.phase))
-        if speed * way <= 0.0:
-            h *= here.speed / (here.speed - speed)
-            _, position, flowed = self._slide(here, h, way)
-            speed = 0.0
-        return self._arrived(here, h, speed, position, flowed)
+@compiled
+def arrived(
+    winding: Winding, data: Numbers, shaft: Shaft, here: Moment, h: float, speed: float, position: float, amps: float,
+    charge: float, drawn: float,
+) -> Moment:  # fmt: skip
+    """The moment `h` after `here`, the sums, the pointer and the PWM's phase carried on."""
+    phase, left = here.phase, here.left_s - h
+    pointer = max(position - shaft.play_rad, min(position + shaft.play_rad, here.pointer))
+    if left <= 1e-9 * h:
+        phase = (phase + 1) % winding.phases
+        left = data[7 * phase]
+    return Moment(
+        here.seconds + h, position, pointer, here.travel + abs(pointer - here.pointer), speed, amps, phase, left,
+        here.motor_as + charge, here.supply_as + drawn,
+    )  # fmt: skip
 
-    def _slide(self, here: Moment, h: float, way: float) -> tuple[float, float, Flowed]:
-        """(speed, position, current) after sliding for h: forces at the middle, found in three rounds."""
-        shaft, k, j = self._shaft, self._shaft.torque_constant, self._shaft.inertia
-        speed, friction = here.speed, shaft.running_nm * way
-        end = speed
-        flowed = Flowed(here.amps, 0.0, 0.0)
-        for _ in range(3):
-            middle = 0.5 * (speed + end)
-            flowed = self._current.flow(here.amps, k * middle, h, here.phase)
-            held = shaft.against(middle)[0] + self._cog(here.position + 0.25 * h * (speed + middle))
-            end = speed + (k * flowed.charge - (held + friction) * h) / j
-        return end, here.position + 0.5 * h * (speed + end), flowed
 
-    def _cog(self, angle: float) -> float:
-        return 0.0 if self._shaft.cogging is None else self._shaft.cogging.torque(angle)
+@compiled
+def rest(
+    winding: Winding, data: Numbers, shaft: Shaft, curve: Numbers, here: Moment, most: float
+) -> tuple[float, float, float, float, float]:
+    """(way, h, amps, charge, drawn): whether a standing rotor sets out (0: not) within the next h ≤ most, s.
 
-    def _arrived(self, here: Moment, h: float, speed: float, position: float, flowed: Flowed) -> Moment:
-        play, phase, left = self._shaft.play_rad, here.phase, here.left_s - h
-        pointer = max(position - play, min(position + play, here.pointer))
-        if left <= 1e-9 * h:
-            phase = (phase + 1) % len(self._current.phases)
-            left = self._current.phases[phase].seconds
-        return Moment(
-            here.seconds + h, position, pointer, here.travel + abs(pointer - here.pointer), speed, flowed.amps, phase,
-            left, here.motor_as + flowed.charge, here.supply_as + flowed.drawn,
-        )  # fmt: skip
+    A mean current does not change while the rotor stands, and a chopped one has its extremes at the ends of a part of
+    the period: where neither end moves the rotor, that whole part is one step.
+    """
+    k, held = shaft.torque_constant, against(shaft, curve, 0.0)[0] + cog(shaft, here.position)
+    if winding.kind != 0:
+        amps = mean_current(winding, data, 0.0)[0]
+        push = k * amps - held
+        way = leaves(winding, shaft, push, push - winding.below_nm, push + winding.above_nm)
+        h = most if way == 0.0 else min(most, shaft.longest_s)
+        return way, h, amps, amps * h, h * mean_supply_current(winding, data, 0.0)
+    h = min(most, here.left_s)
+    amps, charge, drawn = flow(winding, data, here.amps, 0.0, h, here.phase)
+    greatest, least = k * max(here.amps, amps) - held, k * min(here.amps, amps) - held
+    if greatest <= shaft.breakaway_nm and least >= -shaft.breakaway_nm:
+        return 0.0, h, amps, charge, drawn
+    h = min(h, shaft.longest_s, data[7 * here.phase] / PHASE_STEPS_AT_REST)
+    amps, charge, drawn = flow(winding, data, here.amps, 0.0, h, here.phase)
+    push = k * charge / h - held
+    return leaves(winding, shaft, push, push, push), h, amps, charge, drawn
+
+
+@compiled
+def natural(winding: Winding, data: Numbers, shaft: Shaft, here: Moment) -> float:
+    """The longest step that a moving rotor may take here, s."""
+    h = shaft.longest_s
+    if shaft.cogging_nm > 0.0:
+        pace = shaft.cogging_steps * abs(here.speed)
+        h = min(h, max(COGGING_STEP / pace, min(shaft.clear_s, CLEAR_STEP / pace)))
+    if winding.kind == 0:
+        h = min(h, here.left_s, data[7 * here.phase] / PHASE_STEPS)
+    return h
+
+
+@compiled
+def step(winding: Winding, data: Numbers, shaft: Shaft, curve: Numbers, here: Moment, most: float) -> Moment:
+    """One step of `most` (s) or less: the stretch's part ends, or the rotor comes to a stand, within it."""
+    if here.speed == 0.0:
+        way, h, amps, charge, drawn = rest(winding, data, shaft, curve, here, most)
+        if way == 0.0:
+            return arrived(winding, data, shaft, here, h, 0.0, here.position, amps, charge, drawn)
+        speed, position, s_amps, s_charge, s_drawn = slide(winding, data, shaft, curve, here, h, way)
+        if speed * way <= 0.0:  # the running friction holds what the breakaway friction let go
+            return arrived(winding, data, shaft, here, h, 0.0, here.position, amps, charge, drawn)
+        return arrived(winding, data, shaft, here, h, speed, position, s_amps, s_charge, s_drawn)
+    way = 1.0 if here.speed > 0.0 else -1.0
+    h = min(most, natural(winding, data, shaft, here))
+    speed, position, amps, charge, drawn = slide(winding, data, shaft, curve, here, h, way)
+    if speed * way <= 0.0:
+        h *= here.speed / (here.speed - speed)
+        speed, position, amps, charge, drawn = slide(winding, data, shaft, curve, here, h, way)
+        speed = 0.0
+    return arrived(winding, data, shaft, here, h, speed, position, amps, charge, drawn)
+
+
+@compiled
+def run(
+    winding: Winding, data: Numbers, shaft: Shaft, curve: Numbers, begin: Moment, seconds: float, first: float,
+    each: float,
+) -> tuple[Moment, float]:  # fmt: skip
+    """(how things stand `seconds` after the stretch began, when the last mark was passed; −1: none).
+
+    Marks lie on the pointer's way at `first` and every `each` (rad) from there; straight within a step. The steps do
+    not depend on who looks when: each look begins at the stretch's begin.
+    Error: second order in the step. With the limits above, the way of a rotor that keeps turning is within 0.05 % of an
+    adaptive integrator's at 1e-10 after 0.1 s (tested).
+    """
+    here, passed = begin, -1.0
+    while here.seconds < seconds:
+        there = step(winding, data, shaft, curve, here, seconds - here.seconds)
+        if there.seconds <= here.seconds:
+            break
+        if there.travel >= first:
+            beyond = math.floor((there.travel - first) / each)
+            part = (first + beyond * each - here.travel) / (there.travel - here.travel)
+            passed = here.seconds + part * (there.seconds - here.seconds)
+            first += (beyond + 1.0) * each
+        here = there
+    return here, passed

@@ -25,6 +25,7 @@ ERROR_TEXTS: Mapping[int, str] = {
     -112: "Program mnemonic too long",
     -113: "Undefined header",
     -131: "Invalid suffix",
+    -203: "Command protected",
     -213: "Init ignored",
     -221: "Settings conflict",
     -222: "Data out of range",
@@ -65,12 +66,15 @@ class Refused(Exception):
         self.detail = detail
 
 
+Finish = Callable[[], "str | None"]
+
+
 @dataclass(slots=True)
 class Later:
     """An answer that is only there at `at` (bench time, s): `finish()` is called then and gives it, or None."""
 
     at: float
-    finish: Callable[[], str | None]
+    finish: Finish
 
 
 Handler = Callable[[tuple[str, ...]], "str | Later | None"]

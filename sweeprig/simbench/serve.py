@@ -1,6 +1,7 @@
 """The simulated bench for other processes: its instruments on real sockets and a pseudo-terminal, at N times real time.
 
-One loop with select; bench time follows the machine's monotonic clock. No motor, no message is understood here.
+One loop with select; bench time follows the machine's monotonic clock. No motor, no message is understood here; what
+ends serving is serve_ends.py.
 """
 
 from __future__ import annotations
@@ -8,7 +9,6 @@ from __future__ import annotations
 import json
 import os
 import select
-import sys
 import time
 from collections.abc import Callable
 from contextlib import ExitStack
@@ -22,6 +22,7 @@ from sweeprig.simbench.bench import Bench, Happened
 from sweeprig.simbench.board import DEFAULT_HEARTBEAT_S
 from sweeprig.simbench.build import build
 from sweeprig.simbench.endpoints import Endpoint, endpoint
+from sweeprig.simbench.serve_ends import LOOK_S, Ends
 
 if TYPE_CHECKING:
     from typing import TextIO
@@ -32,8 +33,27 @@ if TYPE_CHECKING:
 RATES = (1.0, 1000.0)
 SHORTEST_HEARTBEAT_S = 0.05
 """Real seconds; below this an ordinary machine's scheduling fakes a lost heartbeat."""
-LONGEST_WAIT_S = 0.02
-"""Real seconds between two looks at the pseudo-terminal without a client, `stop` and standard input."""
+LONGEST_WAIT_S = 3600.0
+"""Real seconds; an operating system may refuse to sleep without end."""
+
+
+class Pace:
+    """Bench time bound to the machine's monotonic clock from now on: `rate` bench seconds in one real second."""
+
+    def __init__(self, bench: Bench, rate: float) -> None:
+        self._bench, self._rate = bench, rate
+        self._began, self._began_real = bench.now, time.monotonic()
+
+    def now(self) -> float:
+        """Bench time as the real clock has it, s; the bench itself may not have come so far yet."""
+        return self._began + (time.monotonic() - self._began_real) * self._rate
+
+    def catch_up(self) -> None:
+        self._bench.advance(self.now())
+
+    def real_s(self, until: float) -> float:
+        """Real seconds until that bench time, from 0."""
+        return max(0.0, (until - self.now()) / self._rate)
 
 
 def serve(
@@ -45,9 +65,10 @@ def serve(
     *,
     record: Path | None = None,
     tied: bool = False,
+    signals: bool = False,
     session: int = 1,
-) -> None:
-    """Serve the job's simulated bench until told to stop.
+) -> str:
+    """Serve the job's simulated bench until told to stop; the answer is what ended it.
 
     rate     bench seconds in one real second, 1 to 1000; ConfigError where a heartbeat would last under 50 ms
     write    the rig file with the opened addresses and the rate, put in place whole once all are listening
@@ -55,11 +76,13 @@ def serve(
     ready    called once with instrument name → address, when a client may come
     record   JSON lines of what drive and supply really did: `mono` (time.monotonic, s), `at` (bench, s), `what`, `why`
     tied     also end when standard input ends or the parent process is gone
+    signals  also end with SIGTERM, SIGHUP and Ctrl-C; in the main thread only
     Closes every socket and terminal on the way out, whatever the reason.
     """
     check_rate(job, rate)
-    bench = build(job, session)
     with ExitStack() as opened:
+        ends = opened.enter_context(Ends(stop, tied, signals))
+        bench = build(job, session)
         if record is not None:
             bench.on_record = _recorder(opened.enter_context(record.open("w", encoding="utf-8")))
         endpoints: dict[str, Endpoint] = {}
@@ -71,7 +94,7 @@ def serve(
             write_whole(write, rig_document(served_rig(job.rig, addresses, rate)))
         if ready is not None:
             ready(addresses)
-        _loop(bench, list(endpoints.values()), rate, _stopped(stop, tied), sys.stdin.fileno() if tied else None)
+        return _loop(bench, list(endpoints.values()), Pace(bench, rate), ends)
 
 
 def check_rate(job: Job, rate: float) -> None:
@@ -119,37 +142,27 @@ def _recorder(file: TextIO) -> Callable[[Happened], None]:
     return put_down
 
 
-def _stopped(stop: Callable[[], bool] | None, tied: bool) -> Callable[[], bool]:
-    parent = os.getppid()
-
-    def stopped() -> bool:
-        return (stop is not None and stop()) or (tied and os.getppid() != parent)
-
-    return stopped
-
-
-def _loop(
-    bench: Bench, endpoints: list[Endpoint], rate: float, stopped: Callable[[], bool], watched: int | None
-) -> None:
-    """Bench time follows real time; `watched`: a descriptor whose end of input ends the loop."""
-    began, began_real = bench.now, time.monotonic()
-
-    def catch_up() -> None:
-        bench.advance(began + (time.monotonic() - began_real) * rate)
-
-    while not stopped():
-        catch_up()
+def _loop(bench: Bench, endpoints: list[Endpoint], pace: Pace, ends: Ends) -> str:
+    """Serve until one of `ends` comes, and say which. Between two events it sleeps in select; nothing is polled that
+    the system can report."""
+    readable: list[int] = []
+    while not (why := ends.come(readable)):
+        pace.catch_up()
         due = bench.next_event()
+        handles, blocked, longest_s = list(ends.handles), [], ends.longest_wait_s
         for each in endpoints:
             each.give()
             due = min(due, each.port.next_ready())
-        wait_s = min(LONGEST_WAIT_S, max(0.0, (due - bench.now) / rate))
-        handles = [handle for each in endpoints if (handle := each.handle()) is not None]
-        readable, _, _ = select.select(handles if watched is None else [*handles, watched], [], [], wait_s)
-        if watched in readable and not os.read(watched, 4096):
-            return
-        catch_up()
-        for each in endpoints:
             handle = each.handle()
-            if handle is None or handle in readable:
+            if handle is not None:
+                handles.append(handle)
+                if each.unsent:
+                    blocked.append(handle)
+            elif each.unseen():
+                longest_s = LOOK_S
+        readable, _, _ = select.select(handles, blocked, [], min(longest_s or LONGEST_WAIT_S, pace.real_s(due)))
+        pace.catch_up()
+        for each in endpoints:
+            if each.handle() in readable or each.unseen():
                 each.take()
+    return why

@@ -7,7 +7,7 @@ from collections.abc import Callable
 from typing import TYPE_CHECKING
 
 from sweeprig.simbench.instrument import Instrument, ScaleError, Setup, draw_scale_error, require_connection
-from sweeprig.simbench.scpi import Later, Refused, boolean, nr1, nr3, number
+from sweeprig.simbench.scpi import Later, Refused, boolean, integer, nr1, nr3, number
 
 if TYPE_CHECKING:
     from sweeprig.simbench.bench import Bench
@@ -17,6 +17,7 @@ AMPS = (0.0, 10.0)
 SET_STEP = 1e-3
 """Settings are whole millivolts and milliamperes."""
 AVERAGE_S = 0.1
+MOST_AVERAGED = 100
 VOLTS_NOISE = 5e-4
 AMPS_NOISE = 1e-4
 """Standard deviations of one reading. Own choice: a few steps of a 16-bit converter on these ranges."""
@@ -30,7 +31,8 @@ DEFAULT_DELAY_S = 0.05
 
 
 class Supply(Instrument):
-    """`SOUR:VOLT`, `SOUR:CURR`, `…:PROT`, `OUTP`, `MEAS:…`, `STAT:QUES:COND?`: table in DEVELOPERS.md.
+    """`SOUR:VOLT`, `SOUR:CURR`, `…:PROT`, `OUTP`, `MEAS:…`, `SENS:AVER:COUN`, `STAT:QUES:COND?`: table in
+    DEVELOPERS.md.
 
     A trip turns the output off; until it is cleared the output cannot be switched on.
     """
@@ -52,6 +54,7 @@ class Supply(Instrument):
         self._add_commands()
 
     def _defaults(self) -> None:
+        self._count = 1
         self._levels, self._armed = {"A": AMPS[1], "V": VOLTS[1]}, {"A": False, "V": False}
         self._delay_s, self._tripped = DEFAULT_DELAY_S, False
         self._above_since = math.inf
@@ -66,6 +69,8 @@ class Supply(Instrument):
         add("OUTPut[:STATe]?", lambda _: nr1(self._on))
         add("MEASure[:SCALar]:VOLTage[:DC]?", self._measure_volts)
         add("MEASure[:SCALar]:CURRent[:DC]?", self._measure_amps)
+        add("[SENSe]:AVERage:COUNt", self._set_count, 1, 1)
+        add("[SENSe]:AVERage:COUNt?", lambda _: nr1(self._count))
         add("STATus:QUEStionable:CONDition?", self._condition)
         self._add_protection("CURRent", "A", AMPS)
         self._add_protection("VOLTage", "V", VOLTS)
@@ -177,13 +182,20 @@ class Supply(Instrument):
         plant = self.bench.plant_now()
         return self._average(lambda: plant.supply_amp_seconds, self._amps_scale, self._amps_noise)
 
+    def _set_count(self, parameters: tuple[str, ...]) -> None:
+        """The filter: so many times 0.1 s back to back make one reading."""
+        self._count = integer(parameters[0], 1, MOST_AVERAGED)
+
     def _average(self, integral: Callable[[], float], scale: ScaleError, noise: float) -> Later:
-        """The mean over the next 0.1 s of what `integral` runs up (V·s or A·s), with this supply's errors."""
-        start = integral()
+        """The mean over the next 0.1 s (times the filter's count) of what `integral` runs up (V·s or A·s), with this
+        supply's errors; the noise is that of 0.1 s, white."""
+        bench, start, count = self.bench, integral(), self._count
+        seconds = AVERAGE_S * count
+        noise = noise / math.sqrt(count)
 
         def finish() -> str:
-            self.bench.plant_now()
-            mean = (integral() - start) / AVERAGE_S
+            bench.plant_now()
+            mean = (integral() - start) / seconds
             return f"{mean * scale.gain + scale.offset + self.setup.noise.gauss(0.0, noise):+.6E}"
 
-        return Later(self.bench.now + AVERAGE_S, finish)
+        return Later(bench.now + seconds, finish)

@@ -9,7 +9,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import NamedTuple, Protocol
+from typing import NamedTuple, Protocol, TypeVar
 
 from sweeprig.errors import SweeprigError
 from sweeprig.simbench.waveform import Segment, Waveform
@@ -154,23 +154,7 @@ class SwitchedSetting:
         return self._again(volts)
 
     def limited(self, emf_v: float, limit_amps: float) -> SwitchedSetting:
-        """By false position on the voltage (Illinois variant), to 1e-10 of the limit: the current rises with it."""
-        low, high = 0.0, self.supply_volts
-        excess_low = self.at_volts(low).mean_supply_current(emf_v) - limit_amps
-        excess_high = self.mean_supply_current(emf_v) - limit_amps
-        if excess_low >= 0.0:
-            return self.at_volts(low)
-        for _ in range(_ROUNDS):
-            volts = (low * excess_high - high * excess_low) / (excess_high - excess_low)
-            tried = self.at_volts(volts)
-            excess = tried.mean_supply_current(emf_v) - limit_amps
-            if abs(excess) <= 1e-10 * (1.0 + limit_amps):
-                return tried
-            if excess > 0.0:
-                high, excess_high, excess_low = volts, excess, 0.5 * excess_low
-            else:
-                low, excess_low, excess_high = volts, excess, 0.5 * excess_high
-        raise SweeprigError("the simulated supply found no voltage at its current limit", value=f"{limit_amps:g} A")
+        return at_limit(self, emf_v, limit_amps)
 
     # ---- where the current keeps its sign ------------------------------------------------------------------------
 
@@ -285,6 +269,38 @@ class SwitchedSetting:
             parts.append(Segment(begin, piece.seconds, piece.level, piece.start, piece.tau, *branch, volts, ohms))
             begin += piece.seconds
         return parts
+
+
+class Movable(Protocol):
+    """A setting, as far as a current limit needs it."""
+
+    supply_volts: float
+
+    def mean_supply_current(self, emf_v: float) -> float: ...
+    def at_volts(self: Moved, volts: float) -> Moved: ...
+
+
+Moved = TypeVar("Moved", bound=Movable)
+
+
+def at_limit(setting: Moved, emf_v: float, limit_amps: float) -> Moved:
+    """By false position on the voltage (Illinois variant), to 1e-10 of the limit: the current rises with it."""
+    low, high = 0.0, setting.supply_volts
+    excess_low = setting.at_volts(low).mean_supply_current(emf_v) - limit_amps
+    excess_high = setting.mean_supply_current(emf_v) - limit_amps
+    if excess_low >= 0.0:
+        return setting.at_volts(low)
+    for _ in range(_ROUNDS):
+        volts = (low * excess_high - high * excess_low) / (excess_high - excess_low)
+        tried = setting.at_volts(volts)
+        excess = tried.mean_supply_current(emf_v) - limit_amps
+        if abs(excess) <= 1e-10 * (1.0 + limit_amps):
+            return tried
+        if excess > 0.0:
+            high, excess_high, excess_low = volts, excess, 0.5 * excess_low
+        else:
+            low, excess_low, excess_high = volts, excess, 0.5 * excess_high
+    raise SweeprigError("the simulated supply found no voltage at its current limit", value=f"{limit_amps:g} A")
 
 
 def _passed_at_zero(

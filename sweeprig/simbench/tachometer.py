@@ -41,6 +41,7 @@ class LineTachometer(Instrument):
         "gate_s", "pulses_per_revolution", "counted", "missed_percent", "doubled_percent", "locks_below_hz",
     )  # fmt: skip
     byte_s = BITS_A_BYTE / BAUD
+    has_panel = False
 
     def __init__(self, setup: Setup, bench: Bench) -> None:
         super().__init__(setup, bench)

@@ -8,14 +8,17 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, Protocol, cast
 
 import numpy as np
 
+from sweeprig.errors import ConfigError
 from sweeprig.holds import Condition
+from sweeprig.job.motor_models import Motor
 from sweeprig.job.rig_models import Rig
 from sweeprig.simbench.build_plant import plant_of
 from sweeprig.simbench.detailed import DetailedPlant
+from sweeprig.simbench.kinds.choose import other_kind
 from sweeprig.simbench.motor_truth import DetailedTruth, MotorTruth
 from sweeprig.simbench.plant import Plant
 
@@ -26,6 +29,10 @@ GAP_INTERVALS = 3.0
 """Stopped: no edge for so many of the intervals expected, and for so long at least (definition of turning)."""
 LOOK_S = 0.1
 WHOLE_REVOLUTIONS = 10.0
+BLOCK_TRIALS = 50
+"""Trials on one plant, one after the other, after its run-in; blocks are what the processes share out."""
+MOST_COAST_S = 120.0
+"""A rotor that turns so long after switching off is turned by something else: it rests no more than that."""
 SPEED_HOLDS = 12
 """Holds behind one true speed; its standard error is from the scatter between them."""
 
@@ -63,14 +70,35 @@ class Procedure:
         return max(GAP_S, GAP_INTERVALS * 60.0 / (self.pulses_per_revolution * self.expected_rpm))
 
 
+class Trialled(Protocol):
+    """What a trial needs of a plant, of any kind; read-outs are valid at `now`."""
+
+    now: float
+    turning: bool
+    stops: int
+
+    @property
+    def omega(self) -> float: ...
+    @property
+    def angle(self) -> float: ...
+    @property
+    def last_edge_at(self) -> float: ...
+    @property
+    def motor_volt_seconds(self) -> float: ...
+    def set_drive(self, pwm_hz: float, duty_percent: float, on: bool) -> None: ...
+    def set_supply(self, volts: float, current_limit_amps: float, on: bool) -> None: ...
+    def advance(self, to: float) -> None: ...
+
+
 @dataclass(frozen=True, slots=True)
 class Task:
     """Trials of one kind at one duty; `seed` is the entropy of their generator.
 
+    motor its true values; of a kind that is not plainly brushed, the motor file
     rig   whose power stage and supply the motor hangs on; None: an ideal low-side switch on an ideal supply
     """
 
-    motor: MotorTruth
+    motor: MotorTruth | Motor
     condition: Condition
     procedure: Procedure
     kind: str
@@ -92,9 +120,14 @@ class Counts:
     seconds: float = 0.0
 
 
-def cold_plant(task: Task) -> Plant:
-    """The task's plant as it is built, switched off, seeded by its seed."""
+def cold_plant(task: Task) -> Trialled:
+    """The task's plant as built, switched off, seeded by its seed. ConfigError for a motor without true values."""
     rng, pulses = np.random.default_rng(task.seed), task.procedure.pulses_per_revolution
+    if isinstance(task.motor, Motor):
+        machine = other_kind(task.motor, rng, 0.0)
+        if machine is None:
+            raise ConfigError("the motor is not of a kind of its own", value=task.motor.name)
+        return cast(Trialled, machine)
     if task.rig is not None:
         return plant_of(task.rig, task.motor, pulses, rng)
     if isinstance(task.motor, DetailedTruth):
@@ -102,7 +135,7 @@ def cold_plant(task: Task) -> Plant:
     return Plant(task.motor, pulses, rng)
 
 
-def warm_plant(task: Task) -> Plant:
+def warm_plant(task: Task) -> Trialled:
     """The task's plant after its run-in, turning."""
     plant, p = cold_plant(task), task.procedure
     plant.set_supply(task.condition.supply_v, p.current_limit_amps, True)
@@ -110,7 +143,7 @@ def warm_plant(task: Task) -> Plant:
     return plant
 
 
-def launch(plant: Plant, pwm_hz: float, duty: float, seconds: float) -> None:
+def launch(plant: Trialled, pwm_hz: float, duty: float, seconds: float) -> None:
     """`seconds` at `duty`; where that does not start the rotor, a kick at full duty and then once more."""
     plant.set_drive(pwm_hz, duty, True)
     plant.advance(plant.now + seconds)
@@ -121,7 +154,7 @@ def launch(plant: Plant, pwm_hz: float, duty: float, seconds: float) -> None:
         plant.advance(plant.now + seconds)
 
 
-def falling_trial(plant: Plant, pwm_hz: float, duty: float, p: Procedure) -> tuple[bool, float, float, float]:
+def falling_trial(plant: Trialled, pwm_hz: float, duty: float, p: Procedure) -> tuple[bool, float, float, float]:
     """One hold on the falling branch → (stopped, rad turned, V·s across the motor, s), the sums while settled.
 
     Stopped is the first gap between tachometer edges longer than allowed, or a mean speed below the lowest measurable;
@@ -149,15 +182,16 @@ def falling_trial(plant: Plant, pwm_hz: float, duty: float, p: Procedure) -> tup
     return stopped, last[1] - first[1], last[2] - first[2], last[0] - first[0]
 
 
-def rest(plant: Plant, pwm_hz: float, seconds: float) -> None:
+def rest(plant: Trialled, pwm_hz: float, seconds: float) -> None:
     """Coast down to rest, then rest for `seconds`."""
     plant.set_drive(pwm_hz, 0.0, False)
-    while plant.turning:
+    until = plant.now + MOST_COAST_S
+    while plant.turning and plant.now < until:
         plant.advance(plant.now + LOOK_S)
     plant.advance(plant.now + seconds)
 
 
-def start_trial(plant: Plant, pwm_hz: float, duty: float, p: Procedure) -> bool:
+def start_trial(plant: Trialled, pwm_hz: float, duty: float, p: Procedure) -> bool:
     """Coast to rest, rest, one step to `duty`: ten whole revolutions in time, and still turning at its end."""
     rest(plant, pwm_hz, p.rest_time_s)
     before = plant.angle

@@ -20,20 +20,17 @@ from scipy.optimize import brentq
 
 from sweeprig.errors import SweeprigError
 from sweeprig.holds import Condition
+from sweeprig.job.motor_models import Motor
 from sweeprig.job.rig_models import Rig
 from sweeprig.simbench.motor_truth import MotorTruth
-from sweeprig.simbench.trials import Counts, Finding, Map, Procedure, Task, perform, true_speed
-from sweeprig.simbench.truth_rare import long_run
-
-BLOCK_TRIALS = 50
-"""Trials on one plant, one after the other, after its run-in; blocks are what the processes share out."""
-
+from sweeprig.simbench.trials import BLOCK_TRIALS, Counts, Finding, Map, Procedure, Task, perform, true_speed
+from sweeprig.simbench.truth_rare import long_run, start_tail
 
 # ---- the whole -------------------------------------------------------------------------------------------------------
 
 
 def truth(
-    motor: MotorTruth,
+    motor: MotorTruth | Motor,
     conditions: Sequence[Condition],
     *,
     procedure: Procedure,
@@ -51,7 +48,7 @@ def truth(
     runs       trials per threshold (stall and start each), shared over about twenty duties
     workers    processes; more than one starts fresh interpreters. The result does not depend on it.
     rig        the rig whose power stage and supply the motor hangs on; without it an ideal low-side switch
-    rare_trials  forks a rung of the splitting behind `long_run_duty_percent` and `stop_tail`; 0: those are left out
+    rare_trials  forks a rung where `long_run_duty_percent`, `stop_tail` and `start_tail` take splitting; 0: no such
     """
     tasks = [Task(motor, one, procedure, "stall", 0.0, 1, (seed, number), rig) for number, one in enumerate(conditions)]
     with _workers(workers) as spread:
@@ -101,14 +98,15 @@ def _condition(task: Task, runs: int, spread: Map) -> dict[str, Any]:
 
 
 def _add_rare(task: Task, found: dict[str, Any], spread: Map) -> None:
-    """What only the splitting reaches, where stops begin within the allowed duties."""
+    """What counting does not reach, where stops and starts begin within the allowed duties."""
     sustain, width = found["sustain_99_duty_percent"], found["stall_spread_percent"]
     if sustain["value"] is None:
         found["long_run_duty_percent"] = sustain
-        return
-    found["long_run_duty_percent"], tail = long_run(task, sustain["value"], width["value"], spread)
-    if "chance" in tail:
-        found["stop_tail"] = tail
+    else:
+        found["long_run_duty_percent"], found["stop_tail"] = long_run(task, sustain["value"], width["value"], spread)
+    start, width = found["start_99_duty_percent"], found["start_spread_percent"]
+    if start["value"] is not None:
+        found["start_tail"] = start_tail(task, start["value"], width["value"], spread)
 
 
 def _threshold(task: Task, runs: int, spread: Map, record: dict[str, Any]) -> tuple[Finding, Finding, Finding]:

@@ -9,7 +9,13 @@ from typing import Any
 
 from sweeprig.errors import ConfigError
 from sweeprig.job import Job, freeze
-from sweeprig.job.simulated_models import SimulatedPrescribed
+from sweeprig.job.motor_models import Motor
+from sweeprig.job.simulated_models import (
+    SimulatedControlInput,
+    SimulatedElectronic,
+    SimulatedGeared,
+    SimulatedPrescribed,
+)
 from sweeprig.plan import Plan
 from sweeprig.simbench.build import motor_truth
 from sweeprig.simbench.kinds.choose import values
@@ -19,7 +25,7 @@ from sweeprig.simbench.truth import truth
 from sweeprig.simbench.truth_prescribed import prescribed_truth
 
 TRIALS = 3000
-RARE_TRIALS = 100
+RARE_TRIALS = 300
 """Forks a rung behind the duty of long service."""
 
 
@@ -43,7 +49,8 @@ def truth_of(
         motor: Any = values(PrescribedTruth, job.motor.simulated)
         trials, found = 0, [prescribed_truth(motor, one, _procedure(job, plan)) for one in plan.conditions]
     else:
-        motor = motor_truth(job)
+        own_kind = isinstance(job.motor.simulated, (SimulatedElectronic, SimulatedControlInput, SimulatedGeared))
+        motor = job.motor if own_kind else motor_truth(job)
         found = truth(
             motor,
             plan.conditions,
@@ -60,11 +67,12 @@ def truth_of(
             "supply_v": condition.supply_v,
             "findings": _flat(one),
             "speed_curve": one["speed_curve"],
-            **({"stop_tail": one["stop_tail"]} if "stop_tail" in one else {}),
+            **{name: one[name] for name in ("stop_tail", "start_tail") if name in one},
         }
         for condition, one in zip(plan.conditions, found, strict=True)
     ]
-    return {"motor": asdict(motor), "trials": trials, "conditions": conditions}
+    values_of = job.motor.simulated.model_dump() if isinstance(motor, Motor) and job.motor.simulated else asdict(motor)
+    return {"motor": values_of, "trials": trials, "conditions": conditions}
 
 
 def _procedure(job: Job, plan: Plan) -> Procedure:

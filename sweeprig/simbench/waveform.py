@@ -8,10 +8,26 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
-from typing import Literal, NamedTuple
+from typing import Literal, NamedTuple, Protocol
 
 Place = Literal["across_motor", "switch_node", "supply_terminals", "motor_lead", "supply_lead", "switch_shunt"]
 """Where a probe or meter sits, as `connected_to` of a rig file names it; voltages to supply minus, V, currents A."""
+
+
+class Part(Protocol):
+    """A stretch of the period in which nothing switches: `begin_s` its phase, `seconds` how long it lasts."""
+
+    @property
+    def begin_s(self) -> float: ...
+    @property
+    def seconds(self) -> float: ...
+    def value(self, place: Place, seconds: float) -> float:
+        """Volts or amperes at a place, `seconds` after its begin."""
+        ...
+
+    def integral(self, place: Place, seconds: float) -> float:
+        """Its integral, V·s or A·s, over its first `seconds`."""
+        ...
 
 
 class Segment(NamedTuple):
@@ -96,7 +112,7 @@ class Waveform:
     def period_s(self) -> float:
         raise NotImplementedError
 
-    def segments(self) -> Sequence[Segment]:
+    def segments(self) -> Sequence[Part]:
         """The stretches of one period in order; those of no length may be among them."""
         raise NotImplementedError
 

@@ -35,7 +35,7 @@ def counts(gate: int, edges: int, ticks: int, age: int = 1000) -> str:
 
 
 def test_speed_comes_from_edges_over_ticks(adapter: Board, board: Scripted) -> None:
-    """100 pulses a second at two a revolution are 3000 rpm, to the tick."""
+    """Row C16: 100 pulses a second at two a revolution are 3000 rpm, to the tick."""
     readings = perform(adapter.measure(Window(1.0)), board)
     speed = readings["speed"]
     assert speed.value == pytest.approx(3000.0, rel=1e-12)

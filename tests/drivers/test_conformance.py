@@ -137,6 +137,20 @@ class NotTexts(Broken):
         return {"range": 100.0}  # type: ignore[dict-item] # the fault under test
 
 
+class Restarting(Broken):
+    """Its power-on bit is never cleared, so every hold would be discarded."""
+
+    def settings(self) -> Steps[dict[str, str]]:
+        return (yield from super().settings()) | {"event_status": "128"}
+
+
+class Signed(Broken):
+    """Shows the register in a way in which nobody looks for the bit."""
+
+    def settings(self) -> Steps[dict[str, str]]:
+        return (yield from super().settings()) | {"event_status": "+0"}
+
+
 class Unbounded(Broken):
     def settings(self) -> Steps[dict[str, str]]:
         yield Ask(b"READ?", within_s=float("inf"))
@@ -173,6 +187,8 @@ class WrongUnit(Broken):
         (Endless, "asks are bounded"),
         (Gullible, "no identity is refused"),
         (NotTexts, "settings are texts"),
+        (Restarting, "a restart shows"),
+        (Signed, "a restart shows"),
         (Unbounded, "asks are bounded"),
         (Deaf, "every channel is read"),
         (WrongUnit, "every channel is read"),

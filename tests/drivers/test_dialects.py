@@ -115,7 +115,7 @@ def test_a_broken_package_is_named_only_when_it_matters(tmp_path: Path, package:
         (b"kind = ", "dialects/mine.toml:1: the dialect file is not TOML"),
         (b'kind = "scope"\nkind = "scope"', "dialects/mine.toml:2: the dialect file is not TOML"),
         (b"kind = '\xff'", "dialects/mine.toml: the dialect file is not TOML"),
-        (b"#" * 70_000, "the dialect file is too large: 70000 bytes"),
+        (b"#" * 70_000, "the dialect file is too large: more than 65536 bytes"),
     ],
 )
 def test_an_unreadable_file_is_named_with_its_line(tmp_path: Path, data: bytes, text: str) -> None:
@@ -196,7 +196,7 @@ def test_a_hostile_value_is_not_filled_in(value: str) -> None:
     ],
 )
 def test_a_faulty_dialect_is_refused(where: str, value: object, text: str) -> None:
-    """The error names the instrument, the key and the remedy."""
+    """Row B3: The error names the instrument, the key and the remedy."""
     table: dict[str, Any] = copy.deepcopy(find_dialect("source-and-measure", None))
     *path, last = where.split(".")
     inner = table[path[0]] if path else table

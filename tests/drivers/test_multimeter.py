@@ -58,7 +58,8 @@ def test_a_window_shorter_than_the_aperture_is_one_reading(adapter: ScpiMultimet
     ],
 )
 def test_no_value_is_no_data_with_its_reason(adapter: ScpiMultimeter, meter: Scripted, text: str, reason: str) -> None:
-    """Sentinels of SCPI-1999 (in the spellings seen) and the dialect's markers never become numbers."""
+    """Rows B1 and B10: Sentinels of SCPI-1999 (in the spellings seen) and the dialect's markers never become numbers.
+    """
     meter.answers["READ?"] = text
     reading = perform(adapter.measure(Window(0.2)), meter)["volts"]
     assert (reading.value, reading.u, reading.flags, reading.raw) == (None, 0.0, (reason,), text)
@@ -114,11 +115,11 @@ def test_configure_fixes_the_range_and_then_the_aperture(adapter: ScpiMultimeter
         b"*CLS", b"SYST:ERR?", b"CONF:VOLT:DC 100", b"SENS:VOLT:DC:RANG?", b"SENS:VOLT:DC:RANG:AUTO?",
         b"SENS:VOLT:DC:APER 0.2", b"SENS:VOLT:DC:APER?", b"SYST:ERR?",
     ]  # fmt: skip
-    assert perform(adapter.settings(), meter) == {"range_volts": "100", "aperture_s": "0.2"}
+    assert perform(adapter.settings(), meter) == {"range_volts": "100", "aperture_s": "0.2", "event_status": "0"}
 
 
 def test_a_range_that_reads_back_differently_is_refused(adapter: ScpiMultimeter, meter: Scripted) -> None:
-    """The error names quantity, both values and what stands in the instrument's error queue."""
+    """Row B7: The error names quantity, both values and what stands in the instrument's error queue."""
     meter.answers["SENS:VOLT:DC:RANG?"] = "1.0E+03"
     meter.answers["SYST:ERR?"] = '0,"No error"'
     with pytest.raises(InstrumentRefused) as caught:
@@ -145,7 +146,8 @@ def test_an_error_that_configuring_left_is_refused(adapter: ScpiMultimeter, mete
 
 
 def test_a_standing_error_neither_loops_nor_blames(adapter: ScpiMultimeter, meter: Scripted) -> None:
-    """An instrument that reports one error again and again is drained 64 entries deep, twice, and then configured."""
+    """Row B8: An instrument that reports one error again and again is drained 64 entries deep, twice, and then
+    configured."""
     meter.answers["SYST:ERR?"] = '514,"Calibration due"'
     perform(adapter.configure(), meter)
     assert meter.sent.count(b"SYST:ERR?") == 2 * MOST_ERRORS == 128
@@ -256,7 +258,7 @@ def test_check_window_refuses_nonsense(adapter: ScpiMultimeter, window: Window) 
         ({"range": "5 kV", "aperture": "0.2 s"}, "the option 'range' is out of range: '5 kV' (allowed: 1 mV to 1 kV)"),
         (
             {"range": "9 V", "aperture": "1 s", "filter": 1},
-            "option 'filter' is not known: 1 (allowed: function, range, aperture)",
+            "option 'filter' is not known: 1 (allowed: function, range, aperture, averaging)",
         ),
     ],
 )

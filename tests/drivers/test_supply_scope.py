@@ -49,7 +49,7 @@ def test_a_coarser_resolution_can_be_stated(setups: dict[str, AdapterSetup], sup
 
 
 def test_a_refused_limit_tells_the_error_queue(adapter: ScpiSupply, supply: Scripted) -> None:
-    """The read-back differs and the instrument says why."""
+    """Row B12: The read-back differs and the instrument says why."""
     supply.answers["SOUR:CURR?"] = "0.1"
     supply.errors.append('-222,"Data out of range"')
     with pytest.raises(InstrumentRefused, match=r"set to 1\.5 A .*-222,\"Data out of range\".*0\.1 A"):

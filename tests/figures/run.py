@@ -13,7 +13,7 @@ from collections.abc import Iterator
 from importlib import import_module
 from typing import Any
 
-GROUPS = ("startup", "search", "conduct", "night", "findings", "physics", "truth")
+GROUPS = ("startup", "search", "conduct", "night", "findings", "physics", "truth", "unattended", "fuzz", "serve")
 
 
 def measured(name: str, full: bool) -> Iterator[dict[str, Any]]:

@@ -26,15 +26,16 @@ def found() -> str | None:
     return shutil.which("ngspice")
 
 
-def solve(circuit: Circuit, emf: float, near_amps: float) -> dict[str, float]:
+def solve(circuit: Circuit, emf: float, near_amps: float, near_volts: float = 0.0) -> dict[str, float]:
     """Means over the last period of motor current, supply current and motor voltage; valley and peak current.
 
-    near_amps   the current to begin with; eight electrical time constants later nothing is left of it
+    near_amps   the current to begin with, near_volts a load capacitor's voltage; eight time constants of the winding,
+                and of the capacitor on it, later nothing is left of them
     """
     period = 1.0 / circuit.pwm_hz
-    tau = circuit.henry / circuit.ohm
+    tau = circuit.henry / circuit.ohm + circuit.load_farad * circuit.ohm
     periods = 3 + int(8.0 * tau / period)
-    text = netlist(circuit, emf, near_amps, periods)
+    text = netlist(circuit, emf, near_amps, periods, near_volts)
     with tempfile.TemporaryDirectory() as folder:
         path = Path(folder) / "stage.cir"
         path.write_text(text, encoding="ascii")
@@ -48,7 +49,7 @@ def solve(circuit: Circuit, emf: float, near_amps: float) -> dict[str, float]:
     return values
 
 
-def netlist(circuit: Circuit, emf: float, near_amps: float, periods: int) -> str:
+def netlist(circuit: Circuit, emf: float, near_amps: float, periods: int, near_volts: float = 0.0) -> str:
     """The stage as text: `plus` the rail behind the supply's resistance, `a` and `b` the ends of the motor."""
     period = 1.0 / circuit.pwm_hz
     begin, end = (periods - 1) * period, periods * period
@@ -63,6 +64,8 @@ def netlist(circuit: Circuit, emf: float, near_amps: float, periods: int) -> str
         "bm across 0 v = v(a) - v(b)",
         f".model closed sw(vt=0.5 vh=0 ron={max(circuit.switch_ohms, 1e-6)} roff=1e8)",
     ]
+    if circuit.load_farad > 0.0:
+        lines += [f"rc a mc {circuit.load_ohms}", f"cl mc b {circuit.load_farad} ic={near_volts!r}"]
     if low_side:
         lines += ["vp plus a 0", *half_bridge(circuit, "b", 0)]
     else:

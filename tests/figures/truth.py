@@ -16,11 +16,15 @@ from sweeprig.simbench.kinds.lot import lot
 from sweeprig.simbench.many import many
 from sweeprig.simbench.motor_truth import MotorTruth
 from sweeprig.simbench.plant import Plant
+from sweeprig.simbench.rare import Rate
+from sweeprig.simbench.rare_chain import chain_rate_in_hold
+from sweeprig.simbench.rare_starts import start_failure
 from sweeprig.simbench.rare_trials import stop_rate_in_hold
 from sweeprig.simbench.trials import Procedure, Task, perform
 
 AT = Condition(25e3, 12.0)
 HOLD = Procedure(hold_time_s=20.0)
+START_DUTIES = (27.0, 28.0)
 LOOK_S, HOLD_S = 0.25, 24.0
 
 
@@ -67,6 +71,35 @@ def one_hold(motor: MotorTruth, pair: tuple[int, int]) -> float:
     return plant.omega
 
 
+def _rare(middle: float, trials: int) -> Iterator[dict[str, Any]]:
+    """The scatter that both methods state, their cost, and how far apart they are; and starts."""
+    for step in (1.0, 1.5, 2.5):
+        found: dict[str, Rate] = {}
+        for method in ("chain", "splitting"):
+            began = time.perf_counter()
+            task = Task(fan(), AT, HOLD, "stall", middle + step, trials, (33,))
+            rate = found[method] = chain_rate_in_hold(task) if method == "chain" else stop_rate_in_hold(task, 6)
+            yield {
+                "figure": f"rare_u_log_{method}", "value": round(rate.u_log, 2), "target": "<= 0.5",
+                "meets": rate.u_log <= 0.5, "n": trials, "duty_percent": round(middle + step, 2),
+                "chance": rate.chance(HOLD.hold_time_s), "rare_s": round(time.perf_counter() - began, 1),
+            }  # fmt: skip
+        chain, split = found["chain"], found["splitting"]
+        away = math.log(chain.value / split.value) / math.hypot(chain.u_log, split.u_log) if split.value else math.nan
+        yield {
+            "figure": "chain_against_splitting_u", "value": round(away, 2), "target": "within 3",
+            "meets": abs(away) <= 3, "n": trials, "duty_percent": round(middle + step, 2),
+        }  # fmt: skip
+    for duty in START_DUTIES:
+        began = time.perf_counter()
+        start = start_failure(Task(fan(), AT, HOLD, "start", duty, 1, (34,)))
+        yield {
+            "figure": "rare_start_u_log", "value": round(start.u_log, 3), "target": "<= 0.5",
+            "meets": start.u_log <= 0.5, "n": 1, "duty_percent": duty, "chance": start.value,
+            "rare_s": round(time.perf_counter() - began, 1),
+        }  # fmt: skip
+
+
 def figures(full: bool) -> Iterator[dict[str, Any]]:
     trials = 600 if full else 200
     middle = where(0.3, 40)
@@ -79,14 +112,7 @@ def figures(full: bool) -> Iterator[dict[str, Any]]:
             "figure": "rare_against_counting_u", "value": round(away, 2), "target": "within 3", "meets": abs(away) <= 3,
             "n": trials, "duty_percent": round(duty, 2), "counted": plain, "split": rate.chance(HOLD.hold_time_s),
         }  # fmt: skip
-    for step in (1.5, 2.5):
-        began = time.perf_counter()
-        rate = stop_rate_in_hold(Task(fan(), AT, HOLD, "stall", middle + step, trials, (33,)), 6)
-        yield {
-            "figure": "rare_u_log", "value": round(rate.u_log, 2), "target": "<= 0.5", "meets": rate.u_log <= 0.5,
-            "n": trials, "duty_percent": round(middle + step, 2), "chance": rate.chance(HOLD.hold_time_s),
-            "rare_s": round(time.perf_counter() - began, 1),
-        }  # fmt: skip
+    yield from _rare(middle, trials)
     hours = 8.0 if full else 2.0
     night = plant_night_s(hours) * 8.0 / hours
     yield {"figure": "plant_night_s", "value": round(night, 2), "target": "<= 1", "meets": night <= 1.0, "n": 1}

@@ -86,7 +86,7 @@ class Broken(BaseLink):
 
 @pytest.mark.parametrize(("error", "expected"), FOREIGN, ids=NAMES)
 def test_every_foreign_error_is_mapped(error: Exception, expected: type[LinkError]) -> None:
-    """Each foreign exception has one class of the four, and the text names the link."""
+    """Rows A3 and C12: Each foreign exception has one class of the four, and the text names the link."""
     mapped = as_link_error(error, "TCPIP0::x::1::SOCKET", b"12.", "Look at the cable")
     assert type(mapped) is expected
     assert mapped.what.startswith("TCPIP0::x::1::SOCKET: ")
@@ -140,7 +140,7 @@ def test_a_failed_opening_is_mapped(error: Exception, expected: type[LinkError],
 
 
 def test_closing_never_raises(clock: SystemClock) -> None:
-    """An error of the old handle's closing is swallowed: it must not keep a link from being opened anew."""
+    """Row A16: An error of the old handle's closing is swallowed: it must not keep a link from being opened anew."""
     link = Broken(clock, OSError("stuck"), "shut")
     link.open(clock.now())
     link.close()

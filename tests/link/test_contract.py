@@ -24,14 +24,14 @@ def test_is_a_link(pair: Pair) -> None:
 
 @pytest.mark.parametrize("reply", REPLIES)
 def test_row_9_terminators(pair: Pair, reply: bytes) -> None:
-    """Row 9: LF, CR LF, CR and doubled ones each end a reply, which comes without them."""
+    """Row A9: LF, CR LF, CR and doubled ones each end a reply, which comes without them."""
     pair.ask(b"READ?")
     pair.far.reply(reply)
     assert pair.awaited() == b"1.5"
 
 
 def test_row_9_no_terminator(pair: Pair) -> None:
-    """Row 9: a reply without a terminator is never a value; its bytes are handed over for the record."""
+    """Row A9: a reply without a terminator is never a value; its bytes are handed over for the record."""
     pair.ask(b"READ?")
     pair.far.reply(b"1.5")
     assert pair.awaited(0.05) is None
@@ -39,7 +39,7 @@ def test_row_9_no_terminator(pair: Pair) -> None:
 
 
 def test_row_10_empty_line_behind_a_reply(pair: Pair) -> None:
-    """Row 10: a second terminator does not answer the next query; it is counted."""
+    """Row A10: a second terminator does not answer the next query; it is counted."""
     pair.ask(b"FIRST?")
     pair.far.reply(b"1\n\n")
     assert pair.awaited() == b"1"
@@ -50,7 +50,7 @@ def test_row_10_empty_line_behind_a_reply(pair: Pair) -> None:
 
 
 def test_row_10_empty_lines_before_a_reply(pair: Pair) -> None:
-    """Row 10: empty lines that come after the query are skipped before its reply, and counted."""
+    """Row A10: empty lines that come after the query are skipped before its reply, and counted."""
     pair.ask(b"READ?")
     pair.far.reply(b"\n\r\n")
     assert pair.awaited(0.02) is None
@@ -73,7 +73,7 @@ def test_second_half_of_cr_lf_is_no_empty_line(pair: Pair) -> None:
 
 
 def test_row_44_partial_line_is_no_value(pair: Pair) -> None:
-    """Rows 7 and 44: "12." is not yet a reply, "12.7" is one when its terminator has come; the link stays clean."""
+    """Rows A7 and C7: "12." is not yet a reply, "12.7" is one when its terminator has come; the link stays clean."""
     pair.ask(b"READ?")
     pair.far.reply(b"12.")
     assert pair.awaited(0.05) is None
@@ -83,7 +83,7 @@ def test_row_44_partial_line_is_no_value(pair: Pair) -> None:
 
 
 def test_row_6_late_reply_never_answers_the_next_query(pair: Pair) -> None:
-    """Row 6: after a timeout nothing may be asked until the link is resynchronised, and the late reply is gone."""
+    """Row A6: after a timeout nothing may be asked until the link is resynchronised, and the late reply is gone."""
     pair.ask(b"FIRST?")
     assert pair.awaited(0.02) is None
     pair.link.declare_timeout()
@@ -98,7 +98,7 @@ def test_row_6_late_reply_never_answers_the_next_query(pair: Pair) -> None:
 
 
 def test_row_7_tail_of_a_split_reply_is_never_a_value(pair: Pair) -> None:
-    """Row 7: of "1.23", pause, "4E+0" the timeout keeps "1.23" for the record, and the tail never comes out."""
+    """Row A7: of "1.23", pause, "4E+0" the timeout keeps "1.23" for the record, and the tail never comes out."""
     pair.ask(b"READ?")
     pair.far.reply(b"1.23")
     assert pair.awaited(0.05) is None
@@ -112,7 +112,7 @@ def test_row_7_tail_of_a_split_reply_is_never_a_value(pair: Pair) -> None:
 
 
 def test_row_1_closed_peer_is_lost_at_once(pair: Pair) -> None:
-    """Row 1: a peer that closes instead of answering is LinkLost at once, long before any deadline."""
+    """Row A1: a peer that closes instead of answering is LinkLost at once, long before any deadline."""
     pair.ask(b"READ?")
     pair.far.vanish()
     began = pair.clock.now()
@@ -134,7 +134,8 @@ def test_lost_link_refuses_even_early_messages(pair: Pair) -> None:
 
 
 def test_one_reply_outstanding(pair: Pair) -> None:
-    """A second message before the first reply was taken is misuse; it is not written and the first goes on."""
+    """Rows A13 and B4: A second message before the first reply was taken is misuse; it is not written and the first
+    goes on."""
     pair.ask(b"FIRST?")
     with pytest.raises(LinkMisuse, match="before the last reply was taken"):
         pair.link.send(b"SECOND?", Reply.LINE, pair.clock.now() + 1.0)
@@ -144,7 +145,7 @@ def test_one_reply_outstanding(pair: Pair) -> None:
 
 
 def test_nothing_is_outstanding_after_a_command(pair: Pair) -> None:
-    """A message that awaits nothing leaves the link free for the next, and there is nothing to take."""
+    """Row B3: A message that awaits nothing leaves the link free for the next, and there is nothing to take."""
     pair.ask(b"OUTP ON", Reply.NOTHING)
     with pytest.raises(LinkMisuse, match="no reply is outstanding"):
         pair.link.take()
@@ -152,7 +153,7 @@ def test_nothing_is_outstanding_after_a_command(pair: Pair) -> None:
 
 
 def test_block_in_pieces(pair: Pair) -> None:
-    """A block with LF in its data comes whole, however it was cut; its late terminator is no empty line."""
+    """Row B11: A block with LF in its data comes whole, however it was cut; its late terminator is no empty line."""
     pair.ask(b"CURV?", Reply.BLOCK)
     pair.far.reply(b"#1")
     assert pair.awaited(0.02) is None
@@ -219,7 +220,7 @@ def test_blind_message_has_no_reply(pair: Pair) -> None:
 
 
 def test_only_early_messages_before_the_identity(pair: Pair) -> None:
-    """Until the caller says that the instrument is identified, nothing but early messages is written."""
+    """Row C6: Until the caller says that the instrument is identified, nothing but early messages is written."""
     pair.link.identified = False
     with pytest.raises(LinkMisuse, match="before the identity query was answered"):
         pair.link.send(b"READ?", Reply.LINE, pair.clock.now() + 1.0)
@@ -227,7 +228,7 @@ def test_only_early_messages_before_the_identity(pair: Pair) -> None:
 
 
 def test_banner_before_the_identity_is_dropped(pair: Pair) -> None:
-    """What an instrument says by itself after opening is not taken for its identity."""
+    """Row C5: What an instrument says by itself after opening is not taken for its identity."""
     pair.link.identified = False
     pair.far.reply(b"oot ready\nhalf a li")
     pair.arrived()

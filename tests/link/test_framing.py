@@ -79,7 +79,7 @@ def test_double_terminators_are_empty_lines(buffer: bytes, lines: list[bytes]) -
     ],
 )
 def test_response_messages_are_one_line(reply: bytes) -> None:
-    """Commas, semicolons, quotes, '#' and bytes above 127 do not end a response message; NL does."""
+    """Row B9: Commas, semicolons, quotes, '#' and bytes above 127 do not end a response message; NL does."""
     assert parse(Reply.LINE, bytearray(reply + b"\n")) == (len(reply) + 1, reply)
 
 

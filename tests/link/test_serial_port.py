@@ -13,7 +13,7 @@ import serial
 from sweeprig.clock import SystemClock
 from sweeprig.errors import ConfigError, LinkLost, LinkTimeout
 from sweeprig.link.registry import open_link
-from sweeprig.link.serial_port import SerialLink, parse_address
+from sweeprig.link.serial_port import SerialLink, parse_address, stable_name
 from sweeprig.link.together import together
 from sweeprig.roles import Ask, Reply, Steps
 
@@ -27,7 +27,7 @@ def reading(within_s: float) -> Steps[bytes]:
 
 
 def test_row_45_dribble_does_not_move_the_deadline(pty_pair: Pair) -> None:
-    """Rows 8 and 45: one byte every 50 ms for ever ends at the deadline, with the bytes in the error."""
+    """Rows A8 and C8: one byte every 50 ms for ever ends at the deadline, with the bytes in the error."""
     began = pty_pair.clock.now()
     dribble = iter([b"", *[b"1"] * 100])  # the first look comes before the query
 
@@ -41,7 +41,7 @@ def test_row_45_dribble_does_not_move_the_deadline(pty_pair: Pair) -> None:
 
 
 def test_row_48_a_write_cannot_hang(pty_pair: Pair) -> None:
-    """Row 48: a device that stopped reading ends a write as LinkTimeout; the library's own error is the cause."""
+    """Row C11: a device that stopped reading ends a write as LinkTimeout; the library's own error is the cause."""
     began = pty_pair.clock.now()
     with pytest.raises(LinkTimeout) as caught:
         pty_pair.link.send(b"x" * 1_000_000, Reply.LINE, began + 0.1)
@@ -51,7 +51,7 @@ def test_row_48_a_write_cannot_hang(pty_pair: Pair) -> None:
 
 
 def test_row_46_unplugged(pty_pair: Pair, pty_far: PtyFar) -> None:
-    """Row 46: an unplugged device is LinkLost; the text says that the port is gone, the cause is kept."""
+    """Rows C9 and C15: an unplugged device is LinkLost; the text says that the port is gone, the cause is kept."""
     pty_pair.ask(b"READ?")
     pty_far.vanish()
     with pytest.raises(LinkLost, match="The port is gone") as caught:
@@ -60,13 +60,13 @@ def test_row_46_unplugged(pty_pair: Pair, pty_far: PtyFar) -> None:
 
 
 def test_row_47_the_port_is_exclusive(pty_pair: Pair, clock: SystemClock) -> None:
-    """Row 47: a second opener is refused, with the hint that another program has the port."""
+    """Row C10: a second opener is refused, with the hint that another program has the port."""
     with pytest.raises(LinkLost, match="another program may have it open"):
         open_link(pty_pair.far.address, clock, clock.now() + 1.0)
 
 
 def test_row_38_resynchronising_does_not_reopen(pty_pair: Pair) -> None:
-    """Row 38: opening may reset a board, so a port that is alive is drained and keeps its handle."""
+    """Row C1: opening may reset a board, so a port that is alive is drained and keeps its handle."""
     handle = pty_pair.link.fileno()
     pty_pair.ask(b"READ?")
     pty_pair.link.declare_timeout()
@@ -78,7 +78,7 @@ def test_row_38_resynchronising_does_not_reopen(pty_pair: Pair) -> None:
 
 
 def test_row_2_resynchronising_ends_although_the_device_streams(pty_far: PtyFar) -> None:
-    """Row 2: a device that never falls silent is LinkLost at the deadline."""
+    """Row A2: a device that never falls silent is LinkLost at the deadline."""
 
     class Chatting(SystemClock):
         """While anyone waits, the device says something."""
@@ -98,7 +98,7 @@ def test_row_2_resynchronising_ends_although_the_device_streams(pty_far: PtyFar)
 
 
 def test_row_40_the_name_is_resolved_at_each_opening(pty_far: PtyFar, clock: SystemClock, tmp_path: Path) -> None:
-    """Row 40: a stable name that now points to another node leads there when the lost link is opened again."""
+    """Row C3: a stable name that now points to another node leads there when the lost link is opened again."""
     gone = tmp_path / "was"
     gone.symlink_to(pty_far.device)
     stable = tmp_path / "usb-board"
@@ -112,6 +112,59 @@ def test_row_40_the_name_is_resolved_at_each_opening(pty_far: PtyFar, clock: Sys
     link.resynchronise(clock.now() + 1.0)
     assert link.dirty == ""
     link.close()
+
+
+def test_row_40_a_plain_node_is_reopened_by_its_stable_name(
+    pty_far: PtyFar, clock: SystemClock, tmp_path: Path
+) -> None:
+    """Row C3: opened as a numbered node, lost, and back under another number: reopened by the stable name that led to
+    it at first, also when that appears only later; never by the old number, which another device may have by then."""
+    folder = tmp_path / "by-id"
+    folder.mkdir()
+    stable = folder / "usb-board-if00"
+    other, moved = type(pty_far)(), type(pty_far)()
+    (folder / "usb-meter-if00").symlink_to(other.device)
+    stable.symlink_to(pty_far.device)
+    link = SerialLink(pty_far.address, clock, stable_names=(tmp_path / "no such folder", folder))
+    link.open(clock.now() + 1.0)
+    link.close()
+    stable.unlink()
+    with pytest.raises(LinkLost, match=f"The port is gone.*first opened as {pty_far.device}"):
+        link.resynchronise(clock.now() + 1.0)
+    stable.symlink_to(moved.device)
+    link.resynchronise(clock.now() + 1.0)
+    link.send(b"*IDN?", Reply.LINE, clock.now() + 1.0, early=True)
+    assert moved.receive(6) == b"*IDN?\n"
+    link.close()
+    for far in (other, moved):
+        far.close()
+
+
+def test_a_node_without_a_stable_name_keeps_its_own(pty_far: PtyFar, clock: SystemClock, tmp_path: Path) -> None:
+    """Row C3: where no link leads to the node (another system, another device's link) its own name is used again."""
+    (tmp_path / "usb-other").symlink_to("/dev/null")
+    (tmp_path / "plain").write_bytes(b"")
+    (tmp_path / "dangling").symlink_to(tmp_path / "nowhere")
+    assert stable_name(pty_far.device, (tmp_path / "none", tmp_path)) == pty_far.device
+    link = SerialLink(pty_far.address, clock, stable_names=(tmp_path,))
+    for _ in range(2):
+        link.open(clock.now() + 1.0)
+        link.close()
+
+
+def test_the_better_folder_of_names_comes_first(pty_far: PtyFar, tmp_path: Path) -> None:
+    """Row C4: the name by identity is preferred to the one by socket, which serves where there is no other; a link that
+    a person has chosen is kept."""
+    better, other = tmp_path / "by-id", tmp_path / "by-path"
+    for folder in (better, other):
+        folder.mkdir()
+        (folder / "name").symlink_to(pty_far.device)
+    assert stable_name(pty_far.device, (better, other)) == str(better / "name")
+    (better / "name").unlink()
+    assert stable_name(pty_far.device, (better, other)) == str(other / "name")
+    own = tmp_path / "my-board"
+    own.symlink_to(pty_far.device)
+    assert stable_name(str(own), (better, other)) == str(own)
 
 
 def test_without_a_handle_the_clock_polls(clock: SystemClock, monkeypatch: pytest.MonkeyPatch) -> None:

@@ -30,7 +30,7 @@ def reading(within_s: float) -> Steps[bytes]:
 
 
 def test_row_1_reply_then_close(tcp_pair: Pair) -> None:
-    """Row 1: the reply that came before the peer closed is taken; the next message is LinkLost, not a timeout."""
+    """Row A1: the reply that came before the peer closed is taken; the next message is LinkLost, not a timeout."""
     tcp_pair.ask(b"READ?")
     tcp_pair.far.reply(b"1.5\n")
     tcp_pair.far.vanish()
@@ -41,7 +41,7 @@ def test_row_1_reply_then_close(tcp_pair: Pair) -> None:
 
 
 def test_row_1_half_a_reply_then_close(tcp_pair: Pair) -> None:
-    """Rows 1 and 7: a reply cut off by the close is no value; its bytes are in the error."""
+    """Rows A1 and A7: a reply cut off by the close is no value; its bytes are in the error."""
     tcp_pair.ask(b"READ?")
     tcp_pair.far.reply(b"1.2")
     tcp_pair.far.vanish()
@@ -51,7 +51,7 @@ def test_row_1_half_a_reply_then_close(tcp_pair: Pair) -> None:
 
 
 def test_row_2_resynchronise_ends_where_nobody_listens(tcp_pair: Pair, tcp_far: TcpFar) -> None:
-    """Row 2: resynchronising with a peer that is gone ends with LinkLost, within the deadline."""
+    """Row A2: resynchronising with a peer that is gone ends with LinkLost, within the deadline."""
     tcp_pair.ask(b"READ?")
     tcp_far.vanish()
     tcp_far.listener.close()
@@ -64,7 +64,7 @@ def test_row_2_resynchronise_ends_where_nobody_listens(tcp_pair: Pair, tcp_far: 
 
 
 def test_row_2_resynchronise_ends_although_the_peer_streams(tcp_pair: Pair, tcp_far: TcpFar) -> None:
-    """Row 2: a peer that streams without end is garbled; resynchronising leaves its stream behind."""
+    """Row A2: a peer that streams without end is garbled; resynchronising leaves its stream behind."""
     tcp_pair.ask(b"READ?")
     first = tcp_far.peer
     first.setblocking(False)
@@ -79,7 +79,7 @@ def test_row_2_resynchronise_ends_although_the_peer_streams(tcp_pair: Pair, tcp_
 
 
 def test_row_3_reset_is_mapped(tcp_pair: Pair, tcp_far: TcpFar) -> None:
-    """Row 3: a connection reset in mid-exchange is LinkLost with the system's error as its cause."""
+    """Row A3: a connection reset in mid-exchange is LinkLost with the system's error as its cause."""
     tcp_pair.ask(b"READ?")
     tcp_far.peer.setsockopt(socket.SOL_SOCKET, socket.SO_LINGER, struct.pack("ii", 1, 0))
     tcp_far.vanish()
@@ -89,7 +89,7 @@ def test_row_3_reset_is_mapped(tcp_pair: Pair, tcp_far: TcpFar) -> None:
 
 
 def test_row_4_closed_port_is_refused_at_opening(tcp_far: TcpFar, clock: SystemClock) -> None:
-    """Row 4: opening a closed port fails at the opening, not at the first query."""
+    """Row A4: opening a closed port fails at the opening, not at the first query."""
     tcp_far.listener.close()
     with pytest.raises(LinkLost, match="refused") as caught:
         open_link(tcp_far.address, clock, clock.now() + 2.0)
@@ -97,7 +97,7 @@ def test_row_4_closed_port_is_refused_at_opening(tcp_far: TcpFar, clock: SystemC
 
 
 def test_row_4_an_open_link_is_not_identified(tcp_far: TcpFar, clock: SystemClock) -> None:
-    """Row 4: an accepted connection proves nothing: before the identity answer no other message is taken."""
+    """Row A4: an accepted connection proves nothing: before the identity answer no other message is taken."""
     link = open_link(tcp_far.address, clock, clock.now() + 2.0)
     try:
         assert not link.identified
@@ -109,7 +109,7 @@ def test_row_4_an_open_link_is_not_identified(tcp_far: TcpFar, clock: SystemCloc
 
 @linux_only
 def test_row_5_opening_keeps_its_deadline(clock: SystemClock) -> None:
-    """Row 5: a connection that is not taken (the listener's queue is full) is LinkLost at the deadline."""
+    """Row A5: a connection that is not taken (the listener's queue is full) is LinkLost at the deadline."""
     with socket.create_server(("127.0.0.1", 0), backlog=0) as listener:
         port = listener.getsockname()[1]
         waiting = [socket.socket() for _ in range(4)]
@@ -125,7 +125,7 @@ def test_row_5_opening_keeps_its_deadline(clock: SystemClock) -> None:
 
 
 def test_row_5_a_slow_acceptor_is_reached(tcp_far: TcpFar, clock: SystemClock) -> None:
-    """Row 5: a server that accepts and answers late, but within the deadline, is no failure."""
+    """Row A5: a server that accepts and answers late, but within the deadline, is no failure."""
     result: dict[str, bytes | None] = {}
     identified = threading.Event()
 
@@ -146,7 +146,7 @@ def test_row_5_a_slow_acceptor_is_reached(tcp_far: TcpFar, clock: SystemClock) -
 
 
 def test_row_8_dribble_does_not_move_the_deadline(tcp_pair: Pair, tcp_far: TcpFar) -> None:
-    """Rows 7 and 8: one byte every 50 ms for ever ends at the deadline, with the bytes in the error."""
+    """Rows A7 and A8: one byte every 50 ms for ever ends at the deadline, with the bytes in the error."""
     began = tcp_pair.clock.now()
     dribble = iter([b"", *[b"1"] * 100])  # the first look comes before the query
 
@@ -161,7 +161,7 @@ def test_row_8_dribble_does_not_move_the_deadline(tcp_pair: Pair, tcp_far: TcpFa
 
 
 def test_row_8_a_write_keeps_its_deadline(tcp_pair: Pair) -> None:
-    """Row 8: 20 MB to a peer that never reads end at the deadline as LinkTimeout, not later."""
+    """Row A8: 20 MB to a peer that never reads end at the deadline as LinkTimeout, not later."""
     began = tcp_pair.clock.now()
     with pytest.raises(LinkTimeout, match="bytes were not sent"):
         tcp_pair.link.send(b"x" * 20_000_000, Reply.LINE, began + 0.2)
@@ -170,7 +170,8 @@ def test_row_8_a_write_keeps_its_deadline(tcp_pair: Pair) -> None:
 
 
 def test_row_8_the_wall_clock_has_no_say(tcp_pair: Pair) -> None:
-    """Row 8: with a wall clock that steps back an hour at every look, a reply is late at its monotonic deadline."""
+    """Rows A8 and D5: with a wall clock that steps back an hour at every look, a reply is late at its monotonic
+    deadline."""
 
     class Stepping(SystemClock):
         steps = 0
@@ -193,7 +194,7 @@ def test_row_8_the_wall_clock_has_no_say(tcp_pair: Pair) -> None:
 
 @linux_only
 def test_opening_and_closing_leaves_no_descriptors(tcp_far: TcpFar, clock: SystemClock) -> None:
-    """A hundred cycles of open and close, and as many refused openings, leave no descriptor behind."""
+    """Row A14: A hundred cycles of open and close, and as many refused openings, leave no descriptor behind."""
     nobody = socket.create_server(("127.0.0.1", 0))
     closed = f"TCPIP0::127.0.0.1::{nobody.getsockname()[1]}::SOCKET"
     nobody.close()
@@ -212,7 +213,7 @@ def descriptors() -> int:
 
 
 def test_options_of_the_socket(tcp_pair: Pair) -> None:
-    """Every connection keeps itself alive, sends small messages at once and never blocks."""
+    """Row A11: Every connection keeps itself alive, sends small messages at once and never blocks."""
     handle = tcp_pair.link.fileno()
     assert handle is not None
     with socket.socket(fileno=socket.dup(handle)) as same:
@@ -222,7 +223,7 @@ def test_options_of_the_socket(tcp_pair: Pair) -> None:
 
 
 def test_a_lost_connection_opens_again(tcp_pair: Pair, tcp_far: TcpFar) -> None:
-    """After a loss the same link, resynchronised, talks over a new connection, and counts on from there."""
+    """Row A16: After a loss the same link, resynchronised, talks over a new connection, and counts on from there."""
     tcp_pair.ask(b"READ?")
     tcp_far.vanish()
     with pytest.raises(LinkLost):

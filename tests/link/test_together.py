@@ -7,13 +7,14 @@ from typing import TYPE_CHECKING, Any
 
 import pytest
 
-from sweeprig.errors import LinkLost
+from sweeprig.errors import LinkGarbled, LinkLost
 from sweeprig.link.link import Link
-from sweeprig.link.together import Result, together
+from sweeprig.link.registry import open_link
+from sweeprig.link.together import LOOK_S, Result, together
 from sweeprig.roles import Answer, Ask, Reply, Steps
 
 if TYPE_CHECKING:
-    from tests.link.conftest import JumpingClock, Pair, Planned
+    from tests.link.conftest import JumpingClock, Pair, Planned, PortFar
 
 START = 100.0
 
@@ -176,6 +177,32 @@ def test_many_commands_in_a_row(jumping: JumpingClock, planned: Planned) -> None
     assert (
         len(together({"a": (link, read(10_000, Ask(b"X", Reply.NOTHING)))}, jumping, START + 9.0)["a"].get()) == 10_000
     )
+
+
+def test_a_slow_look_starves_nobody(jumping: JumpingClock, planned: Planned) -> None:
+    """A look that takes longer than the time between two looks still lets every reply be taken after it."""
+    looks: list[float] = []
+
+    def slow() -> None:
+        looks.append(jumping.t)
+        jumping.t += 0.2
+        assert len(looks) < 20, "nothing but looks"
+
+    answers = together({"meter": (planned(jumping, 0.01), read(5))}, jumping, START + 9.0, slow)["meter"].get()
+    assert len(answers) == 5
+    assert len(looks) <= 7  # one at the start, and at most one before each reply
+
+
+def test_a_blind_message_fails_at_once_in_process(jumping: JumpingClock, port_far: PortFar) -> None:
+    """The reply to a blind message cannot be told from a late one: its steps end at the next look, not when its time
+    is up, also on a link that knows that nothing is coming."""
+    link = open_link(port_far.address, jumping, START + 1.0, ports={"meter": port_far})
+    link.declare_timeout()
+    ask = Ask(b"OUTP?", early=True, within_s=2.0)
+    result = together({"supply": (link, read(1, ask))}, jumping, START + 9.0, lambda: None)["supply"]
+    assert isinstance(result.error, LinkGarbled)
+    assert jumping.t <= START + LOOK_S + 1e-9
+    assert port_far.written == b"OUTP?\n"
 
 
 def test_result_get() -> None:

@@ -88,7 +88,7 @@ def test_what_a_callback_raises_ends_the_loop_cleanly(
 
 
 def test_row_8_timeout(jumping: JumpingClock, planned: Planned) -> None:
-    """Rows 7 and 8: a late reply dirties its link, reaches its steps, and its Result carries the partial bytes."""
+    """Rows A7 and A8: a late reply dirties its link, reaches its steps, and its Result carries the partial bytes."""
     silent, doing = planned(jumping, text=None), Closing()
     silent.partial = b"1.2"
     result = together({"meter": (silent, doing.steps(Ask(b"READ?", within_s=0.5)))}, jumping, START + 9.0)["meter"]
@@ -102,7 +102,7 @@ def test_row_8_timeout(jumping: JumpingClock, planned: Planned) -> None:
 
 
 def test_timeout_of_a_silent_instrument_says_where_to_look(jumping: JumpingClock, planned: Planned) -> None:
-    """Row 26: silence may be a refused message, so the text points to the error queue."""
+    """Row B2: silence may be a refused message, so the text points to the error queue."""
     result = together({"meter": (planned(jumping, text=None), read())}, jumping, START + 9.0)["meter"]
     assert "error queue" in str(result.error)
 
@@ -168,7 +168,7 @@ def test_failing_steps_stop_nobody_else(jumping: JumpingClock, planned: Planned,
 
 
 def test_row_6_a_reply_of_the_wrong_shape_dirties_the_link(jumping: JumpingClock, planned: Planned) -> None:
-    """Row 6: when the steps find a reply garbled, the next one may belong to this ask: the link is dirty."""
+    """Row A6: when the steps find a reply garbled, the next one may belong to this ask: the link is dirty."""
 
     def choke() -> Steps[None]:
         yield Ask(b"READ?")
@@ -201,7 +201,7 @@ def test_steps_cannot_talk_a_link_error_away(jumping: JumpingClock, planned: Pla
 
 
 def test_same_link_twice(jumping: JumpingClock, planned: Planned) -> None:
-    """Row 13: two names on one link are misuse, found before anything is sent."""
+    """Row A13: two names on one link are misuse, found before anything is sent."""
     link = planned(jumping)
     with pytest.raises(LinkMisuse, match="two of a, b share one link"):
         together({"a": (link, read()), "b": (link, read())}, jumping, START + 9.0)

@@ -42,7 +42,8 @@ def killed_after(path: Path, lines: int) -> list[str]:
 @needs_sigkill
 @pytest.mark.slow
 def test_nothing_committed_is_lost_by_kill_9(path: Path) -> None:
-    """After each of many kills all that was announced is there, whole, once, and at most one hold is unfinished."""
+    """Row D3: After each of many kills all that was announced is there, whole, once, and at most one hold is
+    unfinished."""
     drawn = random.Random(20260302)
     announced: list[str] = []
     for _ in range(KILLS):
@@ -90,7 +91,8 @@ def test_kill_at_every_statement(path: Path) -> None:
 
 
 def test_second_process_is_refused_and_told_who_has_it(path: Path) -> None:
-    """While one process writes, another gets RunInUse with the holder's process and host, and may go on afterwards."""
+    """Row D4: While one process writes, another gets RunInUse with the holder's process and host, and may go on
+    afterwards."""
     Logbook.create(path, "", "", "").close(clean=True)
     with start("hold", str(path)) as holder:
         assert holder.stdout is not None

@@ -65,6 +65,21 @@ def test_cap(tmp_path: Path) -> None:
     assert "60.0000" not in path.read_text()
 
 
+def test_cap_within_many_messages(tmp_path: Path) -> None:
+    """Far from the cap messages are kept and written together; the cap still falls between two whole lines."""
+    path, cap = tmp_path / "traffic.log", 1_500_000
+    log = TrafficLog(path, cap_bytes=cap)
+    for index in range(80_000):
+        log("board", ">", b"0123456789", 1000.0 + index)
+    log.close()
+    text = path.read_text()
+    lines = text.splitlines()
+    assert lines[-1].startswith("# the cap of 1500000 bytes")
+    assert lines[:-1] == [f"{1000 + index}.0000 board > 0123456789" for index in range(len(lines) - 1)]
+    kept = len(text) - len(lines[-1]) - 1
+    assert cap - len(lines[-2]) - 1 < kept <= cap
+
+
 def test_unwritable_log_stops_nothing(tmp_path: Path, make_hold: Callable[..., Hold]) -> None:
     """A log that cannot be opened says why and is silent from then on."""
     log = TrafficLog(tmp_path / "no such folder" / "traffic.log")
@@ -78,7 +93,7 @@ def test_unwritable_log_stops_nothing(tmp_path: Path, make_hold: Callable[..., H
 
 @pytest.mark.skipif(not Path("/dev/full").exists(), reason="needs a device that is always full")
 def test_full_disk_stops_nothing(tmp_path: Path, make_hold: Callable[..., Hold]) -> None:
-    """A log on a full disk gives up at the next commit, and the commit stands."""
+    """Row D6: A log on a full disk gives up at the next commit, and the commit stands."""
     log = TrafficLog(Path("/dev/full"))
     with Logbook.create(tmp_path / "logbook.sqlite", "", "", "", traffic=log) as book:
         book.begin_session(0.0, 0.0, {})

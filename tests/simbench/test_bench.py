@@ -84,6 +84,33 @@ def test_events_happen_in_time_order_and_equal_times_in_the_order_of_asking(demo
     assert bench.next_event() == 3.5
 
 
+def test_passing_time_stops_where_a_port_was_touched(demo: jobs.Job) -> None:
+    """`pass_until` returns True at the event that gave an answer, and False at its end when none did."""
+    bench = opened(demo)
+    bench.at(0.5, lambda _: None, None)
+    assert (bench.pass_until(1.0), bench.now) == (False, 1.0)
+    bench.at(1.5, lambda _: bench.ports["meter"].put(b"1\n"), None)
+    bench.at(1.6, lambda _: None, None)
+    assert (bench.pass_until(2.0), bench.now, bench.next_event()) == (True, 1.5, 1.6)
+
+
+def test_unread_answers_are_counted(demo: jobs.Job) -> None:
+    """What is under way counts until it is read, or lost with its connection."""
+    bench = opened(demo)
+    meter, supply = bench.ports["meter"], bench.ports["supply"]
+    for _ in range(3):
+        meter.put(b"1\n")
+    supply.put(b"2\n")
+    assert bench.unread == 4
+    bench.advance(1.0)
+    assert (meter.read(), bench.unread) == (b"1\n1\n1\n", 1)
+    supply.close()
+    supply.close()
+    assert bench.unread == 0
+    supply.put(b"nobody holds it open\n")
+    assert bench.unread == 0
+
+
 def test_time_never_runs_backwards(demo: jobs.Job) -> None:
     """Advancing to the past does nothing; waiting for a moment that has passed returns at once."""
     bench = build(demo, began=10.0)

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import math
-from typing import TYPE_CHECKING
+from collections.abc import Callable
+from typing import TYPE_CHECKING, Any
 
 import pytest
 
@@ -239,7 +240,7 @@ def test_asking_keeps_the_heart_beating(bed: Bed) -> None:
 
 @pytest.mark.parametrize("noise", [b"FOO\n", b"OUTP?~00\n", b"\n", b"\xff\xfe\n", b"OUTP?" * 40 + b"\n"])
 def test_lines_that_are_not_valid_do_not_beat(bed: Bed, noise: bytes) -> None:
-    """Unknown header, bad checksum, empty, garbled or overlong lines do not keep the drive on."""
+    """Row C14: Unknown header, bad checksum, empty, garbled or overlong lines do not keep the drive on."""
     board = bed.board()
     bed.tell(board, "OUTP ON")
     on_at = last_switching(bed)[0]
@@ -326,3 +327,31 @@ def test_no_edge_at_all_has_an_age_since_power_on(bed: Bed) -> None:
     bed.plant.turns_from = 0.0
     bed.bench.advance(1.0)
     assert gate(bed, board)[4] == pytest.approx((1.0 + 11 * BYTE_S) * 16e6, abs=1.0)
+
+
+@pytest.mark.parametrize(("says_so", "looks"), [(False, 210), (True, 52)])
+def test_a_rotor_at_rest_is_looked_at_less_often(
+    bed: Bed, monkeypatch: pytest.MonkeyPatch, says_so: bool, looks: int
+) -> None:
+    """A plant that says that its rotor rests is looked at every 20 ms instead of 5 until the first edge, 1.05 s after
+    switching on; the counts are the same: the first gate after it has whole intervals, as has every other."""
+    asked: list[float] = []
+    at = bed.bench.at
+
+    def noting(time: float, callback: Callable[[Any], None], argument: object) -> None:
+        asked.extend([time] if "first_edge" in callback.__name__ else [])
+        at(time, callback, argument)
+
+    monkeypatch.setattr(bed.bench, "at", noting)
+    if says_so:
+        turning = property(lambda plant: plant.now >= plant.turns_from + 0.04)
+        monkeypatch.setattr(type(bed.plant), "turning", turning, raising=False)
+    board = bed.board()
+    bed.plant.pulse_hz, bed.plant.turns_from = 20.0, 1.0
+    board.port.write(b"OUTP ON\n")
+    bed.bench.advance(1.3)
+    # edges at 1.05, 1.10, … 1.25 s: four whole intervals of 0.05 s of a 16 MHz clock in the gate that ends at 1.25 s
+    number, edges, ticks = gate(bed, board)[:3]
+    assert (number, edges) == (5, 4)
+    assert ticks == pytest.approx(4 * 0.05 * 16e6, abs=1.0)
+    assert len(asked) == pytest.approx(looks, abs=3)

@@ -8,7 +8,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from sweeprig.simbench import detailed
+from sweeprig.simbench import closer, loaded
 from sweeprig.simbench.bridge import SwitchedStage
 from sweeprig.simbench.cogging import Cogging
 from sweeprig.simbench.detailed import DetailedFedPlant, DetailedPlant
@@ -124,8 +124,8 @@ def test_averaged_and_stepped_speeds_agree(pwm_hz: float, duty: float, monkeypat
     averaged = on()
     found = speed_at(averaged, pwm_hz, duty)
     assert not averaged.resolved
-    monkeypatch.setattr(detailed, "RESOLVED_FROM", -1.0)
-    monkeypatch.setattr(detailed, "AVERAGED_BELOW", -1.0)
+    monkeypatch.setattr(closer, "RESOLVED_FROM", -1.0)
+    monkeypatch.setattr(closer, "AVERAGED_BELOW", -1.0)
     stepped = on()
     exact = speed_at(stepped, pwm_hz, duty)
     assert stepped.resolved
@@ -141,14 +141,14 @@ def test_handing_over_there_and_back_keeps_energy_and_angle(monkeypatch: pytest.
     assert plant.resolved
     energy = 0.5 * 7.6e-6 * plant.omega**2 + detents.energy(plant.position)
     before = plant.position, plant.angle, plant.motor_volt_seconds, plant.supply_amp_seconds
-    monkeypatch.setattr(detailed, "AVERAGED_BELOW", 0.9)
-    monkeypatch.setattr(detailed, "RESOLVED_FROM", 0.9)
+    monkeypatch.setattr(closer, "AVERAGED_BELOW", 0.9)
+    monkeypatch.setattr(closer, "RESOLVED_FROM", 0.9)
     plant.set_drive(1000.0, 12.1, True)
     assert not plant.resolved
     assert 0.5 * 7.6e-6 * plant._omega_committed**2 == pytest.approx(energy, rel=1e-12)
     assert (plant.position, plant.angle, plant.motor_volt_seconds, plant.supply_amp_seconds) == before
-    monkeypatch.setattr(detailed, "AVERAGED_BELOW", 0.2)
-    monkeypatch.setattr(detailed, "RESOLVED_FROM", 0.01)
+    monkeypatch.setattr(closer, "AVERAGED_BELOW", 0.2)
+    monkeypatch.setattr(closer, "RESOLVED_FROM", 0.01)
     plant.set_drive(1000.0, 12.05, True)
     assert plant.resolved
     again = 0.5 * 7.6e-6 * plant.omega**2 + detents.energy(plant.position)
@@ -303,12 +303,12 @@ def test_on_a_bridge_and_a_supply_that_does_not_sink(stage: str) -> None:
         rng = np.random.default_rng(1)
         plant = DetailedFedPlant(COGGED, 2.0, rng, Source(1e-3, 0.005, 1000.0, 20.0, None), stage=bridge)
         plant.set_supply(12.0, 3.0, True)
-        detailed_slow, detailed.SLOW_PWM = detailed.SLOW_PWM, slow
+        closer_slow, loaded.SLOW_PWM = loaded.SLOW_PWM, slow
         try:
             speeds.append(speed_at(plant, 1000.0, 40.0))
             assert plant.resolved == (slow < 1e-6)
         finally:
-            detailed.SLOW_PWM = detailed_slow
+            loaded.SLOW_PWM = closer_slow
     assert speeds[1] == pytest.approx(speeds[0], rel=1e-3)
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import select
 import socket
 import sys
 import tty
@@ -78,15 +79,39 @@ def test_a_client_that_left_takes_its_half_line_with_it(bed: Bed, terminal: Endp
     os.close(second)
 
 
+@pytest.mark.skipif(sys.platform != "linux", reason="only Linux gives notice of an opening")
+def test_a_terminal_at_rest_wakes_nobody_and_an_opening_does(terminal: Endpoint) -> None:
+    """A master without a client always counts as readable, so another handle is waited on: silent until somebody opens,
+    and again after he left."""
+    for _ in range(2):
+        terminal.take()
+        resting = terminal.handle()
+        assert resting is not None
+        assert not terminal.unseen()
+        assert select.select([resting], [], [], 0.0)[0] == []
+        handle = opened(terminal)
+        assert select.select([resting], [], [], 1.0)[0] == [resting]
+        terminal.take()
+        assert terminal.handle() not in (None, resting)
+        assert terminal.port.is_open
+        os.close(handle)
+        terminal.take()
+
+
 @needs_pty
-def test_without_a_client_there_is_nothing_to_select(terminal: Endpoint) -> None:
-    """A master without a client always counts as readable: it must not be waited on."""
-    terminal.take()
-    assert terminal.handle() is None
-    handle = opened(terminal)
-    terminal.take()
-    assert terminal.handle() is not None
+def test_without_the_systems_notice_a_terminal_is_looked_at(bed: Bed, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Then nothing is to be selected while no client is there, and the next look finds him."""
+    monkeypatch.setattr("sweeprig.simbench.doorbell._watched", lambda _: None)
+    made = endpoint(bed.board().port, serial=True)
+    made.port.close()
+    made.take()
+    assert (made.handle(), made.unseen()) == (None, True)
+    handle = opened(made)
+    made.take()
+    assert made.port.is_open
+    assert not made.unseen()
     os.close(handle)
+    made.close()
 
 
 @needs_pty

@@ -102,7 +102,7 @@ def test_a_message_that_asks_nothing_passes_the_fault_on(faulty: Faulty) -> None
 
 
 def test_noise_and_high_bits(faulty: Faulty) -> None:
-    """Noise stands before the whole answer; a byte that is no ASCII replaces one of it, and its end stays."""
+    """Row C17: Noise stands before the whole answer; a byte that is no ASCII replaces one of it, and its end stays."""
     supply = Client(faulty(on("noise_before", exchange=1, count=5), on("non_ascii", exchange=2, count=2)), "supply")
     noisy, high = supply.ask("SOUR:VOLT?"), supply.ask("SOUR:VOLT?")
     assert len(noisy) == len(PLAIN) + 5
@@ -148,7 +148,8 @@ def test_late_behind_a_new_connection(faulty: Faulty, name: str, comes: bytes) -
 
 
 def test_blocks_that_lie(faulty: Faulty) -> None:
-    """Three bytes fewer, two more than the header says; an answer that is no block is left alone and does not count."""
+    """Row B11: Three bytes fewer, two more than the header says; an answer that is no block is left alone and does not
+    count."""
     bench = faulty(on("truncated_block", "scope", exchange=1), on("overlong_block", "scope", exchange=3, count=2))
     bench.instruments["scope"].tree.add("TEST:BLOCk?", lambda _: "#15h\nllo")  # type: ignore[attr-defined]  # an Instrument
     scope = Client(bench, "scope")
@@ -211,7 +212,7 @@ def test_openings(faulty: Faulty) -> None:
 
 
 def test_links_run_out(faulty: Faulty) -> None:
-    """With two links for 30 s each the third opening is refused, and not when the first link is free again."""
+    """Row A20: With two links for 30 s each the third opening is refused, and not when the first link is free again."""
     bench = faulty(on("link_limit", start="0 s"))
     for _ in range(2):
         Client(bench, "supply").port.close()
@@ -223,7 +224,7 @@ def test_links_run_out(faulty: Faulty) -> None:
 
 
 def test_reset_on_open(faulty: Faulty) -> None:
-    """A board that resets when it is opened is deaf for 1.5 s, then has its defaults and the power-on bit."""
+    """Row C1: A board that resets when it is opened is deaf for 1.5 s, then has its defaults and the power-on bit."""
     bench = faulty(on("reset_on_open", "board", exchange=2))
     assert Client(bench, "board").ask("SENS:FREQ:APER 0.5;APER?;*ESR?") == b"5.000000E-01;128\n"
     again = Client(bench, "board")
@@ -241,7 +242,7 @@ def test_restart(faulty: Faulty) -> None:
 
 
 def test_minimum_gap(faulty: Faulty) -> None:
-    """A message 1 ms after the last one is lost, one 20 ms after it is obeyed."""
+    """Row B5: A message 1 ms after the last one is lost, one 20 ms after it is obeyed."""
     bench = faulty(on("minimum_gap", start="0 s"))
     supply = Client(bench, "supply")
     supply.port.write(b"SOUR:VOLT 5\n")
@@ -262,7 +263,7 @@ def test_busy(faulty: Faulty) -> None:
 
 
 def test_completion_that_lies(faulty: Faulty) -> None:
-    """A reading of 1 s is under way: complete at once, in its time where the fault is another one, or never."""
+    """Row B6: A reading of 1 s is under way: complete at once, in its time where the fault is another one, or never."""
     times = []
     for kind in ("completion_at_once", "cr_lf", "completion_never"):
         meter = Client(faulty(on(kind, "meter", exchange=3)), "meter")
@@ -303,7 +304,7 @@ def test_a_standing_error(faulty: Faulty) -> None:
 
 
 def test_a_full_queue(faulty: Faulty) -> None:
-    """Twenty errors in a queue of sixteen: the last of them says that some are lost (SCPI-1999, 21.8)."""
+    """Row B8: Twenty errors in a queue of sixteen: the last of them says that some are lost (SCPI-1999, 21.8)."""
     supply = Client(faulty(on("queue_overflow", exchange=1)), "supply")
     supply.ask("*OPC?")
     said = [int(supply.ask("SYST:ERR?").partition(b",")[0]) for _ in range(17)]
@@ -311,7 +312,7 @@ def test_a_full_queue(faulty: Faulty) -> None:
 
 
 def test_local_mode(faulty: Faulty) -> None:
-    """Settings do nothing and say nothing; queries are answered; afterwards all is as before."""
+    """Row B12: Settings do nothing and say nothing; queries are answered; afterwards all is as before."""
     bench = faulty(on("local_mode", start="0 s", lasts="5 s"))
     supply = Client(bench, "supply")
     supply.ask("SOUR:VOLT 5")
@@ -388,12 +389,80 @@ def test_in_a_stated_time(faulty: Faulty) -> None:
 
 
 def test_once_from_a_time_on(faulty: Faulty) -> None:
-    """A restart with nothing but a start happens once, at the first message from then on."""
-    bench = faulty(on("restart", start="10 s"))
+    """A restart with nothing but a start happens once, at that time, between the messages before and after it."""
+    bench = faulty(on("restart", start="9.5 s"))
     supply = Client(bench, "supply")
     for second in range(30):
         supply.ask("*OPC?", second + 1.0 - bench.now)
-    assert [(one.kind, one.exchange) for one in bench.struck] == [("restart", 11)]
+    assert [(one.kind, one.at, one.exchange) for one in bench.struck] == [("restart", 9.5, 10)]
+
+
+def test_a_supply_drops_out_at_its_time_though_nobody_asks(faulty: Faulty) -> None:
+    """On and never asked again, its output goes off at 7 s sharp, by the bench's own record; a heartbeat is lost and a
+    queue filled at their times too."""
+    bench = faulty(
+        on("restart", start="7 s"),
+        on("heartbeat_loss", "board", start="3 s"),
+        on("queue_overflow", "meter", start="4 s"),
+    )
+    Client(bench, "supply").port.write(b"SOUR:VOLT 5;:OUTP ON\n")
+    Client(bench, "board").port.write(b"SYST:COMM:TIM 10000;:OUTP ON\n")
+    meter = Client(bench, "meter")
+    bench.advance(20.0)
+    assert [(one.kind, one.at) for one in bench.struck] == [
+        ("heartbeat_loss", 3.0), ("queue_overflow", 4.0), ("restart", 7.0),
+    ]  # fmt: skip
+    ends = [(one.at, one.what, one.why) for one in bench.record if one.what.endswith("off")]
+    assert ends == [(3.0, "drive_off", "heartbeat"), (7.0, "supply_off", "power")]
+    assert meter.ask("SYST:ERR?").startswith(b"-113,")
+
+
+@pytest.mark.parametrize(("kind", "error"), [("close", ConnectionAbortedError), ("node_moves", ConnectionResetError)])
+def test_a_connection_at_rest_breaks_at_its_time(faulty: Faulty, kind: str, error: type[Exception]) -> None:
+    """A client that waits for nothing but the connection sees it go at 5 s; where nobody holds one, nothing breaks, and
+    who comes later is served."""
+    bench = faulty(on(kind, start="5 s"), on(kind, "meter", start="5 s"))
+    supply = Client(bench, "supply")
+    bench.clock.wait(60.0, (supply,))
+    assert bench.now == 5.0
+    with pytest.raises(error):
+        supply.port.read()
+    bench.advance(10.0)
+    assert Client(bench, "meter").ask("*OPC?") == b"1\n"
+    assert Client(bench, "supply").ask("*OPC?") == b"1\n"
+    assert [(one.instrument, one.at) for one in bench.struck] == [("supply", 5.0), ("meter", 5.0)]
+
+
+def test_garbage_flows_from_its_time_to_its_end(faulty: Faulty) -> None:
+    """From 2 s for 3 s, unasked: 64 bytes every 50 ms (60 or 61 pieces), none before and none after."""
+    supply = Client(faulty(on("garbage", start="2 s", lasts="3 s")), "supply")
+    came = supply.pieces(seconds=20.0)
+    assert 2.0 <= came[0][0] < 2.01
+    assert 4.9 <= came[-1][0] < 5.01
+    assert len(b"".join(data for _, data in came)) in (60 * 64, 61 * 64)
+
+
+def test_what_happened_in_an_earlier_session_does_not_happen_again(short_job: Path) -> None:
+    """A session that begins at 100 s: the restart of 10 s is past, that of 110 s is to come, and garbage without an end
+    goes on."""
+    job = load(short_job)
+    faults = [on("restart", start="10 s"), on("restart", start="110 s"), on("garbage", "meter", start="10 s")]
+    specs = tuple(SimulatedFault.model_validate(fault) for fault in faults)
+    bench = build(job.model_copy(update={"rig": job.rig.model_copy(update={"simulated_faults": specs})}), 2, 100.0)
+    supply, meter = Client(bench, "supply"), Client(bench, "meter")
+    assert supply.ask("*OPC?") == b"1\n"
+    bench.advance(120.0)
+    assert [(one.kind, one.at) for one in bench.struck] == [("garbage", 100.0), ("restart", 110.0)]
+    assert len(meter.port.read()) > 1000
+
+
+def test_a_fault_of_the_rig_begins_though_nobody_looks(faulty: Faulty) -> None:
+    """A supply that drops out at 6 s is on the list of what acted at 6 s, with no message in between."""
+    bench = faulty({"kind": "supply_dropout", "start": "6 s", "lasts": "1 s"})
+    bench.advance(5.9)
+    assert bench.struck == []
+    bench.advance(6.0)
+    assert [(one.kind, one.at) for one in bench.struck] == [("supply_dropout", 6.0)]
 
 
 # ---- the plan -------------------------------------------------------------------------------------------------------

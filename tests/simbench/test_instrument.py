@@ -122,7 +122,7 @@ def test_opening_the_port_flushes_what_was_left(bed: Bed, instrument: Instrument
 
 
 def test_a_message_before_the_answer_is_formed_interrupts_the_query(bed: Bed) -> None:
-    """A reading under way is dropped, -410 is queued, and the new message is answered."""
+    """Row B4: A reading under way is dropped, -410 is queued, and the new message is answered."""
     meter = bed.multimeter()
     meter.port.write(b"READ?\n")
     assert bed.ask(meter, "*OPC?") == "1"

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import statistics
 from typing import TYPE_CHECKING
 
 import pytest
@@ -76,3 +77,29 @@ def test_a_wrong_setting_is_refused_and_nothing_changes(bed: Bed, message: str, 
     bed.tell(supply, message)
     assert bed.ask(supply, "SYST:ERR?").startswith(f"{code},")
     assert bed.plant.settings == []
+
+
+def test_the_filter_averages_for_longer(bed: Bed) -> None:
+    """With a count of 5 a reading comes 0.5 s later and is the mean over that time; *RST sets the count back."""
+    supply = bed.bench_supply(errors=QUIET)
+    bed.tell(supply, "SOUR:VOLT 12", "OUTP ON", "SENS:AVER:COUN 5")
+    began = bed.bench.now
+    bed.bench.at(began + 0.1, lambda _: bed.bench.plant_now().set_drive(1e3, 50.0, True), None)
+    driven = float(bed.ask(supply, "MEAS:CURR?"))
+    assert bed.bench.now - began == pytest.approx(0.5, abs=0.01)
+    # four fifths of the time driven; the fake plant draws 0.125 A then (as in the test of a tenth of a second)
+    assert driven == pytest.approx(0.8 * 0.125, abs=1e-6)
+    assert bed.ask(supply, "SENS:AVER:COUN?") == "5"
+    bed.tell(supply, "*RST")
+    assert bed.ask(supply, "SENS:AVER:COUN?") == "1"
+
+
+def test_the_filter_takes_noise_down(bed: Bed) -> None:
+    """100 values averaged scatter a tenth as much: sample standard deviations of 60 readings each, ratio 10 within
+    10/1.7 to 10·1.7 (seeded; chance of a false alarm about 1e-4: the F distribution with 59 and 59 degrees)."""
+    supply = bed.bench_supply(errors={"amps_noise": 1e-2, "volts_noise": 0.0})
+    scatter = []
+    for count in (1, 100):
+        bed.tell(supply, f"SENS:AVER:COUN {count}")
+        scatter.append(statistics.stdev(float(bed.ask(supply, "MEAS:CURR?")) for _ in range(60)))
+    assert 10.0 / 1.7 < scatter[0] / scatter[1] < 10.0 * 1.7

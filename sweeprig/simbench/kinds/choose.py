@@ -5,16 +5,18 @@ The one place that knows all kinds. Each is imported when it is wanted.
 
 from __future__ import annotations
 
-from dataclasses import fields
+from dataclasses import fields, replace
 from typing import TYPE_CHECKING, TypeVar
 
 from sweeprig.job.motor_models import Motor
+from sweeprig.job.simulated_details import TwoBodyHeat
 from sweeprig.job.simulated_models import (
     SimulatedControlInput,
     SimulatedElectronic,
     SimulatedGeared,
     SimulatedPrescribed,
 )
+from sweeprig.simbench.heat import TwoBodies
 
 if TYPE_CHECKING:
     import numpy as np
@@ -32,11 +34,14 @@ def other_kind(motor: Motor, rng: np.random.Generator, now: float) -> Machine | 
     if isinstance(true, SimulatedElectronic):
         from sweeprig.simbench.kinds.electronic import ElectronicFan, ElectronicTruth
 
-        return ElectronicFan(values(ElectronicTruth, true), pulses, rng, now)
+        electronic = replace(values(ElectronicTruth, true), heat=bodies(true.heat))
+        return ElectronicFan(electronic, pulses, rng, now)
     if isinstance(true, SimulatedControlInput):
         from sweeprig.simbench.kinds.control_input import ControlInputFan, ControlInputTruth
 
-        return ControlInputFan(values(ControlInputTruth, true), pulses, rng, now)
+        loss = 0.0 if true.heat is None else true.heat.loss_percent
+        inside = replace(values(ControlInputTruth, true), heat=bodies(true.heat), loss_percent=loss)
+        return ControlInputFan(inside, pulses, rng, now)
     if isinstance(true, SimulatedPrescribed):
         from sweeprig.simbench.kinds.prescribed import PrescribedMotor, PrescribedTruth
 
@@ -50,6 +55,14 @@ def other_kind(motor: Motor, rng: np.random.Generator, now: float) -> Machine | 
             true.own_friction_percent, pulses, rng, now,
         )  # fmt: skip
     return None
+
+
+def bodies(table: TwoBodyHeat | None) -> TwoBodies | None:
+    """Winding and case as the motor file has them; None where it has not."""
+    if table is None:
+        return None
+    found = {field.name: float(getattr(table, field.name)) for field in fields(TwoBodies) if hasattr(table, field.name)}
+    return TwoBodies(**found)
 
 
 def values(kind: type[Truth], table: BaseModel) -> Truth:

@@ -11,7 +11,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from sweeprig.simbench.friction import WanderingFriction, normal_source
+from sweeprig.simbench.heat import TwoBodies
+from sweeprig.simbench.kinds.period import PeriodWave, Signal, period_wave
 from sweeprig.simbench.kinds.stepped import AT_REST, CELL_S, RPM, Flow, Stepped, coasting, towards
+from sweeprig.simbench.kinds.warmth import Warming, Warmth
 
 INPUT_HZ = (21e3, 28e3)
 """Acceptable at the input (checks 10.3). Outside, this fan takes it for no signal: own choice, the text is silent."""
@@ -43,6 +46,8 @@ class ControlInputTruth:
     spread_percent: float
     correlation_s: float
     speed_spread_percent: float
+    heat: TwoBodies | None = None
+    loss_percent: float = 0.0
 
     def rpm_percent(self, duty_percent: float) -> float:
         """Settled speed at nominal voltage, percent of the maximum; of type C as long as it turns.
@@ -61,7 +66,7 @@ class ControlInputTruth:
         return slowest * duty_percent / low
 
 
-class ControlInputFan(Stepped):
+class ControlInputFan(Warming, Stepped):
     """A `Machine`: the drive is the signal at the control input, and drive off means the input open.
 
     The fan's supply is the rig's; across the motor is the supply's voltage. Without it no tachometer either.
@@ -77,6 +82,7 @@ class ControlInputFan(Stepped):
         share = 100.0 * truth.spread_percent / truth.fail_percent if truth.fail_percent else 0.0
         self._fails_at = WanderingFriction(truth.fail_percent, share, truth.correlation_s, CELL_S, draw)
         self._started_at = self._tried_at = -math.inf
+        self._warmth = Warmth(truth.heat, now)
         self._driven = False  # the electronics drive the rotor; else it coasts or stands
 
     @property
@@ -123,6 +129,15 @@ class ControlInputFan(Stepped):
             self._driven, self.turning, self._started_at = True, True, self._at
         if not new_cell or self._at - self._tried_at >= RETRY_S:
             self._tried_at = self._at
+        if self._warmth.counts:
+            self._warm()
+
+    def _warm(self) -> None:
+        """Losses as they are now: what it draws at rest warms the case, a part of what drives it the winding."""
+        flow = self._flow()
+        own = min(self.truth.own_amps, flow.supply_amps)
+        driving = (flow.supply_amps - own) * flow.supply_volts
+        self._warmth.renew(self._at, self.truth.loss_percent / 100.0 * driving, own * flow.supply_volts)
 
     def _flow(self) -> Flow:
         t, volts, limit = self.truth, self.volts, self.supply_current_limit_amps
@@ -144,3 +159,10 @@ class ControlInputFan(Stepped):
         how = towards(self.speed, target, t.time_constant_s)
         slope = 0.0 if limited or self.speed <= 0.0 else 3.0 * power / self.speed
         return Flow(how._replace(amps=amps, amps_slope=slope), volts, 0.0, amps, slope, volts, limited)
+
+    def wave(self) -> PeriodWave:
+        """Nothing is switched in its leads: the supply's voltage and an even current. The PWM is on the control line,
+        which is the drive signal."""
+        flow, (motor, supply) = self._now_flow, self._drawn_now()
+        even = (1.0 / self.pwm_hz, Signal(flow.motor_volts), motor, Signal(supply))
+        return period_wave(0.0, [even], flow.supply_volts)

@@ -12,9 +12,12 @@ from dataclasses import dataclass
 import numpy as np
 
 from sweeprig.simbench.friction import WanderingFriction, normal_source
+from sweeprig.simbench.heat import TwoBodies
 from sweeprig.simbench.kinds.chopped_tach import falls
-from sweeprig.simbench.kinds.feed import Bus, Drawn, bus, gated, through_bus
+from sweeprig.simbench.kinds.feed import Bus, Drawn, Shape, bus, gated, shape_gated, shape_through_bus, through_bus
+from sweeprig.simbench.kinds.period import PeriodWave, Signal, period_wave
 from sweeprig.simbench.kinds.stepped import AT_REST, CELL_S, RPM, Flow, Stepped
+from sweeprig.simbench.kinds.warmth import Warming, Warmth
 from sweeprig.simbench.rotor import Motion
 
 DRAUGHT_CORRELATION_S = 5.0
@@ -48,9 +51,10 @@ class ElectronicTruth:
     draught_rpm: float
     draught_spread_percent: float
     tach_chopped: bool
+    heat: TwoBodies | None = None
 
 
-class ElectronicFan(Stepped):
+class ElectronicFan(Warming, Stepped):
     """A `Machine`. `resets` counts undervoltage resets of electronics with a capacitor, `lockouts` the times that lock
     protection gave up pushing."""
 
@@ -74,6 +78,9 @@ class ElectronicFan(Stepped):
         self._alive_from = math.inf
         self._pushing_since: float | None = None
         self._collapsed = False
+        self._warmth = Warmth(t.heat, now)
+        self._ohms, self._k = t.resistance_ohm, t.torque_constant_nm_per_a
+        self._warm()
 
     # ---- electronics ---------------------------------------------------------------------------------------------
 
@@ -111,18 +118,18 @@ class ElectronicFan(Stepped):
     def _drawn(self, speed: float) -> Drawn:
         """What flows at a speed (rad/s, signed), with the electronics as they are."""
         t, period = self.truth, 1.0 / self.pwm_hz
-        emf, limit = t.torque_constant_nm_per_a * speed, self.supply_current_limit_amps
+        emf, limit = self._k * speed, self.supply_current_limit_amps
         if not self.powered:
             share = self.duty_percent / 100.0 if self.drive_on else 0.0
             return Drawn(self.volts, 0.0, 0.0, 0.0, 0.0, share * self.volts, 0.0, 0.0, 0.0, False)
         if self._bus is not None and not self._collapsed:
             level = 0.0 if self._refuses else self.level
-            return through_bus(self._bus, t.resistance_ohm, t.own_amps, level, emf, limit)
+            return through_bus(self._bus, self._ohms, t.own_amps, level, emf, limit)
         wake = math.inf if self._refuses else t.wake_s
         floor = t.lowest_volts if t.holdup_farad > 0.0 else 0.0
         return gated(
             self.volts, floor, period * self.duty_percent / 100.0, period, wake, t.soft_start_s,
-            t.resistance_ohm, t.own_amps, emf, limit,
+            self._ohms, t.own_amps, emf, limit,
         )  # fmt: skip
 
     def _feed(self) -> Bus | None:
@@ -198,8 +205,10 @@ class ElectronicFan(Stepped):
         else:
             self._renew_feed()
         self._timers()
+        if self._warmth.counts:
+            self._warm()
         drawn = self._drawn(self.speed * self.direction)
-        k = self.truth.torque_constant_nm_per_a
+        k = self._k
         push, mean = k * drawn.standing_amps * (drawn.driven > 0.0), k * drawn.standing_amps * drawn.driven
         against = self.truth.quadratic_load_nm_s2 * self._draught.torque**2
         if self.turning:
@@ -223,7 +232,7 @@ class ElectronicFan(Stepped):
         t, way = self.truth, self.direction
         speed = self.speed * way
         d = self._drawn(speed)
-        k, j = t.torque_constant_nm_per_a, t.inertia_kg_m2
+        k, j = self._k, t.inertia_kg_m2
         how, slope = AT_REST, k * way
         if self.turning:
             air = speed + self._draught.torque
@@ -235,6 +244,40 @@ class ElectronicFan(Stepped):
         return Flow(
             how, d.fan_volts, d.fan_volts_slope * slope, d.supply_amps, d.supply_slope * slope, d.volts, d.limited
         )
+
+    # ---- within a period -----------------------------------------------------------------------------------------
+
+    def wave(self) -> PeriodWave:
+        """The present period: a block of current in each on-time, or the charging of the capacitor that holds it up."""
+        speed = self._look()[1] * self.direction
+        drawn = self._drawn(speed)
+        return period_wave(self._k * speed, self._shape(drawn), drawn.volts)
+
+    def _shape(self, drawn: Drawn) -> Shape:
+        t, period = self.truth, 1.0 / self.pwm_hz
+        on = period * self.duty_percent / 100.0 if self.drive_on else 0.0
+        if not self.powered:
+            return [(on, Signal(drawn.volts), 0.0, Signal(0.0)), (period - on, Signal(0.0), 0.0, Signal(0.0))]
+        if self._bus is not None and not self._collapsed:
+            return shape_through_bus(self._bus, drawn, t.holdup_farad, period, on)
+        wake = math.inf if self._refuses else t.wake_s
+        floor = t.lowest_volts if t.holdup_farad > 0.0 else 0.0
+        return shape_gated(drawn, floor, t.own_amps, period, on, wake)
+
+    # ---- heat ----------------------------------------------------------------------------------------------------
+
+    def _warm(self) -> None:
+        """Losses as they are now: copper's in the winding, what the electronics draw for themselves in the case.
+
+        Left out: the loss in what charges the capacitor, which sits outside for the most part, and the friction's.
+        """
+        drawn, period = self._drawn(self.speed * self.direction), 1.0 / self.pwm_hz
+        square = sum(seconds * amps * amps for seconds, _, amps, _ in self._shape(drawn)) / period
+        awake = 1.0 if self._bus is not None and not self._collapsed else self.duty_percent / 100.0
+        own = min(self.truth.own_amps * awake, drawn.supply_amps)
+        self._warmth.renew(self._at, self._ohms * square, own * drawn.volts)
+        self._ohms = self.truth.resistance_ohm * self._warmth.copper
+        self._k = self.truth.torque_constant_nm_per_a * self._warmth.magnet
 
     # ---- tachometer ----------------------------------------------------------------------------------------------
 

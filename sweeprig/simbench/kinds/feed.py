@@ -1,4 +1,4 @@
-"""What a chopped supply is to a fan's electronics: pure functions of plain floats. No time series, no mechanics.
+"""What a chopped supply is to a fan's electronics: pure functions of plain floats. No mechanics.
 
 Two ways: with a capacitor that carries them through the off-time (a bus), or awakened anew in every on-time (gated).
 """
@@ -7,6 +7,8 @@ from __future__ import annotations
 
 import math
 from typing import NamedTuple
+
+from sweeprig.simbench.kinds.period import Signal
 
 
 class Bus(NamedTuple):
@@ -112,3 +114,46 @@ def gated(
     return Drawn(
         volts, amps, steep, supply, level * steep, fan_volts, 0.0, level * volts / resistance_ohm, share, limited
     )
+
+
+Shape = list[tuple[float, Signal, float, Signal]]
+"""(seconds, voltage across the fan V, winding current A, supply current A) of each part of a period."""
+
+
+def shape_through_bus(feed: Bus, drawn: Drawn, holdup_farad: float, period_s: float, on_s: float) -> Shape:
+    """The period behind `through_bus`: the capacitor charges through its resistance, a spike, and falls straight.
+
+    In the on-time v = A + (v0 − A)·e^(−t/τ) and the supply gives (V − v)/R, with the symbols of `bus`; in the off-time
+    v = v1 − I·t/C. The voltage is the capacitor's; the winding's current is steady.
+    """
+    mean, amps = drawn.supply_amps, drawn.winding_amps
+    if feed.low_ohms == feed.mean_ohms:
+        return [(period_s, Signal(drawn.fan_volts), amps, Signal(mean))]
+    ohms, tau = feed.charge_ohm, feed.charge_ohm * holdup_farad
+    full, low = drawn.volts - mean * ohms, drawn.volts - mean * feed.low_ohms
+    off = period_s - on_s
+    high = low + mean * off / holdup_farad
+    return [
+        (on_s, Signal(full, low - full, tau), amps, Signal(mean, (full - low) / ohms, tau)),
+        (off, Signal(high, slope=-mean / holdup_farad), amps, Signal(0.0)),
+    ]
+
+
+def shape_gated(
+    drawn: Drawn, floor_volts: float, own_amps: float, period_s: float, on_s: float, wake_s: float
+) -> Shape:
+    """The period behind `gated`: the electronics' own current from the on-time's begin, then a block of the winding's.
+
+    A soft start's ramp shows as its mean level; a capacitor that reset shows its level of the off-time, no spike.
+    """
+    own = min(own_amps, drawn.supply_amps * period_s / on_s) if on_s > 0.0 else 0.0
+    asleep = min(wake_s, on_s)
+    active = on_s - asleep
+    amps = drawn.winding_amps * period_s / active if active > 0.0 else 0.0
+    more = (drawn.supply_amps * period_s - own * on_s) / active if active > 0.0 else 0.0
+    across = Signal(drawn.volts)
+    return [
+        (asleep, across, 0.0, Signal(own)),
+        (active, across, amps, Signal(own + more)),
+        (period_s - on_s, Signal(min(floor_volts, drawn.volts)), 0.0, Signal(0.0)),
+    ]

@@ -12,6 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from sweeprig.simbench.friction import normal_source
+from sweeprig.simbench.kinds.period import PeriodWave, Signal, period_wave
 from sweeprig.simbench.kinds.stepped import AT_REST, RPM, Flow, Stepped, coasting, towards
 from sweeprig.simbench.rotor import time_to_stop
 
@@ -168,3 +169,11 @@ class PrescribedMotor(Stepped):
             how._replace(amps=amps), share * self.volts, 0.0, share * amps, 0.0, self.volts,
             stands_after_s=self._ends_at - self._at,
         )  # fmt: skip
+
+    def wave(self) -> PeriodWave:
+        """A plain square wave of the supply's voltage, through an even current that the supply gives in the on-time."""
+        period = 1.0 / self.pwm_hz
+        on = period * self.duty_percent / 100.0 if self.powered else 0.0
+        volts, amps = self._now_flow.supply_volts, self._now_flow.motion.amps
+        parts = [(on, Signal(volts), amps, Signal(amps)), (period - on, Signal(0.0), amps, Signal(0.0))]
+        return period_wave(0.0, parts, volts)

@@ -68,7 +68,6 @@ class Stepped(ABC):
         self._pulses_per_rad = pulses_per_revolution / (2.0 * math.pi)
         self._counted = 0
         self._last_edge: Callable[[], float] = lambda: -math.inf
-        self._slip = 0.0  # rad that the motor turned and the tachometer's shaft did not
         self._now_flow = Flow(AT_REST)
         self._peek: tuple[Sums, float] | None = None
 
@@ -88,7 +87,7 @@ class Stepped(ABC):
         """Nothing can happen before a setting changes."""
 
     def _next_decision(self) -> float:
-        """Run clock of the next `_decide`: the next cell's edge."""
+        """Run clock of the next `_decide`: the next cell's edge, or a kind's own moment before it."""
         return self._origin + (self._cell + 1) * CELL_S
 
     def _skip(self, cells: int) -> None:
@@ -142,8 +141,9 @@ class Stepped(ABC):
             if edge > to:
                 return
             self._flow_to(edge)
-            self._cell += 1
-            self._decide(True)
+            new_cell = edge >= self._origin + (self._cell + 1) * CELL_S
+            self._cell += new_cell
+            self._decide(new_cell)
             self._now_flow = self._flow()
 
     # ---- what the bench sees -------------------------------------------------------------------------------------
@@ -205,8 +205,14 @@ class Stepped(ABC):
         return self._now_flow.limited
 
     def wave(self) -> Waveform | None:
-        """None: the period's shape inside these electronics is not modelled, only its means."""
+        """The present PWM period; None where a kind knows only its means."""
         return None
+
+    def _drawn_now(self) -> tuple[float, float]:
+        """(motor A, supply A) at the present speed, as the flow since the commit has them."""
+        flow, more = self._now_flow, self._look()[1] - self._now_flow.motion.speed
+        how = flow.motion
+        return how.amps + how.amps_slope * more, flow.supply_amps + flow.supply_amps_slope * more
 
     def pwm_phase_s(self) -> float:
         """Seconds since the drive signal last went on, 0 up to one period."""
@@ -218,15 +224,15 @@ class Stepped(ABC):
         """(edges within `seconds` after the commit, what tells when the last of them came: it is rarely asked)."""
         if not (self.turning and self._tach_works):
             return 0, self._last_edge
-        start = (self._sums.angle - self._slip) * self._pulses_per_rad
-        whole = int((self._pass(seconds)[0].angle - self._slip) * self._pulses_per_rad)
+        start = self._sums.angle * self._pulses_per_rad
+        whole = int(self._pass(seconds)[0].angle * self._pulses_per_rad)
         count = whole - int(start)
         return (count, self._when(whole, seconds)) if count > 0 else (0, self._last_edge)
 
     def _when(self, pulse: float, seconds: float) -> Callable[[], float]:
         """Tells when (run clock) within `seconds` after the commit the shaft stands at `pulse`, counted in pulses."""
         how, began = self._now_flow.motion, self._at
-        ends, angle = self._now_flow.stands_after_s, pulse / self._pulses_per_rad + self._slip - self._sums.angle
+        ends, angle = self._now_flow.stands_after_s, pulse / self._pulses_per_rad - self._sums.angle
         return lambda: began + time_to_turn(how, max(0.0, angle), min(seconds, time_to_stop(how), ends))
 
     def _flow_to(self, until: float) -> None:

@@ -164,6 +164,31 @@ def test_picture_of_a_gear_motors_starts(kinds: type[Kinds], tmp_path: Path) -> 
     save(figure, tmp_path, "geared")
 
 
+def test_picture_of_a_gear_motors_reversals(kinds: type[Kinds], tmp_path: Path) -> None:
+    """Gate off and on again while it runs: motor and load part, meet at the other flank, and meet again."""
+    figure, (left, right) = axes("gear motor, reversals of the torque", "time (s)", "speed (rpm at the motor)", 2)
+    motor = kinds.geared(0.2, 80.0)
+    motor.set_drive(1000.0, 100.0, True)
+    motor.advance(3.0)
+    times, own, load, gaps = [], [], [], []
+    for step in range(600):
+        motor.set_drive(1000.0, 100.0, not 50 <= step < 250)
+        motor.advance(motor.now + 0.001)
+        times.append(step * 0.001)
+        own.append(motor.omega * 30.0 / np.pi)
+        load.append(motor.load_omega * 30.0 / np.pi)
+        gaps.append(motor.open_rad)
+    left.plot(times, own, label="motor")
+    left.plot(times, load, label="load")
+    left.legend()
+    right.plot(times, gaps)
+    right.set_ylabel("play open (rad, as of the last cell)")
+    save(figure, tmp_path, "geared-reversals")
+    assert max(gaps) == 6.0
+    assert gaps[-1] == 0.0
+    assert max(a - b for a, b in zip(load, own, strict=True)) > 500.0
+
+
 def test_picture_of_a_lot(kinds: type[Kinds], tmp_path: Path) -> None:
     """Curves of eight units of a lot scatter around the one they are drawn from."""
     figure, (left,) = axes("a lot of fans with electronics", "duty (%)", "speed (rpm)")
