@@ -232,6 +232,37 @@ def refused(name: str, what: str, value: str, allowed: str, entries: tuple[str, 
     )
 
 
+class Remote:
+    """The option `remote`: "stays" (an instrument that obeys its link from the start, as most on a network do) or "ask"
+    (one that obeys only after it was told to, as many on RS-232; SCPI-1999 vol. 2, chapter 21, from memory).
+
+    It is told so when it is configured, and before every switching off: a person may have turned it to local meanwhile.
+    """
+
+    def __init__(self, name: str, options: Options) -> None:
+        self.name = name
+        self.wanted = options.choice("remote", ("stays", "ask")) == "ask"
+        self._ask: Ask | None = None
+
+    def use(self, dialect: Dialect) -> None:
+        """ConfigError where the dialect does not say how."""
+        if not self.wanted:
+            return
+        if not dialect.has("remote"):
+            raise ConfigError(
+                f"{self.name}: the dialect does not say how this instrument is told to obey its link",
+                value="remote = 'ask'",
+                allowed="a dialect with the command remote",
+                remedy="leave the option out, or name another dialect in the rig file",
+                topic="dialects",
+            )
+        self._ask = tell(dialect.command("remote"), early=True)
+
+    def take(self) -> Steps[None]:
+        if self._ask is not None:
+            yield self._ask
+
+
 def begin(name: str, clear: Ask, error: Ask) -> Steps[tuple[str, ...]]:
     """Clear the status and empty the error queue; what cannot be emptied is a standing error and returned."""
     yield clear
@@ -320,8 +351,10 @@ def turn_on(name: str, on: Ask, state: Ask, error: Ask) -> Steps[None]:
         raise refused(name, "the output was switched on and stayed off", shown(answer.raw), "1", entries)
 
 
-def turn_off(name: str, off: Ask, state: Ask) -> Steps[None]:
+def turn_off(name: str, off: Ask, state: Ask, remote: Remote | None = None) -> Steps[None]:
     """Output off, then shown to be off; else OffNotProved. Both asks must be early: nothing may hold them up."""
+    if remote is not None:
+        yield from remote.take()
     yield off
     answer = yield state
     if is_on(name, answer.raw):

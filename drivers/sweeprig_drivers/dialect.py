@@ -35,6 +35,7 @@ class Form:
 
 IDENTITY, CLEAR, ERROR = Form(query=True), Form(), Form(query=True)
 EVENT_STATUS = Form(query=True, optional=True)
+REMOTE = Form(optional=True)
 
 
 def refusal(text: str) -> str:

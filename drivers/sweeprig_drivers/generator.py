@@ -12,13 +12,14 @@ from sweeprig.quantities import Reading
 from sweeprig.roles import AdapterSetup, Answer, DriveSetting, Identity, Steps, Window
 from sweeprig_drivers import common
 from sweeprig_drivers.common import query, tell
-from sweeprig_drivers.dialect import CLEAR, ERROR, EVENT_STATUS, IDENTITY, Dialect, Form, number_text
+from sweeprig_drivers.dialect import CLEAR, ERROR, EVENT_STATUS, IDENTITY, REMOTE, Dialect, Form, number_text
 
 COMMANDS = {
     "identity": IDENTITY,
     "clear": CLEAR,
     "error": ERROR,
     "event_status": EVENT_STATUS,
+    "remote": REMOTE,
     "load": Form(),
     "load_query": Form(query=True),
     "high": Form(("volts",)),
@@ -48,7 +49,8 @@ MOST_HZ = 1e6
 
 
 class ScpiGenerator:
-    """Options: `high_level` (V, at the gate, required), `low_level` (0 V).
+    """Options: `high_level` (V, at the gate, required), `low_level` (0 V), `remote` ("stays" or "ask", see
+    `common.Remote`).
 
     Channels: pwm_hz, duty_set, as read back; from `apply` and again from `measure`. A rectangle has both levels, so
     duties of 0 and 100 % are the constant low and high level.
@@ -63,6 +65,7 @@ class ScpiGenerator:
         options = common.Options(setup)
         self._high = options.quantity("high_level", "V", 0.5, 20.0)
         self._low = options.quantity("low_level", "V", -10.0, 10.0, 0.0)
+        self._remote = common.Remote(name, options)
         options.done()
         if self._low >= self._high:
             raise ConfigError(
@@ -73,6 +76,7 @@ class ScpiGenerator:
                 topic="rig",
             )
         self._dialect = dialect = Dialect(name, setup.dialect, "generator", COMMANDS, texts=TEXTS)
+        self._remote.use(dialect)
         self._identity = query(dialect.command("identity"), early=True)
         self._clear, self._error = tell(dialect.command("clear")), query(dialect.command("error"))
         self._status = common.status_query(dialect)
@@ -87,6 +91,7 @@ class ScpiGenerator:
         """The load first (it decides what a level means), then the levels, the high one first, then the shape; all are
         read back."""
         name, error, dialect = self.name, self._error, self._dialect
+        yield from self._remote.take()
         standing = yield from common.begin(name, self._clear, error)
         yield tell(dialect.command("load"))
         answer = yield query(dialect.command("load_query"))
@@ -177,7 +182,7 @@ class ScpiGenerator:
 
     def switch_off(self) -> Steps[None]:
         off, state = self._dialect.command("off"), self._dialect.command("output_query")
-        return common.turn_off(self.name, tell(off, early=True), query(state, early=True))
+        return common.turn_off(self.name, tell(off, early=True), query(state, early=True), self._remote)
 
     def _maybe(self, quantity: str, answer: Answer) -> Reading:
         value, why = common.number(self.name, answer.raw, self._dialect.no_value)

@@ -13,13 +13,14 @@ from sweeprig.quantities import Reading
 from sweeprig.roles import AdapterSetup, Ask, Identity, Steps, Window
 from sweeprig_drivers import common
 from sweeprig_drivers.common import query, tell
-from sweeprig_drivers.dialect import CLEAR, ERROR, EVENT_STATUS, IDENTITY, Dialect, Form, number_text
+from sweeprig_drivers.dialect import CLEAR, ERROR, EVENT_STATUS, IDENTITY, REMOTE, Dialect, Form, number_text
 
 COMMANDS = {
     "identity": IDENTITY,
     "clear": CLEAR,
     "error": ERROR,
     "event_status": EVENT_STATUS,
+    "remote": REMOTE,
     "function": Form(("range",)),
     "range_query": Form(query=True),
     "autorange_query": Form(query=True, optional=True),
@@ -56,8 +57,9 @@ def broken_period(aperture_s: float, pwm_hz: float) -> float:
 
 class ScpiMultimeter:
     """Options: `function` ("volts", or "amps" where the dialect has its commands), `range` (V or A) and `aperture` (s),
-    these two required, `averaging` ("host" or "instrument", who takes the mean over a window). Channels: volts, or
-    amps. The range is fixed: an autoranging ammeter interrupts the motor.
+    these two required, `averaging` ("host" or "instrument", who takes the mean over a window), `remote` ("stays" or
+    "ask", see `common.Remote`). Channels: volts, or amps. The range is fixed: an autoranging ammeter interrupts the
+    motor.
 
     `measure` averages round(window / aperture) apertures, at least one.
     """
@@ -72,8 +74,10 @@ class ScpiMultimeter:
         self._full = options.quantity("range", self._unit, least, most)
         self._aperture_s = aperture_s = options.quantity("aperture", "s", 1e-4, 10.0)
         self._averaging = common.Averaging(name, options)
+        self._remote = common.Remote(name, options)
         options.done()
         dialect = Dialect(name, setup.dialect, "multimeter", COMMANDS)
+        self._remote.use(dialect)
         self._identity = query(dialect.command("identity"), early=True)
         self._clear, self._error = tell(dialect.command("clear")), query(dialect.command("error"))
         self._status = common.status_query(dialect)
@@ -110,6 +114,7 @@ class ScpiMultimeter:
         """Fixed range first (choosing the function presets the aperture), then the aperture; both read back."""
         name, error = self.name, self._error
         self._averaging.forget()
+        yield from self._remote.take()
         standing = yield from common.begin(name, self._clear, error)
         near = SETTING_TOLERANCE
         wanted, unit = self._full, self._unit

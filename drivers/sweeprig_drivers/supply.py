@@ -13,13 +13,14 @@ from sweeprig.quantities import Reading
 from sweeprig.roles import AdapterSetup, Ask, Identity, Steps, SupplySetting, Window
 from sweeprig_drivers import common
 from sweeprig_drivers.common import query, tell
-from sweeprig_drivers.dialect import CLEAR, ERROR, EVENT_STATUS, IDENTITY, Dialect, Form, number_text
+from sweeprig_drivers.dialect import CLEAR, ERROR, EVENT_STATUS, IDENTITY, REMOTE, Dialect, Form, number_text
 
 COMMANDS = {
     "identity": IDENTITY,
     "clear": CLEAR,
     "error": ERROR,
     "event_status": EVENT_STATUS,
+    "remote": REMOTE,
     "volts": Form(("volts",)),
     "volts_query": Form(query=True),
     "amps": Form(("amps",)),
@@ -40,7 +41,7 @@ MOST_VOLTS, MOST_AMPS = 1000.0, 1000.0
 class ScpiSupply:
     """Options: `volts_resolution`, `amps_resolution` (what a read-back may differ by; 1 mV and 1 mA), `most_readings`
     (cap on the pairs of readings averaged in one window; none unless given), `averaging` ("host" or "instrument", who
-    takes the mean over a window).
+    takes the mean over a window), `remote` ("stays" or "ask", see `common.Remote`).
 
     Channels: volts, amps (from `measure`), volts_set, amps_limit (from `apply`, the values read back).
     """
@@ -54,8 +55,10 @@ class ScpiSupply:
         self._amps_step = options.quantity("amps_resolution", "A", 1e-6, 1.0, 1e-3)
         self._most = options.whole("most_readings", 1, 1000)
         self._averaging = common.Averaging(name, options)
+        self._remote = common.Remote(name, options)
         options.done()
         self._dialect = dialect = Dialect(name, setup.dialect, "supply", COMMANDS, VALUES)
+        self._remote.use(dialect)
         self._mask = int(dialect.value("limiting_mask"))
         self._pair_s = 2.0 * dialect.value("average_s")
         within_s = 2.0 + dialect.value("average_s")
@@ -82,6 +85,7 @@ class ScpiSupply:
     def configure(self) -> Steps[None]:
         """Status and error queue emptied; nothing is set: voltage, limit and output belong to `apply`."""
         self._averaging.forget()
+        yield from self._remote.take()
         standing = yield from common.begin(self.name, self._clear, self._error)
         yield from common.no_new_errors(self.name, self._error, standing)
 
@@ -161,7 +165,7 @@ class ScpiSupply:
         return common.turn_on(self.name, self._on, self._output, self._error)
 
     def switch_off(self) -> Steps[None]:
-        return common.turn_off(self.name, self._off, self._output_early)
+        return common.turn_off(self.name, self._off, self._output_early, self._remote)
 
     def _reading(self, quantity: str, value: float, why: str, at: float, flags: tuple[str, ...], raw: bytes) -> Reading:
         unit, channel = self.channels[quantity], f"{self.name}.{quantity}"

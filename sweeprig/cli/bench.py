@@ -51,7 +51,7 @@ def serve(job: str, rate: float, write: Path | None, record: Path | None) -> Non
 
 @simbench.command(short_help="What is true of the simulated motor.")
 @click.argument("job")
-@click.option("--rare", is_flag=True, help="Also stops too rare to count, by splitting; takes several minutes.")
+@click.option("--rare", is_flag=True, help="Also stops and starts too rare to count; takes several minutes.")
 @as_json
 def truth(job: str, rare: bool, json_out: bool) -> None:
     """The simulated motor's parameters and what is true of it, found by brute force: for comparison with findings."""
