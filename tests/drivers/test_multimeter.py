@@ -258,7 +258,7 @@ def test_check_window_refuses_nonsense(adapter: ScpiMultimeter, window: Window) 
         ({"range": "5 kV", "aperture": "0.2 s"}, "the option 'range' is out of range: '5 kV' (allowed: 1 mV to 1 kV)"),
         (
             {"range": "9 V", "aperture": "1 s", "filter": 1},
-            "option 'filter' is not known: 1 (allowed: function, range, aperture, averaging)",
+            "option 'filter' is not known: 1 (allowed: function, range, aperture, averaging, remote)",
         ),
     ],
 )
