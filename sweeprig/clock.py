@@ -37,18 +37,22 @@ class Clock(Protocol):
 
 
 class SystemClock:
-    """The machine's clocks; with `rate` N an accelerated one: N bench seconds pass in one real second."""
+    """The machine's clocks; with `rate` N an accelerated one: N bench seconds pass in one real second.
 
-    def __init__(self, rate: float = 1.0) -> None:
+    `now`, `utc`: what it shows at this moment, where it goes on for another one that has ended; else the machine's.
+    """
+
+    def __init__(self, rate: float = 1.0, now: float | None = None, utc: float | None = None) -> None:
         self.rate = rate
-        self._mono0 = time.monotonic()
-        self._utc0 = time.time()
+        self._mono0, self._wall0 = time.monotonic(), time.time()
+        self._now0 = self._mono0 if now is None else now
+        self._utc0 = self._wall0 if utc is None else utc
 
     def now(self) -> float:
-        return self._mono0 + (time.monotonic() - self._mono0) * self.rate
+        return self._now0 + (time.monotonic() - self._mono0) * self.rate
 
     def utc(self) -> float:
-        return self._utc0 + (time.time() - self._utc0) * self.rate
+        return self._utc0 + (time.time() - self._wall0) * self.rate
 
     def wait(self, until: float, on: Sequence[Waitable] = ()) -> None:
         left = (until - self.now()) / self.rate

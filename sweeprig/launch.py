@@ -13,11 +13,13 @@ from pathlib import Path
 from sweeprig.clock import SystemClock
 from sweeprig.conduct.attention import Attention
 from sweeprig.conduct.host import checks, keep_awake, refuse
-from sweeprig.conduct.locks import COMMAND, RigLock
+from sweeprig.conduct.locks import COMMAND, LINK, RigLock
 from sweeprig.conduct.notice_file import read_notices
 from sweeprig.conduct.opening import open_run_for_work, software
+from sweeprig.conduct.requests import Requests
 from sweeprig.conduct.rig import RigUse, assemble
 from sweeprig.conduct.sessions import Opening, work
+from sweeprig.conduct.stable_ports import with_stable_ports
 from sweeprig.conduct.states import Ending, Event, OnEvent, Orders
 from sweeprig.conduct.supervise import Supervisor, runner_command
 from sweeprig.errors import ConfigError, RoleMissing, SweeprigError
@@ -61,14 +63,14 @@ def start(
         job = load(job)
     check_rig(job)
     now = SystemClock().utc()
-    job = with_deadline(job, _first_utc(job, now))
+    job = with_stable_ports(with_deadline(job, _first_utc(job, now)))
     if not in_process(job):
         _check_host(job, Path(runs))
     with rig_lock(job) as lock:
+        lock.nobody_has(LINK)
         folder = create_run_folder(Path(runs), job.motor.name, now, document(job))
         _keep_dialects(job, folder)
-        lock.works_on(folder)
-        return _work(job, folder, attended, on_event, orders or Orders())
+        return _work(job, folder, lock, attended, on_event, orders or Orders())
 
 
 def resume(
@@ -78,8 +80,7 @@ def resume(
     folder = folder_of(path)
     job = load(folder / JOB)
     with rig_lock(job) as lock:
-        lock.works_on(folder)
-        return _work(job, folder, attended, on_event, orders or Orders())
+        return _work(job, folder, lock, attended, on_event, orders or Orders())
 
 
 def rig_lock(job: Job) -> RigLock:
@@ -87,12 +88,15 @@ def rig_lock(job: Job) -> RigLock:
     return RigLock((each.address for each in job.rig.instruments.values()), COMMAND, "works on")
 
 
-def _work(job: Job, folder: Path, attended: bool, on_event: OnEvent, orders: Orders) -> Launched:
+def _work(job: Job, folder: Path, rig: RigLock, attended: bool, on_event: OnEvent, orders: Orders) -> Launched:
     """The run's own lock, then sessions inside this process or a supervisor with its runner."""
     inside = in_process(job)
     notices = None if inside else read_notices()
     simulated = inside or job.rig.rate is not None
     with FolderLock(folder), Attention(folder, job.motor.name, notices, simulated, on_event) as attention:
+        for kind in Requests(folder, orders).clear():
+            attention(Event("notice", 0.0, {"text": f"a request from before this session was put aside: {kind}"}))
+        rig.works_on(folder)  # from now on requests find their way here
         try:
             ending = (_inside if inside else _supervised)(folder, attended, attention, orders)
         except SweeprigError as error:

@@ -56,6 +56,21 @@ class SettlePlan:
 
 
 @dataclass(frozen=True, slots=True)
+class HeatPlan:
+    """How long the motor may stand locked, in all.
+
+    budget_s    seconds at rest at full duty and highest_v (V) that the winding bears, from cold
+    cooling_s   time constant with which it cools
+    locked_s    the locked-rotor time in force: protection leaves no rotor locked for longer
+    """
+
+    budget_s: float
+    cooling_s: float
+    locked_s: float
+    highest_v: float
+
+
+@dataclass(frozen=True, slots=True)
 class Plan:
     """Everything `next_hold` and `characterise` may know besides outcomes.
 
@@ -68,6 +83,7 @@ class Plan:
     by_hand            fields of a condition that only a person can set; hands: what is set so in this session, as
                        `set_by_hand` words it, None before anybody has said so
     duty_step_percent  one step of the drive (resolution of the commanded duty) for each condition, same order
+    heat               the budget of locked-rotor heat; None only where a plan is made without a motor file
     """
 
     seed: int
@@ -94,6 +110,7 @@ class Plan:
     attended: bool = False
     by_hand: tuple[str, ...] = ()
     hands: str | None = None
+    heat: HeatPlan | None = None
     extra: Mapping[str, float] = field(default_factory=dict)
 
     def set_by_hand(self, condition: Condition) -> str:

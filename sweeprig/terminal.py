@@ -7,6 +7,7 @@ import math
 import shutil
 import sys
 from collections.abc import Mapping, Sequence
+from contextlib import suppress
 from typing import Any
 
 from sweeprig.conduct.states import Event
@@ -19,6 +20,9 @@ GAP = 3
 """Columns that a table spends between two of its own."""
 MOST_NAMED = 3
 """A remark on more findings than this says how many; the report names each."""
+
+AT_REST = ("finished", "parked", "tripped")
+"""States in which a session ends, drive off and shown to be off."""
 
 SIMULATED = "SIMULATED: no real motor was moved; these numbers describe an invented one."
 
@@ -48,7 +52,8 @@ class Lines:
         return None
 
     def say(self, text: str) -> None:
-        print(text, file=sys.stderr, flush=True)
+        with suppress(OSError):  # the terminal or the pipe has gone: nobody reads, and that is no reason to end a run
+            print(text, file=sys.stderr, flush=True)
 
     def left(self, at: float) -> str:
         spent = at - (self.began if self.began is not None else at)
@@ -56,7 +61,7 @@ class Lines:
         return f"about {show_time(left)} left" if left > 0 else "longer than predicted"
 
     def __call__(self, event: Event) -> None:
-        if self.began is None:
+        if event.kind == "session" and self.began is None:
             self.began = event.at
         text = self.sentence(event)
         if text is not None:
@@ -102,15 +107,17 @@ class Screen(Lines):
         return self
 
     def __exit__(self, *_: object) -> None:
-        self.status.stop()
+        with suppress(OSError):
+            self.status.stop()
 
     def say(self, text: str) -> None:
-        self.console.print(text, markup=False, highlight=False)
+        with suppress(OSError):
+            self.console.print(text, markup=False, highlight=False)
 
     def __call__(self, event: Event) -> None:
         from rich.markup import escape
 
-        if self.began is None:
+        if event.kind == "session" and self.began is None:
             self.began = event.at
         text = self.sentence(event)
         if text is None:
@@ -186,12 +193,16 @@ def page_text(markdown: str) -> str:
     return captured.get()
 
 
-def preview_text(night: Any, title: str, sums: Mapping[str, float], refused: Sequence[str]) -> str:
-    """The night ahead in words: holds and time, what can and cannot be found, safety sums, persons, guesses."""
+def preview_text(night: Any, title: str, sums: Mapping[str, float], alone: Sequence[Any]) -> str:
+    """The night ahead in words: holds and time, what can and cannot be found, safety sums, persons, guesses.
+
+    `alone`: the points of `conduct.unattended`, each shown with yes or no."""
     lines = [title, ""]
     total = sum(night.holds.values())
     kinds = ", ".join(f"{count} {purpose.replace('_', ' ')}" for purpose, count in night.holds.items())
     lines.append(f"{total} holds ({kinds}); about {show_time(night.seconds)} on the bench.")
+    if night.rest_s:
+        lines.append(f"{show_time(night.rest_s)} of it are rests: the winding must cool before it may lock again.")
     lines += ["", "With this rig you will get:"] + [f"  {line}" for line in night.can]
     if night.cannot:
         lines += ["", "You will not get:"] + [f"  {line}" for line in night.cannot]
@@ -199,8 +210,9 @@ def preview_text(night: Any, title: str, sums: Mapping[str, float], refused: Seq
         lines += ["", "A person is needed for:"] + [f"  {line}" for line in night.persons]
     lines += ["", "If the rotor locks while nobody looks, the drive goes off after at most:"]
     lines += [f"  {name}: {show_time(value) if value >= 60 else f'{value:.1f} s'}" for name, value in sums.items()]
-    if refused:
-        lines += ["", "Refused, until this is mended:"] + [f"  {line}" for line in refused]
+    lines += ["", "Left alone, this rig:"] + [f"  {'yes' if point.met else 'NO '}  {point.words}" for point in alone]
+    if refused := [point.why for point in alone if not point.met]:
+        lines += ["", "Refused unattended, until this is mended:"] + [f"  {line}" for line in refused]
     lines += ["", "The prediction guesses:"] + [f"  {line}" for line in night.guesses]
     return "\n".join(lines)
 
@@ -282,17 +294,22 @@ def status_text(value: Mapping[str, Any]) -> str:
     """A run's status as a few sentences."""
     counts = ", ".join(f"{count} {status}" for status, count in value["outcomes"].items()) or "none yet"
     sessions = "1 session" if value["sessions"] == 1 else f"{value['sessions']} sessions"
+    broken_off = not value["working"] and value["state"] not in (*AT_REST, "not begun")
+    state = f"broken off while {value['state']}" if broken_off else value["state"]
     lines = [
-        f"{value['motor']} on {value['rig']}: {value['state']}" + ("  (SIMULATED)" if value["simulated"] else ""),
+        f"{value['motor']} on {value['rig']}: {state}" + ("  (SIMULATED)" if value["simulated"] else ""),
         f"{sessions}, {show_time(value['run_clock_s'])} on the run clock; holds: {counts}",
     ]
     if value["in_hand"] is not None:
-        lines.append(f"hold {value['in_hand']['number']} was begun and has no outcome: {value['in_hand']['why']}")
+        how = "is in hand" if value["working"] else "was begun and has no outcome"
+        lines.append(f"hold {value['in_hand']['number']} {how}: {value['in_hand']['why']}")
     if value["last"] is not None:
         last = value["last"]
         ended = last["reason"] or last["verdict"].replace("_", " ")
         lines.append(f"last hold: {last['number']}, {last['purpose'].replace('_', ' ')}; {last['status']}: {ended}")
     if value["state"] != "finished" and not value["working"]:
+        if broken_off:
+            lines.append("Its process ended without proving off; `sweeprig off RIG` does that, and so does going on.")
         before = "Find the cause of the trip, then go on" if value["state"] == "tripped" else "Go on"
         lines.append(f"No process works on it. {before} with: sweeprig resume {value['run']}")
     return "\n".join(lines)

@@ -72,6 +72,9 @@ def of_condition(
     volts_of = partial(voltage_points, plan, condition, known, done)
     volts = _branch(volts_of(Approach.FALLING), volts_of(Approach.RISING), exposures, monotone=False)
     within = usable.usable_range(speed, stall, start, plan.saturation_percent, known.u)
+    top_speed = usable.top_speed(speed)
+    if _top_is_missing(plan, speed):
+        top_speed, within = usable.without_top(top_speed, within)
     return ConditionFindings(
         condition=condition,
         hold_time_s=None if plan.stall is None else plan.stall.hold_time_s,
@@ -88,7 +91,7 @@ def of_condition(
         stall_speed_rpm=usable.at_stall(speed, stall, "speed"),
         stall_voltage_volts=usable.at_stall(volts, stall, "mean motor voltage"),
         lowest_reliable_speed_rpm=within.low_speed_rpm,
-        top_speed_rpm=usable.top_speed(speed),
+        top_speed_rpm=top_speed,
         linearity_percent=usable.linearity(speed, within),
         curve_hysteresis_rpm=usable.curve_hysteresis(speed, rising),
         resolution_rpm_per_step=usable.resolution(speed, within, _step(plan, condition)),
@@ -108,6 +111,14 @@ def _branch(
         return None
     stops = [trial.duty_percent for trial in exposures.trials if trial.failed is not None]
     return usable.Branch(curve, lowest_sure_duty([float(d) for d in curve.duty], stops))
+
+
+def _top_is_missing(plan: Plan, speed: usable.Branch | None) -> bool:
+    """The highest duty that the sweep asks for gave no speed: the highest one that did is nearer to the next below."""
+    if speed is None or plan.curve is None or len(plan.curve.duties_percent) < 2:
+        return False
+    below, top = sorted(plan.curve.duties_percent)[-2:]
+    return float(speed.curve.duty[-1]) < (below + top) / 2.0
 
 
 def _step(plan: Plan, condition: Condition) -> float | None:

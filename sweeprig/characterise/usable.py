@@ -135,6 +135,23 @@ def top_speed(branch: Branch | None) -> Finding:
     return two_sided(value, u, curve.holds, "highest fitted speed of the falling branch", curve.flags)
 
 
+TOP_MISSING = "highest_duty_missing"
+
+
+def without_top(top: Finding, within: UsableRange) -> tuple[Finding, UsableRange]:
+    """The top speed and the upper end of the range, flagged: the highest duty asked for gave no speed."""
+
+    def flagged(found: Finding) -> Finding:
+        return replace(found, flags=tuple(sorted({*found.flags, TOP_MISSING})))
+
+    return flagged(top), replace(
+        within,
+        high_duty_percent=flagged(within.high_duty_percent),
+        high_speed_rpm=flagged(within.high_speed_rpm),
+        turndown=flagged(within.turndown),
+    )
+
+
 def high_duty(branch: Branch | None, saturation_percent: float, u_duty: float) -> Finding:
     """The lowest duty whose fitted speed is within `saturation_percent` of the highest.
 

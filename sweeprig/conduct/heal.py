@@ -32,9 +32,13 @@ def heal(rig: OpenRig, used: dict[str, int], look: Look) -> list[str]:
     while True:
         switch_off(rig)
         waiting = broken(rig)
-        names.update(dict.fromkeys(waiting))
         for name in waiting:
+            if name in names:
+                # Drained before, to no avail: a port that looks alive may be a dead one. The drive is off, so that an
+                # instrument which restarts when its port is opened does no harm.
+                rig.links[name].close()
             _bring_back(rig, name, used, look)
+        names.update(dict.fromkeys(waiting))
         try:
             identify(rig, waiting)
             same_instruments(rig, saved)

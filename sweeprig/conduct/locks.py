@@ -20,6 +20,8 @@ from pathlib import Path
 from types import TracebackType
 from typing import TYPE_CHECKING
 
+from sweeprig.clock import SystemClock
+from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.errors import RigInUse
 
 if TYPE_CHECKING:
@@ -95,14 +97,21 @@ class AddressLock:
             beside.replace(self._holder)
 
     def holder(self) -> Holder | None:
-        """What the holder said of itself; None where it has not said anything."""
+        """What the holder said of itself; None where it has not said anything that can be true: all users may write
+        here, and a number that means "every process" must never get as far as being killed."""
         try:
-            return Holder(**json.loads(self._holder.read_text("utf-8")))
-        except (OSError, ValueError, TypeError):
+            said = Holder(**json.loads(self._holder.read_text("utf-8")))
+        except (OSError, ValueError, TypeError, RecursionError):
             return None
+        words = isinstance(said.host, str) and isinstance(said.what, str) and isinstance(said.run, str)
+        return said if words and type(said.pid) is int and said.pid > 1 else None
 
     def _in_use(self) -> RigInUse:
-        holder = self.holder()
+        holder, clock = self.holder(), SystemClock()
+        until = clock.now() + BOUNDS["holder_s"]
+        while (holder is None or not _lives(holder)) and clock.now() < until:
+            clock.wait(clock.now() + BOUNDS["look_s"])  # who has just taken it has not yet said so
+            holder = self.holder()
         error = RigInUse(
             "an instrument of this rig is in use",
             value=f"{self.address}, by {holder or 'another process'}",
@@ -111,6 +120,19 @@ class AddressLock:
         )
         error.holder = holder
         return error
+
+
+def _lives(holder: Holder) -> bool:
+    """False only for a process of this machine that is known to be gone: its name was left behind."""
+    if os.name != "posix" or holder.host != socket.gethostname():
+        return True
+    try:
+        os.kill(holder.pid, 0)
+    except ProcessLookupError:
+        return False
+    except (OSError, OverflowError, TypeError):
+        return True
+    return True
 
 
 class RigLock:
@@ -136,6 +158,12 @@ class RigLock:
     def works_on(self, run: Path) -> None:
         for lock in self._locks:
             lock.works_on(run)
+
+    def nobody_has(self, part: str) -> None:
+        """RigInUse where somebody has another part of any of the addresses at this moment: a runner, say, that lost
+        its supervisor and is still switching off."""
+        with RigLock((lock.address for lock in self._locks), part, "looks"):
+            pass
 
     def held_by(self) -> set[Holder | None]:
         """Who holds any of it at this moment; None stands for one that has not said. A name alone says nothing: what a

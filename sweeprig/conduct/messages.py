@@ -16,7 +16,10 @@ from sweeprig.conduct.states import EVENTS, Ending, Event, State
 from sweeprig.errors import SweeprigError
 
 MOST_LINE = 65_536
-"""Bytes of one line; a longer one is broken off and says nothing."""
+"""Bytes of one line, its end included; a longer one says nothing."""
+_ROOM = MOST_LINE // 8
+"""Characters that the texts of a too long line are cut to, all together: one may cost six bytes."""
+_MOST_ENTRIES = 16
 
 BEAT = b"beat\n"
 ORDERS = ("finish", "off", "pause", "ready")
@@ -63,7 +66,25 @@ def line_of(said: Said) -> bytes:
         data = {"ended": said.state.name, "reason": said.reason, "again": said.again}
     else:
         data = {"failed": said.error, "parts": dict(said.parts), "exit_code": said.exit_code}
-    return json.dumps(data, default=str).encode() + b"\n"
+    line = json.dumps(data, default=str).encode() + b"\n"
+    return line if len(line) <= MOST_LINE else json.dumps(_short(data, _ROOM)).encode() + b"\n"
+
+
+def _short(value: Any, room: int) -> Any:
+    """The same with its texts cut and only the first entries of a list: what an instrument or a library said may have
+    no end, and the line that carries it must still arrive."""
+    if isinstance(value, Mapping):
+        kept = list(value.items())[:_MOST_ENTRIES]
+        share = room // (2 * len(kept) or 1)
+        return {str(key)[:share]: _short(one, share) for key, one in kept}
+    if isinstance(value, list | tuple):
+        return [_short(one, room // (len(value[:_MOST_ENTRIES]) or 1)) for one in value[:_MOST_ENTRIES]]
+    if value is None or isinstance(value, bool | float):
+        return value
+    if isinstance(value, int) and abs(value) < 10**18:
+        return value
+    text = str(value)
+    return text if len(text) <= room else f"{text[: max(room - 2, 0)]} …"
 
 
 def failed(error: SweeprigError) -> Failed:
@@ -77,12 +98,14 @@ def understood(line: bytes) -> Said | None:
     """What a line says; None for one that says nothing of ours (a library's stray print, a torn line)."""
     try:
         data = json.loads(line)
+        if not isinstance(data, dict):
+            return None
         if "hello" in data:
             return Hello(int(data["hello"]))
         if "kind" in data:
-            return Event(data["kind"], float(data["at"]), data["data"]) if data["kind"] in EVENTS else None
+            return Event(data["kind"], float(data["at"]), dict(data["data"])) if data["kind"] in EVENTS else None
         if "ended" in data:
             return Ending(State[data["ended"]], str(data["reason"]), bool(data["again"]))
         return Failed(str(data["failed"]), dict(data["parts"]), int(data["exit_code"]))
-    except (ValueError, KeyError, TypeError, AttributeError, RecursionError):
+    except (ValueError, KeyError, TypeError, OverflowError, RecursionError):
         return None

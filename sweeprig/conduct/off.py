@@ -8,15 +8,16 @@ from __future__ import annotations
 import os
 import signal
 import socket
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from contextlib import suppress
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 from sweeprig.clock import Clock
 from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.conduct.locks import COMMAND, LINK, Holder, RigLock
-from sweeprig.conduct.requests import ask
+from sweeprig.conduct.requests import CONFIRMED, ask
 from sweeprig.conduct.rig import OpenRig, RigUse, add_adapters, assemble_actuators, identify, open_link
 from sweeprig.conduct.switch_off import Off, prove_off, switch_off
 from sweeprig.errors import OffNotProved, RigError, RigInUse, SweeprigError
@@ -71,44 +72,88 @@ def _tell_all(rig: OpenRig, actuators: list[str], ports: Mapping[str, Any] | Non
     return done, silent | dict(done.silent)
 
 
-def off_or_order(use: RigUse, clock: Clock, wall: Clock, take_over: bool) -> tuple[Off, Holder | None]:
-    """Off on this rig, whoever has it; the holder that was ordered off or killed, None for a rig that was free.
+@dataclass(frozen=True, slots=True)
+class Switched:
+    """A rig that was switched off and shown to be off.
 
-    A holder is asked first and has `proof_s` for its proof. RigInUse where it gives none and `take_over` is not set;
-    else it is killed, and this process does it.
+    off      what this process did; None where the holder did it
+    holder   who had the rig; None for one that was free
+    took_s   real seconds, from the order to the proof
     """
+
+    off: Off | None
+    holder: Holder | None
+    took_s: float
+
+
+def off_or_order(
+    use: RigUse, clock: Clock, wall: Clock, take_over: bool, say: Callable[[str], None] = lambda _: None
+) -> Switched:
+    """Off on this rig, whoever has it.
+
+    A run that has it is ordered off. It has `proof_s` to have drive and supply confirm, and then the time that the
+    rotor takes to come to rest for its proof. RigInUse where it does not and `take_over` is not set; else it is killed,
+    and this process does it. `say` is told what is being waited for.
+    """
+    began = wall.now()
     addresses = [instrument.address for instrument in use.rig.instruments.values()]
+    done, holder = _if_free(use, clock, addresses)
+    if done is not None:
+        return Switched(done, None, wall.now() - began)
+    why = _obeys(holder, wall, say)
+    if not why:
+        return Switched(None, holder, wall.now() - began)
+    done, now_held_by = _if_free(use, clock, addresses)  # it may have ended meanwhile, obeying or not
+    if done is not None:
+        return Switched(done, None, wall.now() - began)
+    if not take_over:
+        raise RigInUse(
+            f"the rig is in use, and its holder {why}",
+            value=str(now_held_by or "a process that does not say who it is"),
+            remedy="Cut the supply by hand, or take over by force: the same command with --take-over",
+            topic="unattended",
+        )
+    say(f"{now_held_by or 'the holder'} {why}: it is killed")
+    _kill(addresses, wall)
+    with RigLock(addresses, COMMAND, "switches the rig off"):
+        return Switched(off(use, clock), now_held_by or holder, wall.now() - began)
+
+
+def _if_free(use: RigUse, clock: Clock, addresses: list[str]) -> tuple[Off | None, Holder | None]:
+    """Off by this process where nobody has the rig; else who has it."""
     try:
         with RigLock(addresses, COMMAND, "switches the rig off"):
             return off(use, clock), None
     except RigInUse as error:
-        holder = error.holder if isinstance(error.holder, Holder) else None
-    if _obeys(holder, wall):
-        return Off(("drive", "supply"), {}, 0.0), holder
-    if not take_over:
-        raise RigInUse(
-            f"the holder was ordered off and gave no proof within {BOUNDS['proof_s']:g} s",
-            value=str(holder or "a process that does not say who it is"),
-            remedy="Cut the supply by hand, or take over by force: the same command with --take-over",
-            topic="unattended",
-        )
-    _kill(addresses, wall)
-    with RigLock(addresses, COMMAND, "switches the rig off"):
-        return off(use, clock), holder
+        return None, error.holder if isinstance(error.holder, Holder) else None
 
 
-def _obeys(holder: Holder | None, wall: Clock) -> bool:
-    """Order the run that holds the rig off; True when its request was carried out: off, and shown to be."""
+def _obeys(holder: Holder | None, wall: Clock, say: Callable[[str], None]) -> str:
+    """Order the run that holds the rig off; "" when it was carried out: off, and shown to be. Else why not."""
+    until = wall.now() + BOUNDS["proof_s"]
     if holder is None or not holder.run:
-        return False
+        wall.wait(until)  # another `off`, or a runner that lost its supervisor: both are just switching off
+        return f"takes no orders; it had {BOUNDS['proof_s']:g} s to end by itself"
     try:
         file = ask(Path(holder.run), "off")
-    except SweeprigError:
-        return False
-    until = wall.now() + BOUNDS["proof_s"]
+    except SweeprigError as error:
+        return f"could not be ordered off ({error.what})"
+    say(f"ordered off: {holder}")
+    _wait_while(file, until, wall)
+    if file.exists():
+        return f"was ordered off and did not confirm it within {BOUNDS['proof_s']:g} s"
+    confirmed = file.with_name(CONFIRMED)
+    if confirmed.exists():
+        say("drive and supply confirmed that they are off; waiting for the rotor to come to rest, which is the proof")
+        _wait_while(confirmed, wall.now() + BOUNDS["obey_s"], wall)
+    if confirmed.exists():
+        return f"had drive and supply confirm, but gave no proof within {BOUNDS['obey_s']:g} s"
+    return ""
+
+
+def _wait_while(file: Path, until: float, wall: Clock) -> None:
     while file.exists() and wall.now() < until:
-        wall.wait(wall.now() + 0.05)
-    return not file.exists()
+        wall.wait(wall.now() + BOUNDS["look_s"])
 
 
 def _kill(addresses: list[str], wall: Clock) -> None:
@@ -126,4 +171,4 @@ def _kill(addresses: list[str], wall: Clock) -> None:
             if holder is not None and holder.host == socket.gethostname() and holder.pid != os.getpid():
                 with suppress(OSError):
                     os.kill(holder.pid, getattr(signal, "SIGKILL", signal.SIGTERM))
-        wall.wait(wall.now() + 0.05)
+        wall.wait(wall.now() + BOUNDS["look_s"])

@@ -12,6 +12,8 @@ from dataclasses import dataclass, field
 
 from sweeprig.conduct.as_set import changed, restarted
 from sweeprig.conduct.bounds import BOUNDS
+from sweeprig.conduct.doubting import Doubting, Spoiled
+from sweeprig.conduct.protection import Commanded
 from sweeprig.conduct.rig import OpenRig, by_channel, value_of
 from sweeprig.conduct.settle import LEAST_READINGS, mean_and_u, settled
 from sweeprig.conduct.switch_off import drive_off, still_on
@@ -21,10 +23,6 @@ from sweeprig.holds import Approach, Condition, Hold, Purpose, Verdict
 from sweeprig.plan import Plan
 from sweeprig.quantities import Reading
 from sweeprig.roles import ACTUATORS, DriveSetting, SupplySetting, Window
-
-
-class Spoiled(Exception):
-    """The hold says nothing about the motor; the text is the outcome's reason."""
 
 
 @dataclass(slots=True)
@@ -50,12 +48,16 @@ class Performer:
         self.beat = beat
         self.supply_v: float | None = None
         self.supply_set: dict[str, str] = {}
+        self.doubting = Doubting(rig, plan.current_at)
+        self._track: Track | None = None
 
     # -- the drive and the supply --------------------------------------------------------------------------------
 
     def power(self, condition: Condition) -> None:
         """Supply at the condition's voltage, its current limit set and read back."""
         supply = self.rig.supply
+        if supply is None:
+            self._commanded(condition.supply_v)  # nobody here sets it: it is always on
         if supply is None or self.supply_v == condition.supply_v:
             return
         if self.rig.guard.on:
@@ -64,7 +66,13 @@ class Performer:
         self.rig.tell(name, supply.apply(SupplySetting(condition.supply_v, limits.current)), self.watch.look)
         if not self.rig.off_is_supply_off:
             self._supply_on()
+            self._commanded(condition.supply_v)
         self.supply_v = condition.supply_v
+
+    def _commanded(self, supply_v: float | None) -> None:
+        """What protection compares the readings with, while the drive is off."""
+        if self.rig.guard.commanded.supply_v != supply_v:
+            self.doubting.command(Commanded(False, 0.0, 0.0, supply_v, self.rig.clock.now()))
 
     def _supply_on(self) -> None:
         supply = self.rig.supply
@@ -82,6 +90,7 @@ class Performer:
     def unpowered(self) -> None:
         """The supply was told to be off: what it was set to holds no more."""
         self.supply_v, self.supply_set = None, {}
+        self._commanded(None)
 
     def apply(self, condition: Condition, duty_percent: float, done: Performed) -> None:
         rig, drive, name = self.rig, self.rig.drive, self.rig.source["drive"]
@@ -90,7 +99,9 @@ class Performer:
         was_on = rig.guard.on
         if not was_on:
             self.still_set((name,))  # a board that restarted at rest has lost its heartbeat setting
-        rig.guard.drive_on(rig.clock.now())
+        now = rig.clock.now()
+        rig.guard.drive_on(now)
+        self.doubting.command(Commanded(True, duty_percent, condition.pwm_hz, condition.supply_v, now))
         set_values = rig.tell(name, drive.apply(setting), self.watch.look)
         if not was_on:
             # Never "on" again on a drive that should be on: that would hide a lapse of its heartbeat.
@@ -105,6 +116,9 @@ class Performer:
         self.watch.look()
         done.readings.extend(readings.values())
         self.beat(hold.number)
+        for jump in self.doubting.take(readings, done.readings):
+            if self._track is not None and jump.value is not None:
+                self._track.forget(jump.value)
         return readings
 
     # -- one hold ------------------------------------------------------------------------------------------------
@@ -131,9 +145,10 @@ class Performer:
     def track(self) -> Track:
         tacho = self.rig.source["speed"]
         per_revolution = self.rig.use.pulses_per_revolution
-        return Track(
+        self._track = Track(
             self.rig.roles["speed"], f"{tacho}.edge_age", f"{tacho}.edge_gap", per_revolution, self.rig.clock.now()
         )
+        return self._track
 
     def _rest(self, hold: Hold, seconds: float, done: Performed) -> None:
         """Drive off until no edge came for `seconds`."""
@@ -141,7 +156,7 @@ class Performer:
         clock, age = self.rig.clock, self.rig.rotation_channel
         until = clock.now() + seconds + BOUNDS["coast_s"]
         began = clock.now()
-        names = (self.rig.source["speed"],)
+        names: tuple[str, ...] = (self.rig.source["speed"],)
         wait_s = BOUNDS["cycle_window_s"]
         while True:
             reading = self.cycle(names, wait_s, hold, done)[age]
@@ -150,6 +165,8 @@ class Performer:
                 return
             if clock.now() >= until:
                 raise Spoiled(f"the rotor did not come to rest within {BOUNDS['coast_s']:g} s with the drive off")
+            if still_s < BOUNDS["least_gap_s"] and clock.now() - began >= BOUNDS["coast_suspect_s"]:
+                names = (self.rig.source["speed"], *self._guarded())  # protection sees a switch that failed short
             wait_s = min(max(seconds - still_s, BOUNDS["cycle_window_s"]), BOUNDS["trial_window_s"])
 
     def _turn_at(self, hold: Hold, duty: float, seconds: float, done: Performed) -> None:
@@ -165,6 +182,12 @@ class Performer:
             self.off()
             raise Spoiled(f"the rotor did not turn after {seconds:g} s at {duty:g} %")
 
+    def _read_in(self, hold: Hold) -> tuple[str, ...]:
+        """Instruments read while the drive is on. The supply is one of them, last: when it leaves its voltage for a
+        second, what the motor does is nothing but scatter unless the supply is read."""
+        names = self.rig.serving(hold.roles)
+        return tuple(dict.fromkeys((*names, *(name for role, name in self.rig.source.items() if role == "supply"))))
+
     def _guarded(self) -> tuple[str, ...]:
         names = dict.fromkeys(channel.partition(".")[0] for channel in self.rig.guard.channels())
         names.pop(self.rig.source["speed"], None)
@@ -177,11 +200,14 @@ class Performer:
         clock, names = self.rig.clock, self.rig.serving((*hold.roles, "supply"))
         began = clock.now()
         cycles = []
+        window_s = BOUNDS["trial_window_s" if hold.purpose is Purpose.REST else "cycle_window_s"]
         while clock.now() - began < hold.most_s:
-            readings = self.cycle(names, BOUNDS["cycle_window_s"], hold, done)
+            readings = self.cycle(names, window_s, hold, done)
             cycles.append(readings)
             wrong = still_on(self.rig, readings)
             if wrong:
+                for _ in range(int(BOUNDS["short_readings"])):  # protection sees a switch that failed short
+                    self.cycle(names, window_s, hold, done)
                 raise Spoiled(f"with the drive off, {'; '.join(wrong)}")
         done.verdict = Verdict.STOPPED
         done.exposed_s = clock.now() - began
@@ -190,7 +216,7 @@ class Performer:
     def _settle(self, hold: Hold, done: Performed) -> None:
         """A curve point: cycles until the speed has settled to the tolerance, or the longest wait, or a stop."""
         self.apply(hold.condition, hold.duty_percent, done)
-        clock, track, names = self.rig.clock, self.track(), self.rig.serving(hold.roles)
+        clock, track, names = self.rig.clock, self.track(), self._read_in(hold)
         cycles: list[dict[str, Reading]] = []
         while True:
             readings = self.cycle(names, BOUNDS["cycle_window_s"], hold, done)
@@ -218,7 +244,7 @@ class Performer:
     def _expose(self, hold: Hold, done: Performed) -> None:
         """A stall trial or the run-in: exposed for the hold time whatever settling says; a stop ends it."""
         self.apply(hold.condition, hold.duty_percent, done)
-        clock, track, names = self.rig.clock, self.track(), self.rig.serving(hold.roles)
+        clock, track, names = self.rig.clock, self.track(), self._read_in(hold)
         from_rest = hold.approach is Approach.FROM_REST
         grace = 5.0 * self.plan.time_constant_s
         cycles: list[dict[str, Reading]] = []
@@ -246,7 +272,7 @@ class Performer:
     def _start(self, hold: Hold, done: Performed) -> None:
         """From rest, full step; ten whole revolutions within the start time and still turning at its end."""
         self.apply(hold.condition, hold.duty_percent, done)
-        clock, track, names = self.rig.clock, self.track(), self.rig.serving(hold.roles)
+        clock, track, names = self.rig.clock, self.track(), self._read_in(hold)
         cycles: list[dict[str, Reading]] = []
         while (left := hold.most_s - (clock.now() - track.began)) > 0:
             window_s = max(min(BOUNDS["cycle_window_s"], left), 0.25)
@@ -260,6 +286,8 @@ class Performer:
         done.means.update(means_of(cycles[-2:]))
         if not started:
             self.still_driven()
+            if not track.turning():
+                self.doubting.believe_rest()
             self.off()
             if track.revolutions > 0:
                 done.flags = (*done.flags, "twitched")
@@ -288,6 +316,7 @@ class Performer:
 
     def _stopped(self, track: Track, exposed: float, done: Performed) -> None:
         self.still_driven()
+        self.doubting.believe_rest()
         self.off()
         done.verdict, done.exposed_s, done.restarts = Verdict.STOPPED, exposed, track.restarts
         if track.stopped_at is None:

@@ -1,19 +1,24 @@
 """The limits that switch the drive off: small pure policies on readings and on the clock, put together by `Guard`.
 
-Not a safety-rated function. No link and no clock here: readings and the time are given.
+Not a safety-rated function. No link and no clock here: readings, what is commanded, and the time are given. What the
+drive must answer is `answering`; which policies a rig gets is `policies`.
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
-from typing import Protocol
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field, replace
+from typing import ClassVar
 
+from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.quantities import Reading, show_quantity
 
 NO_READING = "no_reading"
 """The rule of a protected channel that fell silent."""
+
+NO_LIMIT = math.inf
+"""Has to be written out: a policy that is given nothing else has a finite limit and a finite age."""
 
 TELLING = frozenset({"no_data:no_edges", "no_data:overload"})
 """No value, and yet a reading: the rotor rests; more than the range (judged as above). Any other one without a value
@@ -22,77 +27,155 @@ says nothing, and the channel's age goes on: an ammeter that answers "no value" 
 
 @dataclass(frozen=True, slots=True)
 class Trip:
-    """Why the drive goes off: the rule's name and what was seen, in words."""
+    """Why the drive goes off.
+
+    rule       the policy's name; evidence: what was seen, in words; readings: those that it was seen in
+    at         run clock, s: when the reading that tripped was taken, or when the clock's time was due
+    ends_run   a person must look before anything moves again; else the hold is discarded and the rig is healed
+    """
 
     rule: str
     evidence: str
+    at: float = 0.0
+    readings: tuple[Reading, ...] = ()
+    ends_run: bool = True
+
+    @property
+    def of_answer(self) -> bool:
+        """The rig did not answer as commanded, and the hold is discarded for it."""
+        return not self.ends_run and self.rule != NO_READING
 
 
-class Policy(Protocol):
-    """The `channel` it listens to, and when silence there becomes a trip (`longest_age_s`, math.inf for never)."""
+@dataclass(frozen=True, slots=True)
+class Commanded:
+    """What drive and supply were told. supply_v: None where no supply is on the bus or it is off; since: run clock, s,
+    of the last change."""
 
+    on: bool = False
+    duty_percent: float = 0.0
+    pwm_hz: float = 0.0
+    supply_v: float | None = None
+    since: float = -math.inf
+
+
+NOTHING = Commanded()
+
+
+class Policy:
+    """One rule. `channel` is what it listens to; `longest_age_s` when silence there becomes a trip (NO_LIMIT: never).
+
+    `judge` is given every reading of the channel and what was commanded meanwhile. `a | b` is both. `listens`: content
+    with what is read anyway; else the channel is read because of it.
+    """
+
+    __slots__ = ()
+    listens: ClassVar[bool] = False
     channel: str
     longest_age_s: float
 
-    def judge(self, reading: Reading) -> Trip | None: ...
+    def judge(self, reading: Reading, commanded: Commanded) -> Trip | None:
+        raise NotImplementedError
+
+    def __or__(self, other: Policy | Policies) -> Policies:
+        return Policies((self,)) | other
+
+
+class Policies(tuple[Policy, ...]):
+    """Several rules, all in force."""
+
+    __slots__ = ()
+
+    def __or__(self, other: Policy | Policies) -> Policies:
+        return Policies((*self, *(other if isinstance(other, Policies) else (other,))))
 
 
 @dataclass(slots=True)
-class Above:
-    """Trips after `debounce` readings in a row above `limit`."""
+class Debounce:
+    """Believes what was seen in at least `readings` in a row which span at least `seconds`."""
+
+    readings: int = int(BOUNDS["debounce_readings"])
+    seconds: float = 0.0
+    seen: list[Reading] = field(default_factory=list)
+
+    def takes(self, reading: Reading, wrong: bool) -> bool:
+        """Whether it is believed, with this reading."""
+        if not wrong:
+            self.seen.clear()
+            return False
+        self.seen.append(reading)
+        if len(self.seen) > max(self.readings, 2):
+            del self.seen[1]  # the first tells since when, the latest ones what
+        return len(self.seen) >= self.readings and reading.at - self.seen[0].at >= self.seconds
+
+
+@dataclass(slots=True)
+class Above(Policy):
+    """Trips after `debounce` readings in a row, over `debounce_s`, above `limit`."""
 
     rule: str
     channel: str
     limit: float
-    longest_age_s: float
+    longest_age_s: float = BOUNDS["reading_age_s"]
     debounce: int = 1
-    _seen: int = 0
+    debounce_s: float = 0.0
+    _seen: Debounce = field(init=False)
 
-    def judge(self, reading: Reading) -> Trip | None:
+    def __post_init__(self) -> None:
+        self._seen = Debounce(self.debounce, self.debounce_s)
+
+    def judge(self, reading: Reading, commanded: Commanded) -> Trip | None:
+        del commanded
         value = reading.value
         # An overloaded meter says "more than I can show": that is above, not unknown.
         above = "no_data:overload" in reading.flags if value is None else abs(value) > self.limit
-        self._seen = self._seen + 1 if above else 0
-        if self._seen < self.debounce:
+        if not self._seen.takes(reading, above):
             return None
         shown = "more than its range" if value is None else show_quantity(value, reading.unit)
-        limit = show_quantity(self.limit, reading.unit)
-        return Trip(self.rule, f"{self.channel} read {shown}, limit {limit}, {self._seen} readings in a row")
+        limit, seen = show_quantity(self.limit, reading.unit), tuple(self._seen.seen)
+        words = f"{self.channel} read {shown}, limit {limit}, {len(seen)} readings in a row"
+        return Trip(self.rule, words, reading.at, seen)
 
 
 @dataclass(slots=True)
-class LockedRotor:
+class LockedRotor(Policy):
     """Trips when the drive is on and no rotation was seen for `longest_age_s`. Listens to the age of the last edge."""
 
     channel: str
     longest_age_s: float
     rule: str = "locked_rotor"
 
-    def judge(self, reading: Reading) -> Trip | None:
-        del reading
+    def judge(self, reading: Reading, commanded: Commanded) -> Trip | None:
+        del reading, commanded
         return None
 
 
 class Guard:
     """All policies of a rig. `take` every reading as it comes; ask `check(now)` at least every 50 ms.
 
-    While the drive is off only the limits act; silence and locked rotor count from the moment it went on.
+    While the drive is off only what is read is judged; silence and locked rotor count from the moment it went on.
     """
 
-    __slots__ = ("_ages", "_by_channel", "due", "on", "trip")
+    __slots__ = ("_ages", "_by_channel", "_last", "commanded", "due", "on", "trip")
 
-    def __init__(self, policies: Sequence[Policy]) -> None:
+    def __init__(self, policies: Iterable[Policy]) -> None:
         self._by_channel: dict[str, list[Policy]] = {}
         self._ages: dict[str, float] = {}
+        self._last: dict[str, Reading] = {}
         for policy in policies:
             self._by_channel.setdefault(policy.channel, []).append(policy)
         self.on = False
         self.due = math.inf
         """The earliest moment at which the clock alone can trip something: it caps every wait."""
         self.trip: Trip | None = None
+        self.commanded = NOTHING
 
     def channels(self) -> tuple[str, ...]:
-        return tuple(self._by_channel)
+        """Those that must be read because of protection; what only listens is judged where it is read anyway."""
+        return tuple(name for name, found in self._by_channel.items() if not all(each.listens for each in found))
+
+    def command(self, commanded: Commanded) -> None:
+        """What drive and supply are told from now on."""
+        self.commanded = commanded
 
     def drive_on(self, now: float) -> None:
         """The drive was switched on, or is about to be: every age counts from now."""
@@ -104,6 +187,7 @@ class Guard:
     def drive_off(self) -> None:
         self.on = False
         self.due = math.inf
+        self.commanded = replace(self.commanded, on=False)
 
     def take(self, readings: Mapping[str, Reading]) -> None:
         """Judge the readings that have a policy; the first trip stays."""
@@ -111,13 +195,14 @@ class Guard:
             policies = self._by_channel.get(channel)
             if policies is None:
                 continue
+            self._last[channel] = reading
             rotation_at = reading.at if reading.value is None else reading.at - reading.value
             for policy in policies:
                 if isinstance(policy, LockedRotor):
                     if reading.value is not None and rotation_at > self._ages.get(channel, -math.inf):
                         self._ages[channel] = rotation_at
                     continue
-                trip = policy.judge(reading)
+                trip = policy.judge(reading, self.commanded)
                 if trip is not None and self.trip is None:
                     self.trip = trip
                 if reading.value is not None or not TELLING.isdisjoint(reading.flags):
@@ -140,13 +225,14 @@ class Guard:
 
     def _overdue(self, now: float) -> Trip | None:
         for channel, policies in self._by_channel.items():
+            seen = (self._last[channel],) if channel in self._last else ()
             for policy in policies:
                 age = now - self._ages[channel]
                 if age < policy.longest_age_s:
                     continue
+                due = self._ages[channel] + policy.longest_age_s
                 if isinstance(policy, LockedRotor):
-                    return Trip(policy.rule, f"drive on and no rotation seen for {age:.2f} s")
-                return Trip(
-                    NO_READING, f"{channel} gave no reading for {age:.2f} s, longest {policy.longest_age_s:g} s"
-                )
+                    return Trip(policy.rule, f"drive on and no rotation seen for {age:.2f} s", due, seen)
+                words = f"{channel} gave no reading for {age:.2f} s, longest {policy.longest_age_s:g} s"
+                return Trip(NO_READING, words, due, seen, ends_run=False)
         return None

@@ -14,7 +14,9 @@ from typing import Any, cast
 from sweeprig.clock import Clock
 from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.conduct.locks import LINK, AddressLock
-from sweeprig.conduct.protection import Above, Guard, LockedRotor, Policy
+from sweeprig.conduct.policies import policies
+from sweeprig.conduct.protection import Guard
+from sweeprig.conduct.sanity import MotorFacts
 from sweeprig.dialects import find_dialect
 from sweeprig.errors import ConfigError, LinkError, RoleMissing, SweeprigError, WrongInstrument
 from sweeprig.job import Job
@@ -44,6 +46,7 @@ class RigUse:
 
     folder   where the rig file lies: a user's own dialects are found beside it
     pwm_hz   frequencies that instruments will have to average over; empty where nothing will be swept
+    motor    what bounds its readings; None where nothing will be swept
     """
 
     rig: Rig
@@ -51,10 +54,15 @@ class RigUse:
     pulses_per_revolution: float
     folder: Path | None
     pwm_hz: tuple[float, ...] = ()
+    motor: MotorFacts | None = None
 
     @classmethod
     def of_job(cls, job: Job) -> RigUse:
-        return cls(job.rig, job.limits(), job.motor.pulses_per_revolution, job.rig_folder, tuple(job.sweep.pwm))
+        motor = job.motor
+        facts = MotorFacts(
+            motor.kind == "brushed", motor.nominal_voltage, motor.maximum_speed, motor.longest_time_constant
+        )
+        return cls(job.rig, job.limits(), motor.pulses_per_revolution, job.rig_folder, tuple(job.sweep.pwm), facts)
 
 
 @dataclass(slots=True)
@@ -74,6 +82,8 @@ class OpenRig:
     """Instrument → what it said of itself when it was last configured."""
     pulse: Look | None = None
     """Called while anything is waited for that nobody watches: the sign of life of this process. It never raises."""
+    off_confirmed_at: float = -math.inf
+    """When drive and supply last confirmed that they are off, s."""
     locks: list[AddressLock] = field(default_factory=list)
 
     @property
@@ -215,7 +225,7 @@ def assemble(use: RigUse, clock: Clock, traffic: Traffic | None = None) -> OpenR
     for adapter in adapters.values():
         for pwm_hz in use.pwm_hz:
             adapter.check_window(Window(BOUNDS["cycle_window_s"], pwm_hz))
-    return OpenRig(use, clock, adapters, {}, source, use.rig.roles, Guard(policies(use, source)), traffic)
+    return OpenRig(use, clock, adapters, {}, source, use.rig.roles, Guard(policies(use, source, adapters)), traffic)
 
 
 def assemble_actuators(use: RigUse, clock: Clock) -> OpenRig:
@@ -281,25 +291,6 @@ def _check_actuators(adapters: Mapping[str, Adapter], source: Mapping[str, str])
             remedy="use an adapter with the channel edge_age",
             topic="rig",
         )
-
-
-def policies(use: RigUse, source: Mapping[str, str]) -> list[Policy]:
-    """The limits as policies. Finite by default."""
-    limits, roles = use.limits, use.rig.roles
-    ages = limits.longest_age.by_role()
-    found: list[Policy] = []
-    for rule, role, limit in (
-        ("over_current", "current", limits.current),
-        ("over_voltage", "motor_voltage", limits.motor_voltage),
-        ("over_speed", "speed", limits.speed),
-        ("winding_too_hot", "winding_temperature", limits.winding_temperature),
-        ("case_too_hot", "case_temperature", limits.case_temperature),
-    ):
-        if role in roles and limit is not None:
-            debounce = int(BOUNDS["debounce_readings"])
-            found.append(Above(rule, roles[role], limit, ages.get(role, math.inf), debounce))
-    found.append(LockedRotor(f"{source['speed']}.edge_age", limits.locked_rotor_time))
-    return found
 
 
 def identify(rig: OpenRig, names: Iterable[str]) -> None:

@@ -5,22 +5,28 @@ In process and inside the runner process: the same loop, the same events, the sa
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import replace
 
+from sweeprig.clock import SystemClock
 from sweeprig.conduct.bounds import BOUNDS
+from sweeprig.conduct.doubting import Doubted, Spoiled
 from sweeprig.conduct.heal import broken, heal
-from sweeprig.conduct.perform import Performed, Performer, Spoiled
-from sweeprig.conduct.protection import NO_READING
+from sweeprig.conduct.perform import Performed, Performer
+from sweeprig.conduct.protection import Trip
 from sweeprig.conduct.rig import OpenRig
 from sweeprig.conduct.states import Ending, Event, OnEvent, Orders, State
 from sweeprig.conduct.switch_off import drive_off, prove_off, switch_off
 from sweeprig.conduct.watchman import MachineSlept, OffOrdered, TripSeen, Watchman
-from sweeprig.errors import LinkError, RigError
-from sweeprig.holds import Decision, Finished, Hold, NeedsPerson, Outcome, Status, Verdict
+from sweeprig.errors import LinkError, RigError, RunInUse
+from sweeprig.holds import Decision, Finished, Hold, NeedsPerson, Outcome, Purpose, Status, Verdict
 from sweeprig.logbook import Logbook
 from sweeprig.plan import Plan
 from sweeprig.schedule import next_hold
 
+LOCKED = "the logbook was locked by another program, and the drive went off meanwhile"
+RECENT = 50
+"""Outcomes that are looked back at: many more than may be discarded in a row, with a rest before each."""
 PAUSED = "paused by request; `sweeprig ready RUN` goes on"
 
 
@@ -37,6 +43,7 @@ class _Session:
         self.performer = Performer(rig, self.plan, self.watch, self._beat)
         self.outcomes = logbook.outcomes()
         self.healed: dict[str, int] = {}
+        self.waited = False
 
     def tell(self, kind: str, *, at_once: bool = False, **data: object) -> None:
         """`at_once`: into the logbook now, because no commit may come for long."""
@@ -70,6 +77,7 @@ class _Session:
         self._heal("links broke while the rig was made ready")
         for name, identity in self.rig.identities.items():
             self.logbook.instrument(self.session, name, identity, self.rig.settings[name], self.clock.now())
+            self._pulse()  # a slow disk takes seconds for each
         self._conclude_abandoned()
 
     def _conclude_abandoned(self) -> None:
@@ -113,13 +121,15 @@ class _Session:
     def _one(self, hold: Hold) -> Ending | None:
         began, began_utc = self.clock.now(), self.clock.utc()
         # The intent is durable before the drive moves.
-        self.logbook.intend(hold, self.session, began, began_utc)
-        self.tell("state", state=State.HOLDING.words, drive_may_be_on=True, number=hold.number)
+        self._commit(lambda: self.logbook.intend(hold, self.session, began, began_utc))
+        state = State.RESTING if hold.purpose is Purpose.REST else State.HOLDING
+        self.tell("state", state=state.words, drive_may_be_on=state.drive_may_be_on, number=hold.number)
         self.tell("hold_began", number=hold.number, purpose=str(hold.purpose), why=hold.why, most_s=hold.most_s)
         done = Performed()
-        status, reason, ending, failed = Status.DONE, "", None, False
+        status, reason, ending, failed, trip = Status.DONE, "", None, False, None
+        waited, self.waited = self.waited, False
         try:
-            status, reason = self._perform(hold, done)
+            status, reason = (Status.DISCARDED, LOCKED) if waited else self._perform(hold, done)
         except MachineSlept:
             status, reason, failed = (
                 Status.DISCARDED,
@@ -130,35 +140,32 @@ class _Session:
             status, reason = Status.DISCARDED, str(order)
             ending = Ending(State.PARKED, reason, self.orders.again)
         except TripSeen as seen:
-            reason = f"{seen.trip.rule}: {seen.trip.evidence}"
-            if seen.trip.rule == NO_READING:
-                # A channel that fell silent is trouble with its link: off, heal, go on. Anything else ends the run.
-                status, failed = Status.DISCARDED, True
-            else:
-                status, ending = Status.TRIPPED, Ending(State.TRIPPED, reason)
-        except (LinkError, RigError) as error:
+            trip, reason = seen.trip, self._trip_now(seen.trip)
+            # A channel that fell silent, or a rig that does not answer as commanded: off, heal, go on.
+            status, failed = (Status.TRIPPED, False) if trip.ends_run else (Status.DISCARDED, True)
+            ending = Ending(State.TRIPPED, reason) if trip.ends_run else None
+        except (LinkError, RigError, Doubted) as error:
             status, reason, failed = Status.DISCARDED, str(error), True
-        if ending is not None or failed:
+        if trip is None and (ending is not None or failed):
             self._off_now()
         self._conclude(hold, done, status, reason, began, began_utc)
-        if ending is not None and ending.state is State.TRIPPED:
-            self.tell("trip", rule=reason.partition(":")[0], evidence=reason)
+        if trip is not None and trip.ends_run:
+            self.tell("trip", rule=trip.rule, evidence=reason, reaction_s=self._reaction(trip), readings=_seen(trip))
         if failed:
             self._heal(f"a hold was discarded: {reason}")
         return ending
 
     def _hopeless(self) -> Ending | None:
         """Parked when hold after hold is discarded: no repeat will mend that. Healing counts anew after good holds."""
-        in_a_row = 0
-        for outcome in reversed(self.outcomes):
+        in_a_row, lately = 0, self.outcomes[-RECENT:]
+        held = [each for each in lately if each.hold.purpose is not Purpose.REST]  # no hold goes wrong by resting
+        for outcome in reversed(held):
             if outcome.session != self.session or outcome.status is not Status.DISCARDED:
                 break
             in_a_row += 1
         if in_a_row >= BOUNDS["discards_in_a_row"]:
-            return Ending(
-                State.PARKED, f"{in_a_row} holds in a row were discarded, the last one: {self.outcomes[-1].reason}"
-            )
-        good = self.outcomes[-int(BOUNDS["heal_forgets_after"]) :]
+            return Ending(State.PARKED, f"{in_a_row} holds in a row were discarded, the last one: {held[-1].reason}")
+        good = held[-int(BOUNDS["heal_forgets_after"]) :]
         if all(outcome.status is Status.DONE for outcome in good):
             self.healed.clear()
         return None
@@ -171,6 +178,8 @@ class _Session:
         except Spoiled as spoiled:
             self._drive_is_off()
             self.performer.still_set(tuple(self.rig.adapters))
+            if isinstance(spoiled, Doubted):
+                raise
             return Status.DISCARDED, str(spoiled)
         try:
             self.performer.still_set(tuple(self.rig.adapters))
@@ -193,8 +202,27 @@ class _Session:
             "hold_ended", number=hold.number, status=str(status), verdict=str(done.verdict), reason=reason,
             speed_rpm=None if speed is None else speed.value,
         )  # fmt: skip
-        self.logbook.conclude(outcome, done.readings)
+        self._commit(lambda: self.logbook.conclude(outcome, done.readings))
         self.outcomes.append(outcome)
+
+    def _commit(self, write: Callable[[], None]) -> None:
+        """Write into the logbook; while another program has it locked, again and again, with the drive off. A hold that
+        was to flow on from the one before finds another rotor then, and is discarded."""
+        wall = SystemClock()
+        until = wall.now() + BOUNDS["busy_s"]
+        while True:
+            try:
+                write()  # waits for half a second itself
+            except RunInUse:
+                if wall.now() >= until:
+                    raise
+                if self.rig.guard.on:
+                    self._off_now()
+                    self.waited = True
+                self._pulse()
+            else:
+                self._pulse()  # two commits may follow each other, and a slow disk takes seconds for each
+                return
 
     # -- off -----------------------------------------------------------------------------------------------------
 
@@ -203,6 +231,30 @@ class _Session:
         off = switch_off(self.rig)
         self.performer.unpowered()
         self.tell("off", proved=False, took_s=off.took_s, told=list(off.told), silent=dict(off.silent))
+
+    def _trip_now(self, trip: Trip) -> str:
+        """Off because of protection; the outcome's reason, with the time from the reading to the confirmed off."""
+        self._off_now()
+        reaction_s = self._reaction(trip)
+        how = "off was not confirmed" if reaction_s is None else f"off confirmed {reaction_s:.2f} s later"
+        reason = f"{trip.rule}: {trip.evidence}; {how}"
+        return self._explained(reason) if trip.of_answer else reason
+
+    def _explained(self, reason: str) -> str:
+        """A rig that did not answer as commanded may have an instrument that restarted: that is the reason then."""
+        self.rig.guard.trip = None  # seen, and the drive is off
+        try:
+            self.performer.still_set(tuple(self.rig.adapters))
+        except (LinkError, RigError, Spoiled) as error:
+            return f"{error}; seen as {reason}"
+        except (MachineSlept, OffOrdered):
+            pass  # what is discarded is healed, and an order is looked at there
+        return reason
+
+    def _reaction(self, trip: Trip) -> float | None:
+        """s, from the reading that tripped, or the moment that was due, to drive and supply both saying off."""
+        confirmed = self.rig.off_confirmed_at
+        return confirmed - trip.at if confirmed >= trip.at else None
 
     def _drive_is_off(self) -> None:
         if self.rig.guard.on:
@@ -246,6 +298,11 @@ class _Session:
         except BaseException as second:  # noqa: BLE001 - also an impatient interrupt: the drive goes off first
             switch_off(self.rig)
             first.add_note(f"and then, while switching off: {second or type(second).__name__}")
+
+
+def _seen(trip: Trip) -> list[dict[str, object]]:
+    """The readings of a trip as plain values, for the record."""
+    return [{"channel": each.channel, "value": each.value, "unit": each.unit, "at": each.at} for each in trip.readings]
 
 
 def _nobody(event: Event) -> None:

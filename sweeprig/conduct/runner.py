@@ -21,7 +21,7 @@ from typing import BinaryIO
 from sweeprig.clock import SystemClock
 from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.conduct.messages import ORDERS, Failed, Hello, Said, failed, line_of
-from sweeprig.conduct.states import Ending, Event, Orders
+from sweeprig.conduct.states import Ending, Event, OnEvent, Orders
 from sweeprig.errors import SweeprigError
 
 
@@ -76,7 +76,11 @@ class Voice:
 
     def pulse(self) -> None:
         if self._now() - self._said_at >= 0.8 * BOUNDS["beat_s"]:
-            self.say(Event("beat", 0.0, {"number": 0}))
+            self.say(PULSE)
+
+
+PULSE = Event("beat", 0.0, {"number": 0})
+"""The runner lives, and nothing else: of no hold, at no time of the run."""
 
 
 def main(given: list[str] | None = None) -> int:
@@ -86,6 +90,8 @@ def main(given: list[str] | None = None) -> int:
     parser.add_argument("--attended", action="store_true")
     parser.add_argument("--because", default="")
     asked = parser.parse_args(given)
+    from sweeprig.conduct import opening, sessions  # noqa: F401 - loaded before hello: a slow disk is no hang
+
     now = SystemClock().now
     orders = HeardOrders(now)
     sink = os.fdopen(os.dup(sys.stdout.fileno()), "wb")
@@ -113,10 +119,32 @@ def _work(folder: Path, attended: bool, because: str, voice: Voice, orders: Hear
     from sweeprig.conduct.opening import open_run_for_work, real_opening
     from sweeprig.conduct.sessions import work
 
-    job, logbook, traffic = open_run_for_work(folder)
+    job, logbook, traffic = open_run_for_work(folder, waits(voice.event, voice.pulse, orders.off_because))
     with logbook, closing(traffic):
         opening = real_opening(job, logbook, attended, because)
         return work(job, folder, logbook, traffic, opening, voice.event, orders, voice.pulse)
+
+
+def waits(on_event: OnEvent, pulse: Callable[[], None], told: Callable[[], str]) -> Callable[[], bool]:
+    """Whether to go on waiting for who has the logbook, after a short wait: a `status` that looks has it for an
+    instant, and a runner that lost its supervisor until it has proved off."""
+    wall = SystemClock()
+    began = wall.now()
+    until, said = began + BOUNDS["obey_s"], False
+
+    def wait() -> bool:
+        nonlocal said
+        pulse()
+        if not said and wall.now() - began > BOUNDS["proof_s"]:
+            said = True
+            text = (
+                "another process still has this run's logbook (a runner that lost its supervisor?); waiting for its end"
+            )
+            on_event(Event("notice", 0.0, {"text": text}))
+        wall.wait(wall.now() + BOUNDS["person_s"])
+        return wall.now() < until and not told()
+
+    return wait
 
 
 if __name__ == "__main__":

@@ -6,6 +6,7 @@ off, checks zero and warms up anew. Between sessions the drive and the supply ar
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -13,16 +14,21 @@ from typing import Any
 
 from sweeprig.clock import Clock, SystemClock
 from sweeprig.conduct.bounds import BOUNDS
+from sweeprig.conduct.heal import heal
 from sweeprig.conduct.requests import Requests
 from sweeprig.conduct.rig import Look, OpenRig, RigUse, open_rig, require_heartbeat, same_instruments
 from sweeprig.conduct.run import PAUSED, run
 from sweeprig.conduct.states import Ending, Event, OnEvent, Orders, State
 from sweeprig.errors import InstrumentRefused, LinkError, OffNotProved, RigError, SweeprigError, WrongInstrument
-from sweeprig.holds import Status
+from sweeprig.holds import Purpose, Status
 from sweeprig.job import Job, freeze
 from sweeprig.logbook import Logbook
 from sweeprig.logbook.traffic import TrafficLog
 from sweeprig.plan import Plan
+
+DATA = frozenset(Purpose) - {Purpose.ZERO, Purpose.REST, Purpose.RUN_IN}
+"""Purposes that bring a sweep forward. A zero check is done in every session: of a rig that only ever gets so far
+nothing has come back, and the time parked goes on."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -52,27 +58,33 @@ def work(
     `pulse`: the sign of life of this process; called at least every half second whatever is being waited for.
     """
     requests = Requests(folder, orders)
-    stale = requests.clear()
+    opened: list[OpenRig] = []
+    ordered_off_at = math.inf
 
     def alive() -> None:
+        nonlocal ordered_off_at
         requests.look()
+        if orders.off and opened:
+            ordered_off_at = min(ordered_off_at, opening.clock.now())
+            if opened[0].off_confirmed_at > ordered_off_at:
+                requests.off_confirmed()
         if pulse is not None:
             pulse()
 
     saved = {seen.name: seen.identity for seen in reversed(logbook.instruments())}
     rig = open_rig(RigUse.of_job(job), opening.clock, opening.ports, traffic, alive)
+    opened.append(rig)
     try:
         same_instruments(rig, saved)
         if not opening.attended:
             require_heartbeat(rig)
         plan = replace(freeze(job), attended=opening.attended, hands=opening.hands)
         at_work = _Work(plan, rig, logbook, opening, requests, on_event, orders, alive)
-        for kind in stale:
-            at_work.tell("notice", text=f"a request from before this session was put aside: {kind}")
-        return at_work.to_its_end()
+        ending = at_work.to_its_end()
     finally:
         rig.close()
-        requests.carried_out("off", "stop")
+    requests.carried_out("off", "stop")  # only now: with an error off may not have been proved
+    return ending
 
 
 class _Work:
@@ -109,14 +121,26 @@ class _Work:
             except (LinkError, InstrumentRefused, OffNotProved, RigError) as error:
                 if isinstance(error, WrongInstrument) or not self._bear(error, before):
                     raise
+                if self._told():
+                    self._off_after_all()
             else:
                 if not self._waits(ending):
                     return ending
                 self._wait_for_ready(ending)
-            if why := self.orders.off_because() or ("stopped by request" if self.orders.finish else ""):
+            if why := self._told():
                 return Ending(State.PARKED, f"{why}, while the run was parked or waited", self.orders.again)
             info = {**self.opening.info, "hands": self.plan.hands}
             session = self.logbook.begin_session(self.clock.now(), self.clock.utc(), info)
+
+    def _told(self) -> str:
+        """Why the run is to end, where somebody said so."""
+        return self.orders.off_because() or ("stopped by request" if self.orders.finish else "")
+
+    def _off_after_all(self) -> None:
+        """A run that is parked because its rig was lost may not have proved off. It ends with the proof, or with the
+        error that stands against it: nobody is told "off" on the word of a rig that does not answer."""
+        heal(self.rig, {}, self.alive)
+        self.tell("off", proved=True, took_s=0.0)
 
     # -- waiting for a person ------------------------------------------------------------------------------------
 
@@ -154,7 +178,7 @@ class _Work:
         What cannot be used at the very beginning is for the person who starts the run, and is raised at once.
         """
         outcomes = self.logbook.outcomes()
-        if any(outcome.status is Status.DONE for outcome in outcomes[before:]):
+        if any(outcome.status is Status.DONE and outcome.hold.purpose in DATA for outcome in outcomes[before:]):
             self.parked_since, self.park_s = None, BOUNDS["park_first_s"]
         mine = [outcome for outcome in outcomes if outcome.session >= self.opening.session]
         if not any(outcome.status is Status.DONE for outcome in mine):
@@ -163,7 +187,10 @@ class _Work:
         if self.parked_since is None:
             self.parked_since = now
         if now - self.parked_since >= BOUNDS["park_gives_up_s"]:
-            error.add_note(f"the run had been parked for {(now - self.parked_since) / 3600.0:.1f} h")
+            hours = (now - self.parked_since) / 3600.0
+            error.what = (
+                f"the run was parked for {hours:.1f} h, the rig did not come back and is given up: {error.what}"
+            )
             return False
         self.tell(
             "state", state=State.PARKED.words, drive_may_be_on=False, reason=str(error), next_try_s=self.park_s

@@ -30,7 +30,7 @@ EVENTS: Mapping[str, str] = {
     "hold_ended": "number, status, verdict, reason, speed_rpm: the outcome is committed",
     "beat": "number, at_s: readings came; at least every few seconds while a hold lasts",
     "link": "instrument, what: a link failed, was healed or was given up",
-    "trip": "rule, evidence: protection switched the drive off",
+    "trip": "rule, evidence, reaction_s, readings: protection switched the drive off, so long after what it saw",
     "off": "proved, took_s: the drive was switched off and shown to be off",
     "notice": "text: anything a person should read",
     "finished": "reason: the schedule has nothing more to ask for",

@@ -13,7 +13,7 @@ import signal
 import subprocess
 import sys
 import threading
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from contextlib import suppress
 from dataclasses import dataclass
 from pathlib import Path
@@ -23,15 +23,20 @@ from sweeprig.clock import Clock, SystemClock
 from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.conduct.messages import BEAT, MOST_LINE, ORDERS, Failed, Hello, Said, understood
 from sweeprig.conduct.off import off
+from sweeprig.conduct.requests import Requests
 from sweeprig.conduct.rig import RigUse
 from sweeprig.conduct.states import Ending, Event, OnEvent, Orders, State
-from sweeprig.errors import RigError, SweeprigError
+from sweeprig.errors import RigError
 
 LOG = "runner.log"
 """What the runner and its libraries printed: tracebacks, warnings."""
 MOST_LOG = 1_000_000
+_MOST_WHY = 500
 
 LOOK_S = 0.02
+MOST_LINES = 200
+"""Lines that wait to be looked at, and that are looked at in one go: one who talks without end has to wait, and is
+still told what to do."""
 STALL_S = 1.0
 """The supervisor's own loop stood still for so long: it was stopped, or the machine slept; nobody is to blame."""
 
@@ -60,14 +65,19 @@ class Runner:
             self.process: subprocess.Popen[bytes] = subprocess.Popen(
                 command, stdin=pipe, stdout=pipe, stderr=errors, start_new_session=True, creationflags=_OWN_GROUP
             )
-        self.lines: queue.SimpleQueue[bytes | None] = queue.SimpleQueue()
+        self.lines: queue.Queue[bytes | None] = queue.Queue(MOST_LINES)
         assert self.process.stdout is not None
         threading.Thread(target=self._read, args=(self.process.stdout,), daemon=True).start()
 
     def _read(self, source: BinaryIO) -> None:
+        """Whole lines only; of one that is too long nothing counts, its end neither."""
         with suppress(OSError, ValueError):
-            for line in iter(lambda: source.readline(MOST_LINE), b""):
-                self.lines.put(line)
+            too_long = False
+            for part in iter(lambda: source.readline(MOST_LINE), b""):
+                whole = part.endswith(b"\n")
+                if whole and not too_long:
+                    self.lines.put(part)
+                too_long = not whole
         self.lines.put(None)
 
     def tell(self, word: bytes) -> None:
@@ -108,6 +118,9 @@ class Supervisor:
         self.on_event, self.orders, self.tick = on_event, orders, tick
         self.wall = wall or SystemClock()
         self.bench = SystemClock(use.rig.rate or 1.0)
+        self.requests = Requests(folder, Orders(), kinds=("off", "stop"))
+        self.at = 0.0
+        self.deaf = False
         self.tripped = ""
         self.in_a_row = 0
         self.holds_done = 0
@@ -118,30 +131,59 @@ class Supervisor:
         because = ""
         try:
             while True:
-                self.runner = Runner(self.command(because), self.folder / LOG)
-                said = self._watch(self.runner)
-                self.runner.kill()
-                if isinstance(said, Ending) and not (said.again and not self._stopping()):
-                    return said
-                if isinstance(said, Failed):
-                    self._leave_off(said)
-                    raise said.raised()
-                because = said.why if isinstance(said, Lost) else said.reason
-                self._take_over(because)
-                if self.tripped:
-                    return Ending(State.TRIPPED, self.tripped)
-                if self._stopping():
-                    return Ending(State.PARKED, f"stopped by request; the runner had gone: {because}")
+                ending = self._with_one_runner(because)
+                if isinstance(ending, Ending):
+                    return ending
+                because = ending.why
                 self._count_restart(because)
-        except BaseException:
+        except BaseException as first:
             if self.runner is not None and self.runner.process.poll() is None:
                 self.runner.kill()
-                with suppress(SweeprigError):
+                self.deaf = True  # it may be the listener that failed: the drive goes off all the same
+                try:
                     self._take_over("the supervisor failed")
+                except Exception as second:  # noqa: BLE001 - whatever it is, the first error is the one to show
+                    first.add_note(f"and then, while switching off: {second}")
             raise
 
+    def _with_one_runner(self, because: str) -> Ending | Lost:
+        """One runner's life; Lost once its rig is switched off and another may be started."""
+        runner = self.runner = self._started(because)
+        said = self._watch(runner)
+        runner.kill()
+        if isinstance(said, Ending) and not (said.again and not self._stopping()):
+            return said
+        if isinstance(said, Failed):
+            self._leave_off(said)
+            raise said.raised()
+        why = said.why if isinstance(said, Lost) else said.reason
+        self._take_over(why)
+        self.requests.look()  # what was asked of the runner that is dead
+        if self.tripped:
+            return self._ended(State.TRIPPED, self.tripped)
+        if self._stopping():
+            return self._ended(State.PARKED, f"stopped by request; the runner had gone: {why}")
+        return Lost(why)
+
+    def _started(self, because: str) -> Runner:
+        try:
+            return Runner(self.command(because), self.folder / LOG)
+        except OSError as error:
+            raise RigError(
+                "the process that performs holds cannot be started; the drive is off",
+                value=error.strerror or str(error),
+                remedy="See that the machine has memory, processes and descriptors left, then resume the run",
+                topic="unattended",
+            ) from error
+
+    def _ended(self, state: State, reason: str) -> Ending:
+        """An end that no runner told: the supervisor has switched off and proved it."""
+        self.requests.carried_out("off", "stop")
+        self._tell("state", state=state.words, drive_may_be_on=False, reason=reason)
+        return Ending(state, reason)
+
     def _stopping(self) -> bool:
-        return self.orders.finish or self.orders.off
+        return any((self.orders.finish, self.orders.off, self.requests.orders.finish, self.requests.orders.off))
 
     # -- watching ------------------------------------------------------------------------------------------------
 
@@ -152,11 +194,13 @@ class Supervisor:
         greeted = False
         told: set[str] = set()
         while True:
-            while (line := self._next(runner)) is not _NOTHING:
+            for line in self._waiting(runner):
                 if line is None:
                     return self._gone(runner)
+                said = understood(line)
+                if said is None:
+                    continue  # no sign of life: a runner that only babbles does not work
                 heard = self.wall.now()
-                said = understood(line) if isinstance(line, bytes) else None
                 greeted = greeted or isinstance(said, Hello)
                 if isinstance(said, Ending | Failed):
                     return said
@@ -181,11 +225,11 @@ class Supervisor:
                 return Lost(f"the runner did not end {now - ordered_off:.0f} s after the order to switch off")
             self.wall.wait(now + LOOK_S)
 
-    def _next(self, runner: Runner) -> object:
-        try:
-            return runner.lines.get_nowait()
-        except queue.Empty:
-            return _NOTHING
+    def _waiting(self, runner: Runner) -> Iterator[bytes | None]:
+        """The lines that have come, None for the end; no more in one go than let beats and orders out in time."""
+        with suppress(queue.Empty):
+            for _ in range(MOST_LINES):
+                yield runner.lines.get_nowait()
 
     def _gone(self, runner: Runner) -> Lost:
         with suppress(subprocess.TimeoutExpired):
@@ -195,16 +239,23 @@ class Supervisor:
         return Lost(f"the runner ended without saying why ({how}; see {LOG})")
 
     def _pass_on(self, event: Event) -> None:
+        self.at = max(self.at, event.at)
         if event.kind == "trip":
             self.tripped = str(event.data.get("evidence", "protection"))
+        if event.kind == "hold_ended" and event.data.get("status") == "tripped":
+            self.tripped = str(event.data.get("reason", "protection"))  # told first: the runner may die before `trip`
         if event.kind == "hold_ended" and event.data.get("status") == "done":
             self.in_a_row, self.holds_done = 0, self.holds_done + 1
-        self.on_event(event)
+        self._listener(event)
+
+    def _listener(self, event: Event) -> None:
+        if not self.deaf:
+            self.on_event(event)
 
     # -- taking over ---------------------------------------------------------------------------------------------
 
     def _tell(self, kind: str, **data: object) -> None:
-        self.on_event(Event(kind, self.bench.now(), data))
+        self._listener(Event(kind, self.at, data))
 
     def _take_over(self, why: str) -> None:
         """The runner is dead and reaped: off on all links, and the proof. Tried again for a while: it matters."""
@@ -217,6 +268,7 @@ class Supervisor:
                 self._tell("notice", text=f"off is not proved yet: {error}")
                 if self.wall.now() >= until:
                     raise
+                self.tick()
                 self.wall.wait(self.wall.now() + BOUNDS["take_over_pause_s"])
             else:
                 self._tell("off", proved=True, took_s=done.took_s)
@@ -240,10 +292,8 @@ class Supervisor:
                 remedy=f"Look into {self.folder / LOG}, then resume the run; the drive is off",
                 topic="unattended",
             )
-        self._tell("notice", text=f"the runner is started again from the logbook ({self.in_a_row} in a row)")
-
-
-_NOTHING = object()
+        again = "" if self.in_a_row == 1 else f", for the {self.in_a_row}. time with no hold done between"
+        self._tell("notice", text=f"the runner is started again from the logbook{again}")
 
 
 def runner_command(folder: Path, attended: bool) -> Command:
@@ -251,7 +301,8 @@ def runner_command(folder: Path, attended: bool) -> Command:
 
     def command(because: str) -> list[str]:
         line = [sys.executable, "-P", "-m", "sweeprig.conduct.runner", str(folder)]
-        return line + (["--attended"] if attended else []) + (["--because", because] if because else [])
+        why = because.replace("\0", " ")[:_MOST_WHY]  # what an instrument had said may be in it
+        return line + (["--attended"] if attended else []) + ([f"--because={why}"] if why else [])
 
     return command
 

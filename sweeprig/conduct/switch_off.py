@@ -34,6 +34,8 @@ def switch_off(rig: OpenRig, supply_too: bool = True) -> Off:
         rig.guard.drive_off()
     silent = {name: str(result.error) for name, result in results.items() if result.error is not None}
     told = tuple(name for name, result in results.items() if result.error is None)
+    if told and supply_too and not silent:
+        rig.off_confirmed_at = rig.clock.now()
     return Off(told, silent, rig.clock.now() - began)
 
 

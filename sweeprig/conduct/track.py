@@ -54,6 +54,13 @@ class Track:
             self.revolutions += speed / 60.0 * (now - self._upto)
         self._upto = now
 
+    def forget(self, speed_rpm: float) -> None:
+        """The latest speed of this value was no data."""
+        for place in range(len(self.speeds) - 1, -1, -1):
+            if self.speeds[place][1] == speed_rpm:
+                del self.speeds[place]
+                return
+
     def _stop(self, now: float, gap: float, age: float) -> None:
         """The first longer gap. When edges came again in the same window, all that is known is the window."""
         if age >= gap:

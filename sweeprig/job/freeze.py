@@ -11,7 +11,7 @@ from itertools import product
 from sweeprig.holds import Condition
 from sweeprig.job.models import Job
 from sweeprig.job.sweep_models import Deadline, Sweep
-from sweeprig.plan import CurvePlan, Plan, RunIn, SettlePlan, StallPlan, StartPlan
+from sweeprig.plan import CurvePlan, HeatPlan, Plan, RunIn, SettlePlan, StallPlan, StartPlan
 
 LOWEST_CURVE_DUTY = 2.0
 """%: where a curve given by `points` ends unless the sweep says otherwise. Below, no motor we know turns."""
@@ -54,6 +54,9 @@ def freeze(job: Job, session: int = 1, began_utc: float | None = None) -> Plan:
         deadline_utc=deadline,
         session=session,
         by_hand=_by_hand(sweep),
+        heat=HeatPlan(
+            motor.locked_rotor_time, motor.cooling_time, job.limits().locked_rotor_time, motor.maximum_voltage
+        ),
         extra={} if hours is None else {"deadline_hours": hours},
     )
 

@@ -57,6 +57,8 @@ class Motor(Strict):
     kind                   `brushed`, or `with_electronics` (a fan with its own commutation inside)
     longest_time_constant  of speed after a step of duty, mechanical or electrical, s; an estimate on the long side
     locked_rotor_time      longest time it may stand still with the drive on at maximum voltage, s
+    cooling_time           time constant with which the winding cools at rest, s; the default is common practice for
+                           small motors, no source
     longest_restart_time   kind `with_electronics`: longest pause before it tries to start again by itself, s
     """
 
@@ -74,6 +76,7 @@ class Motor(Strict):
     longest_time_constant: Annotated[
         float, Amount("s", 0.001, 600.0, "Holds last at least five time constants, and holds must end")
     ]
+    cooling_time: Annotated[float, Amount("s", 1.0, 7200.0, "A winding cools in seconds to hours")] = 120.0
     longest_restart_time: _Time | None = None
     maximum_duty: (
         Annotated[float, Amount("%", 0.0, 100.0, "Duty is the on-time in percent of the period", above=True)] | None

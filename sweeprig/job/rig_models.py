@@ -59,6 +59,19 @@ def _read_role(name: str) -> str:
     return name
 
 
+def _read_acknowledged(text: str) -> str:
+    """A name and a date: somebody stands for it, and one can see how long ago."""
+    name, _, date = text.rpartition(",")
+    try:
+        dt.date.fromisoformat(date.strip())
+    except ValueError:
+        date = ""
+    if not name.strip() or not date:
+        allowed = "a name, a comma and a date such as 2026-03-02"
+        raise problem("this does not say who acknowledged the cautions, and when", text, allowed, "Write both")
+    return text
+
+
 def _read_plus(value: object) -> Measure:
     measure = read_measure(value)
     if measure < 0:
@@ -197,7 +210,10 @@ class Limits(Strict):
 
 
 class Rig(Strict):
-    """A rig. `rate` is written by a served simulated bench only: so many bench seconds pass in one real second."""
+    """A rig. `rate` is written by a served simulated bench only: so many bench seconds pass in one real second.
+
+    cautions_acknowledged   who has seen to the cautions of the manual's `safety` on this rig, and when: "name, date"
+    """
 
     name: Annotated[str, Words(80)]
     drive_kind: Literal["power_switch", "control_input"]
@@ -210,6 +226,7 @@ class Rig(Strict):
         | None
     ) = None
     drive_step: Annotated[float, Amount("%", 0.0, 10.0, "One step of the commanded duty", above=True)] | None = None
+    cautions_acknowledged: Annotated[str, Words(120), AfterValidator(_read_acknowledged)] | None = None
     rate: Annotated[float, Number(1.0, 1000.0, "Bench seconds in one real second")] | None = None
     pwm_timer: PwmTimer | None = None
     limits: Limits

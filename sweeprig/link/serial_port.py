@@ -58,6 +58,12 @@ def stable_name(device: str, folders: Sequence[Path]) -> str:
     return device
 
 
+def stable_address(address: str) -> str:
+    """The address with the stable name of its port, where there is one now: for processes that come later."""
+    device, _ = parse_address(address)
+    return address.replace(device, stable_name(device, STABLE_NAMES), 1)
+
+
 class SerialLink(BaseLink):
     """One serial port, 8 data bits, no parity, 1 stop bit. The name is resolved anew at each opening.
 

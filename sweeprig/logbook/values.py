@@ -11,6 +11,7 @@ import json
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from functools import lru_cache
 from pathlib import Path
 from typing import Any, NamedTuple
 
@@ -141,15 +142,21 @@ def condition_to_json(condition: Condition) -> Json:
 
 
 def condition_from_json(data: Mapping[str, Any]) -> Condition:
-    """KeyError or ValueError where `data` is no condition."""
-    return Condition(
-        pwm_hz=as_number(data["pwm_hz"]),
-        supply_v=as_number(data["supply_v"]),
-        direction=as_text(data["direction"]),
-        load=as_text(data["load"]),
-        thermal=as_text(data["thermal"]),
-        freewheel=as_text(data["freewheel"]),
+    """KeyError or ValueError where `data` is no condition. Equal conditions are one object: the schedule looks them up
+    by the thousand, and an object that it has met costs it next to nothing."""
+    return _shared(
+        as_number(data["pwm_hz"]),
+        as_number(data["supply_v"]),
+        as_text(data["direction"]),
+        as_text(data["load"]),
+        as_text(data["thermal"]),
+        as_text(data["freewheel"]),
     )
+
+
+@lru_cache(maxsize=256)
+def _shared(pwm_hz: float, supply_v: float, direction: str, load: str, thermal: str, freewheel: str) -> Condition:
+    return Condition(pwm_hz, supply_v, direction, load, thermal, freewheel)
 
 
 def hold_to_json(hold: Hold) -> Json:

@@ -127,6 +127,7 @@ FLAGS: dict[str, str] = {
     "undecided_left_out": "holds without a decided verdict were left out",
     "stepping_left_out": "holds in which the rotor crept in steps were left out",
     "always_stopped": "every hold tried ended in a stop: a bound, not a value",
+    "highest_duty_missing": "the highest duty of the sweep gave no speed: more may be possible",
     "tail_not_tried": "no hold was made where failures are rare: the law carries the interval",
     "few_failures": "rests on few failures",
     "few_successes": "rests on few successes",

@@ -2,6 +2,7 @@
 
 Total: a sensible answer to any history, also one it would not have produced. It never replays or checks old decisions.
 Within a session: zero check, run-in; then for each condition the curve falling and rising, stall trials, start trials.
+Before a hold in which the rotor may lock, a rest where the winding's heat asks for it.
 """
 
 from __future__ import annotations
@@ -22,6 +23,7 @@ from sweeprig.holds import (
     Verdict,
 )  # fmt: skip
 from sweeprig.plan import CurvePlan, Plan, StallPlan, StartPlan
+from sweeprig.schedule.heat import rest_before
 from sweeprig.schedule.ladder import next_duty, on_grid
 from sweeprig.schedule.tally import STRIKES, Tallies, Tally, tallies
 
@@ -42,7 +44,10 @@ def next_hold(plan: Plan, outcomes: Sequence[Outcome], now: float) -> Decision:
     first = plan.conditions[0] if wanted is None else wanted.condition
     if wanted is not None and plan.by_hand and plan.set_by_hand(first) != plan.hands:
         return _hands(plan, first)
-    return _opening(plan, past, number, first) or wanted or Finished("every hold that the sweep asks for is done")
+    hold = _opening(plan, past, number, first) or wanted
+    if plan.heat is not None and isinstance(hold, Hold):
+        return rest_before(hold, outcomes, plan.heat, now) or hold
+    return hold or Finished("every hold that the sweep asks for is done")
 
 
 def _wanted(plan: Plan, past: Tallies, number: int) -> Hold | None:

@@ -35,7 +35,8 @@ _INSTEAD = {
 
 @dataclass(frozen=True, slots=True)
 class Preview:
-    """holds: predicted number by purpose; seconds: predicted bench time; can / cannot: what this rig gives and lacks,
+    """holds: predicted number by purpose; seconds: predicted bench time, rest_s of it with the drive off so that the
+    winding cools; can / cannot: what this rig gives and lacks,
     in words; persons: what needs a person; guesses: what the prediction assumes."""
 
     holds: dict[str, int]
@@ -44,6 +45,7 @@ class Preview:
     cannot: tuple[str, ...]
     persons: tuple[str, ...]
     guesses: tuple[str, ...]
+    rest_s: float = 0.0
 
 
 def preview(
@@ -76,7 +78,8 @@ def preview(
         "every curve point settled half-way between its shortest and longest time",
     )
     counts = Counter(str(outcome.hold.purpose) for outcome in outcomes)
-    return Preview(dict(counts), clock, can, cannot, tuple(persons), guesses)
+    rest_s = sum(outcome.exposed_s for outcome in outcomes if outcome.hold.purpose is Purpose.REST)
+    return Preview(dict(counts), clock, can, cannot, tuple(persons), guesses, rest_s)
 
 
 def _what_can_be_found(plan: Plan) -> tuple[tuple[str, ...], tuple[str, ...]]:

@@ -15,7 +15,7 @@ from sweeprig.characterise import ConditionFindings, Findings, characterise, fin
 from sweeprig.characterise.findings import FINDING_NAMES, RANGE_NAMES
 from sweeprig.errors import ConfigError
 from sweeprig.holds import Approach, Condition, Hold, Outcome, Purpose, Status, Verdict
-from sweeprig.plan import Plan
+from sweeprig.plan import CurvePlan, Plan
 
 ABOUT = {"job_hash": "ab12", "simulated": True, "motor": {"name": "fan"}, "rig": "bench", "software": "0.1"}
 MakeOutcome = Callable[..., Outcome]
@@ -45,6 +45,21 @@ def test_night_gives_the_findings_it_supports(plan: Plan, night: list[Outcome]) 
     assert found.finding("top_speed_rpm").value == pytest.approx(4000.0)
     assert (found.hold_time_s, found.start_time_s, found.rest_time_s) == (20.0, 3.0, 5.0)
     assert set(found.speed_curve.branch) == {"falling", "rising"}
+
+
+def test_a_night_without_its_highest_duty_says_so(plan: Plan, night: list[Outcome]) -> None:
+    """A curve whose highest duty gave no speed (discarded each time) does not pass the next one's speed for the motor's
+    top speed: what ends at the top is flagged, and nothing is where the duty was measured."""
+    names = ("top_speed_rpm", "high_duty_percent", "high_speed_rpm", "turndown")
+    asked = sorted({one.hold.duty_percent for one in night if one.hold.purpose is Purpose.CURVE})
+    top = asked[-1]
+    plan = replace(plan, curve=CurvePlan(tuple(asked), 2.0, 20.0))
+    whole = of(plan, night)
+    without = of(plan, [o for o in night if o.hold.purpose is not Purpose.CURVE or o.hold.duty_percent < top])
+    for name in names:
+        assert "highest_duty_missing" not in whole.finding(name).flags
+        assert "highest_duty_missing" in without.finding(name).flags
+    assert "highest_duty_missing" not in without.finding("stall_speed_rpm").flags
 
 
 @pytest.mark.parametrize("shift", [-3.0, 0.7, 20.0])

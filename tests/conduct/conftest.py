@@ -12,14 +12,17 @@ from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
 from pathlib import Path
 from types import FrameType
-from typing import Any, NamedTuple
+from typing import Any, NamedTuple, cast
 
 import pytest
 
 import sweeprig.simbench
+from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.conduct.states import Event, Orders
+from sweeprig.holds import Outcome, Purpose, Status
 from sweeprig.launch import Launched, resume, start
 from sweeprig.logbook import Logbook
+from sweeprig.opened import open_run
 from sweeprig.simbench import Bench
 
 MOMENTS: Mapping[str, str] = {
@@ -227,6 +230,50 @@ class Bed:
         return (
             max((happened.at for happened in self.bench.record if happened.what == "drive_off"), default=since) - since
         )
+
+    def add_fault(self, start: float, kind: str, instrument: str, **more: str) -> None:
+        """One more fault of the simulated rig, by bench time, s. Before the run is started."""
+        lines = [f'kind = "{kind}"', f'start = "{start:g} s"', f'instrument = "{instrument}"']
+        lines += [f'{key} = "{value}"' for key, value in more.items()]
+        with (self.job.parent / "shelter-bench.toml").open("a", encoding="utf-8") as rig:
+            rig.write("\n[[simulated_faults]]\n" + "\n".join(lines) + "\n")
+
+    def told(self, kind: str, **data: object) -> list[Event]:
+        """The events of a kind with these data, so far."""
+        return [one for one in self.events if one.kind == kind and all(one.data.get(key) == data[key] for key in data)]
+
+    @property
+    def outcomes(self) -> list[Outcome]:
+        return open_run(self.path).outcomes
+
+    def whole(self) -> list[Outcome]:
+        """The outcomes of a run that has done its sweep: numbered without a gap, every hold concluded, off."""
+        run = open_run(self.path)
+        assert run.unfinished == []
+        assert [outcome.number for outcome in run.outcomes] == list(range(1, len(run.outcomes) + 1))
+        done = [outcome.hold.purpose for outcome in run.outcomes if outcome.status is Status.DONE]
+        assert [done.count(purpose) for purpose in (Purpose.CURVE, Purpose.STALL, Purpose.START)] == [6, 4, 4]
+        self.assert_off()
+        return run.outcomes
+
+    def assert_off(self) -> None:
+        assert not self.drive_is_on()
+        assert not self.supply_is_on()
+
+    def nothing_on_between(self, begin: float, end: float) -> bool:
+        return not any(one.what.endswith("_on") and begin < one.at < end for one in self.bench.record)
+
+
+@pytest.fixture
+def short(monkeypatch: pytest.MonkeyPatch) -> Callable[..., None]:
+    """`short(park_first_s=5)`: a bound for this test only."""
+
+    def patch(**bounds: float) -> None:
+        for name, value in bounds.items():
+            assert name in BOUNDS
+            monkeypatch.setitem(cast(dict[str, float], BOUNDS), name, value)
+
+    return patch
 
 
 @pytest.fixture(scope="session")

@@ -88,8 +88,8 @@ def goes_on_whole(bed: Bed) -> None:
 
 @pytest.mark.parametrize("moment", MOMENTS)
 def test_an_interrupt_at_an_exchange(make_bed: MakeBed, logs: Logs, moment: str) -> None:
-    """Interrupted just before or just after a message reaches an instrument: drive and supply are off when the error
-    comes out, and the run goes on whole."""
+    """Row D2: Interrupted just before or just after a message reaches an instrument: drive and supply are off when the
+    error comes out, and the run goes on whole."""
     for index, exchange in enumerate(draw(make_bed, logs, moment, 2 * TIMES)):
         bed = make_bed()
         bed.faults = dict(A_LOST_REPLY)
@@ -336,7 +336,7 @@ def test_an_opening_that_fails_switches_off(make_bed: MakeBed, name: str) -> Non
 
 
 def test_another_instrument_at_a_resume_is_left_off(make_bed: MakeBed, monkeypatch: pytest.MonkeyPatch) -> None:
-    """A resume that is refused because another meter answers: a drive that was left on is off."""
+    """Row B13: A resume that is refused because another meter answers: a drive that was left on is off."""
     bed = make_bed()
     bed.start()
 

@@ -86,8 +86,8 @@ def one_each(log: list[Exchange], rng: random.Random) -> list[Exchange]:
 
 @pytest.mark.parametrize("fault", FAULTS)
 def test_one_fault_of_each_instrument(make_bed: MakeBed, logs: Logs, fault: str) -> None:
-    """Each instrument suffers the fault once, at a seeded exchange of any moment: the run ends by itself with the sweep
-    done, no wrong verdict counts, every discarded hold says why, and drive and supply are off."""
+    """Row C17: Each instrument suffers the fault once, at a seeded exchange of any moment: the run ends by itself with
+    the sweep done, no wrong verdict counts, every discarded hold says why, and drive and supply are off."""
     calm = undisturbed(make_bed, logs)
     rng = random.Random(f"{SEED} {fault}")
     for _ in range(TIMES):
@@ -175,13 +175,19 @@ def restarted_in(bed: Bed, name: str, purpose: Purpose) -> Outcome:
 @pytest.mark.parametrize("purpose", [Purpose.ZERO, Purpose.CURVE, Purpose.STALL])
 @pytest.mark.parametrize(
     ("name", "setting"),
-    [("board", b"SYST:COMM:TIM 2000\n"), ("supply", b"SOUR:VOLT 12\n"), ("meter", b"SENS:VOLT:DC:APER 0.2\n")],
+    [
+        ("board", b"SYST:COMM:TIM 2000\n"),
+        ("supply", b"SOUR:VOLT 12\n"),
+        ("meter", b"SENS:VOLT:DC:APER 0.2\n"),
+        ("scope", b"*CLS\n"),
+    ],
 )
 def test_a_restart_discards_the_hold(
     make_bed: MakeBed, logs: Logs, name: str, setting: bytes, purpose: Purpose
 ) -> None:
-    """An instrument that restarts in a hold, also with the drive off, has lost its settings: that hold alone is
-    discarded, with the instrument's name, and the settings are applied again before the next one."""
+    """Row A17: An instrument that restarts in a hold, also with the drive off, has lost its settings: that hold alone
+    is discarded, with the instrument's name, and the settings are applied again before the next one. A scope, of
+    which nothing is set, is known by its power-on bit."""
     bed = make_bed()
     hold = restarted_in(bed, name, purpose)
     assert (hold.status, hold.verdict) == (Status.DISCARDED, Verdict.UNDECIDED)

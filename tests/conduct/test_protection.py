@@ -4,7 +4,9 @@ from __future__ import annotations
 
 import math
 
-from sweeprig.conduct.protection import Above, Guard, LockedRotor
+import pytest
+
+from sweeprig.conduct.protection import NO_LIMIT, Above, Commanded, Guard, LockedRotor, Policies
 from sweeprig.quantities import Reading
 
 
@@ -108,3 +110,74 @@ def test_a_reading_that_says_nothing_keeps_no_channel_alive() -> None:
         watch.take(reading("meter.amps", None, 11.5, (flag,)))
         trip = watch.check(12.0)
         assert (trip is not None and trip.rule == "no_reading") is trips
+
+
+def test_policies_are_put_together() -> None:
+    """`a | b` is both, in either order and with more; what one of them sees trips."""
+    low, high = Above("low", "meter.amps", 1.0), Above("high", "meter.amps", 2.0)
+    locked = LockedRotor("tacho.edge_age", 6.0)
+    for both in (low | high | locked, Policies((low,)) | (high | locked), low | (high | locked)):
+        assert tuple(both) == (low, high, locked)
+    watch = Guard(low | locked)
+    watch.drive_on(0.0)
+    watch.take(reading("meter.amps", 1.5, 0.1))
+    trip = watch.check(0.1)
+    assert trip is not None
+    assert trip.rule == "low"
+
+
+def test_limits_are_finite_unless_it_is_written_out() -> None:
+    """A policy that is given a limit only trips on silence too; one that may be silent for ever says so."""
+    watch = Guard([Above("over_current", "meter.amps", 1.5)])
+    watch.drive_on(0.0)
+    assert watch.due < math.inf
+    watch = Guard([Above("over_current", "meter.amps", 1.5, NO_LIMIT)])
+    watch.drive_on(0.0)
+    assert watch.due == math.inf
+
+
+def test_the_debounce_counts_seconds_too() -> None:
+    """Readings in a row that lie closer together than the debounce time are one spike."""
+    watch = Guard([Above("over_current", "meter.amps", 1.5, 2.0, debounce=2, debounce_s=0.2)])
+    watch.drive_on(0.0)
+    for at in (0.10, 0.15, 0.25):
+        watch.take(reading("meter.amps", 9.0, at))
+        assert watch.check(at) is None
+    watch.take(reading("meter.amps", 9.0, 0.31))
+    trip = watch.check(0.31)
+    assert trip is not None
+    assert (trip.at, trip.readings[0].at, trip.readings[-1].at) == (0.31, 0.10, 0.31)
+
+
+def test_a_trip_of_the_clock_is_due_when_it_is_due() -> None:
+    """Its moment is when the age ran out, not when somebody looked; the last reading is its evidence; silence discards
+    the hold, a locked rotor ends the run."""
+    watch = guard()
+    watch.drive_on(10.0)
+    watch.take(reading("meter.amps", 0.1, 11.0))
+    trip = watch.check(13.4)
+    assert trip is not None
+    assert (trip.rule, trip.at, trip.ends_run) == ("no_reading", 13.0, False)
+    assert [each.at for each in trip.readings] == [11.0]
+    watch = Guard([LockedRotor("tacho.edge_age", 6.0)])
+    watch.drive_on(10.0)
+    trip = watch.check(16.5)
+    assert trip is not None
+    assert (trip.rule, trip.at, trip.ends_run) == ("locked_rotor", 16.0, True)
+
+
+def test_off_is_what_is_commanded_then() -> None:
+    """When the drive goes off the guard knows it, and what the supply is set to stays."""
+    watch = guard()
+    watch.command(Commanded(True, 60.0, 1000.0, 12.0, 1.0))
+    watch.drive_off()
+    assert (watch.commanded.on, watch.commanded.supply_v) == (False, 12.0)
+
+
+@pytest.mark.parametrize("trips", [True, False])
+def test_a_value_at_its_limit_is_kept(trips: bool) -> None:
+    """Only what is above the limit trips."""
+    watch = Guard([Above("over_current", "meter.amps", 1.5)])
+    watch.drive_on(0.0)
+    watch.take(reading("meter.amps", 1.5 + (1e-9 if trips else 0.0), 0.1))
+    assert (watch.check(0.1) is not None) is trips

@@ -61,6 +61,9 @@ tolerance = "2 %"
 DATA = (Purpose.CURVE, Purpose.STALL, Purpose.START)
 """Purposes of which each hold is asked for once; zero check and run-in belong to every session."""
 
+INTERRUPTS = 10
+"""Of an error with everything still in reach every so-many-th message is enough: the loop above it is the same."""
+
 Where = Literal["exchange", "interrupt", "before", "after"]
 
 
@@ -144,7 +147,7 @@ def ending_at(point: Point | None, benches: list[Bench], counts: Counts) -> Iter
             raise Killed
 
     sweeprig.simbench.build = built
-    Logbook._transaction = commit  # type: ignore[method-assign]  # put back below
+    Logbook._transaction = commit  # type: ignore[method-assign, assignment]  # put back below
     try:
         yield
     finally:
@@ -231,11 +234,16 @@ ASKED = {Purpose.CURVE: 6, Purpose.STALL: 4, Purpose.START: 4}
 
 
 def points(every: int = 1, first: int = 0) -> list[Point]:
-    """All of them, or every so-many-th."""
+    """All of them (of the interrupts every tenth), or every so-many-th of these."""
     counts, found = calm()
     assert found == ASKED, found
-    whole = [Point(where, k) for where in ("exchange", "interrupt") for k in range(1, counts.exchanges + 1)]  # type: ignore[arg-type]  # its own words
-    whole += [Point(where, k) for where in ("before", "after") for k in range(1, counts.commits + 1)]  # type: ignore[arg-type]  # its own words
+    messages, commits = range(1, counts.exchanges + 1), range(1, counts.commits + 1)
+    whole = [
+        *(Point("exchange", k) for k in messages),
+        *(Point("interrupt", k) for k in messages[::INTERRUPTS]),
+        *(Point("before", k) for k in commits),
+        *(Point("after", k) for k in commits),
+    ]
     return whole[first % every :: every]
 
 

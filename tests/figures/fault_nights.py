@@ -20,13 +20,7 @@ from contextlib import contextmanager, suppress
 from dataclasses import dataclass, field
 from functools import partial
 from pathlib import Path
-from typing import Any
-
-sys.path.insert(0, str(Path(__file__).parent))  # also in processes that are started afresh, and from the tests
-
-import night_faults
-import night_numbers
-from night_faults import KINDS, Night
+from typing import TYPE_CHECKING, Any
 
 import sweeprig.simbench
 from sweeprig.conduct.bounds import BOUNDS
@@ -38,6 +32,15 @@ from sweeprig.launch import start
 from sweeprig.opened import Run, open_run
 from sweeprig.simbench.bench import Bench
 from sweeprig.simbench.many import many
+
+if TYPE_CHECKING:
+    from tests.figures import night_faults, night_numbers
+    from tests.figures.night_faults import KINDS, Night
+else:
+    sys.path.insert(0, str(Path(__file__).parent))  # also in processes that are started afresh, and from the tests
+    import night_faults
+    import night_numbers
+    from night_faults import KINDS, Night
 
 NIGHTS, HEALTHY, REFERENCES = 1000, 50, 12
 FIRST_HEALTHY, FIRST_REFERENCE = 1_000_000, 2_000_000
@@ -52,12 +55,18 @@ FORGIVEN = ("cr_lf", "double_terminator", "extra_terminator", "minimum_gap", "co
             "standing_error", "local_mode", "split_reply", "dribble", "busy", "link_limit", "brush_bounce")  # fmt: skip
 """Kinds that need not end a hold: the time to off counts from another one, where there is one."""
 
-FOR_A_SUSPICION: Mapping[str, str] = {
-    "broken_tach_wire": "no edges from a motor that turns look like a motor that stopped",
-    "loose_coupling": "a wheel that runs down on a turning shaft looks like a motor that stops",
+_LAWS = tuple(name for name, kind in KINDS.items() if not kind.plant)
+"""Motors that are laws: no back-EMF shows in their current whether they turn."""
+_PLANTS = tuple(name for name, kind in KINDS.items() if kind.plant)
+FOR_A_SUSPICION: Mapping[str, tuple[tuple[str, ...], str]] = {
+    "broken_tach_wire": (_LAWS, "no edges from a motor that turns look like a motor that stopped"),
+    "loose_coupling": (_LAWS, "a wheel that runs down on a turning shaft looks like a motor that stops"),
+    "motor_overheats": (_PLANTS, "a bearing that binds makes it another motor: what is found is what that one does"),
+    "switch_open": (("input",), "an input that nothing pulls looks like a fan that knows no speed but its highest"),
+    "switch_short": (("input",), "an input that is pulled all the time looks like a fan that knows no other speed"),
 }
-"""Kinds of fault that no single night can tell from another motor, and why. Counted apart until a suspicion shows them;
-gated from then on."""
+"""Fault → (benches, why): what nothing in such a night tells from another motor. Counted apart until a suspicion shows
+it; gated from then on."""
 
 
 @dataclass
@@ -156,12 +165,14 @@ def _truth(kind: str, pair: tuple[int, int]) -> dict[str, Any]:
     del pair
     with tempfile.TemporaryDirectory() as name:
         job = load(night_faults.write_job(Night(1, kind), Path(name)))
-        return truth_of(job, night_numbers.TRIALS, workers=1, rare_trials=0)["conditions"][0]
+        return dict(truth_of(job, night_numbers.TRIALS, workers=1, rare_trials=0)["conditions"][0])
 
 
-def references(kinds: Sequence[str], workers: int | None) -> dict[str, night_numbers.Reference]:
-    """What is true on each of these benches."""
-    nights = [Night(FIRST_REFERENCE + number, kind) for kind in kinds for number in range(REFERENCES)]
+def references(
+    kinds: Sequence[str], workers: int | None, count: int = REFERENCES
+) -> dict[str, night_numbers.Reference]:
+    """What is true on each of these benches, with so many healthy nights for each."""
+    nights = [Night(FIRST_REFERENCE + number, kind) for kind in kinds for number in range(count)]
     tolds = many(_lived, nights, 0, workers)
     truths = many(_truth, list(kinds), 0, workers)
     return {
@@ -258,8 +269,8 @@ def all_nights(count: int, workers: int | None = None) -> tuple[list[Told], list
 
 
 def for_a_suspicion(told: Told) -> bool:
-    """Wrong, and by a fault that no single night can tell."""
-    return bool(told.wrong) and any(kind in FOR_A_SUSPICION for kind in told.acted)
+    """Wrong, and by a fault that nothing in such a night can tell."""
+    return bool(told.wrong) and any(told.kind in FOR_A_SUSPICION.get(fault, ((), ""))[0] for fault in told.acted)
 
 
 def figures(full: bool, count: int | None = None, workers: int | None = None) -> Iterator[dict[str, Any]]:
@@ -268,7 +279,8 @@ def figures(full: bool, count: int | None = None, workers: int | None = None) ->
     wrong = [told for told in (*struck, *healthy) if told.wrong and not for_a_suspicion(told)]
     yield _none("nights_wrong_number", wrong, len(struck) + len(healthy))
     later = [told for told in struck if for_a_suspicion(told)]
-    yield {"figure": "nights_for_a_suspicion", "value": len(later), "kinds": dict(FOR_A_SUSPICION), "n": count,
+    why = {fault: words for fault, (_, words) in FOR_A_SUSPICION.items()}
+    yield {"figure": "nights_for_a_suspicion", "value": len(later), "why": why, "n": count,
            "nights": [_shown(told) for told in later]}  # fmt: skip
     yield _none("nights_drive_left_on", [told for told in (*struck, *healthy) if told.left_on], len(struck))
     yield _none("nights_healthy_disturbed", [told for told in healthy if told.disturbed], len(healthy))

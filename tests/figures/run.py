@@ -14,15 +14,18 @@ from importlib import import_module
 from typing import Any
 
 GROUPS = ("startup", "search", "conduct", "night", "findings", "physics", "truth", "unattended", "fuzz", "serve")
+MORE = {"unattended": ("fault_nights", "crash_points", "stress")}
+"""Modules of a group beside the one of its name."""
 
 
 def measured(name: str, full: bool) -> Iterator[dict[str, Any]]:
-    """The figures of a group: a module of this folder, which is on the path because this script lies in it."""
-    began = time.perf_counter()
-    for figure in import_module(name).figures(full):
-        figure["seconds"] = round(time.perf_counter() - began, 1)
-        yield figure
+    """The figures of a group: modules of this folder, which is on the path because this script lies in it."""
+    for module in (name, *MORE.get(name, ())):
         began = time.perf_counter()
+        for figure in import_module(module).figures(full):
+            figure["seconds"] = round(time.perf_counter() - began, 1)
+            yield figure
+            began = time.perf_counter()
 
 
 def main() -> None:

@@ -21,7 +21,7 @@ from itertools import pairwise
 from pathlib import Path
 from typing import Any
 
-from sweeprig.holds import Outcome
+from sweeprig.holds import Outcome, Status
 from sweeprig.opened import open_run
 
 kit: Any = import_module("killing")
@@ -53,7 +53,8 @@ class Tally:
     lost: int = 0
     doubled: int = 0
     unbroken: dict[str, Any] = field(default_factory=dict)
-    findings: list[dict[str, Any]] = field(default_factory=list)
+    findings: list[tuple[dict[str, Any], int]] = field(default_factory=list)
+    """Of each run that came to its end: what it found, and how many settings it had passed over."""
     start_s: list[float] = field(default_factory=list)
     troubles: list[str] = field(default_factory=list)
 
@@ -151,8 +152,20 @@ class Chain:
         self.tally.lost += sum(after.get(number) != outcome for number, outcome in before.items())
         self.tally.lost += len(run.unfinished)
         self.tally.doubled += len(run.outcomes) - len(after)
-        self.tally.findings.append(findings(folder))
+        self.tally.findings.append((findings(folder), passed_over(run.outcomes)))
         self.tally.left_on += self.bench.is_on()
+
+
+def passed_over(outcomes: list[Outcome]) -> int:
+    """Settings of which no hold was done, though three or more were begun: kills had hit each of them."""
+    begun, done = Counter[Any](), set[Any]()
+    for outcome in outcomes:
+        hold = outcome.hold
+        setting = (hold.purpose, hold.approach, hold.condition, hold.duty_percent)
+        begun[setting] += 1
+        if outcome.status is Status.DONE:
+            done.add(setting)
+    return sum(count >= 3 and setting not in done for setting, count in begun.items())
 
 
 def ratios(whole: dict[str, Any], killed: dict[str, Any]) -> list[float]:
@@ -209,6 +222,11 @@ def figures(full: bool) -> Iterator[dict[str, Any]]:
             thread.start()
         for thread in threads:
             thread.join()
+    yield from told(tally)
+
+
+def told(tally: Tally) -> Iterator[dict[str, Any]]:
+    """The tally as figures."""
     n = tally.kills.total()
     for trouble in tally.troubles:
         print(trouble, file=sys.stderr)
@@ -230,9 +248,13 @@ def figures(full: bool) -> Iterator[dict[str, Any]]:
         len(tally.off_s["both"]),
     )
     yield figure("kill_off_by_heartbeat", tally.by_heartbeat, "", None, sum(map(len, tally.off_s.values())))
-    found = [ratio for killed in tally.findings if tally.unbroken for ratio in ratios(tally.unbroken, killed)]
-    ratio = max(found, default=math.nan)
-    yield figure("kill_findings_over_u", round(ratio, 2), "<= 4", ratio <= 4.0, len(found))
+    for key, most in (("kill_findings_over_u", math.inf), ("kill_findings_over_u_nothing_passed_over", 0)):
+        runs = [killed for killed, passed in tally.findings if passed <= most and tally.unbroken]
+        found = [ratio for killed in runs for ratio in ratios(tally.unbroken, killed)]
+        ratio = max(found, default=math.nan)
+        yield figure(key, round(ratio, 2), "<= 4", ratio <= 4.0, len(found))
+    passed = sum(passed > 0 for _, passed in tally.findings)
+    yield figure("kill_runs_with_settings_passed_over", passed, "", None, len(tally.findings))
     yield figure(
         "kill_next_runner_s", round(sum(tally.start_s) / (len(tally.start_s) or 1), 2), "", None, len(tally.start_s)
     )

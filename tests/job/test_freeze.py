@@ -13,7 +13,7 @@ from hypothesis import strategies as st
 from sweeprig.job import freeze, load, shipped
 from sweeprig.job.amounts import ANY_UNITS, exact_text
 from sweeprig.job.freeze import board_step_percent, curve_duties
-from sweeprig.plan import RunIn
+from sweeprig.plan import HeatPlan, RunIn
 from sweeprig.quantities import UNITS, parse_quantity
 
 Spoil = Callable[[str, str, str], None]
@@ -134,3 +134,11 @@ def test_written_quantities_read_back_exactly(value: float, unit: str) -> None:
 def test_units_of_amounts_include_all_units_of_readings() -> None:
     """What a reading can be in, an accuracy can be stated in."""
     assert set(UNITS) <= set(ANY_UNITS)
+
+
+def test_the_budget_of_locked_rotor_heat(configs: Path, spoil: Spoil) -> None:
+    """The motor's own locked-rotor time is the budget, the lower one of rig and motor bounds each hold; cooling takes
+    120 s unless the motor file says otherwise."""
+    assert freeze(load(configs / "demo.toml")).heat == HeatPlan(30.0, 120.0, 12.0, 13.5)
+    spoil("motors/aspirator-fan.toml", "locked_rotor_time =", 'cooling_time = "5 min"\nlocked_rotor_time =')
+    assert freeze(load(configs / "demo.toml")).heat == HeatPlan(30.0, 300.0, 12.0, 13.5)

@@ -12,8 +12,9 @@ import serial
 
 from sweeprig.clock import SystemClock
 from sweeprig.errors import ConfigError, LinkLost, LinkTimeout
+from sweeprig.link import serial_port
 from sweeprig.link.registry import open_link
-from sweeprig.link.serial_port import SerialLink, parse_address, stable_name
+from sweeprig.link.serial_port import SerialLink, parse_address, stable_address, stable_name
 from sweeprig.link.together import together
 from sweeprig.roles import Ask, Reply, Steps
 
@@ -147,9 +148,12 @@ def test_a_node_without_a_stable_name_keeps_its_own(pty_far: PtyFar, clock: Syst
     (tmp_path / "dangling").symlink_to(tmp_path / "nowhere")
     assert stable_name(pty_far.device, (tmp_path / "none", tmp_path)) == pty_far.device
     link = SerialLink(pty_far.address, clock, stable_names=(tmp_path,))
-    for _ in range(2):
-        link.open(clock.now() + 1.0)
-        link.close()
+    link.open(clock.now() + 1.0)
+    (tmp_path / "later").symlink_to(pty_far.device)  # by now the node may be another device's
+    link.close()
+    link.open(clock.now() + 1.0)
+    assert link._device == pty_far.device
+    link.close()
 
 
 def test_the_better_folder_of_names_comes_first(pty_far: PtyFar, tmp_path: Path) -> None:
@@ -165,6 +169,15 @@ def test_the_better_folder_of_names_comes_first(pty_far: PtyFar, tmp_path: Path)
     own = tmp_path / "my-board"
     own.symlink_to(pty_far.device)
     assert stable_name(str(own), (better, other)) == str(own)
+
+
+def test_a_stable_address(pty_far: PtyFar, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Row C3: an address keeps its options and its form when the stable name takes the place of the node."""
+    monkeypatch.setattr(serial_port, "STABLE_NAMES", (tmp_path,))
+    assert stable_address(f"serial:{pty_far.device}?baud=9600") == f"serial:{pty_far.device}?baud=9600"
+    (tmp_path / "usb-board").symlink_to(pty_far.device)
+    assert stable_address(f"serial:{pty_far.device}?baud=9600") == f"serial:{tmp_path}/usb-board?baud=9600"
+    assert stable_address("serial:COM3") == "serial:COM3"
 
 
 def test_without_a_handle_the_clock_polls(clock: SystemClock, monkeypatch: pytest.MonkeyPatch) -> None:
