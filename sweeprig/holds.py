@@ -142,7 +142,7 @@ class Outcome:
 
 @dataclass(frozen=True, slots=True)
 class NeedsPerson:
-    """what, why: in words; hands: what will have been set by hand once it is done, None where the plan does not care."""
+    """what, why: in words; hands: what will be set by hand once it is done, None where the plan does not care."""
 
     what: str
     why: str

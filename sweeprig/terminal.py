@@ -81,7 +81,9 @@ class Lines:
         if event.kind == "trip":
             return f"TRIPPED: {data['evidence']}. The drive was switched off."
         if event.kind == "state" and data["state"] in ("parked", "waiting for a person"):
-            return f"{str(data['state']).upper()}: {data.get('reason', '')}"
+            wait_s = data.get("next_try_s")
+            again = f"; tried again in {show_time(wait_s)}" if isinstance(wait_s, float) else ""
+            return f"{str(data['state']).upper()}: {data.get('reason', '')}{again}"
         if event.kind == "off" and data.get("proved"):
             return "drive and supply off, and shown to be off"
         if event.kind == "link":

@@ -64,7 +64,7 @@ def _bring_back(rig: OpenRig, name: str, used: dict[str, int], look: Look) -> No
         used[name] = used.get(name, 0) + 1
         if used[name] > BOUNDS["heal_attempts"]:
             raise RigError(
-                f"{name}: the link was lost {used[name]} times with hardly a hold between and is given up",
+                f"{name}: the link was lost {used[name]} times with hardly a hold between",
                 value=link.dirty or "silent",
                 remedy="look at the cable and the instrument, then resume the run",
                 topic="links",

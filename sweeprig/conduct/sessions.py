@@ -192,8 +192,9 @@ class _Work:
                 f"the run was parked for {hours:.1f} h, the rig did not come back and is given up: {error.what}"
             )
             return False
+        reason = error.what if error.value is None else f"{error.what}: {error.value}"
         self.tell(
-            "state", state=State.PARKED.words, drive_may_be_on=False, reason=str(error), next_try_s=self.park_s
+            "state", state=State.PARKED.words, drive_may_be_on=False, reason=reason, next_try_s=self.park_s
         )  # fmt: skip
         until = now + self.park_s
         while self.clock.now() < until and not (self.orders.finish or self.orders.off_because()):

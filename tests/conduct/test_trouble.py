@@ -11,8 +11,7 @@ import pytest
 
 from sweeprig.conduct.rig import RigUse, open_rig
 from sweeprig.conduct.run import run
-from sweeprig.conduct.states import Ending
-from sweeprig.conduct.states import Event, Orders, State
+from sweeprig.conduct.states import Ending, Event, Orders, State
 from sweeprig.errors import DiskFull, RigError
 from sweeprig.holds import Outcome, Purpose, Status, Verdict
 from sweeprig.job import document, freeze, job_hash, load
@@ -94,7 +93,7 @@ def night(short_job: Path, tmp_path: Path) -> Night:
 
 @pytest.mark.parametrize("name", ["meter", "supply", "board"])
 def test_a_silent_instrument_is_brought_back(night: Night, name: str) -> None:
-    """Row A15: One unanswered exchange: the hold is discarded, the link brought back, off proved, the hold asked again."""
+    """Row A15: One unanswered exchange: hold discarded, link brought back, off proved, the hold asked again."""
     night.ports[name] = Silent(night.bench.ports[name], 150, 150)
     assert night.work().state is State.FINISHED
     discarded = [outcome for outcome in night.outcomes if outcome.status is Status.DISCARDED]
@@ -125,7 +124,7 @@ def test_an_instrument_gone_for_good_ends_the_run(night: Night) -> None:
 
 
 def test_the_heartbeat_stops_a_drive_that_nobody_feeds(night: Night) -> None:
-    """Row D2: With the board's line cut the drive goes off by itself within the heartbeat, in the bench's own record."""
+    """Row D2: With the board's line cut the drive goes off within the heartbeat, in the bench's own record."""
     night.ports["board"] = Silent(night.bench.ports["board"], 200, 10**9)
     with pytest.raises(RigError):
         night.work()
@@ -211,7 +210,7 @@ def pages(connection: sqlite3.Connection) -> int:
 
 
 def test_a_machine_that_slept_discards_the_hold(night: Night, monkeypatch: pytest.MonkeyPatch) -> None:
-    """Row D1: UTC that runs away from the monotonic clock: the hold is discarded, off is proved, and the run goes on."""
+    """Row D1: UTC that runs away from the monotonic clock: hold discarded, off proved, and the run goes on."""
     clock = night.bench.clock
     real, apart = clock.utc, [0.0]
     monkeypatch.setattr(clock, "utc", lambda: real() + apart[0])

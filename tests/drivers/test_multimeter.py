@@ -58,7 +58,7 @@ def test_a_window_shorter_than_the_aperture_is_one_reading(adapter: ScpiMultimet
     ],
 )
 def test_no_value_is_no_data_with_its_reason(adapter: ScpiMultimeter, meter: Scripted, text: str, reason: str) -> None:
-    """Rows B1 and B10: Sentinels of SCPI-1999 (in the spellings seen) and the dialect's markers never become numbers."""
+    """Rows B1 and B10: Sentinels of SCPI-1999 (as they were seen) and the dialect's markers never become numbers."""
     meter.answers["READ?"] = text
     reading = perform(adapter.measure(Window(0.2)), meter)["volts"]
     assert (reading.value, reading.u, reading.flags, reading.raw) == (None, 0.0, (reason,), text)

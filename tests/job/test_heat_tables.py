@@ -40,7 +40,7 @@ def test_a_heat_table_is_taken_and_kept(tmp_path: Path, name: str) -> None:
         ("electronic", BODIES.replace("20.0", "0.0"), ["case_j_per_k", "0", "allowed", "takes up heat"]),
         ("electronic", BODIES + "magnet_percent_per_k = 2.0\n", ["magnet_percent_per_k", "2.0", "-1 to 0.5"]),
         ("four-wire", BODIES + "loss_percent = 140.0\n", ["loss_percent", "140", "0 to 100", "warms the winding"]),
-        ("four-wire", BODIES + "magnet_percent_per_k = -0.2\n", ["unknown key", "magnet_percent_per_k", "loss_percent"]),
+        ("four-wire", BODIES + "magnet_percent_per_k = -0.2\n", ["unknown key", "magnet_percent", "loss_percent"]),
         ("electronic", BODIES + "loss_percent = 40.0\n", ["unknown key", "loss_percent"]),
     ],
 )  # fmt: skip
