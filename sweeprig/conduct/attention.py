@@ -33,16 +33,19 @@ class Attention:
         self.notifier = Notifier(notices, simulated=simulated)
         self.progress = None if notices is None else Progress(notices.no_progress, self.wall.now())
         self.state, self.sentence = "opening", title
-        self.told_trip = False
+        self.told_trip = self.told_park = False
 
     def __call__(self, event: Event) -> None:
         data = event.data
         if event.kind == "state":
             self.state = str(data["state"])
-            if self.state == State.PARKED.words and "next_try_s" in data:
+            if self.state == State.PARKED.words and "next_try_s" in data and not self.told_park:
+                self.told_park = True  # once, until a hold is done again: each try in vain would be another
                 self._tell("park", f"parked: {data['reason']}", "The drive is off; it is tried again at intervals.")
         elif event.kind == "hold_began":
             self.sentence = f"hold {data['number']}: {data['why']}"
+        elif event.kind == "hold_ended" and data["status"] == "done":
+            self.told_park = False
         elif event.kind == "trip":
             self.told_trip = True
             self._tell("trip", "protection switched the drive off", str(data["evidence"]))

@@ -24,6 +24,7 @@ TABLE: Mapping[str, tuple[float, str]] = {
     "debounce_s": (0.2, "… which span at least so long: two readings of one spike are one"),
     "reading_age_s": (2.5, "age of a protected reading at which the drive goes off, where nothing else is stated"),
     "short_readings": (3.0, "readings in a row that show a switch that failed short, with the drive off"),
+    "look_off_s": (2.0, "after a healing, everything must read off for so long, supply on, before the drive is"),
     "short_s": (1.0, "… which span at least so long"),
     "short_amps": (0.05, "current with the drive off above this: the switch conducts"),
     "short_percent": (85.0, "motor voltage of the supply's with the drive off: no rotor that runs down gives more"),

@@ -125,7 +125,10 @@ class Performer:
 
     def perform(self, hold: Hold, done: Performed) -> None:
         """Fill `done`. The rotor's verdict decides whether the drive stays on: after a stop it goes off at once."""
+        unseen = self.supply_v is None and not self.rig.off_is_supply_off
         self.power(hold.condition)
+        if unseen and hold.purpose not in (Purpose.ZERO, Purpose.REST):
+            self._look_off(hold, done)
         for duty, seconds in hold.lead:
             if duty == 0:
                 self._rest(hold, seconds, done)
@@ -141,6 +144,18 @@ class Performer:
             self._start(hold, done)
         else:
             self._expose(hold, done)
+
+    def _look_off(self, hold: Hold, done: Performed) -> None:
+        """The first hold after the rig was healed: off was proved with the supply off too, where a switch that failed
+        short meanwhile does not show. So everything must say off with the supply on, before the drive is used."""
+        names = self.rig.serving(("motor_voltage", "current", "supply"))
+        until = self.rig.clock.now() + BOUNDS["look_off_s"]
+        wrong = ["nothing was read"]
+        while self.rig.clock.now() < until:
+            wrong = still_on(self.rig, self.cycle(names, BOUNDS["cycle_window_s"], hold, done))
+        if wrong:
+            self.unpowered()  # the next hold looks again
+            raise Spoiled(f"with the supply on again and the drive off, {'; '.join(wrong)}")
 
     def track(self) -> Track:
         tacho = self.rig.source["speed"]

@@ -207,6 +207,23 @@ def test_off_is_proved_before_anything_moves_again(make_bed: MakeBed, short: Bou
     assert bed.nothing_on_between(GONE_AT_S, bed.bench.now + 1.0)
 
 
+def test_a_switch_that_failed_during_the_gap(make_bed: MakeBed) -> None:
+    """Row D2: A switch that failed short while a link was gone does not show with the supply off, nor at a duty near
+    100 %. The first hold behind the gap looks with the supply on and the drive off: the run trips before it drives."""
+    bed = make_bed()
+    sweep = bed.job.parent / "short.toml"
+    sweep.write_text(sweep.read_text("utf-8").replace('["60 %", "20 %", "12 %"]', '["95 %", "90 %", "85 %"]'), "utf-8")
+    bed.add_fault(GONE_AT_S, "node_moves", "board", delay="5 s")
+    with (bed.job.parent / "shelter-bench.toml").open("a", encoding="utf-8") as rig:
+        rig.write(f'\n[[simulated_faults]]\nkind = "switch_short"\nstart = "{GONE_AT_S + 1.0:g} s"\n')
+    ending = bed.start().ending
+    assert ending.state is State.TRIPPED
+    assert "switch_short" in ending.reason
+    assert not [o for o in bed.outcomes if o.status is Status.DONE and o.ended > GONE_AT_S + 1.0]
+    assert max(one.at for one in bed.bench.record if one.what == "drive_on") < GONE_AT_S
+    bed.assert_off()
+
+
 class Live:
     """A meter's port: after the gap its readings are 12 V, whatever the bench does."""
 
