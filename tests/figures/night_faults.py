@@ -151,12 +151,18 @@ def drawn(fault: str, instrument: str | None, rng: random.Random) -> dict[str, A
         table["instrument"] = instrument
     if what.place == "rig":
         table |= {"start": seconds(rng.uniform(0.0, LENGTH_S))} | ends(rng)
+    elif fault == "link_limit":
+        table |= {"start": seconds(0.0)}  # the first opening must count, for the one after a break to find none left
     elif seldom(fault):
         how = rng.choice(["first", "later", "chance", "time"])
-        table |= {
-            "first": {"exchange": 1}, "later": {"exchange": 2, "exchanges": rng.randint(1, 4)},
-            "chance": {"probability": "50 %"}, "time": {"start": seconds(rng.uniform(0.0, LENGTH_S))} | ends(rng),
-        }[how]  # fmt: skip
+        if how == "first":
+            table["exchange"] = 1
+        elif how == "later":
+            table |= {"exchange": 2, "exchanges": rng.randint(1, 4)}
+        elif how == "chance":
+            table["probability"] = "50 %"
+        else:
+            table |= {"start": seconds(rng.uniform(0.0, LENGTH_S))} | ends(rng)
     else:
         table |= moment(rng, MESSAGES_BOARD if instrument == "board" else MESSAGES)
     return table | dict(strengths(fault, rng))
@@ -185,6 +191,8 @@ def strengths(fault: str, rng: random.Random) -> Iterator[tuple[str, Any]]:
     what = FAULT_KINDS[fault]
     if fault == "supply_dropout":
         yield "voltage", f"{rng.choice([0.0, rng.uniform(0.0, 11.5)]):.3g} V"
+    elif fault == "minimum_gap":
+        yield "delay", seconds(rng.uniform(0.01, 0.2))  # less than a message takes is no gap
     elif fault != "link_limit" and rng.random() < 0.5:
         return
     elif fault == "supply_pumped_up":

@@ -24,6 +24,10 @@ COAST_S, COAST_LOSS = 0.3, 60.0
 RENEWAL_S = 1.0
 """A drifting threshold is taken as constant for so long."""
 
+AT_REST_TIMES = 2.0
+"""A rotor that stands takes so many times the current, as one without back-EMF does: else no reading but the
+tachometer's would tell that it stopped. Of no consequence for what is found."""
+
 
 @dataclass(frozen=True, slots=True)
 class PrescribedTruth:
@@ -164,7 +168,7 @@ class PrescribedMotor(Stepped):
             return Flow(how, supply_volts=self.volts)
         share = self.duty_percent / 100.0
         how = towards(self.speed, t.rpm(self.duty_percent) / RPM, t.time_constant_s) if self.turning else AT_REST
-        amps = t.full_amps * share
+        amps = t.full_amps * share * (1.0 if self.turning else AT_REST_TIMES)
         return Flow(
             how._replace(amps=amps), share * self.volts, 0.0, share * amps, 0.0, self.volts,
             stands_after_s=self._ends_at - self._at,
