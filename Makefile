@@ -5,7 +5,7 @@ BIN := $(VENV)/bin
 ifeq ($(OS),Windows_NT)
 BIN := $(VENV)/Scripts
 endif
-SOURCES := $(shell find sweeprig drivers configs -type f -not -name '*.pyc') pyproject.toml README.md
+SOURCES := $(shell find sweeprig drivers configs -type f -not -path '*/__pycache__/*') pyproject.toml README.md
 ONLY ?=
 FULL ?=
 
