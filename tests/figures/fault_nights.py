@@ -61,6 +61,7 @@ _PLANTS = tuple(name for name, kind in KINDS.items() if kind.plant)
 FOR_A_SUSPICION: Mapping[str, tuple[tuple[str, ...], str]] = {
     "broken_tach_wire": (_LAWS, "no edges from a motor that turns look like a motor that stopped"),
     "loose_coupling": (_LAWS, "a wheel that runs down on a turning shaft looks like a motor that stops"),
+    "brush_bounce": (_LAWS, "brushes that lift all night make it a slower motor: what is found is what that one does"),
     "motor_overheats": (_PLANTS, "a bearing that binds makes it another motor: what is found is what that one does"),
     "switch_open": (("input",), "an input that nothing pulls looks like a fan that knows no speed but its highest"),
     "switch_short": (("input",), "an input that is pulled all the time looks like a fan that knows no other speed"),
