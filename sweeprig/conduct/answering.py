@@ -93,7 +93,7 @@ class VoltageAtDuty(Answer):
         if not commanded.on or supply is None:
             return None
         set_to = f"at {commanded.duty_percent:.4g} % of {supply:g} V"
-        half = duty <= BOUNDS["half_duty_percent"] / 100.0
+        half = duty <= BOUNDS["short_shows_percent"] / 100.0
         self._answered = self._answered or (half and value < BOUNDS["short_percent"] / 100.0 * supply)
         if half and self._answered and value >= BOUNDS["full_percent"] / 100.0 * supply:
             return "switch_short", f"{set_to}: the switch conducts all the time, it failed short", True

@@ -29,7 +29,7 @@ TABLE: Mapping[str, tuple[float, str]] = {
     "short_amps": (0.05, "current with the drive off above this: the switch conducts"),
     "short_percent": (85.0, "motor voltage of the supply's with the drive off: no rotor that runs down gives more"),
     "falls_percent": (99.5, "… and what does not fall below so much of its first reading is no rotor that runs down"),
-    "half_duty_percent": (80.0, "up to this duty, at which even a rotor without load leaves 4 % to miss …"),
+    "short_shows_percent": (80.0, "up to this duty, at which even a rotor without load leaves 4 % to miss …"),
     "full_percent": (97.0, "… a mean motor voltage of so much of the supply's is a switch that always conducts"),
     "open_percent": (10.0, "less than so much of duty × supply at the motor: the switch does not conduct"),
     "diode_drop_volts": (1.0, "a freewheel diode drops no more"),
