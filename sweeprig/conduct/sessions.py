@@ -19,7 +19,7 @@ from sweeprig.conduct.requests import Requests
 from sweeprig.conduct.rig import Look, OpenRig, RigUse, open_rig, require_heartbeat, same_instruments
 from sweeprig.conduct.run import PAUSED, run
 from sweeprig.conduct.states import Ending, Event, OnEvent, Orders, State
-from sweeprig.errors import InstrumentRefused, LinkError, OffNotProved, RigError, SweeprigError, WrongInstrument
+from sweeprig.errors import RigError, SweeprigError, WrongInstrument
 from sweeprig.holds import Purpose, Status
 from sweeprig.job import Job, freeze
 from sweeprig.logbook import Logbook
@@ -118,7 +118,7 @@ class _Work:
             plan = replace(self.plan, session=session)
             try:
                 ending = run(plan, self.rig, self.logbook, session, self.on_event, self.orders)
-            except (LinkError, InstrumentRefused, OffNotProved, RigError) as error:
+            except RigError as error:
                 if isinstance(error, WrongInstrument) or not self._bear(error, before):
                     raise
                 if self._told():

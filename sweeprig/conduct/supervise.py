@@ -122,6 +122,7 @@ class Supervisor:
         self.at = 0.0
         self.deaf = False
         self.tripped = ""
+        self.began = False
         self.in_a_row = 0
         self.holds_done = 0
         self.runner: Runner | None = None
@@ -240,6 +241,7 @@ class Supervisor:
 
     def _pass_on(self, event: Event) -> None:
         self.at = max(self.at, event.at)
+        self.began = self.began or event.kind == "session"
         if event.kind == "trip":
             self.tripped = str(event.data.get("evidence", "protection"))
         if event.kind == "hold_ended" and event.data.get("status") == "tripped":
@@ -276,8 +278,9 @@ class Supervisor:
 
     def _leave_off(self, said: Failed) -> None:
         """A session that ended with an error has told drive and supply to be off; that is seen to here once more."""
-        if said.error in ("ConfigError", "RunInUse", "RigInUse", "UnknownAdapter", "MissingPackage", "RoleMissing"):
-            return  # nothing was opened
+        refused = ("ConfigError", "RunInUse", "RigInUse", "UnknownAdapter", "MissingPackage", "RoleMissing")
+        if said.error in refused and not self.began:
+            return  # nothing was opened; in the middle of a run the same errors leave a rig behind
         try:
             self._take_over(f"the session ended with an error: {said.parts.get('what')}")
         except RigError as error:

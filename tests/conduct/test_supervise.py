@@ -302,6 +302,17 @@ def test_off_is_seen_to_after_an_error_on_the_rig(bed: Make, short: Callable[...
     assert here.texts[-1].startswith("OFF COULD NOT BE PROVED: the supply does not answer")
 
 
+def test_a_logbook_lost_in_the_middle_is_no_refusal(bed: Make) -> None:
+    """RunInUse before a session began has opened nothing; in the middle of one it leaves a rig: off from here."""
+    locked = failed(RunInUse("the logbook stayed locked for 500 ms"))
+    session = Event("session", 1.0, {"session": 1, "simulated": True})
+    for parts, offs in (((HELLO, locked), []), ((HELLO, session, locked), [1])):
+        here = bed(saying(*parts))
+        with pytest.raises(RunInUse, match="stayed locked"):
+            here.run()
+        assert here.offs == offs
+
+
 def test_off_is_tried_until_it_is_proved(bed: Make, short: Callable[..., None]) -> None:
     """A takeover whose proof fails is repeated, and each failure is told; the next runner waits for the proof."""
     short(take_over_pause_s=0.01)
