@@ -13,8 +13,8 @@ from typing import Literal
 import numpy as np
 from scipy import special
 
-from sweeprig.characterise.laws import Floats
 from sweeprig.errors import SweeprigError
+from sweeprig.laws import Floats
 
 Link = Literal["logit", "probit", "cloglog"]
 _ROUNDS = 100

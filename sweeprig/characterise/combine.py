@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import special
 
-from sweeprig.characterise.laws import Floats
+from sweeprig.laws import Floats
 
 SAMPLE_SIZE = 256
 TWO_SIDED = 0.95

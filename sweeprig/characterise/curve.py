@@ -24,7 +24,7 @@ import numpy as np
 from scipy import interpolate, optimize
 
 from sweeprig.characterise.evidence import Point
-from sweeprig.characterise.laws import Floats
+from sweeprig.laws import Floats
 
 SAME_DUTY_PERCENT = 0.05
 """Settings nearer than this are one level: between them a smooth curve would follow the noise."""

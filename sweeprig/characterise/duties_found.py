@@ -21,7 +21,6 @@ from sweeprig.characterise.combine import (
 )
 from sweeprig.characterise.evidence import Chosen
 from sweeprig.characterise.findings import Bound, Finding, not_found
-from sweeprig.characterise.laws import STALL_LAWS, START_LAWS, Evidence, Floats, Law, summed
 from sweeprig.characterise.thresholds import (
     STALL_PRIOR,
     START_PRIOR,
@@ -30,6 +29,7 @@ from sweeprig.characterise.thresholds import (
     bound_without_contrast,
     fit,
 )
+from sweeprig.laws import STALL_LAWS, START_LAWS, Evidence, Floats, Law, summed
 
 TAIL = 0.99
 FEW = 4

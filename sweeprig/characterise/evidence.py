@@ -12,9 +12,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from sweeprig.characterise.laws import Trial
 from sweeprig.characterise.voltage import mean_motor_voltage
 from sweeprig.holds import Approach, Condition, Outcome, Purpose, Status, Verdict
+from sweeprig.laws import Trial
 from sweeprig.plan import Plan
 
 LEAST_TIME_CONSTANTS = 5.0

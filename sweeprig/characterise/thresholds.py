@@ -13,7 +13,7 @@ import numpy as np
 from scipy import optimize, special
 
 from sweeprig.characterise.combine import ONE_SIDED, equally_likely
-from sweeprig.characterise.laws import Evidence, Floats, Law, log_chance_of_same, log_likelihood
+from sweeprig.laws import Evidence, Floats, Law, log_chance_of_same, log_likelihood
 
 REJECTED_BELOW = 1.0 / 20.0
 """A law is rejected when its evidence (mean likelihood over the prior) is less than this part of the best law's."""

@@ -17,7 +17,7 @@ from sweeprig.characterise.curve import LEAST_FREEDOM, Curve, Level, levels, poo
 from sweeprig.characterise.duties_found import TAIL, Threshold
 from sweeprig.characterise.evidence import Point
 from sweeprig.characterise.findings import Finding, UsableRange, not_found
-from sweeprig.characterise.laws import Floats
+from sweeprig.laws import Floats
 
 SEGMENTS = 3
 LEAST_APART_PERCENT = 2.0

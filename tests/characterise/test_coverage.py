@@ -15,8 +15,8 @@ import numpy as np
 import pytest
 
 from sweeprig.characterise import ConditionFindings, Finding, characterise
-from sweeprig.characterise.laws import EXPONENTIAL, GAUSSIAN, LOGISTIC, Law
 from sweeprig.holds import Approach, Outcome, Purpose, Verdict
+from sweeprig.laws import EXPONENTIAL, GAUSSIAN, LOGISTIC, Law
 from sweeprig.plan import Plan
 
 ABOUT = {"job_hash": "0", "simulated": True, "motor": "m", "rig": "r", "software": "s"}

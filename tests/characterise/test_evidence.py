@@ -15,8 +15,8 @@ from sweeprig.characterise.evidence import (
     turning_before,
     voltage_points,
 )
-from sweeprig.characterise.laws import Trial
 from sweeprig.holds import Approach, Outcome, Purpose, Status, Verdict
+from sweeprig.laws import Trial
 from sweeprig.plan import Plan
 
 MakeOutcome = Callable[..., Outcome]

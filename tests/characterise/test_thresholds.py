@@ -12,8 +12,8 @@ from hypothesis import strategies as st
 from sweeprig.characterise import combine
 from sweeprig.characterise.duties_found import STALL, START, Kind, start_stall_hysteresis, threshold
 from sweeprig.characterise.evidence import Chosen
-from sweeprig.characterise.laws import EXPONENTIAL, GAUSSIAN, STALL_LAWS, Floats, Law, Trial, log_likelihood, summed
 from sweeprig.characterise.thresholds import STALL_PRIOR, SpreadPrior, bound_without_contrast, fit, posterior
+from sweeprig.laws import EXPONENTIAL, GAUSSIAN, STALL_LAWS, Floats, Law, Trial, log_likelihood, summed
 
 LADDER = (
     *(Trial(i, duty, 1.0) for i, duty in enumerate((12.0, 11.5, 11.0, 10.5, 10.0, 12.0, 11.5, 11.0, 10.5))),

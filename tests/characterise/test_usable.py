@@ -12,7 +12,7 @@ from sweeprig.characterise import usable
 from sweeprig.characterise.curve import fit_curve
 from sweeprig.characterise.duties_found import STALL, START, Threshold, threshold
 from sweeprig.characterise.evidence import Chosen, Point
-from sweeprig.characterise.laws import Trial
+from sweeprig.laws import Trial
 
 ACCURACY = 10.0
 LADDER = (

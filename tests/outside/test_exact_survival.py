@@ -9,7 +9,7 @@ import pytest
 import statsmodels.api as sm
 from scipy import optimize, stats
 
-from sweeprig.characterise.laws import EXPONENTIAL, GUMBEL_SD, LN2, Trial, log_likelihood, summed
+from sweeprig.laws import EXPONENTIAL, GUMBEL_SD, LN2, Trial, log_likelihood, summed
 
 # Weeks of remission of 21 + 21 patients (Gehan 1965; data from memory, as are the sums 359 and 182 that textbooks
 # give for them). True: relapse seen; False: censored.

@@ -5,8 +5,8 @@ from __future__ import annotations
 import pytest
 from scipy import stats
 
-from sweeprig.characterise.laws import EXPONENTIAL, GAUSSIAN, LOGISTIC, STALL_LAWS, Law, Trial, summed
 from sweeprig.characterise.thresholds import SpreadPrior, bound_without_contrast
+from sweeprig.laws import EXPONENTIAL, GAUSSIAN, LOGISTIC, STALL_LAWS, Law, Trial, summed
 
 # Success run at 95 % confidence (independent method: n = ln 0.05 / ln R rounded up; the pairs 90/95 29, 95/95 59,
 # 99/95 299 are common practice and agree)

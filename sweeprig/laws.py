@@ -1,6 +1,7 @@
 """Laws of stalling and starting: how the chance to fail falls with duty, and the likelihood of what was seen.
 
-Numbers in, log-likelihoods out. No priors, no grids, no outcomes here: `thresholds` and `evidence` have those.
+Numbers in, log-likelihoods out; what `schedule` searches by is what `characterise` judges by. No priors, no grids, no
+outcomes here; the simulated bench never imports it.
 """
 
 from __future__ import annotations

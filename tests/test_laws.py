@@ -11,7 +11,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from scipy import stats
 
-from sweeprig.characterise.laws import (
+from sweeprig.laws import (
     EXPONENTIAL,
     GAUSSIAN,
     GUMBEL_SD,
