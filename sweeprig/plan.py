@@ -13,22 +13,49 @@ from sweeprig.holds import Condition
 
 @dataclass(frozen=True, slots=True)
 class RunIn:
+    """Warm-up at the start of every session: `time_s`, and then on, in pieces as long, until the speed drifts by less
+    than `drift_percent_per_hour`, but no longer than `most_s` in all. None: the time alone."""
+
     duty_percent: float
+    time_s: float
+    drift_percent_per_hour: float | None = None
+    most_s: float = 0.0
+
+
+@dataclass(frozen=True, slots=True)
+class ReferencePlan:
+    """A hold at one duty again and again through the night, at each condition in turn, so that drift shows."""
+
+    duty_percent: float
+    every_s: float
     time_s: float
 
 
 @dataclass(frozen=True, slots=True)
 class CurvePlan:
-    """Duties visited downwards from the top, then upwards again; the motor is settled and read at each."""
+    """Duties visited downwards from the top, then upwards again; the motor is settled and read at each.
+
+    standard_error_percent   further points are placed where the curve bends, and replicates made, until the speed
+                             curve is known so well everywhere, in percent of the highest speed; None: the duties alone
+    most_points              … but no more than so many holds of the falling branch at one condition
+    """
 
     duties_percent: tuple[float, ...]
     least_s: float
     most_s: float
+    standard_error_percent: float | None = None
+    most_points: int = 0
 
 
 @dataclass(frozen=True, slots=True)
 class StallPlan:
-    """Falling-approach trials: relaunch well above, step down to the trial duty, expose for `hold_time_s`."""
+    """Falling-approach trials: relaunch well above, step down to the trial duty, expose for `hold_time_s`.
+
+    search                   `ladder`, or `adaptive`: after each outcome the hold that tells most per second
+    holds                    trials at each condition: so many (ladder), at most so many (adaptive)
+    standard_error_percent   adaptive: … until the findings to sharpen are known so well
+    times_s                  adaptive: the lengths of exposure to choose from, shortest first
+    """
 
     search: str
     hold_time_s: float
@@ -36,6 +63,8 @@ class StallPlan:
     holds: int
     relaunch_above_percent: float
     relaunch_s: float
+    standard_error_percent: float = 0.25
+    times_s: tuple[float, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,6 +76,37 @@ class StartPlan:
     rest_time_s: float
     step_percent: float
     trials: int
+    standard_error_percent: float = 0.25
+
+
+@dataclass(frozen=True, slots=True)
+class KickPlan:
+    """Starts from rest by a pulse at a kick duty, then the run duty (lowest reliable duty plus `margin_percent`).
+
+    duties_percent   kick duties, each with a finding of its own
+    shortest_s, longest_s   pulse times to choose from, spaced evenly in their logarithm
+    hold_time_s      the rotor must still turn at its end
+    standard_error   of the natural logarithm of `kick_99_s`
+    """
+
+    duties_percent: tuple[float, ...]
+    margin_percent: float
+    shortest_s: float
+    longest_s: float
+    hold_time_s: float
+    rest_time_s: float
+    trials: int
+    standard_error: float = 0.3
+
+
+@dataclass(frozen=True, slots=True)
+class LongRunPlan:
+    """A few long holds where they pin how the hazard falls with duty: for the bound of a run of `service_s`."""
+
+    service_s: float
+    hold_time_s: float
+    holds: int
+    probability: float = 0.99
 
 
 @dataclass(frozen=True, slots=True)
@@ -83,6 +143,8 @@ class Plan:
     by_hand            fields of a condition that only a person can set; hands: what is set so in this session, as
                        `set_by_hand` words it, None before anybody has said so
     duty_step_percent  one step of the drive (resolution of the commanded duty) for each condition, same order
+    spend              `all`: an adaptive search goes on to the deadline; `needed`: until the standard errors are reached
+    sharpen            findings whose standard errors the adaptive search brings down
     heat               the budget of locked-rotor heat; None only where a plan is made without a motor file
     """
 
@@ -106,6 +168,11 @@ class Plan:
     duty_step_percent: tuple[float, ...] = ()
     limits: Mapping[str, tuple[float | None, float | None]] = field(default_factory=dict)
     deadline_utc: float | None = None
+    spend: str = "all"
+    sharpen: tuple[str, ...] = ("sustain_99_duty_percent", "start_99_duty_percent")
+    kick: KickPlan | None = None
+    long_run: LongRunPlan | None = None
+    reference: ReferencePlan | None = None
     session: int = 1
     attended: bool = False
     by_hand: tuple[str, ...] = ()

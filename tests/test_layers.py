@@ -10,7 +10,7 @@ import pytest
 import sweeprig
 
 PACKAGE = Path(sweeprig.__file__).parent
-GROUND = {"errors", "quantities", "holds", "plan", "roles", "laws", "clock"}
+GROUND = {"errors", "quantities", "holds", "plan", "roles", "laws", "exposures", "clock"}
 VALUES = GROUND - {"clock"}
 
 MAY_IMPORT: dict[str, set[str]] = {
@@ -20,14 +20,15 @@ MAY_IMPORT: dict[str, set[str]] = {
     "plan": {"holds"},
     "roles": {"quantities"},
     "laws": set(),
+    "exposures": {"holds"},
     "clock": set(),
-    "link": GROUND - {"laws"},
+    "link": GROUND - {"laws", "exposures"},
     "dialects": VALUES,
     "job": VALUES,
     "schedule": VALUES,
     "characterise": VALUES,
     "logbook": VALUES,
-    "simbench": GROUND - {"laws"} | {"job"},
+    "simbench": GROUND - {"laws", "exposures"} | {"job"},
     "conduct": GROUND | {"link", "dialects", "job", "schedule", "logbook"},
     "report": VALUES | {"job", "characterise", "manual"},
     "manual": {"errors"},

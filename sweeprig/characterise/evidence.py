@@ -13,14 +13,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from sweeprig.characterise.voltage import mean_motor_voltage
+from sweeprig.exposures import LEAST_TIME_CONSTANTS, SHORTEST_GAP_S, exposure
 from sweeprig.holds import Approach, Condition, Outcome, Purpose, Status, Verdict
 from sweeprig.laws import Trial
 from sweeprig.plan import Plan
-
-LEAST_TIME_CONSTANTS = 5.0
-"""A curve hold tells of stalling when it was meant to last this many of the motor's time constants."""
-_SHORTEST_GAP_S = 1e-3
-
 
 NORMAL_99 = 2.576
 """Normal quantile of 0.995: 99 % of a normal quantity lie within so many standard deviations."""
@@ -122,7 +118,7 @@ def stall_trials(plan: Plan, known: Duties, outcomes: Sequence[Outcome], turned_
         if outcome.restarts:
             flags.add("self_restart")
         curves += outcome.hold.purpose is Purpose.CURVE
-        survived, failed = _times(plan, outcome)
+        survived, failed = exposure(outcome, plan.time_constant_s)
         if survived <= 0.0 and failed is None:
             # nothing was exposed, so nothing can be said
             continue
@@ -145,22 +141,6 @@ def _is_exposure(plan: Plan, outcome: Outcome, turned_before: frozenset[int]) ->
     if outcome.hold.purpose is not Purpose.CURVE:
         return False
     return outcome.hold.least_s >= LEAST_TIME_CONSTANTS * plan.time_constant_s and outcome.number in turned_before
-
-
-def _times(plan: Plan, outcome: Outcome) -> tuple[float, float | None]:
-    """(seconds survived for certain, width of the interval in which it stopped or None).
-
-    A stop within the first five time constants counts as "by then": the rotor is still coming down from its approach,
-    so the moment tells how long that took, and not how large the hazard is.
-    """
-    begin, end = outcome.event_between_s
-    if outcome.verdict is not Verdict.STOPPED and not outcome.restarts:
-        return (begin if begin > 0.0 else outcome.exposed_s), None
-    end = max(outcome.exposed_s, begin) if end is None else end
-    coming_down = LEAST_TIME_CONSTANTS * plan.time_constant_s
-    if begin < coming_down:
-        return 0.0, max(end, coming_down)
-    return begin, max(end - begin, _SHORTEST_GAP_S)
 
 
 def turning_before(outcomes: Sequence[Outcome]) -> frozenset[int]:
@@ -232,11 +212,11 @@ def _settled(plan: Plan, outcomes: Sequence[Outcome], branch: Approach) -> list[
         if o.hold.approach is branch
         and o.hold.purpose in purposes
         and (o.verdict is Verdict.TURNING or (o.verdict is Verdict.STOPPED and o.hold.purpose is Purpose.STALL))
-        and (o.verdict is Verdict.TURNING or _times(plan, o)[0] >= least)
+        and (o.verdict is Verdict.TURNING or exposure(o, plan.time_constant_s)[0] >= least)
         and not o.restarts
     ]
 
 
 def _weight(plan: Plan, outcome: Outcome) -> float:
     """Seconds the rotor turned at the duty; the whole hold where the exposure was not timed."""
-    return _times(plan, outcome)[0] or max(outcome.ended - outcome.began, _SHORTEST_GAP_S)
+    return exposure(outcome, plan.time_constant_s)[0] or max(outcome.ended - outcome.began, SHORTEST_GAP_S)

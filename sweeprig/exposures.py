@@ -1,0 +1,28 @@
+"""What one outcome says as an exposure to stalling: how long the rotor turned for certain, and when it stopped.
+
+One definition for `schedule`, which searches by it, and `characterise`, which judges by it. No choice of holds, no laws.
+"""
+
+from __future__ import annotations
+
+from sweeprig.holds import Outcome, Verdict
+
+LEAST_TIME_CONSTANTS = 5.0
+"""The rotor is still coming down from its approach for so many of the motor's time constants."""
+SHORTEST_GAP_S = 1e-3
+
+
+def exposure(outcome: Outcome, time_constant_s: float) -> tuple[float, float | None]:
+    """(seconds survived for certain, width in seconds of the interval in which it stopped; None: it had not).
+
+    A stop within the first five time constants counts as "by then": the rotor is still coming down from its approach,
+    so the moment tells how long that took, and not how large the hazard is.
+    """
+    begin, end = outcome.event_between_s
+    if outcome.verdict is not Verdict.STOPPED and not outcome.restarts:
+        return (begin if begin > 0.0 else outcome.exposed_s), None
+    end = max(outcome.exposed_s, begin) if end is None else end
+    coming_down = LEAST_TIME_CONSTANTS * time_constant_s
+    if begin < coming_down:
+        return 0.0, max(end, coming_down)
+    return begin, max(end - begin, SHORTEST_GAP_S)
