@@ -1,6 +1,6 @@
 """What one outcome says as an exposure to stalling: how long the rotor turned for certain, and when it stopped.
 
-One definition for `schedule`, which searches by it, and `characterise`, which judges by it. No choice of holds, no laws.
+One definition for `schedule`, which searches by it, and `characterise`, which judges by it. No choice of holds here.
 """
 
 from __future__ import annotations

@@ -143,7 +143,7 @@ class Plan:
     by_hand            fields of a condition that only a person can set; hands: what is set so in this session, as
                        `set_by_hand` words it, None before anybody has said so
     duty_step_percent  one step of the drive (resolution of the commanded duty) for each condition, same order
-    spend              `all`: an adaptive search goes on to the deadline; `needed`: until the standard errors are reached
+    spend              `all`: an adaptive search goes on to the deadline; `needed`: until all is known as asked
     sharpen            findings whose standard errors the adaptive search brings down
     heat               the budget of locked-rotor heat; None only where a plan is made without a motor file
     """
