@@ -5,7 +5,7 @@ One definition for `schedule`, which searches by it, and `characterise`, which j
 
 from __future__ import annotations
 
-from sweeprig.holds import Outcome, Verdict
+from sweeprig.holds import Outcome, Status, Verdict
 
 LEAST_TIME_CONSTANTS = 5.0
 """The rotor is still coming down from its approach for so many of the motor's time constants."""
@@ -26,3 +26,17 @@ def exposure(outcome: Outcome, time_constant_s: float) -> tuple[float, float | N
     if begin < coming_down:
         return 0.0, max(end, coming_down)
     return begin, max(end - begin, SHORTEST_GAP_S)
+
+
+def turned_before(outcome: Outcome, previous: Outcome | None) -> bool:
+    """Whether the rotor is known to have turned when the hold began: its own lead drove it, or the hold just before it,
+    in the same session, ended with it turning."""
+    lead = outcome.hold.lead
+    if lead and lead[-1][0] > outcome.hold.duty_percent:
+        return True
+    return (
+        previous is not None
+        and (previous.session, previous.number) == (outcome.session, outcome.number - 1)
+        and previous.status is Status.DONE
+        and previous.verdict in (Verdict.TURNING, Verdict.STARTED)
+    )

@@ -13,8 +13,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from sweeprig.characterise.voltage import mean_motor_voltage
-from sweeprig.exposures import LEAST_TIME_CONSTANTS, SHORTEST_GAP_S, exposure
-from sweeprig.holds import Approach, Condition, Outcome, Purpose, Status, Verdict
+from sweeprig.exposures import LEAST_TIME_CONSTANTS, SHORTEST_GAP_S, exposure, turned_before
+from sweeprig.holds import Approach, Condition, Outcome, Purpose, Verdict
 from sweeprig.laws import Trial
 from sweeprig.plan import Plan
 
@@ -148,10 +148,7 @@ def turning_before(outcomes: Sequence[Outcome]) -> frozenset[int]:
     session, ended with it turning, or its own lead drove it."""
     known, last = set(), None
     for outcome in sorted(outcomes, key=lambda o: o.number):
-        relaunched = bool(outcome.hold.lead) and outcome.hold.lead[-1][0] > outcome.hold.duty_percent
-        follows = last is not None and (last.session, last.number) == (outcome.session, outcome.number - 1)
-        went_on = follows and last is not None and last.status is Status.DONE
-        if relaunched or (went_on and last is not None and last.verdict in (Verdict.TURNING, Verdict.STARTED)):
+        if turned_before(outcome, last):
             known.add(outcome.number)
         last = outcome
     return frozenset(known)

@@ -22,7 +22,7 @@ from sweeprig.errors import LinkError, RigError, RunInUse
 from sweeprig.holds import Decision, Finished, Hold, NeedsPerson, Outcome, Purpose, Status, Verdict
 from sweeprig.logbook import Logbook
 from sweeprig.plan import Plan
-from sweeprig.schedule import next_hold
+from sweeprig.schedule import History, next_hold
 
 LOCKED = "the logbook was locked by another program, and the drive went off meanwhile"
 RECENT = 50
@@ -41,7 +41,7 @@ class _Session:
         self.clock, self.orders, self.on_event = rig.clock, orders, on_event
         self.watch = Watchman(rig.clock, rig.guard, orders, self._pulse)
         self.performer = Performer(rig, self.plan, self.watch, self._beat)
-        self.outcomes = logbook.outcomes()
+        self.outcomes = History(logbook.outcomes())
         self.healed: dict[str, int] = {}
         self.waited = False
 

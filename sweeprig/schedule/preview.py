@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 
 from sweeprig.holds import Approach, Finished, Hold, NeedsPerson, Outcome, Purpose, Status, Verdict
 from sweeprig.plan import Plan
+from sweeprig.schedule.history import History
 from sweeprig.schedule.next_hold import next_hold
 
 GUESSED_STALL_PERCENT = 12.0
@@ -55,7 +56,7 @@ def preview(
     start_percent: float = GUESSED_START_PERCENT,
 ) -> Preview:
     """Run `next_hold` to its end on a motor that stalls and starts at the guessed duties."""
-    outcomes: list[Outcome] = []
+    outcomes = History()
     persons: list[str] = []
     clock = 0.0
     while len(outcomes) < MOST_HOLDS:

@@ -1,10 +1,12 @@
-"""One pass over the outcomes: counts for each setting, and the last trial of each kind. No decisions here."""
+"""What is known of the past, counted by condition and setting; each outcome is added once. No decisions here."""
 
 from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field
+from operator import attrgetter
 
+from sweeprig.exposures import LEAST_TIME_CONSTANTS, exposure, turned_before
 from sweeprig.holds import Approach, Condition, Hold, Outcome, Purpose, Status, Verdict
 
 STRIKES = 3
@@ -17,18 +19,46 @@ def setting_of(hold: Hold) -> Setting:
     return hold.purpose, hold.approach, round(hold.duty_percent, 6)
 
 
-# Looking a member up in its class costs more than all else here, and this runs once an outcome at every decision.
+# Looking a member up in its class costs more than all else here, and a plain list is counted at every decision.
 _ZERO, _RUN_IN, _CURVE, _STALL, _START = Purpose.ZERO, Purpose.RUN_IN, Purpose.CURVE, Purpose.STALL, Purpose.START
-_DONE, _FALLING, _TURNING = Status.DONE, Approach.FALLING, Verdict.TURNING
+_DONE, _FALLING, _TURNING, _STOPPED = Status.DONE, Approach.FALLING, Verdict.TURNING, Verdict.STOPPED
+_STARTED, _DID_NOT_START = Verdict.STARTED, Verdict.DID_NOT_START
+_KEPT = (Purpose.KICK, Purpose.LONG, Purpose.REFERENCE, Purpose.TAP_MAP)
+_EXPOSED = (Purpose.STALL, Purpose.LONG)
+
+
+@dataclass(slots=True)
+class Sums:
+    """The sufficient sums of trials of one law.
+
+    exposure   seconds survived for certain at each duty (rounded to 1e-6 %); in a start trial 1 for each success
+    events     failures at (duty, width in s of the interval in which it happened, three digits; a start trial: 1)
+    """
+
+    exposure: dict[float, float] = field(default_factory=dict)
+    events: dict[tuple[float, float], int] = field(default_factory=dict)
+    successes: int = 0
+    failures: int = 0
+
+    def add(self, duty: float, survived: float, width: float | None) -> None:
+        self.exposure[duty] = self.exposure.get(duty, 0.0) + survived
+        if width is None:
+            self.successes += 1
+            return
+        self.failures += 1
+        event = duty, float(f"{width:.3g}")
+        self.events[event] = self.events.get(event, 0) + 1
 
 
 @dataclass(slots=True)
 class Trials:
-    """Done stall or start trials: how many, the latest, and how many at each duty (rounded to 1e-6 %)."""
+    """Done stall or start trials: how many, the latest, how many at each duty (rounded to 1e-6 %), and their sums, to
+    which other exposures of the same kind are added (falling curve, long run)."""
 
     count: int = 0
     last: Outcome | None = None
     at: dict[float, int] = field(default_factory=dict)
+    sums: Sums = field(default_factory=Sums)
 
     def add(self, outcome: Outcome, duty: float) -> None:
         self.count += 1
@@ -43,6 +73,7 @@ class Tally:
 
     falling, rising   curve settings → did the rotor turn, by duty (rounded to 1e-6 %)
     strikes           discarded or abandoned holds by setting
+    kept              done holds of the purposes of which there are few, as they are
     """
 
     falling: dict[float, bool] = field(default_factory=dict)
@@ -50,11 +81,12 @@ class Tally:
     stall: Trials = field(default_factory=Trials)
     start: Trials = field(default_factory=Trials)
     strikes: dict[Setting, int] = field(default_factory=dict)
+    kept: dict[Purpose, list[Outcome]] = field(default_factory=dict)
 
     def passed_over(self, purpose: Purpose, approach: Approach, duty_percent: float) -> bool:
         return self.strikes.get((purpose, approach, round(duty_percent, 6)), 0) >= STRIKES
 
-    def add(self, outcome: Outcome) -> None:
+    def add(self, outcome: Outcome, previous: Outcome | None, time_constant_s: float) -> None:
         hold = outcome.hold
         if outcome.status is not _DONE:
             setting = setting_of(hold)
@@ -65,48 +97,73 @@ class Tally:
             self.stall.add(outcome, duty)
         elif purpose is _START:
             self.start.add(outcome, duty)
+            self._started(outcome, duty)
         elif purpose is _CURVE:
             branch = self.falling if hold.approach is _FALLING else self.rising
             branch[duty] = outcome.verdict is _TURNING
+        elif purpose in _KEPT:
+            self.kept.setdefault(purpose, []).append(outcome)
+        if hold.approach is _FALLING:
+            self._exposed(outcome, duty, previous, time_constant_s)
+
+    def _exposed(self, outcome: Outcome, duty: float, previous: Outcome | None, time_constant_s: float) -> None:
+        purpose, verdict = outcome.hold.purpose, outcome.verdict
+        if verdict is not _TURNING and verdict is not _STOPPED:
+            return
+        if purpose is _CURVE:
+            long_enough = outcome.hold.least_s >= LEAST_TIME_CONSTANTS * time_constant_s
+            if not (long_enough and turned_before(outcome, previous)):
+                return
+        elif purpose not in _EXPOSED:
+            return
+        survived, width = exposure(outcome, time_constant_s)
+        self.stall.sums.add(duty, survived, width)
+
+    def _started(self, outcome: Outcome, duty: float) -> None:
+        if outcome.verdict is _STARTED:
+            self.start.sums.add(duty, 1.0, None)
+        elif outcome.verdict is _DID_NOT_START:
+            self.start.sums.add(duty, 0.0, 1.0)
 
 
 @dataclass(slots=True)
 class Tallies:
-    """Everything `next_hold` wants to know about the past.
+    """Everything `next_hold` wants to know about the past. Outcomes are added in the order of their numbers."""
 
-    done_this_session      purposes done in the session that asks
-    strikes_this_session   zero checks and run-ins that failed in it, by purpose
-    """
-
-    conditions: dict[Condition, Tally]
-    done_this_session: set[Purpose]
-    strikes_this_session: dict[Purpose, int]
-    last: Outcome | None
-    highest_number: int
-
-
-def tallies(outcomes: Sequence[Outcome], session: int) -> Tallies:
-    """Count `outcomes`, in any order; one short step for each."""
-    conditions: dict[Condition, Tally] = {}
-    known: dict[int, Tally] = {}  # by identity: most outcomes share their condition object
-    done: set[Purpose] = set()
-    strikes: dict[Purpose, int] = {}
+    time_constant_s: float
+    conditions: dict[Condition, Tally] = field(default_factory=dict)
     last: Outcome | None = None
-    highest = 0
-    for outcome in outcomes:
-        hold = outcome.hold
-        if outcome.number > highest:
-            highest, last = outcome.number, outcome
+    highest_number: int = 0
+    _done: dict[tuple[int, Purpose], list[Outcome]] = field(default_factory=dict)
+    _strikes: dict[tuple[int, Purpose], int] = field(default_factory=dict)
+
+    def done(self, session: int, purpose: Purpose) -> list[Outcome]:
+        """Zero checks or run-ins done in a session."""
+        return self._done.get((session, purpose), [])
+
+    def strikes(self, session: int, purpose: Purpose) -> int:
+        """Zero checks or run-ins that failed in it."""
+        return self._strikes.get((session, purpose), 0)
+
+    def add(self, outcome: Outcome) -> None:
+        hold, previous = outcome.hold, self.last
+        self.highest_number, self.last = outcome.number, outcome
         if hold.purpose is _ZERO or hold.purpose is _RUN_IN:
-            if outcome.session == session:
-                if outcome.status is _DONE:
-                    done.add(hold.purpose)
-                else:
-                    strikes[hold.purpose] = strikes.get(hold.purpose, 0) + 1
-            continue
-        condition = hold.condition
-        tally = known.get(id(condition))
+            key = outcome.session, hold.purpose
+            if outcome.status is _DONE:
+                self._done.setdefault(key, []).append(outcome)
+            else:
+                self._strikes[key] = self._strikes.get(key, 0) + 1
+            return
+        tally = self.conditions.get(hold.condition)
         if tally is None:
-            tally = known[id(condition)] = conditions.setdefault(condition, Tally())
-        tally.add(outcome)
-    return Tallies(conditions, done, strikes, last, highest)
+            tally = self.conditions[hold.condition] = Tally()
+        tally.add(outcome, previous, self.time_constant_s)
+
+
+def tallies(outcomes: Sequence[Outcome], time_constant_s: float) -> Tallies:
+    """Count `outcomes`, in any order."""
+    past = Tallies(time_constant_s)
+    for outcome in sorted(outcomes, key=attrgetter("number")):
+        past.add(outcome)
+    return past

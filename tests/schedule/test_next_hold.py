@@ -23,7 +23,7 @@ from sweeprig.holds import (
     Verdict,
 )  # fmt: skip
 from sweeprig.plan import CurvePlan, Plan, RunIn, SettlePlan, StallPlan, StartPlan
-from sweeprig.schedule import next_hold
+from sweeprig.schedule import History, next_hold
 
 SLOW = Condition(300.0, 12.0)
 FAST = Condition(25_000.0, 12.0)
@@ -74,18 +74,42 @@ def hold_of(decision: Decision) -> Hold:
 
 
 def test_a_night_in_order() -> None:
-    """Zero check, run-in, then curve falling, rising, stall and start trials for each condition, and an end."""
+    """Zero check, run-in, the curve down and up at each condition; then the ladders of all conditions in turn."""
     outcomes = work(a_plan(), [])
     seen = [(o.hold.condition.pwm_hz, str(o.hold.purpose), str(o.hold.approach)) for o in outcomes]
     order = list(dict.fromkeys(seen))
     assert order == [
         (300.0, "zero", "from_rest"), (300.0, "run_in", "from_rest"),
-        (300.0, "curve", "falling"), (300.0, "curve", "rising"), (300.0, "stall", "falling"),
-        (300.0, "start", "from_rest"),
-        (25_000.0, "curve", "falling"), (25_000.0, "curve", "rising"), (25_000.0, "stall", "falling"),
-        (25_000.0, "start", "from_rest"),
+        (300.0, "curve", "falling"), (300.0, "curve", "rising"),
+        (25_000.0, "curve", "falling"), (25_000.0, "curve", "rising"),
+        (300.0, "stall", "falling"), (300.0, "start", "from_rest"),
+        (25_000.0, "stall", "falling"), (25_000.0, "start", "from_rest"),
     ]  # fmt: skip
     assert [o.number for o in outcomes] == list(range(1, len(outcomes) + 1))
+
+
+def test_ladders_advance_in_turn() -> None:
+    """At no time is one condition's ladder more than one trial's share ahead of another's."""
+    done = dict.fromkeys(((c, p) for c in (SLOW, FAST) for p in (Purpose.STALL, Purpose.START)), 0)
+    asked = {Purpose.STALL: 8, Purpose.START: 6}
+    for outcome in work(a_plan(), []):
+        key = outcome.hold.condition, outcome.hold.purpose
+        if key in done:
+            done[key] += 1
+            parts = [count / asked[purpose] for (_, purpose), count in done.items()]
+            assert max(parts) - min(parts) <= 1 / 6 + 1e-9
+
+
+def test_a_history_answers_like_the_list_it_holds() -> None:
+    """Tallies that are added to as outcomes come give the decisions of tallies counted anew."""
+    plan, history = a_plan(), History()
+    for _ in range(60):
+        decision = next_hold(plan, history, 0.0)
+        assert decision == next_hold(plan, list(history), 0.0)
+        if not isinstance(decision, Hold):
+            break
+        history.append(outcome_of(decision, plan))
+    assert len(history) == len(work(plan, []))
 
 
 def test_the_falling_curve_ends_where_the_rotor_stopped() -> None:
