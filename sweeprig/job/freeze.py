@@ -11,10 +11,32 @@ from itertools import product
 from sweeprig.holds import Condition
 from sweeprig.job.models import Job
 from sweeprig.job.sweep_models import Deadline, Sweep
-from sweeprig.plan import CurvePlan, HeatPlan, Plan, RunIn, SettlePlan, StallPlan, StartPlan
+from sweeprig.plan import (
+    CurvePlan,
+    HeatPlan,
+    KickPlan,
+    LongRunPlan,
+    Plan,
+    ReferencePlan,
+    RunIn,
+    SettlePlan,
+    StallPlan,
+    StartPlan,
+)
 
 LOWEST_CURVE_DUTY = 2.0
 """%: where a curve given by `points` ends unless the sweep says otherwise. Below, no motor we know turns."""
+
+STEPS = {"ladder": 0.5, "adaptive": 0.1}
+"""%: multiples of which a search takes its duties, unless the sweep says otherwise."""
+MOST_TRIALS = 80
+STANDARD_ERROR = 0.25
+"""% duty. An adaptive search ends at so many trials or when its findings are known so well, unless stated."""
+PARTS = (0.25, 0.5, 1.0, 2.0, 4.0, 8.0, 16.0)
+TIME_CONSTANTS = 5.0
+CURVE_HOLDS = 4
+"""Holds a curve point, in the mean, after which a curve with a standard error to reach ends at the latest."""
+RUN_IN_PIECES = 6
 
 _BOARD_CLOCK_HZ = 16e6
 _PRESCALERS = ((244.2, 1), (30.52, 8), (0.0, 64))  # drivers/firmware/README.md: above this frequency, this prescaler
@@ -40,10 +62,15 @@ def freeze(job: Job, session: int = 1, began_utc: float | None = None) -> Plan:
         time_constant_s=motor.longest_time_constant,
         lowest_rpm=sweep.lowest_speed,
         zero_time_s=0.0 if sweep.zero is None else sweep.zero.time,
-        run_in=None if sweep.run_in is None else RunIn(sweep.run_in.duty, sweep.run_in.time),
+        run_in=_run_in(sweep),
         curve=_curve(sweep),
-        stall=_stall(sweep),
+        stall=_stall(sweep, motor.longest_time_constant),
         start=_start(sweep),
+        kick=_kick(sweep),
+        long_run=_long_run(sweep),
+        reference=_reference(sweep),
+        sharpen=sweep.sharpen,
+        spend="all" if sweep.deadline is None else sweep.deadline.spend,
         settle=SettlePlan(sweep.settle.tolerance, sweep.settle.confidence),
         saturation_percent=sweep.saturation,
         voltage_at=rig.voltage_at or "across_motor",  # cross_checks: stated wherever the role is there
@@ -72,7 +99,8 @@ def with_deadline(job: Job, began_utc: float) -> Job:
     if moment is None:
         return job
     # whole seconds: a deadline is no finer, and TOML dates keep no more than six digits of a second
-    fixed = Deadline(until=datetime.fromtimestamp(round(moment), UTC))
+    deadline = Deadline() if job.sweep.deadline is None else job.sweep.deadline
+    fixed = deadline.model_copy(update={"until": datetime.fromtimestamp(round(moment), UTC), "hours": None})
     return job.model_copy(update={"sweep": job.sweep.model_copy(update={"deadline": fixed})})
 
 
@@ -126,21 +154,77 @@ def _curve(sweep: Sweep) -> CurvePlan | None:
         duties = tuple(sorted(curve.duties, reverse=True))
     else:
         duties = curve_duties(curve.points or 0, curve_low(sweep), sweep.duty.high)
-    return CurvePlan(duties, curve.least, curve.most)
+    most = CURVE_HOLDS * len(duties) if curve.holds is None else curve.holds
+    return CurvePlan(duties, curve.least, curve.most, curve.standard_error, most)
 
 
-def _stall(sweep: Sweep) -> StallPlan | None:
+def _stall(sweep: Sweep, time_constant_s: float) -> StallPlan | None:
     stall = sweep.stall
     if stall is None:
         return None
-    return StallPlan(stall.search, stall.hold_time, stall.step, stall.holds, stall.relaunch_above, stall.relaunch_time)
+    return StallPlan(
+        stall.search,
+        stall.hold_time,
+        STEPS[stall.search] if stall.step is None else stall.step,
+        MOST_TRIALS if stall.holds is None else stall.holds,
+        stall.relaunch_above,
+        stall.relaunch_time,
+        STANDARD_ERROR if stall.standard_error is None else stall.standard_error,
+        exposure_times(stall.hold_time, stall.longest, time_constant_s),
+    )
+
+
+def exposure_times(hold_time_s: float, longest_s: float | None, time_constant_s: float) -> tuple[float, ...]:
+    """The lengths of exposure that an adaptive search chooses from, s, shortest first: parts and multiples of the hold
+    time, none shorter than five time constants, none longer than `longest_s` (None: twice the hold time)."""
+    longest = 2.0 * hold_time_s if longest_s is None else longest_s
+    shortest = TIME_CONSTANTS * time_constant_s
+    times = [part * hold_time_s for part in PARTS]
+    return tuple(time_s for time_s in times if shortest <= time_s <= longest) or (hold_time_s,)
 
 
 def _start(sweep: Sweep) -> StartPlan | None:
     start = sweep.start
     if start is None:
         return None
-    return StartPlan(start.search, start.start_time, start.rest_time, start.step, start.trials)
+    return StartPlan(
+        start.search,
+        start.start_time,
+        start.rest_time,
+        STEPS[start.search] if start.step is None else start.step,
+        MOST_TRIALS if start.trials is None else start.trials,
+        STANDARD_ERROR if start.standard_error is None else start.standard_error,
+    )
+
+
+def _kick(sweep: Sweep) -> KickPlan | None:
+    kick = sweep.kick
+    if kick is None:
+        return None
+    return KickPlan(
+        (sweep.duty.high,) if kick.duties is None else kick.duties, kick.margin, kick.shortest, kick.longest, kick.hold_time, kick.rest_time, kick.trials,
+        kick.standard_error / 100.0,
+    )  # fmt: skip
+
+
+def _long_run(sweep: Sweep) -> LongRunPlan | None:
+    long = sweep.long_run
+    return None if long is None else LongRunPlan(long.service, long.hold_time, long.holds, long.probability / 100.0)
+
+
+def _run_in(sweep: Sweep) -> RunIn | None:
+    stage = sweep.run_in
+    if stage is None:
+        return None
+    if stage.drift_per_hour is None:
+        return RunIn(stage.duty, stage.time)
+    longest = RUN_IN_PIECES * stage.time if stage.longest is None else stage.longest
+    return RunIn(stage.duty, stage.time, stage.drift_per_hour, longest)
+
+
+def _reference(sweep: Sweep) -> ReferencePlan | None:
+    reference = sweep.reference
+    return None if reference is None else ReferencePlan(reference.duty, reference.every, reference.time)
 
 
 def _deadline_utc(deadline: Deadline | None, began_utc: float | None) -> float | None:

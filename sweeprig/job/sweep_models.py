@@ -19,6 +19,9 @@ _DUTY = Amount("%", 0.0, 100.0, "Duty is the on-time in percent of the period")
 _SUPPLY = Amount("V", 0.0, 100.0, "A motor needs some supply, and sweeprig is for extra-low voltage", above=True)
 _STEP = Amount("%", 0.01, 10.0, "Finer than the drive's own step cannot be set, coarser finds no threshold")
 _HOLD = Amount("s", 0.5, 86_400.0, "A hold must see several turns, and must end")
+_ERROR = Amount("%", 0.02, 10.0, "Duty; finer is below what a drive can set")
+_REST = Amount("s", 1.0, 3600.0, "Rest is seen as a time without edges")
+_TRIALS = Number(4, 10_000, "Fewer say nothing about a threshold", whole=True)
 _RELAUNCH = Amount("%", 10.0, 100.0, "A falling approach begins at least 10 % duty above the stall duty")
 
 
@@ -48,10 +51,23 @@ class Zero(Strict):
 
 
 class RunInStage(Strict):
-    """Warm-up at a fixed duty, again in each session."""
+    """Warm-up at a fixed duty, again in each session.
+
+    drift_per_hour, longest   … in pieces of `time`, until the speed drifts by less an hour, or for so long in all
+    """
 
     duty: Annotated[float, _DUTY]
     time: Annotated[float, Amount("s", 1.0, 86_400.0, "A winding warms in minutes")]
+    drift_per_hour: Annotated[float, Amount("%", 0.05, 50.0, "Speed in percent an hour")] | None = None
+    longest: Annotated[float, Amount("s", 1.0, 86_400.0)] | None = None
+
+
+class Reference(Strict):
+    """A hold at one duty again and again through the night: what shows that the motor drifts, and by how much."""
+
+    duty: Annotated[float, _DUTY]
+    every: Annotated[float, Amount("s", 60.0, 86_400.0, "References more often than that would be most of the night")]
+    time: Annotated[float, _HOLD]
 
 
 class Curve(Strict):
@@ -60,6 +76,8 @@ class Curve(Strict):
     points, lowest   so many duties, denser at low duty, from the range's high end down to `lowest`
     duties           or these very ones, %; then `points` is left out
     least, most      shortest and longest wait for the speed to settle at each, s
+    standard_error   further points where the curve bends and replicates, until the curve is known so well everywhere, %
+                     of the highest speed; holds: but no more than so many of the falling branch at a condition
     """
 
     points: Annotated[int, Number(3, 100, "A curve needs three points", whole=True)] | None = None
@@ -70,27 +88,70 @@ class Curve(Strict):
     ) = None
     least: Annotated[float, Amount("s", 0.1, 600.0)] = 2.0
     most: Annotated[float, Amount("s", 1.0, 3600.0)] = 20.0
+    standard_error: Annotated[float, Amount("%", 0.05, 10.0, "In percent of the highest speed")] | None = None
+    holds: Annotated[int, Number(3, 1_000, "Each condition's curve must end", whole=True)] | None = None
 
 
 class Stall(Strict):
-    """Trials of falling approach: relaunch well above, step down, expose for `hold_time`."""
+    """Trials of falling approach: relaunch well above, step down, expose for `hold_time`.
 
-    search: Literal["ladder"] = "ladder"
+    search           `ladder`: step by step; `adaptive`: after each outcome the hold that tells most per second
+    step             duties are multiples of it; None: 0.5 % for the ladder, 0.1 % for the adaptive search
+    holds            so many (ladder), at most so many (adaptive; None: 80)
+    standard_error   adaptive: until the findings to sharpen are known so well, %; None: 0.25 %
+    longest          adaptive: no exposure lasts longer, s; None: twice `hold_time`
+    """
+
+    search: Literal["ladder", "adaptive"] = "ladder"
     hold_time: Annotated[float, _HOLD]
-    step: Annotated[float, _STEP] = 0.5
-    holds: Annotated[int, Number(4, 10_000, "Fewer say nothing about a threshold", whole=True)]
+    step: Annotated[float, _STEP] | None = None
+    holds: Annotated[int, _TRIALS] | None = None
+    standard_error: Annotated[float, _ERROR] | None = None
+    longest: Annotated[float, _HOLD] | None = None
     relaunch_above: Annotated[float, _RELAUNCH] = 12.0
     relaunch_time: Annotated[float, Amount("s", 0.5, 600.0)] = 4.0
 
 
 class Start(Strict):
-    """Trials from rest: no edge for `rest_time`, then a full step, watched for `start_time`."""
+    """Trials from rest: no edge for `rest_time`, then a full step, watched for `start_time`. The rest as for stall."""
 
-    search: Literal["ladder"] = "ladder"
+    search: Literal["ladder", "adaptive"] = "ladder"
     start_time: Annotated[float, Amount("s", 0.5, 600.0, "A start is ten whole turns")]
-    rest_time: Annotated[float, Amount("s", 1.0, 3600.0, "Rest is seen as a time without edges")] = 10.0
-    step: Annotated[float, _STEP] = 0.5
-    trials: Annotated[int, Number(4, 10_000, "Fewer say nothing about a threshold", whole=True)]
+    rest_time: Annotated[float, _REST] = 10.0
+    step: Annotated[float, _STEP] | None = None
+    trials: Annotated[int, _TRIALS] | None = None
+    standard_error: Annotated[float, _ERROR] | None = None
+
+
+class Kick(Strict):
+    """Starts from rest by a pulse at each of `duties` (None: the highest allowed), then the lowest reliable duty plus `margin`.
+
+    shortest, longest   pulse times that are tried, s
+    hold_time           the rotor must still turn at its end, s
+    trials              at most so many a condition and kick duty
+    standard_error      … until the pulse time is known so well, in percent of itself
+    """
+
+    duties: (
+        Annotated[tuple[Annotated[float, _DUTY], ...], Field(min_length=1, max_length=3, strict=False), _Different]
+        | None
+    ) = None
+    margin: Annotated[float, Amount("%", 0.0, 50.0, "Duty above the lowest reliable one")] = 1.0
+    shortest: Annotated[float, Amount("s", 0.001, 10.0, "No drive times a shorter pulse from outside")] = 0.02
+    longest: Annotated[float, Amount("s", 0.01, 60.0)] = 2.0
+    hold_time: Annotated[float, _HOLD] = 5.0
+    rest_time: Annotated[float, _REST] = 10.0
+    trials: Annotated[int, _TRIALS] = 40
+    standard_error: Annotated[float, Amount("%", 2.0, 200.0, "In percent of the pulse time")] = 25.0
+
+
+class LongRun(Strict):
+    """A few long holds where they pin how the hazard falls, for the bound of a run of `service`."""
+
+    service: Annotated[float, Amount("s", 3600.0, 3.2e8, "A service time is hours to years")] = 86_400.0
+    hold_time: Annotated[float, _HOLD] = 600.0
+    holds: Annotated[int, Number(1, 100, "Each takes its whole hold time", whole=True)] = 4
+    probability: Annotated[float, Amount("%", 50.0, 99.9, "Of running through the service time")] = 99.0
 
 
 class Settle(Strict):
@@ -110,14 +171,27 @@ def _with_zone(moment: datetime) -> datetime:
 
 
 class Deadline(Strict):
-    """When the run must have finished: a moment, or hours after its start (then fixed as UTC when it starts)."""
+    """When the run must have finished: a moment, or hours after its start (then fixed as UTC when it starts).
+
+    spend   `all`: adaptive searches go on sharpening until then; `needed`: the run ends when all is known as asked
+    """
 
     until: Annotated[datetime, AfterValidator(_with_zone)] | None = None
     hours: Annotated[float, Number(0.0, 1000.0, "A deadline lies ahead", above=True)] | None = None
+    spend: Literal["all", "needed"] = "all"
+
+
+Sharpened = Literal[
+    "stall_duty_percent", "sustain_99_duty_percent", "start_duty_percent", "start_99_duty_percent"
+]  # fmt: skip
+"""What an adaptive search can bring the standard error of down."""
 
 
 class Sweep(Strict):
-    """A sweep. A table that is left out ([run_in], [curve], [stall], [start]) is not done."""
+    """A sweep. A table that is left out ([run_in], [curve], [stall], [start], [kick], …) is not done.
+
+    sharpen   findings whose standard errors the adaptive searches bring down
+    """
 
     name: Annotated[str, Words(80)]
     pwm: Annotated[tuple[Annotated[float, _PWM], ...], _Axis, _Different]
@@ -136,5 +210,12 @@ class Sweep(Strict):
     curve: Curve | None = None
     stall: Stall | None = None
     start: Start | None = None
+    kick: Kick | None = None
+    long_run: LongRun | None = None
+    reference: Reference | None = None
+    sharpen: Annotated[tuple[Sharpened, ...], Field(min_length=1, max_length=4, strict=False), _Different] = (
+        "sustain_99_duty_percent",
+        "start_99_duty_percent",
+    )
     settle: Settle = Field(default_factory=Settle)
     deadline: Deadline | None = None
