@@ -7,7 +7,7 @@ from typing import overload
 
 from sweeprig.holds import Outcome
 from sweeprig.plan import Plan
-from sweeprig.schedule.tally import Tallies, tallies
+from sweeprig.schedule.tally import Reads, Tallies, tallies
 
 
 class History(Sequence[Outcome]):
@@ -16,7 +16,7 @@ class History(Sequence[Outcome]):
     def __init__(self, outcomes: Iterable[Outcome] = ()) -> None:
         self._outcomes = list(outcomes)
         self._past: Tallies | None = None
-        self._time_constant_s = 0.0
+        self._reads: Reads | None = None
 
     def append(self, outcome: Outcome) -> None:
         self._outcomes.append(outcome)
@@ -25,9 +25,9 @@ class History(Sequence[Outcome]):
         else:
             self._past = None  # out of order: counted anew at the next question
 
-    def past(self, time_constant_s: float) -> Tallies:
-        if self._past is None or time_constant_s != self._time_constant_s:
-            self._past, self._time_constant_s = tallies(self._outcomes, time_constant_s), time_constant_s
+    def past(self, reads: Reads) -> Tallies:
+        if self._past is None or reads != self._reads:
+            self._past, self._reads = tallies(self._outcomes, reads), reads
         return self._past
 
     def __len__(self) -> int:
@@ -48,6 +48,5 @@ class History(Sequence[Outcome]):
 
 def past_of(outcomes: Sequence[Outcome], plan: Plan) -> Tallies:
     """The tallies of `outcomes`: those of a History as they stand, those of any other sequence counted anew."""
-    if isinstance(outcomes, History):
-        return outcomes.past(plan.time_constant_s)
-    return tallies(outcomes, plan.time_constant_s)
+    reads = Reads(plan.time_constant_s, plan.roles.get("speed"))
+    return outcomes.past(reads) if isinstance(outcomes, History) else tallies(outcomes, reads)

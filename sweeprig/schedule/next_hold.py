@@ -12,6 +12,7 @@ from collections.abc import Iterator, Sequence
 from sweeprig.holds import Condition, Decision, Finished, Hold, NeedsPerson, Outcome
 from sweeprig.plan import Plan
 from sweeprig.schedule.curve_points import coarse_curve
+from sweeprig.schedule.curve_refined import refined_curve
 from sweeprig.schedule.heat import rest_before
 from sweeprig.schedule.history import past_of
 from sweeprig.schedule.ladder import stall_ladder, start_ladder
@@ -22,6 +23,7 @@ from sweeprig.schedule.tally import Tallies, Tally
 STAGES: tuple[tuple[Source, ...], ...] = (
     (coarse_curve,),
     (stall_ladder, start_ladder),
+    (refined_curve,),
 )
 """A later stage has its turn at the conditions in hand when no source of an earlier one wants a hold there any more.
 Within a stage the lowest rank over all sources and conditions goes first."""

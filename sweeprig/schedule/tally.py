@@ -27,6 +27,14 @@ _KEPT = (Purpose.KICK, Purpose.LONG, Purpose.REFERENCE, Purpose.TAP_MAP)
 _EXPOSED = (Purpose.STALL, Purpose.LONG)
 
 
+@dataclass(frozen=True, slots=True)
+class Reads:
+    """What the plan says that counting needs: the motor's longest time constant (s), and the channel of the speed."""
+
+    time_constant_s: float
+    speed: str | None
+
+
 @dataclass(slots=True)
 class Sums:
     """The sufficient sums of trials of one law.
@@ -72,12 +80,16 @@ class Tally:
     """What is known about one condition.
 
     falling, rising   curve settings → did the rotor turn, by duty (rounded to 1e-6 %)
+    speeds            settled speeds of curve holds of the falling branch, rpm, by duty
+    curve_holds       how many such holds there were
     strikes           discarded or abandoned holds by setting
     kept              done holds of the purposes of which there are few, as they are
     """
 
     falling: dict[float, bool] = field(default_factory=dict)
     rising: dict[float, bool] = field(default_factory=dict)
+    speeds: dict[float, list[float]] = field(default_factory=dict)
+    curve_holds: int = 0
     stall: Trials = field(default_factory=Trials)
     start: Trials = field(default_factory=Trials)
     strikes: dict[Setting, int] = field(default_factory=dict)
@@ -86,7 +98,7 @@ class Tally:
     def passed_over(self, purpose: Purpose, approach: Approach, duty_percent: float) -> bool:
         return self.strikes.get((purpose, approach, round(duty_percent, 6)), 0) >= STRIKES
 
-    def add(self, outcome: Outcome, previous: Outcome | None, time_constant_s: float) -> None:
+    def add(self, outcome: Outcome, previous: Outcome | None, reads: Reads) -> None:
         hold = outcome.hold
         if outcome.status is not _DONE:
             setting = setting_of(hold)
@@ -99,12 +111,22 @@ class Tally:
             self.start.add(outcome, duty)
             self._started(outcome, duty)
         elif purpose is _CURVE:
-            branch = self.falling if hold.approach is _FALLING else self.rising
-            branch[duty] = outcome.verdict is _TURNING
+            self._curve(outcome, duty, reads.speed)
         elif purpose in _KEPT:
             self.kept.setdefault(purpose, []).append(outcome)
         if hold.approach is _FALLING:
-            self._exposed(outcome, duty, previous, time_constant_s)
+            self._exposed(outcome, duty, previous, reads.time_constant_s)
+
+    def _curve(self, outcome: Outcome, duty: float, channel: str | None) -> None:
+        turning = outcome.verdict is _TURNING
+        if outcome.hold.approach is not _FALLING:
+            self.rising[duty] = turning
+            return
+        self.curve_holds += 1
+        self.falling[duty] = turning and self.falling.get(duty, True)
+        reading = outcome.means.get(channel) if turning and channel is not None else None
+        if reading is not None and reading.value is not None:
+            self.speeds.setdefault(duty, []).append(reading.value)
 
     def _exposed(self, outcome: Outcome, duty: float, previous: Outcome | None, time_constant_s: float) -> None:
         purpose, verdict = outcome.hold.purpose, outcome.verdict
@@ -130,7 +152,7 @@ class Tally:
 class Tallies:
     """Everything `next_hold` wants to know about the past. Outcomes are added in the order of their numbers."""
 
-    time_constant_s: float
+    reads: Reads
     conditions: dict[Condition, Tally] = field(default_factory=dict)
     last: Outcome | None = None
     highest_number: int = 0
@@ -158,12 +180,12 @@ class Tallies:
         tally = self.conditions.get(hold.condition)
         if tally is None:
             tally = self.conditions[hold.condition] = Tally()
-        tally.add(outcome, previous, self.time_constant_s)
+        tally.add(outcome, previous, self.reads)
 
 
-def tallies(outcomes: Sequence[Outcome], time_constant_s: float) -> Tallies:
+def tallies(outcomes: Sequence[Outcome], reads: Reads) -> Tallies:
     """Count `outcomes`, in any order."""
-    past = Tallies(time_constant_s)
+    past = Tallies(reads)
     for outcome in sorted(outcomes, key=attrgetter("number")):
         past.add(outcome)
     return past
