@@ -63,7 +63,7 @@ def start(
         job = load(job)
     check_rig(job)
     now = SystemClock().utc()
-    job = with_stable_ports(with_deadline(job, _first_utc(job, now)))
+    job = with_stable_ports(with_deadline(job, first_utc(job)))
     if not in_process(job):
         _check_host(job, Path(runs))
     with rig_lock(job) as lock:
@@ -158,10 +158,11 @@ def check_rig(job: Job) -> None:
             )
 
 
-def _first_utc(job: Job, now: float) -> float:
-    """UTC seconds at which the run's own clock begins: the simulated bench's is not that of the computer."""
+def first_utc(job: Job) -> float:
+    """UTC seconds at which a run that started now would begin by its own clock: the simulated bench's is not that of
+    the computer."""
     if not in_process(job):
-        return now
+        return SystemClock().utc()
     from sweeprig.simbench.clock import START_UTC
 
     return START_UTC

@@ -21,10 +21,33 @@ if TYPE_CHECKING:
     from sweeprig.launch import Launched
 
 
+def time_options(command: Callable[..., None]) -> Callable[..., None]:
+    """--until and --hours: when the run must have finished, instead of what the sweep says."""
+    until = click.option("--until", metavar="TIME", help="When it must have finished, for example 06:30.")
+    hours = click.option("--hours", type=float, metavar="N", help="… or so many hours after its start.")
+    return until(hours(command))
+
+
+def ending_as_asked(job: Job, until: str | None, hours: float | None) -> Job:
+    """The job with the deadline of the command line. On the simulated bench in this process, whose clock is not that of
+    the computer, a time of day becomes the hours until then."""
+    from datetime import datetime
+
+    from sweeprig.job.deadlines import ending, moment_of
+    from sweeprig.launch import in_process
+
+    now = datetime.now().astimezone()
+    moment = None if until is None else moment_of(until, now)
+    if moment is not None and hours is None and in_process(job):
+        hours, moment = (moment - now).total_seconds() / 3600.0, None
+    return ending(job, moment, hours)
+
+
 @cli.command(short_help="What a night would do; nothing is opened or moved.")
 @click.argument("job")
+@time_options
 @as_json
-def preview(job: str, json_out: bool) -> None:
+def preview(job: str, until: str | None, hours: float | None, json_out: bool) -> None:
     """What a night would do: holds, time, what can and cannot be found with this rig, what needs a person.
 
     Everything is checked that can be checked with nothing connected; nothing is opened or moved.
@@ -34,13 +57,14 @@ def preview(job: str, json_out: bool) -> None:
     from sweeprig.clock import SystemClock
     from sweeprig.conduct.unattended import locked_rotor_sum, points
     from sweeprig.job import freeze
-    from sweeprig.launch import check_rig, in_process
+    from sweeprig.launch import check_rig, first_utc, in_process
     from sweeprig.schedule import preview as look_ahead
     from sweeprig.terminal import preview_text
 
-    checked = job_named(job)
+    checked = ending_as_asked(job_named(job), until, hours)
     check_rig(checked)
-    night = look_ahead(freeze(checked), 0.0)
+    now = first_utc(checked)
+    night = look_ahead(freeze(checked, began_utc=now), now)
     sums, alone = locked_rotor_sum(checked), points(checked, SystemClock().utc())
     refused = [point.why for point in alone if not point.met]
     simulated = in_process(checked) or checked.rig.rate is not None
@@ -57,15 +81,25 @@ def preview(job: str, json_out: bool) -> None:
 @click.argument("job")
 @click.option("--runs", type=click.Path(path_type=Path), default=Path("runs"), show_default=True,
               help="Folder in which the run's own folder is made.")  # fmt: skip
+@time_options
 @click.option("--attended", is_flag=True, help="A person stays with the rig.")
 @click.option("--plain", is_flag=True, help="Plain lines instead of a status line.")
 @click.option("--undecided-ok", is_flag=True, help="Exit 0 also when a limit is not decided.")
 @as_json
-def run(job: str, runs: Path, attended: bool, plain: bool, undecided_ok: bool, json_out: bool) -> None:
+def run(
+    job: str,
+    runs: Path,
+    until: str | None,
+    hours: float | None,
+    attended: bool,
+    plain: bool,
+    undecided_ok: bool,
+    json_out: bool,
+) -> None:
     """Perform a job: sweep, findings, report. Ctrl-C once finishes the hold in hand; twice switches off at once."""
     from sweeprig.launch import start
 
-    checked = job_named(job)
+    checked = ending_as_asked(job_named(job), until, hours)
     _allowed(checked, attended)
     _perform(checked, plain, undecided_ok, json_out, lambda on_event, orders: start(
         checked, runs, attended=attended, on_event=on_event, orders=orders))  # fmt: skip
@@ -114,11 +148,12 @@ def _perform(
     """Work a session with progress and Ctrl-C, then findings and report, then the answer."""
     from sweeprig.conduct.states import Orders, State
     from sweeprig.job import freeze
+    from sweeprig.launch import first_utc
     from sweeprig.schedule import preview as look_ahead
     from sweeprig.terminal import progress
 
-    orders = Orders()
-    with progress(look_ahead(freeze(job), 0.0).seconds, plain) as show, _interrupts(orders, show.say):
+    orders, now = Orders(), first_utc(job)
+    with progress(look_ahead(freeze(job, began_utc=now), now).seconds, plain) as show, _interrupts(orders, show.say):
         launched = work(show, orders)
     from sweeprig.results import results  # only now: what it loads costs a second and has no part in a night
 

@@ -30,6 +30,7 @@ LOWEST_CURVE_DUTY = 2.0
 STEPS = {"ladder": 0.5, "adaptive": 0.1}
 """%: multiples of which a search takes its duties, unless the sweep says otherwise."""
 MOST_TRIALS = 80
+UNTIL_THE_DEADLINE = 10_000
 STANDARD_ERROR = 0.25
 """% duty. An adaptive search ends at so many trials or when its findings are known so well, unless stated."""
 PARTS = (0.25, 0.5, 1.0, 2.0, 4.0, 8.0, 16.0)
@@ -166,12 +167,18 @@ def _stall(sweep: Sweep, time_constant_s: float) -> StallPlan | None:
         stall.search,
         stall.hold_time,
         STEPS[stall.search] if stall.step is None else stall.step,
-        MOST_TRIALS if stall.holds is None else stall.holds,
+        _most_trials(sweep) if stall.holds is None else stall.holds,
         stall.relaunch_above,
         stall.relaunch_time,
         STANDARD_ERROR if stall.standard_error is None else stall.standard_error,
         exposure_times(stall.hold_time, stall.longest, time_constant_s),
     )
+
+
+def _most_trials(sweep: Sweep) -> int:
+    """Of an adaptive search that the sweep leaves open: with a deadline it is the time that ends it."""
+    spends = sweep.deadline is not None and sweep.deadline.spend == "all"
+    return UNTIL_THE_DEADLINE if spends else MOST_TRIALS
 
 
 def exposure_times(hold_time_s: float, longest_s: float | None, time_constant_s: float) -> tuple[float, ...]:
@@ -192,7 +199,7 @@ def _start(sweep: Sweep) -> StartPlan | None:
         start.start_time,
         start.rest_time,
         STEPS[start.search] if start.step is None else start.step,
-        MOST_TRIALS if start.trials is None else start.trials,
+        _most_trials(sweep) if start.trials is None else start.trials,
         STANDARD_ERROR if start.standard_error is None else start.standard_error,
     )
 
@@ -202,9 +209,15 @@ def _kick(sweep: Sweep) -> KickPlan | None:
     if kick is None:
         return None
     return KickPlan(
-        (sweep.duty.high,) if kick.duties is None else kick.duties, kick.margin, kick.shortest, kick.longest, kick.hold_time, kick.rest_time, kick.trials,
-        kick.standard_error / 100.0,
-    )  # fmt: skip
+        duties_percent=(sweep.duty.high,) if kick.duties is None else kick.duties,
+        margin_percent=kick.margin,
+        shortest_s=kick.shortest,
+        longest_s=kick.longest,
+        hold_time_s=kick.hold_time,
+        rest_time_s=kick.rest_time,
+        trials=kick.trials,
+        standard_error=kick.standard_error / 100.0,
+    )
 
 
 def _long_run(sweep: Sweep) -> LongRunPlan | None:

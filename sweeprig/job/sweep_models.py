@@ -124,8 +124,9 @@ class Start(Strict):
 
 
 class Kick(Strict):
-    """Starts from rest by a pulse at each of `duties` (None: the highest allowed), then the lowest reliable duty plus `margin`.
+    """Starts from rest by a pulse, then the lowest reliable duty plus `margin`.
 
+    duties              of the pulse; None: the highest allowed
     shortest, longest   pulse times that are tried, s
     hold_time           the rotor must still turn at its end, s
     trials              at most so many a condition and kick duty

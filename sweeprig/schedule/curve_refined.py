@@ -47,7 +47,7 @@ def refined_curve(plan: Plan, here: Here) -> Proposal | None:
     lead = () if flows_on(here, plan.session, duty) else relaunch(plan, duty)
     why = f"Speed curve, falling: the settled speed at {duty:.4g} %: {wanted.why}."
     hold = curve_hold(plan, curve, here, Approach.FALLING, duty, why, lead)
-    return Proposal(hold, (-wanted.u_rpm,))
+    return Proposal(hold, (-wanted.u_rpm,), spare=True)
 
 
 def least_certain(curve: CurvePlan, tally: Tally) -> Wanted | None:

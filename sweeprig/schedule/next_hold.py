@@ -11,13 +11,14 @@ from collections.abc import Iterator, Sequence
 
 from sweeprig.holds import Condition, Decision, Finished, Hold, NeedsPerson, Outcome
 from sweeprig.plan import Plan
+from sweeprig.schedule.budget import fits, kept_for_later
 from sweeprig.schedule.curve_points import coarse_curve
 from sweeprig.schedule.curve_refined import refined_curve
 from sweeprig.schedule.heat import rest_before
 from sweeprig.schedule.history import past_of
 from sweeprig.schedule.ladder import stall_ladder, start_ladder
 from sweeprig.schedule.opening import opening
-from sweeprig.schedule.proposal import Here, Proposal, Source
+from sweeprig.schedule.proposal import Here, Source
 from sweeprig.schedule.tally import Tallies, Tally
 
 STAGES: tuple[tuple[Source, ...], ...] = (
@@ -34,36 +35,32 @@ def next_hold(plan: Plan, outcomes: Sequence[Outcome], now: float) -> Decision:
     past = past_of(outcomes, plan)
     if plan.deadline_utc is not None and now >= plan.deadline_utc:
         return Finished("the deadline has come")
-    number = past.highest_number + 1
-    wanted = _wanted(plan, past, number, now)
+    wanted, late = _wanted(plan, past, now)
     first = plan.conditions[0] if wanted is None else wanted.condition
     if wanted is not None and plan.by_hand and plan.set_by_hand(first) != plan.hands:
         return _hands(plan, first)
-    hold = opening(plan, past, number, first) or wanted
+    if wanted is None and late:
+        return Finished("no hold that is still asked for would end before the deadline")
+    hold = opening(plan, past, past.highest_number + 1, first) or wanted
     if plan.heat is not None and isinstance(hold, Hold):
         return rest_before(hold, outcomes, plan.heat, now) or hold
     return hold or Finished("every hold that the sweep asks for is done")
 
 
-def _wanted(plan: Plan, past: Tallies, number: int, now: float) -> Hold | None:
-    """The next hold of the conditions that are set alike by hand, the first such group that still wants one."""
+def _wanted(plan: Plan, past: Tallies, now: float) -> tuple[Hold | None, bool]:
+    """The next hold of the conditions that are set alike by hand, the first such group that still wants one; and
+    whether there were others that the deadline leaves no time for."""
+    kept_s = 0.0 if plan.deadline_utc is None else kept_for_later(plan, past)
+    late = False
     for group in _groups(plan):
-        places = [Here(one, past.conditions.get(one) or Tally(), past, number, now) for one in group]
+        places = [Here(one, past.conditions.get(one) or Tally(), past, past.highest_number + 1, now) for one in group]
         for stage in STAGES:
-            best = _best(plan, stage, places)
-            if best is not None:
-                return best.hold
-    return None
-
-
-def _best(plan: Plan, stage: Sequence[Source], places: Sequence[Here]) -> Proposal | None:
-    best: Proposal | None = None
-    for here in places:
-        for source in stage:
-            proposal = source(plan, here)
-            if proposal is not None and (best is None or proposal.rank < best.rank):
-                best = proposal
-    return best
+            proposals = [one for here in places for source in stage if (one := source(plan, here)) is not None]
+            timely = [one for one in proposals if fits(plan, one.hold, now, kept_s if one.spare else 0.0)]
+            late = late or len(timely) < len(proposals)
+            if timely:
+                return min(timely, key=lambda one: one.rank).hold, late
+    return None, late
 
 
 def _groups(plan: Plan) -> Iterator[tuple[Condition, ...]]:

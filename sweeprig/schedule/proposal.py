@@ -15,10 +15,12 @@ class Proposal:
     """A hold that would be useful now. rank: the lowest goes first; equal ranks: the earlier condition and source.
 
     A search that is steered by gain ranks by minus its gain per second, a list that is worked off by the part done.
+    spare: there is an answer already, so before a deadline it must leave time for what has none yet.
     """
 
     hold: Hold
     rank: tuple[float, ...] = ()
+    spare: bool = False
 
 
 @dataclass(frozen=True, slots=True)
