@@ -115,6 +115,29 @@ class SettlePlan:
     confidence_percent: float = 99.0
 
 
+Likely = tuple[float, float]
+"""A positive quantity that is believed to be about so large: median, and standard deviation of its natural logarithm."""
+
+
+@dataclass(frozen=True, slots=True)
+class Expected:
+    """What is believed of the motor before the run; motors are drawn from it to predict the night, nothing else.
+
+    The defaults are guesses for small brushed motors (common practice, no source). stall, start: duty at which half of
+    the trials succeed, and the standard deviation of that law, %; kick_s: pulse time; settle_s: from a step of duty to
+    the end of a curve hold; coast_s: from drive off to the last edge. source: where it comes from, in words.
+    """
+
+    stall_percent: Likely = (12.0, 0.3)
+    stall_spread_percent: Likely = (0.3, 0.7)
+    start_percent: Likely = (18.0, 0.3)
+    start_spread_percent: Likely = (0.8, 0.7)
+    kick_s: Likely = (0.1, 0.7)
+    settle_s: Likely = (5.0, 0.4)
+    coast_s: Likely = (3.0, 0.4)
+    source: str = "guesses for small motors"
+
+
 @dataclass(frozen=True, slots=True)
 class HeatPlan:
     """How long the motor may stand locked, in all.
@@ -145,6 +168,7 @@ class Plan:
     duty_step_percent  one step of the drive (resolution of the commanded duty) for each condition, same order
     spend              `all`: an adaptive search goes on to the deadline; `needed`: until all is known as asked
     sharpen            findings whose standard errors the adaptive search brings down
+    expected           what is believed of the motor, for the preview; expected_at: … where more is known of a condition
     heat               the budget of locked-rotor heat; None only where a plan is made without a motor file
     """
 
@@ -178,6 +202,8 @@ class Plan:
     by_hand: tuple[str, ...] = ()
     hands: str | None = None
     heat: HeatPlan | None = None
+    expected: Expected = field(default_factory=Expected)
+    expected_at: Mapping[Condition, Expected] = field(default_factory=dict)
     extra: Mapping[str, float] = field(default_factory=dict)
 
     def set_by_hand(self, condition: Condition) -> str:

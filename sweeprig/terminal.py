@@ -199,13 +199,26 @@ def preview_text(night: Any, title: str, sums: Mapping[str, float], alone: Seque
     """The night ahead in words: holds and time, what can and cannot be found, safety sums, persons, guesses.
 
     `alone`: the points of `conduct.unattended`, each shown with yes or no."""
+    from sweeprig.report.catalogue import meaning
+
     lines = [title, ""]
     total = sum(night.holds.values())
     kinds = ", ".join(f"{count} {purpose.replace('_', ' ')}" for purpose, count in night.holds.items())
-    lines.append(f"{total} holds ({kinds}); about {show_time(night.seconds)} on the bench.")
+    low, high = (show_time(3600.0 * hours) for hours in (night.hours.low, night.hours.high))
+    lines.append(f"{total} holds ({kinds});")
+    lines.append(f"about {show_time(night.seconds)} on the bench, between {low} and {high} in nine nights of ten.")
+    if 0.0 < night.answered_s < 0.95 * night.seconds:
+        lines.append(f"Every condition has an answer after {show_time(night.answered_s)} at the latest.")
+    lines.append(f"The night then ends because {night.ends}.")
     if night.rest_s:
         lines.append(f"{show_time(night.rest_s)} of it are rests: the winding must cool before it may lock again.")
     lines += ["", "With this rig you will get:"] + [f"  {line}" for line in night.can]
+    if night.standard_errors:
+        lines += ["", "How sure it will be (standard errors at the worst condition; in nine nights of ten between):"]
+        lines += [
+            f"  {meaning(name).name}: {band.median:.2f} % ({band.low:.2f} to {band.high:.2f} %)"
+            for name, band in night.standard_errors.items()
+        ]
     if night.cannot:
         lines += ["", "You will not get:"] + [f"  {line}" for line in night.cannot]
     if night.persons:

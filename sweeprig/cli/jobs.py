@@ -17,8 +17,10 @@ from sweeprig.errors import ConfigError
 
 if TYPE_CHECKING:
     from sweeprig.conduct.states import Orders
+    from sweeprig.holds import Condition
     from sweeprig.job import Job
     from sweeprig.launch import Launched
+    from sweeprig.plan import Expected
 
 
 def time_options(command: Callable[..., None]) -> Callable[..., None]:
@@ -43,16 +45,29 @@ def ending_as_asked(job: Job, until: str | None, hours: float | None) -> Job:
     return ending(job, moment, hours)
 
 
+def known_of(run: Path) -> dict[Condition, Expected]:
+    """What an earlier run tells of its motor at each of its conditions."""
+    from sweeprig.opened import open_run
+    from sweeprig.schedule.learned import learned
+
+    earlier = open_run(run)
+    conditions = earlier.findings.as_json()["conditions"]
+    return learned(conditions, earlier.outcomes, f"the run {earlier.path.name}")
+
+
 @cli.command(short_help="What a night would do; nothing is opened or moved.")
 @click.argument("job")
 @time_options
+@click.option("--like", type=click.Path(path_type=Path), metavar="RUN", help="Predict from an earlier run.")
 @as_json
-def preview(job: str, until: str | None, hours: float | None, json_out: bool) -> None:
-    """What a night would do: holds, time, what can and cannot be found with this rig, what needs a person.
+def preview(job: str, until: str | None, hours: float | None, like: Path | None, json_out: bool) -> None:
+    """What a night would do: holds, time, how sure it will be, what it cannot find with this rig, who must be there.
+
+    The night is predicted from what the motor file expects of the motor, or, with --like, from an earlier run of it.
 
     Everything is checked that can be checked with nothing connected; nothing is opened or moved.
     """
-    from dataclasses import asdict
+    from dataclasses import asdict, replace
 
     from sweeprig.clock import SystemClock
     from sweeprig.conduct.unattended import locked_rotor_sum, points
@@ -64,7 +79,8 @@ def preview(job: str, until: str | None, hours: float | None, json_out: bool) ->
     checked = ending_as_asked(job_named(job), until, hours)
     check_rig(checked)
     now = first_utc(checked)
-    night = look_ahead(freeze(checked, began_utc=now), now)
+    plan = freeze(checked, began_utc=now)
+    night = look_ahead(plan if like is None else replace(plan, expected_at=known_of(like)), now)
     sums, alone = locked_rotor_sum(checked), points(checked, SystemClock().utc())
     refused = [point.why for point in alone if not point.met]
     simulated = in_process(checked) or checked.rig.rate is not None

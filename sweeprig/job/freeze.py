@@ -10,9 +10,11 @@ from itertools import product
 
 from sweeprig.holds import Condition
 from sweeprig.job.models import Job
+from sweeprig.job.motor_models import Motor
 from sweeprig.job.sweep_models import Deadline, Sweep
 from sweeprig.plan import (
     CurvePlan,
+    Expected,
     HeatPlan,
     KickPlan,
     LongRunPlan,
@@ -38,6 +40,9 @@ TIME_CONSTANTS = 5.0
 CURVE_HOLDS = 4
 """Holds a curve point, in the mean, after which a curve with a standard error to reach ends at the latest."""
 RUN_IN_PIECES = 6
+
+UNITS_DIFFER, SPREADS_DIFFER = 0.1, 0.4
+"""Scatter of the logarithm from one motor of a kind to the next: of a duty, of a spread or a time (guesses)."""
 
 _BOARD_CLOCK_HZ = 16e6
 _PRESCALERS = ((244.2, 1), (30.52, 8), (0.0, 64))  # drivers/firmware/README.md: above this frequency, this prescaler
@@ -85,8 +90,22 @@ def freeze(job: Job, session: int = 1, began_utc: float | None = None) -> Plan:
         heat=HeatPlan(
             motor.locked_rotor_time, motor.cooling_time, job.limits().locked_rotor_time, motor.maximum_voltage
         ),
+        expected=_expected(motor),
         extra={} if hours is None else {"deadline_hours": hours},
     )
+
+
+def _expected(motor: Motor) -> Expected:
+    """What the motor file expects, with the scatter from one motor of a kind to the next; the rest as Expected has it."""
+    stated = motor.expected.model_dump(exclude_none=True)
+    if not stated:
+        return Expected()
+    duties = {f"{name}_percent": (value, UNITS_DIFFER) for name, value in stated.items() if name.endswith("_duty")}
+    spreads = {f"{name}_percent": (value, SPREADS_DIFFER) for name, value in stated.items() if name.endswith("_spread")}
+    names = {"kick_time": "kick_s", "settling_time": "settle_s", "coast_time": "coast_s"}
+    times = {names[name]: (value, SPREADS_DIFFER) for name, value in stated.items() if name in names}
+    places = {name.replace("_duty_", "_"): value for name, value in duties.items()}
+    return Expected(**{**places, **spreads, **times}, source="the motor file")
 
 
 def _plain(limit: float | None) -> float | None:

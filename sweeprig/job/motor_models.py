@@ -51,6 +51,28 @@ _Voltage = Annotated[float, Amount("V", 0.0, 100.0, "sweeprig is for small motor
 _Time = Annotated[float, Amount("s", 0.1, 3600.0, "Shorter than 0.1 s no switch-off is in time")]
 
 
+_Percent = Annotated[float, Amount("%", 0.0, 100.0, "Duty is the on-time in percent of the period", above=True)]
+_Spread = Annotated[float, Amount("%", 0.01, 20.0, "Standard deviation of the law, % duty", above=False)]
+_Seconds = Annotated[float, Amount("s", 0.001, 3600.0)]
+
+
+class ExpectedOfMotor(Strict):
+    """What its owner expects of it, to predict the night; what is left out is guessed. Nothing else rests on it.
+
+    stall_duty, start_duty   where half of the trials succeed; the spreads: over what range of duty that changes
+    settling_time            from a step of duty to a settled speed; coast_time: from drive off to rest
+    kick_time                pulse that starts it in half of the trials
+    """
+
+    stall_duty: _Percent | None = None
+    stall_spread: _Spread | None = None
+    start_duty: _Percent | None = None
+    start_spread: _Spread | None = None
+    kick_time: _Seconds | None = None
+    settling_time: _Seconds | None = None
+    coast_time: _Seconds | None = None
+
+
 class Motor(Strict):
     """A motor as its nameplate and its owner describe it.
 
@@ -90,4 +112,5 @@ class Motor(Strict):
     hours_before: Annotated[float, Number(0.0, 1e6, "Hours it had run before this job")] | None = None
     starts_before: Annotated[float, Number(0.0, 1e9, "Starts it had made before this job")] | None = None
     limits: dict[Annotated[str, AfterValidator(_known_finding)], FindingLimit] = Field(default_factory=dict)
+    expected: ExpectedOfMotor = Field(default_factory=ExpectedOfMotor)
     simulated: Simulated | None = None

@@ -19,15 +19,18 @@ from sweeprig.schedule.history import past_of
 from sweeprig.schedule.ladder import stall_ladder, start_ladder
 from sweeprig.schedule.opening import opening
 from sweeprig.schedule.proposal import Here, Source
+from sweeprig.schedule.reference import last_reference, reference
 from sweeprig.schedule.tally import Tallies, Tally
 
 STAGES: tuple[tuple[Source, ...], ...] = (
     (coarse_curve,),
     (stall_ladder, start_ladder),
     (refined_curve,),
+    (last_reference,),
 )
 """A later stage has its turn at the conditions in hand when no source of an earlier one wants a hold there any more.
-Within a stage the lowest rank over all sources and conditions goes first."""
+Within a stage the lowest rank over all sources and conditions goes first. A reference hold that is due goes before all
+of them."""
 
 
 def next_hold(plan: Plan, outcomes: Sequence[Outcome], now: float) -> Decision:
@@ -59,7 +62,9 @@ def _wanted(plan: Plan, past: Tallies, now: float) -> tuple[Hold | None, bool]:
             timely = [one for one in proposals if fits(plan, one.hold, now, kept_s if one.spare else 0.0)]
             late = late or len(timely) < len(proposals)
             if timely:
-                return min(timely, key=lambda one: one.rank).hold, late
+                due = [one for here in places if (one := reference(plan, here)) is not None]
+                due = [one for one in due if fits(plan, one.hold, now)]
+                return min(due or timely, key=lambda one: one.rank).hold, late
     return None, late
 
 

@@ -6,6 +6,7 @@ from sweeprig.holds import Approach, Condition, EndsWhen, Hold, NeedsPerson, Pur
 from sweeprig.plan import Plan
 from sweeprig.schedule.proposal import SENSORS, offered
 from sweeprig.schedule.tally import STRIKES, Tallies
+from sweeprig.steady import warm_up
 
 
 def opening(plan: Plan, past: Tallies, number: int, first: Condition) -> Hold | NeedsPerson | None:
@@ -28,7 +29,12 @@ def _zero(plan: Plan, past: Tallies, number: int, first: Condition) -> Hold | Ne
 
 
 def _run_in(plan: Plan, past: Tallies, number: int, first: Condition) -> Hold | NeedsPerson | None:
-    if plan.run_in is None or past.done(plan.session, Purpose.RUN_IN):
+    """One piece of the run-in: the only one, or the next until the speed is steady enough."""
+    if plan.run_in is None:
+        return None
+    pieces = past.done(plan.session, Purpose.RUN_IN)
+    warm = warm_up(plan.run_in, pieces)
+    if warm.done:
         return None
     duty, time_s = plan.run_in.duty_percent, plan.run_in.time_s
     if past.strikes(plan.session, Purpose.RUN_IN) >= STRIKES:
@@ -37,5 +43,8 @@ def _run_in(plan: Plan, past: Tallies, number: int, first: Condition) -> Hold | 
             f"the run-in at {duty:g} % failed {STRIKES} times",
         )
     why = f"Run-in: {time_s:g} s at {duty:g} % so that friction and winding are warm before anything counts."
+    if plan.run_in.drift_percent_per_hour is not None and pieces:
+        asked, most_s = plan.run_in.drift_percent_per_hour, plan.run_in.most_s
+        why = f"Run-in, on for {time_s:g} s at {duty:g} % ({most_s:g} s at most in all): {warm.words(asked)}."
     roles = offered(plan, SENSORS)
     return Hold(number, Purpose.RUN_IN, Approach.FROM_REST, first, duty, time_s, time_s, EndsWhen.TIME, roles, why)

@@ -1,44 +1,49 @@
-"""The night ahead, from the same decision function fed with predicted outcomes. Pure: nothing is opened or moved."""
+"""The night ahead, from the same decision function fed with predicted outcomes. Pure: nothing is opened or moved.
+
+So many motors are drawn from what is believed of the motor, and each is given its night; what one more night would take
+lies between the shortest and the longest of n nights with a chance of (n − 1)/(n + 1), whatever their law.
+"""
 
 from __future__ import annotations
 
+import statistics
 from collections import Counter
-from dataclasses import dataclass, replace
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field, replace
 
-from sweeprig.holds import Approach, Finished, Hold, NeedsPerson, Outcome, Purpose, Status, Verdict
+from sweeprig.holds import Finished, Hold, NeedsPerson, Purpose
 from sweeprig.plan import Plan
 from sweeprig.schedule.history import History
+from sweeprig.schedule.needs import what_can_be_found
 from sweeprig.schedule.next_hold import next_hold
+from sweeprig.schedule.predicted import PredictedMotor
+from sweeprig.schedule.sharpness import answered, standard_errors
 
-GUESSED_STALL_PERCENT = 12.0
-GUESSED_START_PERCENT = 18.0
-COAST_S = 3.0
-"""Time for the rotor to come to rest before the rest time counts; guessed, the motor tells on the night."""
-
+NIGHTS = 19
+"""The longest and the shortest of 19 hold a twentieth night between them nine times in ten."""
 MOST_HOLDS = 100_000
 
-_NEEDS: dict[str, tuple[str, ...]] = {
-    "speed curve, top speed, usable range": ("speed",),
-    "stall duty, sustain_99, stall speed": ("speed",),
-    "start duty, start_99": ("speed",),
-    "mean motor voltage and stall voltage": ("motor_voltage",),
-    "current, and protection by current": ("current",),
-    "duty as measured": ("duty",),
-    "PWM frequency as measured": ("pwm_frequency",),
-}
 
+@dataclass(frozen=True, slots=True)
+class Band:
+    """Median over the predicted nights, and the 90 % band for one more night."""
 
-_INSTEAD = {
-    "duty as measured": "; the commanded duty is taken, and marked",
-    "PWM frequency as measured": "; the commanded frequency is taken",
-}
+    median: float
+    low: float
+    high: float
+
+    @classmethod
+    def of(cls, values: Sequence[float]) -> Band:
+        return cls(statistics.median(values), min(values), max(values))
 
 
 @dataclass(frozen=True, slots=True)
 class Preview:
-    """holds: predicted number by purpose; seconds: predicted bench time, rest_s of it with the drive off so that the
-    winding cools; can / cannot: what this rig gives and lacks,
-    in words; persons: what needs a person; guesses: what the prediction assumes."""
+    """holds: predicted number by purpose (median); seconds: predicted bench time (median), rest_s of it with the drive
+    off so that the winding cools; answered_s: until every condition has an answer; hours, count: time and holds with
+    their 90 % bands; standard_errors: of the findings that a search can sharpen, worst over the conditions, %;
+    can / cannot: what this rig gives and lacks, in words; persons: what needs a person; guesses: what the prediction
+    assumes; ends: why the night ends."""
 
     holds: dict[str, int]
     seconds: float
@@ -47,82 +52,105 @@ class Preview:
     persons: tuple[str, ...]
     guesses: tuple[str, ...]
     rest_s: float = 0.0
+    answered_s: float = 0.0
+    hours: Band = Band(0.0, 0.0, 0.0)
+    count: Band = Band(0.0, 0.0, 0.0)
+    standard_errors: dict[str, Band] = field(default_factory=dict)
+    ends: str = ""
 
 
-def preview(
-    plan: Plan,
-    now: float,
-    stall_percent: float = GUESSED_STALL_PERCENT,
-    start_percent: float = GUESSED_START_PERCENT,
-) -> Preview:
-    """Run `next_hold` to its end on a motor that stalls and starts at the guessed duties."""
-    outcomes = History()
+@dataclass(frozen=True, slots=True)
+class Night:
+    """One predicted night. seconds: of it until the last hold ended; answered_s None: not every condition was."""
+
+    holds: Counter[str]
+    seconds: float
+    rest_s: float
+    answered_s: float | None
+    errors: dict[str, float]
+    persons: tuple[str, ...]
+    ends: str
+
+
+def preview(plan: Plan, now: float, nights: int = NIGHTS) -> Preview:
+    """Run `next_hold` to its end on motors drawn from what is expected of this one. `now`: UTC seconds of the start."""
+    seen = [one_night(plan, now, number) for number in range(nights)]
+    can, cannot = what_can_be_found(plan)
+    middle = sorted(seen, key=lambda night: night.seconds)[nights // 2]
+    names = [name for name in seen[0].errors if all(name in night.errors for night in seen)]
+    finished = [night.answered_s for night in seen if night.answered_s is not None]
+    return Preview(
+        holds={name: round(statistics.median(n.holds[name] for n in seen)) for name in middle.holds},
+        seconds=middle.seconds,
+        can=can,
+        cannot=cannot,
+        persons=middle.persons,
+        guesses=_guesses(plan),
+        rest_s=middle.rest_s,
+        answered_s=max(finished, default=middle.seconds),
+        hours=Band.of([night.seconds / 3600.0 for night in seen]),
+        count=Band.of([float(night.holds.total()) for night in seen]),
+        standard_errors={name: Band.of([night.errors[name] for night in seen]) for name in names},
+        ends=Counter(night.ends for night in seen).most_common(1)[0][0],
+    )
+
+
+def one_night(plan: Plan, now: float, number: int) -> Night:
+    """The night of the motor that is drawn with `number`; the same number draws the same."""
+    motor, history, clock = PredictedMotor(plan, number), History(), 0.0
     persons: list[str] = []
-    clock = 0.0
-    while len(outcomes) < MOST_HOLDS:
-        decision = next_hold(plan, outcomes, now + clock)
+    holds: Counter[str] = Counter()
+    rest_s, answered_s, ends = 0.0, None, "the prediction was given up"
+    reached = _once(lambda: answered(plan, history))
+    while len(history) < MOST_HOLDS:
+        decision = next_hold(plan, history, now + clock)
         if isinstance(decision, Finished):
+            ends = decision.reason
             break
         if isinstance(decision, NeedsPerson):
             persons.append(f"{decision.what} ({decision.why})")
             if decision.hands is None:
+                ends = "a person is needed"
                 break
             plan = replace(plan, hands=decision.hands, session=plan.session + 1)
             continue
-        outcome = _predicted(decision, plan, clock, now, stall_percent, start_percent)
-        outcomes.append(outcome)
+        outcome = motor.outcome(decision, plan.session, clock, now)
+        history.append(outcome)
         clock = outcome.ended
-    can, cannot = _what_can_be_found(plan)
-    guesses = (
-        f"stall near {stall_percent:g} % and start near {start_percent:g} %",
-        f"{COAST_S:g} s to coast down before each start trial",
-        "every curve point settled half-way between its shortest and longest time",
+        holds[str(decision.purpose)] += 1
+        rest_s += outcome.exposed_s if decision.purpose is Purpose.REST else 0.0
+        if answered_s is None and _tells(decision) and reached():
+            answered_s = clock
+    errors = standard_errors(plan, history)
+    return Night(holds, clock, rest_s, answered_s, errors, tuple(persons), ends)
+
+
+def _tells(hold: Hold) -> bool:
+    return hold.purpose in (Purpose.CURVE, Purpose.STALL, Purpose.START)
+
+
+def _once(asked: Callable[[], bool]) -> Callable[[], bool]:
+    """`asked`, until it has said yes."""
+    said = False
+
+    def ask() -> bool:
+        nonlocal said
+        said = said or asked()
+        return said
+
+    return ask
+
+
+def _guesses(plan: Plan) -> tuple[str, ...]:
+    expected = plan.expected
+    about = (
+        f"stall near {expected.stall_percent[0]:g} % with a spread of about {expected.stall_spread_percent[0]:g} %, "
+        f"start near {expected.start_percent[0]:g} % with {expected.start_spread_percent[0]:g} % ({expected.source})"
     )
-    counts = Counter(str(outcome.hold.purpose) for outcome in outcomes)
-    rest_s = sum(outcome.exposed_s for outcome in outcomes if outcome.hold.purpose is Purpose.REST)
-    return Preview(dict(counts), clock, can, cannot, tuple(persons), guesses, rest_s)
-
-
-def _what_can_be_found(plan: Plan) -> tuple[tuple[str, ...], tuple[str, ...]]:
-    wanted = dict(_NEEDS)
-    missing = []
-    if plan.stall is None:
-        del wanted["stall duty, sustain_99, stall speed"]
-        missing.append("stall duty, sustain_99, stall speed: the sweep has no [stall] table")
-    if plan.start is None:
-        del wanted["start duty, start_99"]
-        missing.append("start duty, start_99: the sweep has no [start] table")
-    if plan.curve is None:
-        del wanted["speed curve, top speed, usable range"]
-        missing.append("speed curve, top speed, usable range: the sweep has no [curve] table")
-    can = tuple(what for what, roles in wanted.items() if all(role in plan.roles for role in roles))
-    for what, roles in wanted.items():
-        lacking = [role for role in roles if role not in plan.roles]
-        if lacking:
-            shown = ", ".join(role.replace("_", " ") for role in lacking)
-            instead = _INSTEAD.get(what, "")
-            missing.append(f"{what}: no instrument of the rig has the role {shown}{instead}")
-    return can, tuple(missing)
-
-
-def _predicted(hold: Hold, plan: Plan, clock: float, now: float, stall: float, start: float) -> Outcome:
-    begins_at_rest = hold.approach in (Approach.RISING, Approach.FROM_REST)
-    turns = hold.duty_percent >= (start if begins_at_rest else stall)
-    exposed = hold.most_s
-    if hold.purpose is Purpose.CURVE:
-        exposed = (hold.least_s + hold.most_s) / 2 if turns else hold.least_s
-    elif hold.purpose is Purpose.STALL and not turns:
-        exposed = hold.most_s / 3
-    lead = sum(seconds + (COAST_S if duty == 0 else 0.0) for duty, seconds in hold.lead)
-    ended = clock + lead + exposed
-    verdict = _verdict(hold.purpose, turns)
-    return Outcome(
-        hold.number, hold, plan.session, Status.DONE, verdict, clock, ended, now + clock, now + ended, exposed,
-        (exposed, None),
-    )  # fmt: skip
-
-
-def _verdict(purpose: Purpose, turns: bool) -> Verdict:
-    if purpose is Purpose.START:
-        return Verdict.STARTED if turns else Verdict.DID_NOT_START
-    return Verdict.TURNING if turns else Verdict.STOPPED
+    known = sorted({one.source for one in plan.expected_at.values()})
+    more = tuple(f"what is known of {len(plan.expected_at)} conditions from {source}" for source in known)
+    times = (
+        f"about {expected.settle_s[0]:g} s until a curve point is settled, {expected.coast_s[0]:g} s to coast down",
+        "no hold discarded",
+    )
+    return (about, *more, *times)

@@ -84,6 +84,7 @@ class Tally:
     curve_holds       how many such holds there were
     strikes           discarded or abandoned holds by setting
     kept              done holds of the purposes of which there are few, as they are
+    last_number       of the last done hold
     """
 
     falling: dict[float, bool] = field(default_factory=dict)
@@ -94,6 +95,7 @@ class Tally:
     start: Trials = field(default_factory=Trials)
     strikes: dict[Setting, int] = field(default_factory=dict)
     kept: dict[Purpose, list[Outcome]] = field(default_factory=dict)
+    last_number: int = 0
 
     def passed_over(self, purpose: Purpose, approach: Approach, duty_percent: float) -> bool:
         return self.strikes.get((purpose, approach, round(duty_percent, 6)), 0) >= STRIKES
@@ -105,6 +107,7 @@ class Tally:
             self.strikes[setting] = self.strikes.get(setting, 0) + 1
             return
         purpose, duty = hold.purpose, round(hold.duty_percent, 6)
+        self.last_number = outcome.number
         if purpose is _STALL:
             self.stall.add(outcome, duty)
         elif purpose is _START:

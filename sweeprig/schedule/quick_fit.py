@@ -1,0 +1,105 @@
+"""A quick posterior of the stall law from a condition's sums, for choosing holds; what is reported is fitted elsewhere.
+
+Pure numbers: sums in, a duty out. No holds in here.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+
+from sweeprig.laws import STALL_LAWS, Evidence, Floats, Law, log_likelihood
+from sweeprig.schedule.tally import Sums
+
+SPREAD_PERCENT, SPREAD_LOG_SD = 0.3, 1.0
+"""Before the trials: spreads of small brushed motors, % duty, as findings have it (common practice, no source)."""
+_ROWS, _COLUMNS, _REACH = 31, 61, 3.0
+_BEYOND_PERCENT, _BEYOND_SPREADS = 2.0, 6.0
+_KEPT = 12.0
+_HALVINGS = 30
+Key = tuple[tuple[tuple[float, float], ...], tuple[tuple[float, float, int], ...]]
+
+
+@dataclass(frozen=True, slots=True)
+class Quick:
+    """Weights (rows, columns), sum 1, at `median` (rows, columns) and `spread` (rows, 1), percent duty."""
+
+    law: Law
+    median: Floats
+    spread: Floats
+    weight: Floats
+
+    def failing(self, duty_percent: float, parts: float) -> float:
+        """The chance to stop within `parts` of the hold time at a duty, all that is not known averaged over."""
+        hazard = self.law.cumulative((duty_percent - self.median) / self.spread)
+        return float((-np.expm1(-hazard * parts) * self.weight).sum())
+
+    def below(self, probability: float, confidence: float) -> float:
+        """The duty that the one for `probability` lies below with `confidence`."""
+        place = np.ravel(self.median + self.law.offset(probability) * self.spread)
+        order = np.argsort(place)
+        share = np.cumsum(np.ravel(self.weight)[order])
+        return float(place[order][min(int(np.searchsorted(share, confidence)), place.size - 1)])
+
+
+def key_of(sums: Sums) -> Key:
+    """The sums as a value that can be remembered by."""
+    return (
+        tuple(sorted(sums.exposure.items())),
+        tuple(sorted((duty, width, count) for (duty, width), count in sums.events.items())),
+    )
+
+
+@lru_cache(maxsize=256)
+def quick_fit(key: Key, hold_time_s: float, which: int = 0) -> Quick:
+    """The posterior of STALL_LAWS[which]; `key` must hold a stop and a time turned, else it is improper.
+
+    The grid is laid twice: around the lowest duty that turned and the highest that stopped, then where the weight is.
+    """
+    law, evidence = STALL_LAWS[which], _evidence(key, hold_time_s)
+    rows = math.log(SPREAD_PERCENT) + SPREAD_LOG_SD * np.linspace(-_REACH, _REACH, _ROWS)
+    spread = np.exp(rows)[:, None]
+    turned = [float(duty) for duty, time in zip(evidence.duty, evidence.exposure, strict=True) if time > 0.0]
+    ends = min(turned), float(evidence.event_duty.max())
+    beyond = _BEYOND_PERCENT + _BEYOND_SPREADS * spread[:, 0]
+    low, high = min(ends) - beyond, max(ends) + beyond
+    steps = np.linspace(0.0, 1.0, _COLUMNS)
+    for last in (False, True):
+        median = low[:, None] + (high - low)[:, None] * steps
+        value = log_likelihood(law, evidence, median, spread)
+        if not last:
+            inside = value >= value.max(axis=1, keepdims=True) - _KEPT
+            first, end = inside.argmax(axis=1), _COLUMNS - 1 - inside[:, ::-1].argmax(axis=1)
+            width = (high - low) / (_COLUMNS - 1)
+            low, high = low + (first - 1) * width, low + (end + 1) * width
+    value = value - 0.5 * ((rows - math.log(SPREAD_PERCENT)) / SPREAD_LOG_SD)[:, None] ** 2
+    weight = np.exp(value - value.max()) * (high - low)[:, None]
+    return Quick(law, median, spread, weight / weight.sum())
+
+
+def _evidence(key: Key, hold_time_s: float) -> Evidence:
+    exposures, events = key
+    return Evidence(
+        duty=np.array([duty for duty, _ in exposures]),
+        exposure=np.array([seconds for _, seconds in exposures]) / hold_time_s,
+        event_duty=np.array([duty for duty, _, _ in events]),
+        event_width=np.array([width for _, width, _ in events]) / hold_time_s,
+        events=np.array([count for _, _, count in events], dtype=np.float64),
+        holds=(),
+    )
+
+
+def contrast(sums: Sums) -> bool:
+    """Whether something stopped and something turned on: without both, nothing can be fitted."""
+    return bool(sums.events) and any(seconds > 0.0 for seconds in sums.exposure.values())
+
+
+def duty_that_fails(fitted: Quick, chance: float, parts: float, low: float, high: float) -> float:
+    """The duty in [low, high] where stopping within `parts` of the hold time has that chance; it falls with duty."""
+    for _ in range(_HALVINGS):
+        middle = 0.5 * (low + high)
+        low, high = (middle, high) if fitted.failing(middle, parts) > chance else (low, middle)
+    return 0.5 * (low + high)
