@@ -59,25 +59,28 @@ def quick_fit(key: Key, hold_time_s: float, which: int = 0) -> Quick:
 
     The grid is laid twice: around the lowest duty that turned and the highest that stopped, then where the weight is.
     """
-    law, evidence = STALL_LAWS[which], _evidence(key, hold_time_s)
-    rows = math.log(SPREAD_PERCENT) + SPREAD_LOG_SD * np.linspace(-_REACH, _REACH, _ROWS)
-    spread = np.exp(rows)[:, None]
+    law, evidence, centre = STALL_LAWS[which], _evidence(key, hold_time_s), math.log(SPREAD_PERCENT)
+    rows = centre + SPREAD_LOG_SD * np.linspace(-_REACH, _REACH, _ROWS)
     turned = [float(duty) for duty, time in zip(evidence.duty, evidence.exposure, strict=True) if time > 0.0]
     ends = min(turned), float(evidence.event_duty.max())
-    beyond = _BEYOND_PERCENT + _BEYOND_SPREADS * spread[:, 0]
+    beyond = _BEYOND_PERCENT + _BEYOND_SPREADS * np.exp(rows)
     low, high = min(ends) - beyond, max(ends) + beyond
-    steps = np.linspace(0.0, 1.0, _COLUMNS)
+    steps, index = np.linspace(0.0, 1.0, _COLUMNS), np.arange(_COLUMNS)
     for last in (False, True):
         median = low[:, None] + (high - low)[:, None] * steps
-        value = log_likelihood(law, evidence, median, spread)
-        if not last:
-            inside = value >= value.max(axis=1, keepdims=True) - _KEPT
-            first, end = inside.argmax(axis=1), _COLUMNS - 1 - inside[:, ::-1].argmax(axis=1)
-            width = (high - low) / (_COLUMNS - 1)
-            low, high = low + (first - 1) * width, low + (end + 1) * width
-    value = value - 0.5 * ((rows - math.log(SPREAD_PERCENT)) / SPREAD_LOG_SD)[:, None] ** 2
+        value = log_likelihood(law, evidence, median, np.exp(rows)[:, None])
+        value = value - 0.5 * ((rows - centre) / SPREAD_LOG_SD)[:, None] ** 2
+        if last:
+            break
+        inside = value >= value.max(axis=1, keepdims=True) - _KEPT
+        first, end = np.where(inside, index, _COLUMNS).min(axis=1), np.where(inside, index, -1).max(axis=1)
+        width = (high - low) / (_COLUMNS - 1)
+        low, high = low + (first - 1) * width, low + (end + 1) * width
+        kept = np.flatnonzero(value.max(axis=1) >= value.max() - _KEPT)
+        finer = np.linspace(rows[max(int(kept[0]) - 1, 0)], rows[min(int(kept[-1]) + 1, _ROWS - 1)], _ROWS)
+        low, high, rows = np.interp(finer, rows, low), np.interp(finer, rows, high), finer
     weight = np.exp(value - value.max()) * (high - low)[:, None]
-    return Quick(law, median, spread, weight / weight.sum())
+    return Quick(law, median, np.exp(rows)[:, None], weight / weight.sum())
 
 
 def _evidence(key: Key, hold_time_s: float) -> Evidence:
