@@ -84,3 +84,7 @@ class Doubting:
         doubt = None if self.rotation is None else self.rotation.stopped(self.guard.commanded)
         if doubt is not None:
             raise Doubted(doubt)
+
+    def stands(self) -> str:
+        """Before a rotor is said to turn: what says that it is at rest; "" where nothing does."""
+        return "" if self.rotation is None else self.rotation.at_rest(self.guard.commanded)

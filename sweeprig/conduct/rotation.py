@@ -1,4 +1,4 @@
-"""Is a stop of the rotor believed? The tachometer says that it stopped; voltage and current say whether that is true.
+"""Is it believed that the rotor stopped, or turns? The tachometer says so; voltage and current say whether it is true.
 
 Pure. For brushed motors: their back-EMF shows in the current, and in the mean voltage where the current has gaps. A
 motor's own electronics draw what they like.
@@ -56,6 +56,28 @@ class Rotation:
         if doubt is None:
             self._learn(commanded)
         return doubt
+
+    def at_rest(self, commanded: Commanded) -> str:
+        """The tachometer says that the rotor turns fast, at this setting; what says that it stands, "" for nothing.
+
+        Current and voltage together, both read and both known at rest from a duty nearby: on a current without gaps the
+        voltage is the same turning or not, but back-EMF takes its part of the current; with gaps it is the other way
+        round. So a rotor that turns fast never shows both as at rest. Of a slow one nothing can be told."""
+        last = self.cycles[-int(BOUNDS["spun_up_readings"]) :]
+        speed, duty = _median(last, self.looked.speed), commanded.duty_percent / 100.0
+        fast = BOUNDS["fast_percent"] / 100.0 * duty * self.maximum_rpm
+        if not self.looked.brushed_on_diode or len(last) < BOUNDS["spun_up_readings"] or speed is None or speed < fast:
+            return ""
+        says = []
+        for channel, power in ((self.looked.voltage, 1), (self.looked.current, self.power)):
+            known, present = self._known(channel, commanded, power, False), _median(last, channel)
+            if channel is None or known is None or present is None:
+                return ""
+            if abs(present - known) > BOUNDS["as_at_rest_percent"] / 100.0 * abs(known):
+                return ""
+            unit = last[-1][channel].unit
+            says.append(f"{channel} {show_quantity(present, unit)}, at rest {show_quantity(known, unit)}")
+        return f"{speed:.4g} rpm, but {' and '.join(says)}"
 
     def _dead(self, commanded: Commanded) -> Doubt | None:
         """Next to no voltage although some is due: nothing drives the rotor, and its stop says nothing."""

@@ -145,3 +145,39 @@ def test_a_rig_that_reads_neither() -> None:
         {name: each[name] for name in ("board.speed", "board.edge_age")} for each in [*TURNING, cycle(0, 0, None, 0.9)]
     ]
     assert stopped(blind, *bare) is None
+
+
+FAST = [cycle(0.0, 0.036 * (20.0 / 18.0) ** 2, 700.0)] * 3
+"""Edges that say 700 rpm, more than 40 % of 20 % of 5000 rpm, while the current is that of a rotor at rest."""
+
+
+def says_rest(rotation: Rotation, *cycles: dict[str, Reading]) -> str:
+    rotation.begin()
+    for each in cycles:
+        rotation.take(each)
+    return rotation.at_rest(AT_20)
+
+
+def test_edges_that_no_rotor_makes() -> None:
+    """A lamp's flicker on the sensor: both voltage and current are as known at rest from a duty nearby, at a speed that
+    would show in one of them."""
+    at_rest = [replace_volts(each, 1.9 * 20.0 / 18.0) for each in FAST]
+    assert "supply.amps 44.44 mA, at rest 44.44 mA" in says_rest(knowing(), *at_rest)
+
+
+def test_a_rotor_that_turns_is_believed() -> None:
+    """Its current is less (no gaps), or its voltage more (gaps), than at rest; and where it is slow, or nothing is
+    known at rest, or no three readings were taken, nothing is said."""
+    at_rest = [replace_volts(each, 1.9 * 20.0 / 18.0) for each in FAST]
+    assert says_rest(knowing(), *[cycle(1.9 * 20.0 / 18.0, 0.02, 700.0)] * 3) == ""
+    assert says_rest(knowing(), *[replace_volts(each, 4.0) for each in FAST]) == ""
+    assert says_rest(knowing(), *[{**each, "board.speed": cycle(0, 0, 100.0)["board.speed"]} for each in at_rest]) == ""
+    assert says_rest(Rotation(LOOKED, 2, 5000.0), *at_rest) == ""
+    assert says_rest(knowing(), *at_rest[:2]) == ""
+    other = knowing()
+    other.looked = replace(LOOKED, voltage=None)
+    assert says_rest(other, *at_rest) == ""
+
+
+def replace_volts(each: dict[str, Reading], volts: float) -> dict[str, Reading]:
+    return {**each, "meter.volts": replace(each["meter.volts"], value=volts)}
