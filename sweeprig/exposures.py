@@ -40,3 +40,19 @@ def turned_before(outcome: Outcome, previous: Outcome | None) -> bool:
         and previous.status is Status.DONE
         and previous.verdict in (Verdict.TURNING, Verdict.STARTED)
     )
+
+
+KICK_PULSE, KICK_AMPS = "kick.pulse", "kick.current"
+"""Channels of a kick hold's outcome: the pulse as it was (s), and the mean current in it (A) where it was read."""
+
+
+def kick_of(outcome: Outcome) -> tuple[float, float, float] | None:
+    """(kick duty %, pulse s, its u s) of a kick hold: as it was timed, else as asked for; None without a kick."""
+    pulses = [(duty, seconds) for duty, seconds in outcome.hold.lead if duty > 0.0]
+    if not pulses:
+        return None
+    duty, seconds = pulses[-1]
+    timed = outcome.means.get(KICK_PULSE)
+    if timed is not None and timed.value is not None and timed.value > 0.0:
+        return duty, timed.value, timed.u
+    return (duty, seconds, 0.0) if seconds > 0.0 else None

@@ -71,12 +71,14 @@ class Trial:
 
     survived   part of the trial at whose end the rotor was still known to turn (a start that succeeded: 1)
     failed     width of the interval after `survived` in which it failed; None: it had not failed (censored)
+    at_s       when it was made, on the run clock, s: what a drift is reckoned by
     """
 
     hold: int
     duty_percent: float
     survived: float
     failed: float | None = None
+    at_s: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -139,6 +141,21 @@ def log_likelihood(law: Law, evidence: Evidence, median: Floats, spread: Floats)
         within = -np.expm1(-law.cumulative((evidence.event_duty - place) / scale) * evidence.event_width)
         total = total + (np.log(np.maximum(within, _SMALLEST_CHANCE)) * evidence.events).sum(axis=-1)
     return np.asarray(total, dtype=np.float64)
+
+
+def log_likelihood_with_lapse(law: Law, evidence: Evidence, median: Floats, spread: Floats, rates: Floats) -> Floats:
+    """The same with a hazard that duty does not cure beside the law's, for each of `rates` (stops per whole trial):
+    one axis more, the first. At rate 0 it is `log_likelihood`."""
+    place, scale = np.asarray(median)[..., None], np.asarray(spread)[..., None]
+    survived = -(law.cumulative((evidence.duty - place) / scale) * evidence.exposure).sum(axis=-1)
+    hazard = law.cumulative((evidence.event_duty - place) / scale)
+    total = np.empty((rates.size, *survived.shape))
+    whole = float(evidence.exposure.sum())
+    for index, rate in enumerate(rates.tolist()):
+        within = -np.expm1(-(hazard + rate) * evidence.event_width)
+        seen = (np.log(np.maximum(within, _SMALLEST_CHANCE)) * evidence.events).sum(axis=-1)
+        total[index] = survived - rate * whole + seen
+    return total
 
 
 def log_chance_of_same(law: Law, evidence: Evidence, median: Floats, spread: Floats) -> Floats:

@@ -10,20 +10,24 @@ from functools import partial
 
 from sweeprig.characterise import usable
 from sweeprig.characterise.curve import Curve, fit_curve, lowest_sure_duty
+from sweeprig.characterise.disturbed import lapse_finding
 from sweeprig.characterise.duties_found import STALL, START, TAIL, start_stall_hysteresis, threshold
 from sweeprig.characterise.evidence import (
     Chosen,
     Duties,
     Point,
     duties,
-    speed_points,
     stall_trials,
     start_trials,
     turning_before,
     voltage_points,
 )
 from sweeprig.characterise.findings import ConditionFindings, Findings, SpeedCurve, not_found
+from sweeprig.characterise.kick import kicks
 from sweeprig.characterise.limits import judge_all
+from sweeprig.characterise.long_run import long_run
+from sweeprig.characterise.speed_drift import WarmUps, drift_percent_per_hour, expecting, speeds, warm_ups
+from sweeprig.characterise.tap_duties import doubts
 from sweeprig.errors import ConfigError
 from sweeprig.holds import Approach, Condition, Outcome, Status
 from sweeprig.plan import Plan
@@ -41,10 +45,10 @@ def characterise(plan: Plan, outcomes: Sequence[Outcome], about: Mapping[str, ob
     if missing:
         raise ConfigError("findings need to know what they are about", value=f"no {', '.join(missing)}")
     done = [outcome for outcome in outcomes if outcome.status is Status.DONE]
-    turned = turning_before(outcomes)
+    turned, began = turning_before(outcomes), warm_ups(plan, done)
     others = sorted({o.hold.condition for o in done} - set(plan.conditions))
     conditions = tuple(
-        of_condition(plan, condition, [o for o in done if o.hold.condition == condition], turned)
+        of_condition(plan, condition, [o for o in done if o.hold.condition == condition], turned, began)
         for condition in (*plan.conditions, *others)
     )
     return Findings(
@@ -55,26 +59,33 @@ def characterise(plan: Plan, outcomes: Sequence[Outcome], about: Mapping[str, ob
         software=about["software"],
         conditions=conditions,
         limits=judge_all(plan, conditions),
+        suspicions=doubts(plan, outcomes),
+        advice=tuple({"note": remark} for remark in plan.remarks),
     )
 
 
 def of_condition(
-    plan: Plan, condition: Condition, done: Sequence[Outcome], turned: frozenset[int]
+    plan: Plan, condition: Condition, done: Sequence[Outcome], turned: frozenset[int], began: WarmUps
 ) -> ConditionFindings:
-    """Findings of one condition from its done holds. turned: numbers of holds that began with the rotor turning."""
+    """Findings of one condition from its done holds. turned: numbers of holds that began with the rotor turning; began:
+    how the sessions' run-ins ended."""
     known = duties(plan, condition, done)
     exposures = stall_trials(plan, known, done, turned)
-    stall = threshold(STALL, exposures, known.u)
-    start = threshold(START, start_trials(known, done), known.u)
-    falling = speed_points(plan, known, done, Approach.FALLING)
-    rising = speed_points(plan, known, done, Approach.RISING)
+    read = speeds(plan, known, done, exposures)
+    falling, rising = read.falling, read.rising
     speed = _branch(falling, rising, exposures, monotone=True)
+    expected = partial(expecting, read, speed, done)
+    stall = threshold(STALL, expected(exposures, STALL.prior.median_percent), known.u, known.taps)
+    started = expected(start_trials(known, done), START.prior.median_percent)
+    start = threshold(START, started, known.u, known.taps)
     volts_of = partial(voltage_points, plan, condition, known, done)
     volts = _branch(volts_of(Approach.FALLING), volts_of(Approach.RISING), exposures, monotone=False)
     within = usable.usable_range(speed, stall, start, plan.saturation_percent, known.u)
     top_speed = usable.top_speed(speed)
     if _top_is_missing(plan, speed):
         top_speed, within = usable.without_top(top_speed, within)
+    service = long_run(plan, known, exposures, done)
+    highest, second, third = kicks(plan, done)
     return ConditionFindings(
         condition=condition,
         hold_time_s=None if plan.stall is None else plan.stall.hold_time_s,
@@ -85,18 +96,27 @@ def of_condition(
         start_duty_percent=start.finding(0.5),
         start_99_duty_percent=start.finding(TAIL),
         cold_start_duty_percent=not_found(_NOT_YET),
-        long_run_duty_percent=not_found(_NOT_YET),
+        long_run_duty_percent=service.duty,
+        long_run_extrapolation_factor=service.factor,
+        long_run_model_free_percent=service.model_free,
+        long_run_binary_duty_percent=service.binary,
         start_stall_hysteresis_percent=start_stall_hysteresis(start, stall),
-        kick_99_s=not_found(_NOT_YET),
+        kick_99_s=highest.pulse,
+        kick_99_second_s=second.pulse,
+        kick_99_third_s=third.pulse,
+        kick_charge_amp_seconds=highest.charge,
+        kick_charge_second_amp_seconds=second.charge,
+        kick_charge_third_amp_seconds=third.charge,
         stall_speed_rpm=usable.at_stall(speed, stall, "speed"),
         stall_voltage_volts=usable.at_stall(volts, stall, "mean motor voltage"),
         lowest_reliable_speed_rpm=within.low_speed_rpm,
         top_speed_rpm=top_speed,
         linearity_percent=usable.linearity(speed, within),
         curve_hysteresis_rpm=usable.curve_hysteresis(speed, rising),
-        resolution_rpm_per_step=usable.resolution(speed, within, _step(plan, condition)),
+        resolution_rpm_per_step=usable.resolution(speed, within, _step(plan, condition), known.taps),
         repeatability_rpm=usable.repeatability(falling),
-        lapse=not_found(_NOT_YET),
+        drift_percent_per_hour=drift_percent_per_hour(plan, done, read.drift, began),
+        lapse=lapse_finding(stall.fitted, stall.evidence),
         coast_time_s=not_found(_NOT_YET),
         usable_range=within,
         speed_curve=_speed_curve(speed, fit_curve(rising, monotone=True, other=falling), known),

@@ -15,21 +15,18 @@ from sweeprig.characterise.combine import (
     TWO_SIDED,
     Summary,
     difference,
+    equally_likely,
     quantile,
     summary,
     widened,
 )
+from sweeprig.characterise.disturbed import disturbed_flags, disturbed_words, expected_failures
 from sweeprig.characterise.evidence import Chosen
+from sweeprig.characterise.explained import Fitted, explain
 from sweeprig.characterise.findings import Bound, Finding, not_found
-from sweeprig.characterise.thresholds import (
-    STALL_PRIOR,
-    START_PRIOR,
-    Fitted,
-    SpreadPrior,
-    bound_without_contrast,
-    fit,
-)
+from sweeprig.characterise.thresholds import STALL_PRIOR, START_PRIOR, SpreadPrior, bound_without_contrast
 from sweeprig.laws import STALL_LAWS, START_LAWS, Evidence, Floats, Law, summed
+from sweeprig.taps import TapMap
 
 TAIL = 0.99
 FEW = 4
@@ -40,16 +37,20 @@ _TAIL_FAILURE = (0.02, 0.20)
 
 @dataclass(frozen=True, slots=True)
 class Kind:
-    """What differs between stalling and starting. flags: (all trials succeeded, all failed)."""
+    """What differs between stalling and starting. flags: (all trials succeeded, all failed).
+
+    timed: the moment of a failure is known (a stop), not only that there was one (a start that did not succeed)
+    """
 
     trial: str
     laws: tuple[Law, ...]
     prior: SpreadPrior
     flags: tuple[str, str]
+    timed: bool
 
 
-STALL = Kind("stall", STALL_LAWS, STALL_PRIOR, ("never_stopped", "always_stopped"))
-START = Kind("start", START_LAWS, START_PRIOR, ("always_started", "never_started"))
+STALL = Kind("stall", STALL_LAWS, STALL_PRIOR, ("never_stopped", "always_stopped"), timed=True)
+START = Kind("start", START_LAWS, START_PRIOR, ("always_started", "never_started"), timed=False)
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,13 +63,21 @@ class Threshold:
     u_duty: float
     assumes: tuple[str, ...]
     flags: tuple[str, ...]
+    taps: TapMap | None = None
+
+    def u_at(self, duty_percent: float) -> float:
+        """u of a duty found there besides the statistics: the accuracy of duty, and between two taps, where nothing can
+        be set or tried, half their step to either side as a rectangle (JCGM 100:2008, 4.3.7)."""
+        if self.taps is None:
+            return self.u_duty
+        return float(np.hypot(self.u_duty, self.taps.step_at(duty_percent) / 2.0 / np.sqrt(3.0)))
 
     @property
     def reason(self) -> str:
         return f"no {self.kind.trial} trial was done at this condition"
 
     def finding(self, probability: float) -> Finding:
-        """The duty for `probability` with its 95 % interval (in the tail: the hull over laws); else a bound."""
+        """The duty for `probability` with its 95 % interval, the hull over the laws; else a bound."""
         if not self.evidence.holds:
             return not_found(self.reason)
         if self.fitted is None:
@@ -82,7 +91,7 @@ class Threshold:
             coverage_probability=TWO_SIDED,
             coverage_factor=shown.coverage_factor,
             holds=self.evidence.holds,
-            method=self._method(probability),
+            method=self._method(),
             assumes=self.assumes,
             flags=self._flags(probability, shown.value),
         )
@@ -101,17 +110,22 @@ class Threshold:
             return self._summary(probability, widen=widen).upper
         value = bound_without_contrast(self.kind.laws, self.evidence, self.kind.prior, probability)
         sign = -1.0 if self.evidence.failures else 1.0
-        return value + (sign * K_ONE_SIDED * self.u_duty if widen else 0.0)
+        return value + (sign * K_ONE_SIDED * self.u_at(value) if widen else 0.0)
 
     def sample(self, probability: float) -> Floats | None:
-        """Equally likely duties, without the accuracy of duty: it shifts a curve over duty by the same amount."""
-        return None if self.fitted is None else self.fitted.at(probability, hull=False)[0]
+        """Equally likely duties, without the accuracy of duty: it shifts a curve over duty by the same amount. Each law
+        that the data do not reject counts alike."""
+        if self.fitted is None:
+            return None
+        samples = self.fitted.at(probability)
+        return samples[0] if len(samples) == 1 else equally_likely(np.concatenate(samples))
 
     def _summary(self, probability: float, *, widen: bool) -> Summary:
         if self.fitted is None:
             raise AssertionError("asked only where a fit exists")
-        samples = self.fitted.at(probability, hull=probability >= TAIL)
-        return summary([widened(one, self.u_duty) for one in samples] if widen else samples)
+        samples = self.fitted.at(probability)
+        u = self.u_at(quantile(samples[0], 0.5))
+        return summary([widened(one, u) for one in samples] if widen else samples)
 
     def _one_sided(self, probability: float, bound: Bound) -> Finding:
         value = self.bound(probability, widen=True)
@@ -122,55 +136,65 @@ class Threshold:
             bound=bound,
             coverage_probability=ONE_SIDED,
             holds=self.evidence.holds,
-            method=self._method(probability),
+            method=self._method(),
             assumes=self.assumes,
             flags=self._flags(probability, value),
         )
 
-    def _method(self, probability: float) -> str:
+    def _method(self) -> str:
         if self.fitted is None:
             return "beyond it, trials that all ended alike would have had a chance below 5 %; spread by its prior"
-        names = " and ".join(one.law.name for one in self.fitted.kept[: None if probability >= TAIL else 1])
-        hull = ", interval: hull over them" if probability >= TAIL and len(self.fitted.kept) > 1 else ""
-        return f"posterior on a grid, place flat, spread log-normal; law: {names}{hull}"
+        names = " and ".join(one.law.name for one in self.fitted.kept)
+        hull = ", interval: hull that holds 95 % whichever is true" if len(self.fitted.kept) > 1 else ""
+        low, middle, high = (quantile(self.fitted.kept[0].spread(), p) for p in (0.025, 0.5, 0.975))
+        spread = f"spread of the law {middle:.2g} % duty ({low:.2g} to {high:.2g})"
+        return f"posterior on a grid, place flat, spread log-normal; law: {names}{hull}; {spread}"
 
     def _flags(self, probability: float, value: float) -> tuple[str, ...]:
         flags = list(self.flags)
         if self.fitted is None:
-            flags.append(self.kind.flags[1 if self.evidence.failures else 0])
-        elif probability >= TAIL:
+            return (*flags, self.kind.flags[1 if self.evidence.failures else 0])
+        if probability >= TAIL:
             flags += ["law_assumed"] if len(self.kind.laws) < 2 else []
             flags += [] if self._tail_was_tried() else ["tail_not_tried"]
-        if self.fitted is not None and min(self.evidence.failures, self.evidence.successes) < FEW:
+        if min(self.evidence.failures, self.evidence.successes) < FEW:
             flags.append("few_failures" if self.evidence.failures < FEW else "few_successes")
-        if self.fitted is not None and not self.evidence.duty[0] <= value <= self.evidence.duty[-1]:
+        if not self.evidence.duty[0] <= value <= self.evidence.duty[-1]:
             flags.append("extrapolated")
-        return tuple(flags)
+        return (*flags, *disturbed_flags(self.fitted, self.evidence))
 
     def _tail_was_tried(self) -> bool:
         """Whether a trial was made where the leading law expects 2 to 20 % to fail (definitions, Law of stalling)."""
         if self.fitted is None:
             return False
-        lead = self.fitted.kept[0]
-        spread = float(np.exp(np.sum(lead.weight * np.log(lead.spread)[:, None])))
-        x = (self.evidence.duty - quantile(lead.at(0.5), 0.5)) / spread
-        failing = -np.expm1(-lead.law.cumulative(x))
+        failing = expected_failures(self.fitted.kept[0], self.evidence)
         return bool(np.any((failing >= _TAIL_FAILURE[0]) & (failing <= _TAIL_FAILURE[1])))
 
 
-def threshold(kind: Kind, chosen: Chosen, u_duty: float) -> Threshold:
-    """Fit `kind`'s laws to the chosen trials."""
+def threshold(kind: Kind, chosen: Chosen, u_duty: float, taps: TapMap | None = None) -> Threshold:
+    """Fit `kind`'s laws to the chosen trials, with the lapse, the scatter and the drift that they ask for."""
     evidence = summed(chosen.trials)
     contrast = evidence.failures > 0 and evidence.successes > 0
-    fitted = fit(kind.laws, evidence, kind.prior) if contrast else None
+    drift = kind.prior.median_percent if chosen.drift_percent is None else chosen.drift_percent
+    fitted = None
+    if contrast:
+        fitted = explain(
+            kind.laws,
+            chosen.trials,
+            kind.prior,
+            timed=kind.timed,
+            drift_percent=drift,
+            moment_s=chosen.moment_s,
+            u_moment=chosen.u_moment,
+        )
     assumes = (
         *chosen.assumes,
         f"spread {kind.prior.median_percent:g} % duty within a factor of "
         f"{np.exp(K_ONE_SIDED * kind.prior.log_sd):.1f} (90 %) before the trials",
+        *(("no lapse, no scatter between trials, no drift",) if fitted is None else disturbed_words(fitted)),
+        *(() if taps is None else ("within half a step between taps a duty may lie anywhere (rectangle)",)),
     )
-    rejected = fitted.rejected if fitted is not None else ()
-    assumes += tuple(f"{name} rejected by the data" for name in rejected)
-    return Threshold(kind, evidence, fitted, u_duty, assumes, chosen.flags)
+    return Threshold(kind, evidence, fitted, u_duty, assumes, chosen.flags, taps)
 
 
 def start_stall_hysteresis(start: Threshold, stall: Threshold) -> Finding:

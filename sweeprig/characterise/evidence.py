@@ -12,11 +12,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from sweeprig.characterise.tap_duties import duty_of_taps, known_map
 from sweeprig.characterise.voltage import mean_motor_voltage
 from sweeprig.exposures import LEAST_TIME_CONSTANTS, SHORTEST_GAP_S, exposure, turned_before
 from sweeprig.holds import Approach, Condition, Outcome, Purpose, Verdict
 from sweeprig.laws import Trial
 from sweeprig.plan import Plan
+from sweeprig.taps import TapMap
 
 NORMAL_99 = 2.576
 """Normal quantile of 0.995: 99 % of a normal quantity lie within so many standard deviations."""
@@ -24,17 +26,22 @@ NORMAL_99 = 2.576
 
 @dataclass(frozen=True, slots=True)
 class Duties:
-    """Duty of each hold by its number, percent; u is common to all (accuracy), so it does not average away."""
+    """Duty of each hold by its number, percent; u is common to all (accuracy), so it does not average away.
+
+    taps   of a drive by taps: between two of them nothing was tried, nor can it be set
+    """
 
     of: Mapping[int, float]
     u: float
     assumes: str
     flags: tuple[str, ...]
+    taps: TapMap | None = None
 
 
 @dataclass(frozen=True, slots=True)
 class Point:
-    """One hold's settled value at its duty. u: of this mean, accuracy in it. weight: seconds exposed."""
+    """One hold's settled value at its duty. u: of this mean, accuracy in it. weight: seconds exposed. at_s: the middle
+    of the hold, run clock."""
 
     hold: int
     duty_percent: float
@@ -42,21 +49,31 @@ class Point:
     u: float
     weight: float
     flags: tuple[str, ...] = ()
+    at_s: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)
 class Chosen:
-    """Trials of one kind with what the choice leans on."""
+    """Trials of one kind with what the choice leans on.
+
+    drift_percent   scale of what the threshold may have moved over the span of the trials, percent duty,
+                    as the reference holds let one expect; None: nothing is known, the kind's own prior is taken
+    moment_s        on the scale of the trials' times: what is found holds for it; None: for the mean of their times
+    u_moment        its standard uncertainty, in parts of their span
+    """
 
     trials: tuple[Trial, ...]
     assumes: tuple[str, ...] = ()
     flags: tuple[str, ...] = ()
+    drift_percent: float | None = None
+    moment_s: float | None = None
+    u_moment: float = 0.0
 
 
 def commanded_duty(plan: Plan, outcome: Outcome) -> float:
     """The quantised duty that the drive reported, else the hold's own, percent."""
     reading = outcome.means.get(f"{plan.roles.get('drive', 'drive')}.duty_set")
-    return outcome.hold.duty_percent if reading is None or reading.value is None else reading.value
+    return outcome.hold.expected_percent if reading is None or reading.value is None else reading.value
 
 
 def duties(plan: Plan, condition: Condition, outcomes: Sequence[Outcome]) -> Duties:
@@ -68,6 +85,10 @@ def duties(plan: Plan, condition: Condition, outcomes: Sequence[Outcome]) -> Dut
     """
     commanded = {o.number: round(commanded_duty(plan, o), 9) for o in outcomes}
     channel = plan.roles.get("duty")
+    if plan.taps is not None:
+        known = known_map(plan, plan.taps, outcomes)
+        of, u, flags = duty_of_taps(plan, known, outcomes)
+        return Duties(commanded | of, u, f"duty of each tap as measured by {channel}", flags, known)
     read = [
         (commanded[o.number], reading.value, reading.u)
         for o in outcomes
@@ -108,13 +129,14 @@ def stall_trials(plan: Plan, known: Duties, outcomes: Sequence[Outcome], turned_
     """
     if plan.stall is None:
         return Chosen(())
-    trials, flags, curves = [], set(known.flags), 0
+    trials, flags, curves, undecided = [], set(known.flags), 0, 0
     for outcome in outcomes:
         if outcome.hold.approach is not Approach.FALLING or not _is_exposure(plan, outcome, turned_before):
             continue
-        if outcome.verdict not in (Verdict.TURNING, Verdict.STOPPED):
+        if outcome.verdict not in (Verdict.TURNING, Verdict.STOPPED) and not _turned_for_long(plan, outcome):
             flags.add(f"{outcome.verdict.value}_left_out")
             continue
+        undecided += outcome.verdict is Verdict.UNDECIDED
         if outcome.restarts:
             flags.add("self_restart")
         curves += outcome.hold.purpose is Purpose.CURVE
@@ -124,15 +146,30 @@ def stall_trials(plan: Plan, known: Duties, outcomes: Sequence[Outcome], turned_
             continue
         whole = plan.stall.hold_time_s
         width = None if failed is None else failed / whole
-        trials.append(Trial(outcome.number, known.of[outcome.number], survived / whole, width))
+        trials.append(Trial(outcome.number, known.of[outcome.number], survived / whole, width, _middle(outcome)))
     assumes = [
         known.assumes,
         "hazard constant in time within a hold; a stop within five time constants happened by then",
-        "no drift and no scatter between holds",
     ]
     if curves:
         assumes.append(f"{curves} holds of the falling curve count as exposures (one step down, rotor seen turning)")
+    if undecided:
+        assumes.append(f"{undecided} undecided holds count as survived up to the last edge seen, and no further")
     return Chosen(tuple(trials), tuple(assumes), tuple(sorted(flags)))
+
+
+def _turned_for_long(plan: Plan, outcome: Outcome) -> bool:
+    """Whether an undecided hold shows the rotor turning beyond the time it takes to come down to the duty.
+
+    What became of it afterwards is not known, and nothing is claimed of it: the exposure ends at the last edge seen
+    for certain. To leave the hold out would throw away a survival, and more of them near the threshold than elsewhere.
+    """
+    coming_down = LEAST_TIME_CONSTANTS * plan.time_constant_s
+    return outcome.verdict is Verdict.UNDECIDED and not outcome.restarts and outcome.event_between_s[0] > coming_down
+
+
+def _middle(outcome: Outcome) -> float:
+    return (outcome.began + outcome.ended) / 2.0
 
 
 def _is_exposure(plan: Plan, outcome: Outcome, turned_before: frozenset[int]) -> bool:
@@ -161,27 +198,31 @@ def start_trials(known: Duties, outcomes: Sequence[Outcome]) -> Chosen:
         if outcome.hold.purpose is not Purpose.START or outcome.hold.approach is not Approach.FROM_REST:
             continue
         if outcome.verdict is Verdict.STARTED:
-            trials.append(Trial(outcome.number, known.of[outcome.number], 1.0))
+            trials.append(Trial(outcome.number, known.of[outcome.number], 1.0, None, _middle(outcome)))
         elif outcome.verdict is Verdict.DID_NOT_START:
-            trials.append(Trial(outcome.number, known.of[outcome.number], 0.0, 1.0))
+            trials.append(Trial(outcome.number, known.of[outcome.number], 0.0, 1.0, _middle(outcome)))
         else:
             flags.add(f"{outcome.verdict.value}_left_out")
     return Chosen(tuple(trials), (known.assumes, "trials independent of each other"), tuple(sorted(flags)))
 
 
-def speed_points(plan: Plan, known: Duties, outcomes: Sequence[Outcome], branch: Approach) -> tuple[Point, ...]:
+def speed_points(
+    plan: Plan, known: Duties, outcomes: Sequence[Outcome], branch: Approach, *, creeping: bool = True
+) -> tuple[Point, ...]:
     """Settled speeds on one branch, rpm: of curve holds, and on the falling branch of stall holds too.
 
     "Settled" promises the final value to the sweep's tolerance with 99 % confidence, no more: what creeps on (a winding
     that goes on warming) may be so far off, alike in every hold. u of that: tolerance / 2.576 (JCGM 100:2008, 4.3.4).
+    creeping: it is in u; False where reference holds show how much speeds move.
     """
     channel, points = plan.roles.get("speed"), []
-    creep = plan.settle.tolerance_percent / 100.0 / NORMAL_99
+    creep = plan.settle.tolerance_percent / 100.0 / NORMAL_99 if creeping else 0.0
     for outcome in _settled(plan, outcomes, branch):
         reading = None if channel is None else outcome.means.get(channel)
         if reading is not None and reading.value is not None:
             u = math.hypot(reading.u, creep * reading.value)
-            points.append(Point(outcome.number, known.of[outcome.number], reading.value, u, _weight(plan, outcome)))
+            duty, weight, at_s = known.of[outcome.number], _weight(plan, outcome), _middle(outcome)
+            points.append(Point(outcome.number, duty, reading.value, u, weight, at_s=at_s))
     return tuple(points)
 
 

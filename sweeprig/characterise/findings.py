@@ -15,6 +15,8 @@ from sweeprig.holds import Condition
 
 VERSION = 1
 Bound = Literal["two_sided", "upper", "lower"]
+EXTRAPOLATED = "extrapolated_in_time"
+"""Flag of a finding for a service time that no hold lasted: limits are not decided by it."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -96,8 +98,16 @@ class ConditionFindings:
     start_99_duty_percent: Finding
     cold_start_duty_percent: Finding
     long_run_duty_percent: Finding
+    long_run_extrapolation_factor: Finding
+    long_run_model_free_percent: Finding
+    long_run_binary_duty_percent: Finding
     start_stall_hysteresis_percent: Finding
     kick_99_s: Finding
+    kick_99_second_s: Finding
+    kick_99_third_s: Finding
+    kick_charge_amp_seconds: Finding
+    kick_charge_second_amp_seconds: Finding
+    kick_charge_third_amp_seconds: Finding
     stall_speed_rpm: Finding
     stall_voltage_volts: Finding
     lowest_reliable_speed_rpm: Finding
@@ -106,6 +116,7 @@ class ConditionFindings:
     curve_hysteresis_rpm: Finding
     resolution_rpm_per_step: Finding
     repeatability_rpm: Finding
+    drift_percent_per_hour: Finding
     lapse: Finding
     coast_time_s: Finding
     usable_range: UsableRange
@@ -128,7 +139,7 @@ class ConditionFindings:
 
     @classmethod
     def from_json(cls, value: Mapping[str, Any]) -> ConditionFindings:
-        found: dict[str, Any] = {name: Finding.from_json(value[name]) for name in FINDING_NAMES}
+        found: dict[str, Any] = {name: _read(value, name) for name in FINDING_NAMES}
         within = {name: Finding.from_json(value["usable_range"][name]) for name in RANGE_NAMES}
         return cls(
             condition=Condition(**{f.name: value[f.name] for f in fields(Condition)}),
@@ -137,6 +148,13 @@ class ConditionFindings:
             **{name: value[name] for name in TIME_NAMES},
             **found,
         )
+
+
+def _read(condition: Mapping[str, Any], name: str) -> Finding:
+    """A finding of a condition; one that an earlier release did not know yet keeps its name without a value."""
+    if name in condition:
+        return Finding.from_json(condition[name])
+    return not_found("the release that wrote these findings did not know it")
 
 
 TIME_NAMES = ("hold_time_s", "start_time_s", "rest_time_s")

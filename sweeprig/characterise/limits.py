@@ -11,7 +11,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass
 from typing import Any, Literal
 
-from sweeprig.characterise.findings import ConditionFindings, Finding
+from sweeprig.characterise.findings import EXTRAPOLATED, ConditionFindings, Finding
 from sweeprig.plan import Plan
 
 Verdict = Literal["pass", "fail", "not_decided"]
@@ -34,6 +34,8 @@ def judge(finding: Finding, at_least: float | None, at_most: float | None) -> Ju
     """Judge one finding. `at_least`, `at_most`: the limits, in its unit; None where there is none on that side."""
     if finding.value is None:
         return Judged("not_decided", f"the finding was not found: {finding.reason}")
+    if EXTRAPOLATED in finding.flags:
+        return Judged("not_decided", "no hold of the service time supports it: an extrapolation decides nothing")
     if finding.bound != "two_sided":
         return _judge_bound(finding, finding.value, at_least, at_most)
     if finding.u is None:

@@ -18,6 +18,7 @@ from sweeprig.characterise.duties_found import TAIL, Threshold
 from sweeprig.characterise.evidence import Point
 from sweeprig.characterise.findings import Finding, UsableRange, not_found
 from sweeprig.laws import Floats
+from sweeprig.taps import TapMap
 
 SEGMENTS = 3
 LEAST_APART_PERCENT = 2.0
@@ -252,8 +253,11 @@ def linearity(branch: Branch | None, within: UsableRange) -> Finding:
     return two_sided(float(away[index]) / full * 100.0, u, curve.holds, method, curve.flags)
 
 
-def resolution(branch: Branch | None, within: UsableRange, step_percent: float | None) -> Finding:
-    """The largest speed step for one step of the drive within the usable range, rpm."""
+def resolution(
+    branch: Branch | None, within: UsableRange, step_percent: float | None, taps: TapMap | None = None
+) -> Finding:
+    """The largest speed step for one step of the drive within the usable range, rpm; by taps: for the mean
+    step from one to the next in that place, of which `taps` knows."""
     span = _span(branch, within)
     if span is None:
         return not_found("no usable range was found")
@@ -262,11 +266,16 @@ def resolution(branch: Branch | None, within: UsableRange, step_percent: float |
     curve, low, high = span
     duty = _apart(curve, low, high)
     slope, random = np.diff(curve.at(duty)) / np.diff(duty), np.interp(duty, curve.duty, curve.u_random)
-    steepest = int(np.argmax(slope))
+    steps = [(step_percent, 0.0)] * slope.size
+    if taps is not None:
+        steps = [taps.mean_step(*pair) for pair in zip(duty[:-1].tolist(), duty[1:].tolist(), strict=True)]
+    steepest = int(np.argmax(slope * [step for step, _ in steps]))
+    step_percent, u_step = steps[steepest]
     u_slope = math.hypot(*random[steepest : steepest + 2]) / float(duty[steepest + 1] - duty[steepest])
     where = f"from {duty[steepest]:.1f} to {duty[steepest + 1]:.1f} % duty"
     method = f"duty step {step_percent:.4g} % × steepest slope between levels of the usable range, {where}"
-    return two_sided(float(slope[steepest]) * step_percent, u_slope * step_percent, curve.holds, method, curve.flags)
+    u = math.hypot(u_slope * step_percent, float(slope[steepest]) * u_step)
+    return two_sided(float(slope[steepest]) * step_percent, u, curve.holds, method, curve.flags)
 
 
 def _apart(curve: Curve, low: float, high: float) -> Floats:

@@ -15,7 +15,7 @@ from sweeprig.characterise import ConditionFindings, Findings, characterise, fin
 from sweeprig.characterise.findings import FINDING_NAMES, RANGE_NAMES
 from sweeprig.errors import ConfigError
 from sweeprig.holds import Approach, Condition, Hold, Outcome, Purpose, Status, Verdict
-from sweeprig.plan import CurvePlan, Plan
+from sweeprig.plan import CurvePlan, KickPlan, LongRunPlan, Plan
 
 ABOUT = {"job_hash": "ab12", "simulated": True, "motor": {"name": "fan"}, "rig": "bench", "software": "0.1"}
 MakeOutcome = Callable[..., Outcome]
@@ -23,6 +23,8 @@ SCHEMA: dict[str, Any] = json.loads(
     (Path(findings.__file__).parent / "findings.schema.json").read_text(encoding="utf-8")
 )
 ALL_NAMES = (*FINDING_NAMES, *RANGE_NAMES)
+LONG_AND_KICK = {name for name in FINDING_NAMES if name.startswith(("long_run_", "kick_"))}
+"""What a sweep without long run and kick does not ask for."""
 
 
 def of(plan: Plan, outcomes: list[Outcome]) -> ConditionFindings:
@@ -37,7 +39,7 @@ def test_night_gives_the_findings_it_supports(plan: Plan, night: list[Outcome]) 
     """A night of curve, stall and start holds gives every finding that its holds bear on, near what was put in."""
     found = of(plan, night)
     missing = {name for name in ALL_NAMES if not found.finding(name).found}
-    assert missing == {"cold_start_duty_percent", "long_run_duty_percent", "kick_99_s", "lapse", "coast_time_s"}
+    assert missing == {"cold_start_duty_percent", "coast_time_s", "drift_percent_per_hour", *LONG_AND_KICK}
     assert found.finding("stall_duty_percent").value == pytest.approx(9.0, abs=0.5)
     assert found.finding("stall_speed_rpm").value == pytest.approx(360.0, abs=20.0)
     assert found.finding("stall_voltage_volts").value == pytest.approx(0.9, abs=0.05)
@@ -187,3 +189,33 @@ def test_unknown_name_and_missing_about(plan: Plan) -> None:
         of(plan, []).finding("stall")
     with pytest.raises(ConfigError, match="no rig, software"):
         characterise(plan, [], {"job_hash": "", "simulated": False, "motor": ""})
+
+
+def test_long_run_and_kick_stand_beside_the_rest(plan: Plan, night: list[Outcome], outcome: MakeOutcome) -> None:
+    """A sweep that asks for them gives the long run's four findings and those of its kick duties, in valid JSON that
+    reads back; findings of an earlier release, which knew none of them, still read."""
+    asked = replace(
+        plan, long_run=LongRunPlan(86_400.0, 1800.0, 2), kick=KickPlan((100.0,), 1.0, 0.02, 2.0, 5.0, 5.0, 6)
+    )
+    kicked = [
+        outcome(800 + i, Purpose.KICK, 12.0, Verdict.STARTED if i % 3 else Verdict.DID_NOT_START,
+                approach=Approach.FROM_REST, lead=((0.0, 5.0), (100.0, 0.1 * (1 + i))))
+        for i in range(6)
+    ]  # fmt: skip
+    found = characterise(asked, [*night, *kicked], ABOUT)
+    there = {name for name in LONG_AND_KICK if found.conditions[0].finding(name).found}
+    assert there == {
+        "kick_99_s",
+        "long_run_duty_percent",
+        "long_run_extrapolation_factor",
+        "long_run_binary_duty_percent",
+    }
+    assert all(found.conditions[0].finding(name).reason for name in LONG_AND_KICK - there)
+    jsonschema.validate(found.as_json(), SCHEMA)
+    assert Findings.from_json(found.as_text()) == found
+    old = found.as_json()
+    for name in LONG_AND_KICK - {"long_run_duty_percent", "kick_99_s"}:
+        del old["conditions"][0][name]
+    read = Findings.from_json(old).conditions[0]
+    assert read.kick_99_s == found.conditions[0].kick_99_s
+    assert not read.kick_99_third_s.found

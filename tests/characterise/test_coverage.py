@@ -118,16 +118,17 @@ def cover_percent(plan: Plan, outcome: MakeOutcome, motors: int, seed: int, laws
     return {name: 100.0 * hits[name] / motors for name in motor.truths()}
 
 
-SINGLE_LAW = ("stall_duty_percent", "start_duty_percent", "stall_speed_rpm", "top_speed_rpm")
+NOT_IN_THE_TAIL = ("stall_duty_percent", "start_duty_percent", "stall_speed_rpm", "top_speed_rpm")
 
 
 @pytest.mark.slow
+@pytest.mark.timeout(600)  # 200 whole nights are fitted; on a busy machine two minutes are not enough
 def test_intervals_hold_the_truth(plan: Plan, outcome: MakeOutcome) -> None:
     """Of 200 motors, half after each pair of laws, each 95 % interval or bound holds the truth often enough.
 
     Gates 90.5 and 98.5 %. False alarm of one gate at 95 % true coverage: 0.27 % below, 0.23 % above (binomial), so 4 %
-    for all 14 at the most; the seeds are fixed. The upper gate is asked where one law makes the interval: a hull over
-    laws and a bound cover more by design, and so does a difference of two such.
+    for all 14 at the most; the seeds are fixed. The upper gate is asked of 50 % duties and speeds: in the tail the laws
+    lie apart, so that their hull covers more by design; so do a bound and a difference of two such.
     """
     halves = [
         cover_percent(plan, outcome, 100, seed, laws)
@@ -135,4 +136,4 @@ def test_intervals_hold_the_truth(plan: Plan, outcome: MakeOutcome) -> None:
     ]
     covered = {name: (halves[0][name] + halves[1][name]) / 2.0 for name in halves[0]}
     assert {name: value for name, value in covered.items() if value < 90.5} == {}
-    assert {name: covered[name] for name in SINGLE_LAW if covered[name] > 98.5} == {}
+    assert {name: covered[name] for name in NOT_IN_THE_TAIL if covered[name] > 98.5} == {}

@@ -22,8 +22,12 @@ from sweeprig.plan import Plan
 MakeOutcome = Callable[..., Outcome]
 
 
+def untimed(trials: tuple[Trial, ...]) -> tuple[Trial, ...]:
+    return tuple(replace(trial, at_s=0.0) for trial in trials)
+
+
 def trials_of(plan: Plan, made: list[Outcome]) -> tuple[Trial, ...]:
-    return stall_trials(plan, duties(plan, plan.conditions[0], made), made, turning_before(made)).trials
+    return untimed(stall_trials(plan, duties(plan, plan.conditions[0], made), made, turning_before(made)).trials)
 
 
 def measured(plan: Plan) -> Plan:
@@ -58,7 +62,7 @@ def test_other_approaches_and_verdicts_are_no_trials(plan: Plan, outcome: MakeOu
     made = [
         outcome(1, Purpose.STALL, 12.0, Verdict.TURNING, approach=Approach.RISING),
         outcome(2, Purpose.STALL, 12.0, Verdict.STEPPING),
-        outcome(3, Purpose.STALL, 12.0, Verdict.UNDECIDED),
+        outcome(3, Purpose.STALL, 12.0, Verdict.UNDECIDED, event_between_s=(0.0, None)),
         outcome(4, Purpose.LONG, 12.0, Verdict.TURNING),
         outcome(5, Purpose.STALL, 12.0, Verdict.TURNING, event_between_s=(0.0, None), exposed_s=0.0),
     ]
@@ -67,11 +71,33 @@ def test_other_approaches_and_verdicts_are_no_trials(plan: Plan, outcome: MakeOu
     assert {"stepping_left_out", "undecided_left_out"} <= set(chosen.flags)
 
 
+def test_undecided_holds_count_as_far_as_the_rotor_was_seen_turning(plan: Plan, outcome: MakeOutcome) -> None:
+    """An undecided hold is an exposure up to its last sure edge, whatever followed; one undecided before the rotor had
+    come down (2.5 s), or that restarted, says nothing."""
+    made = [
+        outcome(1, Purpose.STALL, 12.0, Verdict.UNDECIDED, event_between_s=(15.0, None)),
+        outcome(2, Purpose.STALL, 11.0, Verdict.UNDECIDED, event_between_s=(8.0, 12.0)),
+        outcome(3, Purpose.STALL, 11.0, Verdict.UNDECIDED, event_between_s=(2.0, None)),
+        outcome(4, Purpose.STALL, 11.0, Verdict.UNDECIDED, event_between_s=(9.0, 10.0), restarts=1),
+    ]
+    chosen = stall_trials(plan, duties(plan, plan.conditions[0], made), made, turning_before(made))
+    assert untimed(chosen.trials) == (Trial(1, 12.0, 0.75), Trial(2, 11.0, 0.4))
+    assert "undecided_left_out" in chosen.flags
+    assert any("2 undecided" in words for words in chosen.assumes)
+
+
+def test_trials_know_when_they_were_made(plan: Plan, outcome: MakeOutcome) -> None:
+    """The time of a trial is the middle of its hold on the run clock."""
+    made = [outcome(3, Purpose.STALL, 12.0, Verdict.TURNING)]
+    chosen = stall_trials(plan, duties(plan, plan.conditions[0], made), made, turning_before(made))
+    assert [trial.at_s for trial in chosen.trials] == [190.0]  # exact: begun at 180 s, 20 s long
+
+
 def test_motor_that_restarts_by_itself_has_stopped(plan: Plan, outcome: MakeOutcome) -> None:
     """A rotor that turns at the end but stopped in between counts as a stop, and is flagged."""
     made = [outcome(1, Purpose.STALL, 10.0, Verdict.TURNING, restarts=1, event_between_s=(4.0, 5.0))]
     chosen = stall_trials(plan, duties(plan, plan.conditions[0], made), made, turning_before(made))
-    assert chosen.trials == (Trial(1, 10.0, 0.2, 0.05),)
+    assert untimed(chosen.trials) == (Trial(1, 10.0, 0.2, 0.05),)
     assert "self_restart" in chosen.flags
 
 
@@ -147,7 +173,7 @@ def test_start_trials_are_from_rest(plan: Plan, outcome: MakeOutcome) -> None:
         outcome(4, Purpose.KICK, 18.0, Verdict.STARTED, approach=Approach.FROM_REST),
     ]
     chosen = start_trials(duties(plan, plan.conditions[0], made), made)
-    assert chosen.trials == (Trial(1, 20.0, 1.0), Trial(2, 18.0, 0.0, 1.0))
+    assert untimed(chosen.trials) == (Trial(1, 20.0, 1.0), Trial(2, 18.0, 0.0, 1.0))
     assert "undecided_left_out" in chosen.flags
 
 
