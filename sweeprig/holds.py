@@ -76,14 +76,33 @@ class Condition:
 
 
 @dataclass(frozen=True, slots=True)
+class AtTap:
+    """What a duty became on a drive whose digital potentiometer is stepped: the nearest tap, and what that should give.
+
+    asked_percent             the duty that was wanted
+    duty_percent, u_percent   the duty expected at the tap, and its standard uncertainty, %
+    pwm_hz, u_hz              the PWM frequency likewise, Hz
+    """
+
+    asked_percent: float
+    tap: int
+    duty_percent: float
+    u_percent: float
+    pwm_hz: float
+    u_hz: float
+
+
+@dataclass(frozen=True, slots=True)
 class Hold:
     """One setting, held until it is settled and read, or until it ended.
 
+    duty_percent  as it was asked for; on a drive by taps `at_tap` says what is expected of it
     lead       ((duty_percent, seconds), …) performed before the exposure clock starts: the relaunch before a falling
                approach, the kick pulse. A lead of duty 0 is the drive off until no edge came for that long.
     least_s    no decision before this; most_s: the exposure, or the longest wait for `settled`
     roles      what is read during the hold
     why        one sentence, shown to people
+    tap, taps  of a drive with a digital potentiometer: the tap of the target; and each duty above 0 of lead and target
     """
 
     number: int
@@ -98,6 +117,17 @@ class Hold:
     why: str
     lead: tuple[tuple[float, float], ...] = ()
     tap: int | None = None
+    taps: tuple[AtTap, ...] = ()
+
+    def at_tap(self, duty_percent: float) -> AtTap | None:
+        """What `duty_percent`, of the lead or the target, became; None where the drive is told a duty."""
+        return next((one for one in self.taps if one.asked_percent == duty_percent), None)
+
+    @property
+    def expected_percent(self) -> float:
+        """The duty that the drive should give: as asked for, or what is expected of the tap."""
+        at = self.at_tap(self.duty_percent)
+        return self.duty_percent if at is None else at.duty_percent
 
     def same_setting(self, other: Hold) -> bool:
         """The "same hold" of the three-strikes rule: equal purpose, approach, condition and setting."""

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import shutil
 from contextlib import closing
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 from sweeprig.clock import SystemClock
@@ -26,7 +26,9 @@ from sweeprig.errors import ConfigError, RoleMissing, SweeprigError
 from sweeprig.job import Job, document, freeze, load
 from sweeprig.job.freeze import with_deadline
 from sweeprig.logbook.run_folder import JOB, LOGBOOK, FolderLock, create_run_folder, folder_of
+from sweeprig.plan import Plan
 from sweeprig.schedule import preview
+from sweeprig.schedule.preview import ROUGH
 
 
 @dataclass(frozen=True, slots=True)
@@ -116,17 +118,28 @@ def _supervised(folder: Path, attended: bool, attention: Attention, orders: Orde
 
 def _check_host(job: Job, runs: Path) -> None:
     """What this machine cannot finish is refused before anything moves: disk, clock, descriptors, deadline."""
-    night = preview(freeze(job), 0.0)
+    plan, now = freeze(job), first_utc(job)
+    night = preview(plan, now, ROUGH)
     until = job.sweep.deadline.until if job.sweep.deadline is not None else None
+    rate = job.rig.rate or 1.0
     refuse(
         checks(
             runs,
-            night.seconds / (job.rig.rate or 1.0),
+            night.seconds / rate,
             sum(night.holds.values()),
             instruments=len(job.rig.instruments),
             deadline_utc=None if until is None else until.timestamp(),
+            needed_seconds=None if until is None else _needed_s(plan, now) / rate,
         )
     )
+
+
+def _needed_s(plan: Plan, now: float) -> float:
+    """What must fit before a deadline: a ladder's whole night, since it makes its trials whatever they tell; else the
+    time until every condition has an answer."""
+    night = preview(replace(plan, deadline_utc=None), now, ROUGH)
+    ladder = any(stage is not None and stage.search == "ladder" for stage in (plan.stall, plan.start))
+    return night.seconds if ladder or night.answered_s is None else night.answered_s
 
 
 def check_rig(job: Job) -> None:

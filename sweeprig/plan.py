@@ -115,8 +115,26 @@ class SettlePlan:
     confidence_percent: float = 99.0
 
 
+@dataclass(frozen=True, slots=True)
+class TapPlan:
+    """A drive that makes its duty by an analogue timer whose digital potentiometer is stepped, tap by tap.
+
+    ends_percent   duty at tap 0 and at `highest_tap` by the parts' nominal values; straight between them
+    allowed_percent   lowest and highest duty that a hold may use: no tap is chosen that gives another one
+    pwm_hz         the frequency that the timer gives, by its parts; nobody sets it
+    first          taps visited before anything else, in this order; time_s: how long each, s
+    """
+
+    ends_percent: tuple[float, float]
+    highest_tap: int
+    allowed_percent: tuple[float, float]
+    pwm_hz: float
+    first: tuple[int, ...]
+    time_s: float
+
+
 Likely = tuple[float, float]
-"""A positive quantity that is believed to be about so large: median, and standard deviation of its natural logarithm."""
+"""A positive quantity, believed to be about so large: median, and standard deviation of its natural logarithm."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -168,6 +186,8 @@ class Plan:
     duty_step_percent  one step of the drive (resolution of the commanded duty) for each condition, same order
     spend              `all`: an adaptive search goes on to the deadline; `needed`: until all is known as asked
     sharpen            findings whose standard errors the adaptive search brings down
+    taps               where the drive makes its duty by a digital potentiometer; every duty then becomes a tap
+    remarks            what is done otherwise than the job asks, or must be known with its results, in words
     expected           what is believed of the motor, for the preview; expected_at: … where more is known of a condition
     heat               the budget of locked-rotor heat; None only where a plan is made without a motor file
     """
@@ -197,6 +217,8 @@ class Plan:
     kick: KickPlan | None = None
     long_run: LongRunPlan | None = None
     reference: ReferencePlan | None = None
+    taps: TapPlan | None = None
+    remarks: tuple[str, ...] = ()
     session: int = 1
     attended: bool = False
     by_hand: tuple[str, ...] = ()

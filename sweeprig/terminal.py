@@ -207,7 +207,9 @@ def preview_text(night: Any, title: str, sums: Mapping[str, float], alone: Seque
     low, high = (show_time(3600.0 * hours) for hours in (night.hours.low, night.hours.high))
     lines.append(f"{total} holds ({kinds});")
     lines.append(f"about {show_time(night.seconds)} on the bench, between {low} and {high} in nine nights of ten.")
-    if 0.0 < night.answered_s < 0.95 * night.seconds:
+    if night.answered_s is None:
+        lines.append("Not every condition has an answer at the end of every such night.")
+    elif night.answered_s < 0.95 * night.seconds:
         lines.append(f"Every condition has an answer after {show_time(night.answered_s)} at the latest.")
     lines.append(f"The night then ends because {night.ends}.")
     if night.rest_s:
@@ -221,6 +223,9 @@ def preview_text(night: Any, title: str, sums: Mapping[str, float], alone: Seque
         ]
     if night.cannot:
         lines += ["", "You will not get:"] + [f"  {line}" for line in night.cannot]
+    if night.remarks:
+        lines += ["", "Otherwise than asked for, or to be known with the results:"]
+        lines += [f"  {line}" for line in night.remarks]
     if night.persons:
         lines += ["", "A person is needed for:"] + [f"  {line}" for line in night.persons]
     lines += ["", "If the rotor locks while nobody looks, the drive goes off after at most:"]

@@ -10,7 +10,7 @@ import pytest
 import sweeprig
 
 PACKAGE = Path(sweeprig.__file__).parent
-GROUND = {"errors", "quantities", "holds", "plan", "roles", "laws", "exposures", "clock"}
+GROUND = {"errors", "quantities", "holds", "plan", "roles", "laws", "exposures", "steady", "taps", "clock"}
 VALUES = GROUND - {"clock"}
 
 MAY_IMPORT: dict[str, set[str]] = {
@@ -21,14 +21,16 @@ MAY_IMPORT: dict[str, set[str]] = {
     "roles": {"quantities"},
     "laws": set(),
     "exposures": {"holds"},
+    "steady": {"holds", "plan"},
+    "taps": {"holds", "plan", "quantities"},
     "clock": set(),
-    "link": GROUND - {"laws", "exposures"},
+    "link": GROUND - {"laws", "exposures", "steady", "taps"},
     "dialects": VALUES,
     "job": VALUES,
     "schedule": VALUES,
     "characterise": VALUES,
     "logbook": VALUES,
-    "simbench": GROUND - {"laws", "exposures"} | {"job"},
+    "simbench": GROUND - {"laws", "exposures", "steady", "taps"} | {"job"},
     "conduct": GROUND | {"link", "dialects", "job", "schedule", "logbook"},
     "report": VALUES | {"job", "characterise", "manual"},
     "manual": {"errors"},

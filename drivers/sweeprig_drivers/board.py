@@ -137,7 +137,8 @@ class Board:
         """Frequency, then duty (or potentiometer tap), each read back as the board quantised it.
 
         InstrumentRefused when the frequency is off by more than 0.1 % beyond half a timer tick, the duty by more than
-        0.01 % beyond a whole one, the tap at all. With a tap the duty is not the board's: `duty_set` is no data."""
+        0.01 % beyond a whole one, the tap at all. With a tap an analogue timer makes the PWM, and the board's pin only
+        releases it: duty and frequency are not the board's, and both are no data."""
         self._check_setting(setting)
         name, error, hz = self.name, self._error, setting.pwm_hz
         ticks = timer_ticks(hz)
@@ -149,8 +150,10 @@ class Board:
             send, back = tell(f"SOUR:RES:TAP {setting.tap}"), query("SOUR:RES:TAP?")
             _, answer = yield from common.confirm(name, "tap", send, back, error, setting.tap, 0.0, "")
             flags, raw = ("no_data:set_by_tap",), common.shown(answer.raw)
-            readings["duty_set"] = Reading(None, 0.0, "%", answer.at, self._names["duty_set"], flags, raw)
-            return readings
+            return {
+                quantity: Reading(None, 0.0, self.channels[quantity], answer.at, self._names[quantity], flags, raw)
+                for quantity in ("pwm_hz", "duty_set")
+            }
         duty, near = setting.duty_percent, DUTY_TOLERANCE_PERCENT + 100.0 / ticks
         send, back = tell(f"SOUR:PULS:DCYC {number_text(duty)}"), query("SOUR:PULS:DCYC?")
         found, answer = yield from common.confirm(name, "duty", send, back, error, duty, near, "%")

@@ -16,7 +16,8 @@ from sweeprig.errors import ConfigError
 LONGEST_COMMAND = 255
 _SHOWN = 70
 _PLACE = re.compile(r"\{([a-z_]+)\}")
-_TOP_KEYS = ("kind", "about", "reply", "no_value", "commands", "values", "texts")
+LONGEST_APERTURE_S = 1000.0
+_TOP_KEYS = ("kind", "about", "reply", "no_value", "apertures", "commands", "values", "texts")
 
 
 @dataclass(frozen=True, slots=True)
@@ -75,7 +76,8 @@ def _shown(value: object) -> str:
 
 
 class Dialect:
-    """A checked dialect. `command(key, …)` gives the bytes of a message; `no_value` the markers for "no value".
+    """A checked dialect. `command(key, …)` gives the bytes of a message; `no_value` the markers for "no value";
+    `apertures` what the instrument offers (s; empty: any).
 
     kind      what the table must be written for: "multimeter", "supply", "scope"
     commands  the commands it must (or may) have, each with its Form
@@ -97,6 +99,7 @@ class Dialect:
         self._name = name
         self._check_top(table, kind)
         self.no_value = self._markers(table.get("no_value", []))
+        self.apertures = self._seconds(table.get("apertures", []))
         self._commands = self._checked(self._table(table, "commands"), commands)
         self._values = self._numbers(self._table(table, "values"), values or {})
         self._texts = self._words(self._table(table, "texts"), texts)
@@ -162,6 +165,17 @@ class Dialect:
         if not isinstance(found, list) or not all(isinstance(marker, str) and marker.strip() for marker in found):
             raise self._wrong("no_value", "is not a list of texts", found)
         return tuple(str(marker) for marker in found)
+
+    def _seconds(self, found: object) -> tuple[float, ...]:
+        """Times above 0 that the instrument offers; none: any within its limits."""
+        if not isinstance(found, list):
+            raise self._wrong("apertures", "is not a list of seconds", found)
+        for each in found:
+            if isinstance(each, bool) or not isinstance(each, int | float) or not 0.0 < each <= LONGEST_APERTURE_S:
+                raise self._wrong(
+                    "apertures", "has what is no time", each, f"above 0 s, up to {LONGEST_APERTURE_S:g} s"
+                )
+        return tuple(float(each) for each in found)
 
     def _checked(self, found: Mapping[str, object], wanted: Mapping[str, Form]) -> dict[str, str]:
         for key in found:

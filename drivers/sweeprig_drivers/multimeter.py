@@ -78,6 +78,7 @@ class ScpiMultimeter:
         options.done()
         dialect = Dialect(name, setup.dialect, "multimeter", COMMANDS)
         self._remote.use(dialect)
+        self._offered(dialect.apertures)
         self._identity = query(dialect.command("identity"), early=True)
         self._clear, self._error = tell(dialect.command("clear")), query(dialect.command("error"))
         self._status = common.status_query(dialect)
@@ -95,6 +96,19 @@ class ScpiMultimeter:
         self._no_value = dialect.no_value
         self._accuracy = setup.accuracy.get(self._quantity, common.NO_ACCURACY)
         self._channel = f"{name}.{self._quantity}"
+
+    def _offered(self, apertures: tuple[float, ...]) -> None:
+        """Refuse an aperture that this family does not offer: it would take the nearest, or an error."""
+        if not apertures or any(abs(self._aperture_s - each) <= SETTING_TOLERANCE * each for each in apertures):
+            return
+        nearest = min(apertures, key=lambda each: abs(each - self._aperture_s))
+        raise ConfigError(
+            f"{self.name}: the instrument does not offer this aperture",
+            value=f"{self._aperture_s:g} s",
+            allowed=", ".join(f"{each:g} s" for each in apertures),
+            remedy=f"set the option aperture to '{nearest:g} s'",
+            topic="rig",
+        )
 
     def _require(self, dialect: Dialect, keys: list[str]) -> None:
         for key in keys:
@@ -147,7 +161,8 @@ class ScpiMultimeter:
             f"{self.name}: the aperture is not a whole number of PWM periods",
             value=f"{self._aperture_s:g} s at {window.pwm_hz:g} Hz, {periods:.4g} periods",
             allowed=f"a broken period worth at most {BROKEN_PERIOD_TOLERANCE:.0e} of the wave",
-            remedy=f"set the option aperture to '{best:.6g} s' or change the PWM frequency",
+            remedy=f"set the option aperture to '{best:.6g} s', change the PWM frequency, or let it be moved "
+            "(pwm_tolerance in the sweep)",
             topic="rig",
         )
 

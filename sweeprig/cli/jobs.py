@@ -166,10 +166,14 @@ def _perform(
     from sweeprig.job import freeze
     from sweeprig.launch import first_utc
     from sweeprig.schedule import preview as look_ahead
+    from sweeprig.schedule.preview import ROUGH
     from sweeprig.terminal import progress
 
     orders, now = Orders(), first_utc(job)
-    with progress(look_ahead(freeze(job, began_utc=now), now).seconds, plain) as show, _interrupts(orders, show.say):
+    with (
+        progress(look_ahead(freeze(job, began_utc=now), now, ROUGH).seconds, plain) as show,
+        _interrupts(orders, show.say),
+    ):
         launched = work(show, orders)
     from sweeprig.results import results  # only now: what it loads costs a second and has no part in a night
 

@@ -9,7 +9,7 @@ from dataclasses import dataclass, field
 from typing import ClassVar
 
 from sweeprig.conduct.bounds import BOUNDS
-from sweeprig.conduct.protection import NO_LIMIT, NOTHING, Commanded, Debounce, Policy, Trip
+from sweeprig.conduct.protection import NO_LIMIT, NOTHING, SURE, Commanded, Debounce, Policy, Trip
 from sweeprig.quantities import Reading, show_quantity
 
 
@@ -89,11 +89,12 @@ class VoltageAtDuty(Answer):
 
     def wrong(self, value: float, reading: Reading, commanded: Commanded) -> tuple[str, str, bool] | None:
         del reading
-        supply, duty = commanded.supply_v, commanded.duty_percent / 100.0
+        supply, duty = commanded.supply_v, commanded.least_duty_percent / 100.0
         if not commanded.on or supply is None:
             return None
         set_to = f"at {commanded.duty_percent:.4g} % of {supply:g} V"
-        half = duty <= BOUNDS["short_shows_percent"] / 100.0
+        most = commanded.duty_percent + SURE * commanded.u_duty_percent
+        half = most <= BOUNDS["short_shows_percent"]
         self._answered = self._answered or (half and value < BOUNDS["short_percent"] / 100.0 * supply)
         if half and self._answered and value >= BOUNDS["full_percent"] / 100.0 * supply:
             return "switch_short", f"{set_to}: the switch conducts all the time, it failed short", True
@@ -119,6 +120,7 @@ class DutyMeasured(Answer):
         del reading
         duty = commanded.duty_percent
         allowed = BOUNDS["duty_off_percent"] + 100.0 * self.delay_s * commanded.pwm_hz
+        allowed += SURE * commanded.u_duty_percent
         if not commanded.on or not 0.0 < duty < 100.0 or abs(value - duty) <= allowed:
             return None
         return "duty_not_as_commanded", f"where {duty:.4g} % was commanded, {allowed:.3g} % off is allowed", False
@@ -131,12 +133,13 @@ class FrequencyMeasured(Answer):
     def wrong(self, value: float, reading: Reading, commanded: Commanded) -> tuple[str, str, bool] | None:
         del reading
         hz, allowed = commanded.pwm_hz, BOUNDS["frequency_off_percent"]
+        allowed += 100.0 * SURE * commanded.u_pwm_hz / hz if hz > 0.0 else 0.0
         if not commanded.on or not 0.0 < commanded.duty_percent < 100.0:
             return None
         if abs(value - hz) <= allowed / 100.0 * hz:
             return None
         shown = show_quantity(hz, "Hz")
-        return "frequency_not_as_commanded", f"where {shown} was commanded, {allowed:g} % off is allowed", False
+        return "frequency_not_as_commanded", f"where {shown} was commanded, {allowed:.3g} % off is allowed", False
 
 
 @dataclass(slots=True)

@@ -13,6 +13,8 @@ TABLE: Mapping[str, tuple[float, str]] = {
     "cycle_s": (3.0, "on top of the averaging window, for one reading of all instruments"),
     "cycle_window_s": (0.5, "averaging window while settling: short against the slowest decision, several gates long"),
     "trial_window_s": (1.0, "averaging window in stall trials: a stop is still seen within two seconds"),
+    "kick_window_s": (0.25, "averaging window within a kick pulse; a shorter pulse is not read while it lasts"),
+    "kick_spare_s": (0.2, "… and so much of the pulse must be left besides: it ends on time, not after a late reading"),
     "off_s": (2.0, "switching off, each link on its own"),
     "coast_s": (60.0, "the rotor must be at rest so long after the drive went off, else off is not proved"),
     "off_volts": (0.5, "motor voltage below this counts as off (design: a spinning motor is still a generator)"),
@@ -58,6 +60,7 @@ TABLE: Mapping[str, tuple[float, str]] = {
     "gaps_percent": (125.0, "mean motor voltage above so much of duty × supply: back-EMF in the gaps of the current"),
     "fast_percent": (40.0, "speed above so much of duty × the motor's maximum: so much back-EMF, with no rest known"),
     "vanished_percent": (70.0, "current below so much of that while turning: the drive does not reach the motor"),
+    "as_at_rest_percent": (5.0, "current and voltage both as known at rest to so much, at a fast speed: undecided"),
     "spun_up_readings": (3.0, "readings of a hold without any edge that are compared, at least"),
     "spun_up_percent": (70.0, "current at its end below so much of that at its beginning: the rotor started unseen"),
     "coast_suspect_s": (

@@ -194,10 +194,12 @@ def checks(
     *,
     instruments: int = 0,
     deadline_utc: float | None = None,
+    needed_seconds: float | None = None,
     system: System = SYSTEM,
 ) -> list[Check]:
     """What must be well with the machine before a run that lasts `plan_seconds` begins in (or under) `folder`.
 
+    needed_seconds: of it what must be done before the deadline; None: all.
     Changes nothing but for a file that is made and removed. Time zones play no part: everything is counted in UTC.
     """
     place = _nearest(folder)
@@ -208,7 +210,7 @@ def checks(
         _descriptors(instruments, system),
         _clock(system.utc()),
         _files_and_clock(place, system),
-        *([] if deadline_utc is None else [_deadline(deadline_utc, plan_seconds, system.utc())]),
+        *([] if deadline_utc is None else [_deadline(deadline_utc, needed_seconds or plan_seconds, system.utc())]),
     ]
 
 
@@ -276,7 +278,7 @@ def _deadline(deadline: float, plan_seconds: float, utc: float) -> Check:
     left = deadline - utc
     if left <= 0:
         return Check("deadline", False, f"the deadline {_day(deadline)} is past; now is {_day(utc)}", refuses=True)
-    said = f"{left / 3600:.1f} h are left to the deadline and the plan takes about {plan_seconds / 3600:.1f} h"
+    said = f"{left / 3600:.1f} h are left to the deadline and what must be done takes about {plan_seconds / 3600:.1f} h"
     return Check("deadline", left >= plan_seconds, said if left >= plan_seconds else f"{said}: not all can be found")
 
 

@@ -10,19 +10,23 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass, field
 
+from sweeprig.conduct import by_taps, kick
 from sweeprig.conduct.as_set import changed, restarted
 from sweeprig.conduct.bounds import BOUNDS
 from sweeprig.conduct.doubting import Doubting, Spoiled
+from sweeprig.conduct.last_part import last_part, steady_speed
+from sweeprig.conduct.means import means_of, settled_means, settling_flags
 from sweeprig.conduct.protection import Commanded
 from sweeprig.conduct.rig import OpenRig, by_channel, value_of
-from sweeprig.conduct.settle import LEAST_READINGS, mean_and_u, settled
+from sweeprig.conduct.rotation import CONTRADICTED
+from sweeprig.conduct.settle import LEAST_READINGS, Settling, Wanted
 from sweeprig.conduct.switch_off import drive_off, still_on
 from sweeprig.conduct.track import Track
 from sweeprig.conduct.watchman import Watchman
 from sweeprig.holds import Approach, Condition, Hold, Purpose, Verdict
 from sweeprig.plan import Plan
 from sweeprig.quantities import Reading
-from sweeprig.roles import ACTUATORS, DriveSetting, SupplySetting, Window
+from sweeprig.roles import ACTUATORS, SupplySetting, Window
 
 
 @dataclass(slots=True)
@@ -49,7 +53,12 @@ class Performer:
         self.supply_v: float | None = None
         self.supply_set: dict[str, str] = {}
         self.doubting = Doubting(rig, plan.current_at)
+        self.settling = Settling()
         self._track: Track | None = None
+        self.told = by_taps.Told()
+        self.changed = (0.0, 0.0)
+        """Between these moments of the run clock the motor's power was last changed; telling a duty took `apply_s`."""
+        self.apply_s = 0.0
 
     # -- the drive and the supply --------------------------------------------------------------------------------
 
@@ -94,20 +103,24 @@ class Performer:
 
     def apply(self, condition: Condition, duty_percent: float, done: Performed) -> None:
         rig, drive, name = self.rig, self.rig.drive, self.rig.source["drive"]
-        setting = DriveSetting(condition.pwm_hz, duty_percent)
         # From here on the rotor must be seen turning: the ages count before the first edge of power.
         was_on = rig.guard.on
         if not was_on:
             self.still_set((name,))  # a board that restarted at rest has lost its heartbeat setting
         now = rig.clock.now()
         rig.guard.drive_on(now)
-        self.doubting.command(Commanded(True, duty_percent, condition.pwm_hz, condition.supply_v, now))
+        setting, commanded = self.told.settings(condition, duty_percent, now)
+        self.doubting.command(commanded)
+        asked = rig.clock.now()
         set_values = rig.tell(name, drive.apply(setting), self.watch.look)
+        self.changed = asked, rig.clock.now()
+        self.apply_s = self.changed[1] - asked
         if not was_on:
             # Never "on" again on a drive that should be on: that would hide a lapse of its heartbeat.
             rig.tell(name, drive.switch_on(), self.watch.look)
             if rig.off_is_supply_off:
                 self._supply_on()  # last: the input says the duty before the fan can run
+            self.changed = self.changed[1], rig.clock.now()
         done.readings.extend(set_values.values())
         done.means.update(by_channel(set_values))
 
@@ -125,13 +138,17 @@ class Performer:
 
     def perform(self, hold: Hold, done: Performed) -> None:
         """Fill `done`. The rotor's verdict decides whether the drive stays on: after a stop it goes off at once."""
+        self.told.begin(hold)
         unseen = self.supply_v is None and not self.rig.off_is_supply_off
         self.power(hold.condition)
         if unseen and hold.purpose not in (Purpose.ZERO, Purpose.REST):
             self._look_off(hold, done)
+        pulse: kick.Pulse | None = None
         for duty, seconds in hold.lead:
             if duty == 0:
                 self._rest(hold, seconds, done)
+            elif hold.purpose is Purpose.KICK:
+                pulse = kick.begin(self, hold, duty, seconds, done)
             else:
                 self._turn_at(hold, duty, seconds, done)
         # A control input at duty 0 is a setting like any other: some fans turn there.
@@ -144,6 +161,8 @@ class Performer:
             self._start(hold, done)
         else:
             self._expose(hold, done)
+        if hold.purpose is Purpose.KICK:
+            kick.conclude(done, pulse, self.changed)
 
     def _look_off(self, hold: Hold, done: Performed) -> None:
         """The first hold after the rig was healed: off was proved with the supply off too, where a switch that failed
@@ -229,35 +248,48 @@ class Performer:
         done.means.update(means_of(cycles))
 
     def _settle(self, hold: Hold, done: Performed) -> None:
-        """A curve point: cycles until the speed has settled to the tolerance, or the longest wait, or a stop."""
+        """A curve point: cycles until the speed has settled to the tolerance, or plainly will not, or a stop."""
+        asked = self.plan.settle
+        window_s, before = BOUNDS["cycle_window_s"], self._speed_before()
+        wanted = Wanted(asked.tolerance_percent, asked.confidence_percent, hold.most_s, window_s, before)
         self.apply(hold.condition, hold.duty_percent, done)
         clock, track, names = self.rig.clock, self.track(), self._read_in(hold)
-        cycles: list[dict[str, Reading]] = []
+        speed, cycles = self.rig.roles["speed"], list[dict[str, Reading]]()
         while True:
-            readings = self.cycle(names, BOUNDS["cycle_window_s"], hold, done)
+            readings = self.cycle(names, window_s, hold, done)
             track.take(readings)
-            now = clock.now()
-            exposed = now - track.began
+            exposed = clock.now() - track.began
             if track.stopped_at is not None or (exposed >= hold.least_s and not track.turning()):
                 self._stopped(track, exposed, done)
                 return
             if not track.turning():
                 continue
             cycles.append(readings)
-            reached = settled([speed for _, speed in track.speeds[1:]], self.plan.settle.tolerance_percent)
-            if exposed < hold.least_s or not ((reached is not None and reached.decided) or exposed >= hold.most_s):
+            last = exposed >= hold.most_s
+            if exposed < hold.least_s:
                 continue
-            self._turning(track, exposed, done)
-            first = len(cycles) // 2 if reached is None else 1 + reached.first
-            done.means.update(means_of(cycles[first:]))
-            if reached is None:
-                done.flags = (*done.flags, "not_settled_to_tolerance:too few speed readings")
-            elif not reached.decided:
-                done.flags = (*done.flags, f"not_settled_to_tolerance:{reached.reached_percent:.2g}%")
-            return
+            # The window of the first speed may have begun before the setting was applied
+            speeds = [(at - track.began, rpm) for at, rpm in track.speeds[1:]]
+            found = self.settling.look(speeds, readings[speed].u, wanted, last)
+            if last or (found is not None and (found.decided or found.hopeless)):
+                self._turning(track, exposed, done)
+                since = track.began if found is None else track.speeds[1 + found.first][0]
+                done.means.update(settled_means(cycles, since, speed, found))
+                done.flags = (*done.flags, *settling_flags(found))
+                return
+
+    def _speed_before(self) -> float | None:
+        """The speed as a hold begins, rpm, where it is known: the rotor was driven until now, or was seen to be at rest
+        with nothing to move it since."""
+        track = self._track
+        if track is None:
+            return None
+        if self.rig.guard.on:
+            return track.speeds[-1][1] if track.speeds and track.turning() else None
+        return None if track.turning() else 0.0
 
     def _expose(self, hold: Hold, done: Performed) -> None:
-        """A stall trial or the run-in: exposed for the hold time whatever settling says; a stop ends it."""
+        """A stall trial, the run-in, a reference: exposed for the hold time whatever settling says; a stop ends it."""
         self.apply(hold.condition, hold.duty_percent, done)
         clock, track, names = self.rig.clock, self.track(), self._read_in(hold)
         from_rest = hold.approach is Approach.FROM_REST
@@ -279,7 +311,8 @@ class Performer:
                 cycles.append(readings)
             if exposed >= hold.most_s:
                 self._turning(track, exposed, done)
-                done.means.update(means_of(cycles))
+                counted = last_part(hold, cycles)
+                done.means.update(means_of(counted) | steady_speed(hold, counted, self.rig.roles["speed"]))
                 break
         if hold.purpose is Purpose.RUN_IN and done.verdict is Verdict.STOPPED:
             raise Spoiled(f"the rotor stopped or did not start at {hold.duty_percent:g} % in the run-in")
@@ -299,7 +332,9 @@ class Performer:
         done.exposed_s, done.restarts = now - track.began, track.restarts
         done.event_between_s = (done.exposed_s, None)
         done.means.update(means_of(cycles[-2:]))
-        if not started:
+        if started:
+            self._doubt_turning(done)
+        else:
             self.still_driven()
             if not track.turning():
                 self.doubting.believe_rest()
@@ -353,24 +388,11 @@ class Performer:
         done.verdict = Verdict.UNDECIDED if slow else Verdict.TURNING
         if slow:
             done.flags = (*done.flags, "below_lowest_speed")
+        self._doubt_turning(done)
 
-
-def means_of(cycles: list[dict[str, Reading]]) -> dict[str, Reading]:
-    """Channel → mean over the cycles that gave data; u: standard error of the mean and the instrument's accuracy
-    (common to all its readings, so it does not average down), added in squares."""
-    means: dict[str, Reading] = {}
-    if not cycles:
-        return means
-    for channel, last in cycles[-1].items():
-        if channel.endswith((".edge_age", ".edge_gap")):
-            continue
-        good = [
-            reading for cycle in cycles if (reading := cycle.get(channel)) is not None and reading.value is not None
-        ]
-        if not good:
-            continue
-        mean, u_mean = mean_and_u([reading.value for reading in good if reading.value is not None])
-        u_instrument = sum(reading.u for reading in good) / len(good)
-        flags = tuple(sorted({flag for reading in good for flag in reading.flags}))
-        means[channel] = Reading(mean, math.hypot(u_mean, u_instrument), last.unit, last.at, channel, flags)
-    return means
+    def _doubt_turning(self, done: Performed) -> None:
+        """Do voltage and current contradict it? Then no survival, no start; and off, for the rotor may be locked."""
+        if self.doubting.stands():
+            done.verdict, done.event_between_s = Verdict.UNDECIDED, (0.0, None)
+            done.flags = (*done.flags, CONTRADICTED)
+            self.off()

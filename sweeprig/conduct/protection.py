@@ -17,6 +17,9 @@ from sweeprig.quantities import Reading, show_quantity
 NO_READING = "no_reading"
 """The rule of a protected channel that fell silent."""
 
+SURE = 3.0
+"""What is known with a standard uncertainty is believed to be off by no more than so many of it."""
+
 NO_LIMIT = math.inf
 """Has to be written out: a policy that is given nothing else has a finite limit and a finite age."""
 
@@ -49,13 +52,20 @@ class Trip:
 @dataclass(frozen=True, slots=True)
 class Commanded:
     """What drive and supply were told. supply_v: None where no supply is on the bus or it is off; since: run clock, s,
-    of the last change."""
+    of the last change; u_…: standard uncertainties of duty and frequency, where the drive does not say itself what it
+    gives."""
 
     on: bool = False
     duty_percent: float = 0.0
     pwm_hz: float = 0.0
     supply_v: float | None = None
     since: float = -math.inf
+    u_duty_percent: float = 0.0
+    u_pwm_hz: float = 0.0
+
+    @property
+    def least_duty_percent(self) -> float:
+        return max(self.duty_percent - SURE * self.u_duty_percent, 0.0)
 
 
 NOTHING = Commanded()

@@ -20,6 +20,7 @@ from sweeprig.conduct.sanity import MotorFacts
 from sweeprig.dialects import find_dialect
 from sweeprig.errors import ConfigError, LinkError, RoleMissing, SweeprigError, WrongInstrument
 from sweeprig.job import Job
+from sweeprig.job.pwm_choice import frequencies
 from sweeprig.job.rig_models import Limits, Rig
 from sweeprig.link import registry
 from sweeprig.link.link import Link
@@ -45,7 +46,7 @@ class RigUse:
     """A rig and what is used of a motor with it: the limits that hold, and how its tachometer counts.
 
     folder   where the rig file lies: a user's own dialects are found beside it
-    pwm_hz   frequencies that instruments will have to average over; empty where nothing will be swept
+    pwm_hz   frequencies whose whole periods instruments have to average over; without those of which they cannot
     motor    what bounds its readings; None where nothing will be swept
     """
 
@@ -62,7 +63,8 @@ class RigUse:
         facts = MotorFacts(
             motor.kind == "brushed", motor.nominal_voltage, motor.maximum_speed, motor.longest_time_constant
         )
-        return cls(job.rig, job.limits(), motor.pulses_per_revolution, job.rig_folder, tuple(job.sweep.pwm), facts)
+        pwm_hz = tuple(one.used_hz for one in frequencies(job) if not one.spread)
+        return cls(job.rig, job.limits(), motor.pulses_per_revolution, job.rig_folder, pwm_hz, facts)
 
 
 @dataclass(slots=True)

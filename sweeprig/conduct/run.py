@@ -78,6 +78,8 @@ class _Session:
         for name, identity in self.rig.identities.items():
             self.logbook.instrument(self.session, name, identity, self.rig.settings[name], self.clock.now())
             self._pulse()  # a slow disk takes seconds for each
+        for remark in self.plan.remarks:
+            self.tell("notice", text=remark)
         self._conclude_abandoned()
 
     def _conclude_abandoned(self) -> None:
@@ -193,6 +195,7 @@ class _Session:
     ) -> None:
         if status is not Status.DONE:
             done.verdict = Verdict.UNDECIDED
+        done.means.update(self.performer.told.given(hold, self.rig.roles, done.readings, done.means))
         outcome = Outcome(
             hold.number, hold, self.session, status, done.verdict, began, self.clock.now(), began_utc, self.clock.utc(),
             done.exposed_s, done.event_between_s, done.restarts, done.means, done.flags, reason,

@@ -172,7 +172,7 @@ class Sanity:
         supply = self._supply(readings, commanded)
         if value is None or supply is None or not looked.switched:
             return None
-        low, high = voltage_range(commanded.duty_percent, supply, looked.one_way)
+        low, high = voltage_range(commanded.least_duty_percent, supply, looked.one_way)
         at = f"at {commanded.duty_percent:.4g} % of {supply:.4g} V"
         shown = f"{reading.channel} reads {show_quantity(value, 'V')} {at}"
         if looked.one_way and value < -BOUNDS["reversed_volts"]:

@@ -15,6 +15,7 @@ from sweeprig.job.kind_checks import kind_checks
 from sweeprig.job.models import Job
 from sweeprig.job.motor_models import FINDING_UNITS
 from sweeprig.job.problems import Sources, misfit
+from sweeprig.job.pwm_checks import pwm_checks
 from sweeprig.job.search_checks import search_checks
 from sweeprig.job.simulated_models import BrushedValues, SimulatedElectronic
 from sweeprig.job.toml_source import KeyPath
@@ -29,7 +30,7 @@ _SLACK = 1.0 + 1e-9  # 5 × 0.6 s must not fail for its last bit
 def cross_checks(job: Job, sources: Sources) -> list[ConfigError]:
     """All that does not fit, the rig's wiring first; empty when the job may be run."""
     own = (_roles, _voltages, _duties, _curve, _times, _limits, _findings, _deadline)
-    checks = (wiring_checks, *own, search_checks, kind_checks)
+    checks = (wiring_checks, *own, search_checks, pwm_checks, kind_checks)
     return [error for check in checks for error in check(job, sources)]
 
 

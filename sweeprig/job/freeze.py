@@ -11,7 +11,9 @@ from itertools import product
 from sweeprig.holds import Condition
 from sweeprig.job.models import Job
 from sweeprig.job.motor_models import Motor
+from sweeprig.job.pwm_choice import Pwm, board_ticks, frequencies
 from sweeprig.job.sweep_models import Deadline, Sweep
+from sweeprig.job.tap_freeze import with_taps
 from sweeprig.plan import (
     CurvePlan,
     Expected,
@@ -33,7 +35,7 @@ STEPS = {"ladder": 0.5, "adaptive": 0.1}
 """%: multiples of which a search takes its duties, unless the sweep says otherwise."""
 MOST_TRIALS = 80
 UNTIL_THE_DEADLINE = 10_000
-STANDARD_ERROR = 0.25
+STANDARD_ERROR = {"stall": 0.25, "start": 0.5}
 """% duty. An adaptive search ends at so many trials or when its findings are known so well, unless stated."""
 PARTS = (0.25, 0.5, 1.0, 2.0, 4.0, 8.0, 16.0)
 TIME_CONSTANTS = 5.0
@@ -44,9 +46,6 @@ RUN_IN_PIECES = 6
 UNITS_DIFFER, SPREADS_DIFFER = 0.1, 0.4
 """Scatter of the logarithm from one motor of a kind to the next: of a duty, of a spread or a time (guesses)."""
 
-_BOARD_CLOCK_HZ = 16e6
-_PRESCALERS = ((244.2, 1), (30.52, 8), (0.0, 64))  # drivers/firmware/README.md: above this frequency, this prescaler
-
 
 def freeze(job: Job, session: int = 1, began_utc: float | None = None) -> Plan:
     """The plan of `job`.
@@ -56,10 +55,11 @@ def freeze(job: Job, session: int = 1, began_utc: float | None = None) -> Plan:
                 is not in the plan (a preview); `extra["deadline_hours"]` then has it
     """
     rig, motor, sweep = job.rig, job.motor, job.sweep
-    conditions = _conditions(sweep)
+    pwm = frequencies(job)
+    conditions = _conditions(sweep, pwm)
     deadline = _deadline_utc(sweep.deadline, began_utc)
     hours = sweep.deadline.hours if sweep.deadline is not None and deadline is None else None
-    return Plan(
+    plan = Plan(
         seed=sweep.seed,
         conditions=conditions,
         roles=dict(rig.roles),
@@ -91,12 +91,14 @@ def freeze(job: Job, session: int = 1, began_utc: float | None = None) -> Plan:
             motor.locked_rotor_time, motor.cooling_time, job.limits().locked_rotor_time, motor.maximum_voltage
         ),
         expected=_expected(motor),
+        remarks=tuple(one.remark for one in pwm if one.remark),
         extra={} if hours is None else {"deadline_hours": hours},
     )
+    return with_taps(job, plan)
 
 
 def _expected(motor: Motor) -> Expected:
-    """What the motor file expects, with the scatter from one motor of a kind to the next; the rest as Expected has it."""
+    """What the motor file expects, with the scatter from one motor of a kind to the next."""
     stated = motor.expected.model_dump(exclude_none=True)
     if not stated:
         return Expected()
@@ -126,8 +128,7 @@ def with_deadline(job: Job, began_utc: float) -> Job:
 
 def board_step_percent(pwm_hz: float) -> float:
     """One timer tick in percent of the period, for the board at `pwm_hz` (drivers/firmware/README.md)."""
-    prescaler = next(prescaler for above_hz, prescaler in _PRESCALERS if pwm_hz > above_hz)
-    return 100.0 / max(1, round(_BOARD_CLOCK_HZ / prescaler / pwm_hz))
+    return 100.0 / board_ticks(pwm_hz)[1]
 
 
 def curve_duties(points: int, low: float, high: float) -> tuple[float, ...]:
@@ -145,10 +146,10 @@ def curve_low(sweep: Sweep) -> float:
     return max(sweep.duty.low, LOWEST_CURVE_DUTY) if stated is None else stated
 
 
-def _conditions(sweep: Sweep) -> tuple[Condition, ...]:
+def _conditions(sweep: Sweep, pwm: tuple[Pwm, ...]) -> tuple[Condition, ...]:
     """The product of the axes; PWM frequency changes fastest, load (by a person) slowest."""
-    axes = product(sweep.load, sweep.direction, sweep.supply, sweep.pwm)
-    return tuple(Condition(pwm, supply, direction, load) for load, direction, supply, pwm in axes)
+    axes = product(sweep.load, sweep.direction, sweep.supply, pwm)
+    return tuple(Condition(one.used_hz, supply, direction, load) for load, direction, supply, one in axes)
 
 
 def _by_hand(sweep: Sweep) -> tuple[str, ...]:
@@ -189,7 +190,7 @@ def _stall(sweep: Sweep, time_constant_s: float) -> StallPlan | None:
         _most_trials(sweep) if stall.holds is None else stall.holds,
         stall.relaunch_above,
         stall.relaunch_time,
-        STANDARD_ERROR if stall.standard_error is None else stall.standard_error,
+        STANDARD_ERROR["stall"] if stall.standard_error is None else stall.standard_error,
         exposure_times(stall.hold_time, stall.longest, time_constant_s),
     )
 
@@ -219,7 +220,7 @@ def _start(sweep: Sweep) -> StartPlan | None:
         start.rest_time,
         STEPS[start.search] if start.step is None else start.step,
         _most_trials(sweep) if start.trials is None else start.trials,
-        STANDARD_ERROR if start.standard_error is None else start.standard_error,
+        STANDARD_ERROR["start"] if start.standard_error is None else start.standard_error,
     )
 
 

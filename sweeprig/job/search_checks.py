@@ -46,9 +46,10 @@ def _searches(job: Job, sources: Sources) -> Iterator[ConfigError]:
 
 
 def _sharpened(job: Job, sources: Sources) -> Iterator[ConfigError]:
-    """What is to be sharpened must be searched for; checked where the sweep says it itself."""
+    """What is to be sharpened must be searched for; checked where the sweep says something else than nothing, since a
+    frozen job has the default written out."""
     sweep = job.sweep
-    if "sharpen" not in sweep.model_fields_set:
+    if sweep.sharpen == type(sweep).model_fields["sharpen"].default:
         return
     for name in sweep.sharpen:
         table = "start" if name.startswith("start") else "stall"

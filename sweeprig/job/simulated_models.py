@@ -148,6 +148,9 @@ class SimulatedPrescribed(Strict):
     floor_per_hour         hazard that no duty cures
     scatter_percent        standard deviation of a threshold that is drawn anew for each setting
     drift_percent_per_hour by which both thresholds rise
+    kick_s                 time at full duty after which half of the starts hold out a step down; 0: all do, at once.
+                           At a kick duty D it is kick_s·(100/D)^kick_power; kick_spread is the standard deviation of
+                           its natural logarithm
     """
 
     kind: Literal["prescribed"]
@@ -164,6 +167,9 @@ class SimulatedPrescribed(Strict):
     dead_percent: Annotated[float, Number(0.0, 99.0, "Duty at which the straight line of speed meets zero")] = 0.0
     time_constant_s: _Positive
     full_amps: Annotated[float, Number(0.0, 50.0, "Motor current at full duty")]
+    kick_s: Annotated[float, Number(0.0, 60.0, "Time of a pulse at full duty")] = 0.0
+    kick_spread: Annotated[float, Number(0.0, 3.0, "Of the natural logarithm of the time", above=True)] = 0.3
+    kick_power: Annotated[float, Number(0.0, 5.0, "Of the kick duty")] = 1.0
 
 
 def _kind_of(value: object) -> str:

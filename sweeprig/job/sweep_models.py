@@ -11,8 +11,9 @@ from typing import Annotated, Literal
 from pydantic import AfterValidator, Field
 
 from sweeprig.job.amounts import Amount, Number, Strict, Words, problem
+from sweeprig.job.pwm_amount import PwmAmount
 
-_PWM = Amount(
+_PWM = PwmAmount(
     "Hz", 20.0, 100_000.0, "Below 20 Hz the rotor follows single pulses; above 100 kHz a duty step exceeds 0.6 %"
 )
 _DUTY = Amount("%", 0.0, 100.0, "Duty is the on-time in percent of the period")
@@ -150,8 +151,8 @@ class LongRun(Strict):
     """A few long holds where they pin how the hazard falls, for the bound of a run of `service`."""
 
     service: Annotated[float, Amount("s", 3600.0, 3.2e8, "A service time is hours to years")] = 86_400.0
-    hold_time: Annotated[float, _HOLD] = 600.0
-    holds: Annotated[int, Number(1, 100, "Each takes its whole hold time", whole=True)] = 4
+    hold_time: Annotated[float, _HOLD] = 1800.0
+    holds: Annotated[int, Number(1, 100, "Each takes its whole hold time", whole=True)] = 6
     probability: Annotated[float, Amount("%", 50.0, 99.9, "Of running through the service time")] = 99.0
 
 
@@ -191,7 +192,9 @@ Sharpened = Literal[
 class Sweep(Strict):
     """A sweep. A table that is left out ([run_in], [curve], [stall], [start], [kick], …) is not done.
 
-    sharpen   findings whose standard errors the adaptive searches bring down
+    pwm            frequencies; ["timer"] where the rig's analogue timer makes its own
+    pwm_tolerance  a frequency may be moved by so much, % of it, so that the meters' apertures hold whole periods
+    sharpen        findings whose standard errors the adaptive searches bring down
     """
 
     name: Annotated[str, Words(80)]
@@ -206,6 +209,7 @@ class Sweep(Strict):
     ]
     seed: Annotated[int, Number(0, 999_999_999, "Random choices are drawn from it", whole=True)] = 1
     saturation: Annotated[float, Amount("%", 0.1, 20.0, "The usable range ends so far below the highest speed")] = 2.0
+    pwm_tolerance: Annotated[float, Amount("%", 0.0, 10.0, "Further off it would be another condition")] = 0.0
     zero: Zero | None = None
     run_in: RunInStage | None = None
     curve: Curve | None = None

@@ -1,10 +1,12 @@
 """The rig's timer with digital potentiometer, where that makes the PWM: its parts, and what they must bear.
 
-Only values and the check that the parts fit each other; how the timer behaves is the simulated bench's.
+Only values, what they give by their nominal values, and the check that they fit each other; the true timer is the
+simulated bench's, which shares no formula with this.
 """
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
 from typing import Annotated, Literal
 
@@ -32,6 +34,31 @@ class PwmTimer(Strict):
         float, Amount("V", 1.0, 40.0, "A part that sees more conducts through its protection, or dies")
     ]
     diode_drop: Annotated[float, Amount("V", 0.0, 1.2, "A steering diode at some 100 uA")] = 0.5
+
+
+HIGHEST_TAP = 255
+"""The board writes eight bits to its potentiometer (drivers/firmware/README.md)."""
+
+
+def timer_ends(timer: PwmTimer) -> tuple[float, float]:
+    """Duty at the lowest and at the highest tap by the parts' nominal values, %: charging part over the whole."""
+    low = 100.0 * timer.end_resistor / (2.0 * timer.end_resistor + timer.potentiometer)
+    return low, 100.0 - low
+
+
+def timer_step(timer: PwmTimer) -> float:
+    """One tap by the parts, % duty."""
+    low, high = timer_ends(timer)
+    return (high - low) / HIGHEST_TAP
+
+
+def timer_hz(timer: PwmTimer) -> float:
+    """The frequency by the parts, Hz, to five digits: 1 / (t_on + t_off), each time R·C·ln of what the capacitor is
+    charged by between the timer's thresholds at a third and two thirds of its supply, less the diode's drop."""
+    volts, drop = timer.supply, timer.diode_drop
+    period = (2.0 * timer.end_resistor + timer.potentiometer) * timer.capacitor_farad
+    period *= math.log((volts - volts / 3.0 - drop) / (volts - 2.0 * volts / 3.0 - drop))
+    return float(f"{1.0 / period:.5g}")
 
 
 def timer_checks(timer: PwmTimer | None, drive_adapter: str | None, sources: Sources) -> Iterator[ConfigError]:

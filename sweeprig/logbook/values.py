@@ -15,7 +15,7 @@ from functools import lru_cache
 from pathlib import Path
 from typing import Any, NamedTuple
 
-from sweeprig.holds import Approach, Condition, EndsWhen, Hold, Outcome, Purpose, Status, Verdict
+from sweeprig.holds import Approach, AtTap, Condition, EndsWhen, Hold, Outcome, Purpose, Status, Verdict
 from sweeprig.quantities import Reading
 from sweeprig.roles import Identity
 
@@ -160,7 +160,8 @@ def _shared(pwm_hz: float, supply_v: float, direction: str, load: str, thermal: 
 
 
 def hold_to_json(hold: Hold) -> Json:
-    return {
+    """The hold as plain data. `taps` stands only where there are some: other holds read as they did before taps."""
+    data: Json = {
         "number": hold.number,
         "purpose": hold.purpose.value,
         "approach": hold.approach.value,
@@ -174,6 +175,19 @@ def hold_to_json(hold: Hold) -> Json:
         "lead": [[number_to_json(duty), number_to_json(seconds)] for duty, seconds in hold.lead],
         "tap": hold.tap,
     }
+    if hold.taps:
+        data["taps"] = [
+            {"tap": one.tap} | {name: number_to_json(getattr(one, name)) for name in _AT_TAP} for one in hold.taps
+        ]
+    return data
+
+
+_AT_TAP = tuple(each.name for each in dataclasses.fields(AtTap) if each.name != "tap")
+
+
+def _at_tap(data: object) -> AtTap:
+    table = as_table(data)
+    return AtTap(tap=as_count(table["tap"]), **{name: as_number(table[name]) for name in _AT_TAP})
 
 
 def hold_from_json(data: Mapping[str, Any]) -> Hold:
@@ -192,6 +206,7 @@ def hold_from_json(data: Mapping[str, Any]) -> Hold:
         why=as_text(data["why"]),
         lead=tuple((as_number(duty), as_number(seconds)) for duty, seconds in data.get("lead", ())),
         tap=None if data.get("tap") is None else as_count(data["tap"]),
+        taps=tuple(_at_tap(one) for one in data.get("taps", ())),
     )
 
 

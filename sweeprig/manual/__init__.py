@@ -9,8 +9,8 @@ from importlib.resources import files
 from sweeprig.errors import ConfigError
 
 _ORDER = (
-    "start", "words", "job-files", "rig", "links", "safety", "findings", "report", "resume", "unattended", "bounds",
-    "simbench", "exit-codes", "adapters", "dialects", "library", "testing",
+    "start", "words", "job-files", "search", "rig", "links", "safety", "findings", "report", "resume", "unattended",
+    "bounds", "simbench", "exit-codes", "adapters", "dialects", "library", "testing",
 )  # fmt: skip
 ALSO = {"motor": "job-files", "sweep": "job-files", "instruments": "rig"}
 """Other names under which error texts send people to a topic."""

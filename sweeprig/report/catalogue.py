@@ -76,12 +76,40 @@ MEANINGS: dict[str, Meaning] = {
         "Long-run duty", "%", "high",
         "One-sided 95 % upper bound of the duty for the service time; rests on the assumptions named beside it.",
     ),
+    "long_run_extrapolation_factor": Meaning(
+        "Long run: extrapolation in time", "1", "",
+        "Service time over the time turned near the long-run duty (near the nearest duty tried, where none is near).",
+    ),
+    "long_run_model_free_percent": Meaning(
+        "Long run: chance without a law", "%", "",
+        "What the time turned at or above the long-run duty and the stops in it show without any law of duty: the "
+        "chance of the service is at least this (one-sided 95 %).",
+    ),
+    "long_run_binary_duty_percent": Meaning(
+        "Long run by a plain binary model", "%", "",
+        "The same bound from a logistic model of whole holds, survived or not; for comparison only.",
+    ),
     "start_stall_hysteresis_percent": Meaning(
         "Start duty over stall duty", "%", "high", "Start duty less stall duty.",
     ),
     "kick_99_s": Meaning(
         "Kick-start pulse, 99 %", "s", "high",
-        "The pulse at the kick duty after which 99 % of starts succeed and last; upper bound.",
+        "The pulse at the highest kick duty after which 99 % of starts succeed and last; upper bound.",
+    ),
+    "kick_99_second_s": Meaning(
+        "Kick-start pulse, 99 %, second kick duty", "s", "", "The same at the second highest kick duty.",
+    ),
+    "kick_99_third_s": Meaning(
+        "Kick-start pulse, 99 %, third kick duty", "s", "", "The same at the third highest kick duty.",
+    ),
+    "kick_charge_amp_seconds": Meaning(
+        "Charge of the kick", "A·s", "", "Mean current in the pulse times the pulse of the highest kick duty.",
+    ),
+    "kick_charge_second_amp_seconds": Meaning(
+        "Charge of the kick, second kick duty", "A·s", "", "The same at the second highest kick duty.",
+    ),
+    "kick_charge_third_amp_seconds": Meaning(
+        "Charge of the kick, third kick duty", "A·s", "", "The same at the third highest kick duty.",
     ),
     "stall_speed_rpm": Meaning(
         "Stall speed", "rpm", "high", "The settled speed on the falling branch at the stall duty.",
@@ -104,7 +132,11 @@ MEANINGS: dict[str, Meaning] = {
         "Repeatability", "rpm", "high",
         "Pooled standard deviation of the settled speed over repeated holds at one setting, worst of three segments.",
     ),
-    "lapse": Meaning("Lapse", "1", "high", "Share of stops that duty does not cure."),
+    "drift_percent_per_hour": Meaning(
+        "Drift of the reference speed", "%/h", "",
+        "Mean change of the speed in the reference holds, from the first to the last, percent of it an hour.",
+    ),
+    "lapse": Meaning("Lapse", "1", "high", "Chance of a stop in a hold of {hold_time} that duty does not cure."),
     "coast_time_s": Meaning("Coast-down time", "s", "high", "From drive off to the last edge."),
 }  # fmt: skip
 
@@ -114,11 +146,19 @@ FLAGS: dict[str, str] = {
     "always_started": "the motor started at every duty tried: a bound, not a value",
     "law_assumed": "depends on the assumed law; the data cannot choose between laws",
     "extrapolated": "read off the curve beyond the last duty that always turned",
+    "extrapolated_in_time": "no hold lasted the service time: limits are not decided by it",
+    "extrapolated_in_pulse_time": "outside the pulse times tried",
+    "no_hold_near": "no hold was made near the long-run duty",
+    "beyond_the_duties_allowed": "lies above the highest duty allowed: no duty is shown to do",
+    "other_run_duty_left_out": "kicks that ended at another run duty were left out",
     "not_monotone": "the speed falls again at higher duty",
     "free_air": "no load was stated: free air",
     "self_restart": "the rotor stopped and restarted by itself",
     "supply_limited": "the supply's current limit acted",
     "not_settled_to_tolerance": "did not settle to the tolerance",
+    "still_drifting": "settled, but the speed goes on drifting slowly",
+    "tap_map_not_monotone": "a tap of the digital potentiometer is out of order",
+    "duty_of_tap_not_measured": "the duty of a tap was not measured; it is taken from its neighbours",
     "duty_commanded": "the commanded duty was taken; no duty was measured",
     "duty_not_measured": "no duty was measured, and the switch's delay may shift it by 0.1 % or more",
     "no_replicates": "no setting was repeated: scatter between holds is not in u",
@@ -130,13 +170,18 @@ FLAGS: dict[str, str] = {
     "highest_duty_missing": "the highest duty of the sweep gave no speed: more may be possible",
     "tail_not_tried": "no hold was made where failures are rare: the law carries the interval",
     "few_failures": "rests on few failures",
+    "still_warming": "the run-in ended after its longest time, before the speed was as steady as asked for",
     "few_successes": "rests on few successes",
     "aperture_not_whole_periods": "the aperture is not a whole number of PWM periods",
     "gates_missed": "gates of the tachometer were missed",
     "short_window": "the averaging window was cut short",
     "twitched": "the rotor moved and stopped again: no start",
+    "rotation_contradicted": "the tachometer says that the rotor turned, voltage and current that it stood",
     "below_lowest_speed": "slower than the lowest speed that the rig can measure",
-    "lapse_possible": "a share of stops above 1 % that duty does not cure cannot be ruled out",
+    "lapse_possible": "stops that duty does not cure, in more than 1 % of the holds, cannot be ruled out",
+    "lapse_not_tried": "too few holds well above the threshold to rule out a lapse of 1 %",
+    "threshold_scatters": "the threshold differs from hold to hold; the duty is that of a hold drawn at random",
+    "threshold_drifts": "the threshold moved through the night; the duty is that at the middle of the trials",
     "heartbeat": "the drive's heartbeat lapsed and switched it off",
     "this_motor_this_night": "this motor, this night",
     "simulated": "from simulated instruments",

@@ -24,6 +24,14 @@ def fits(plan: Plan, hold: Hold, now: float, kept_s: float = 0.0) -> bool:
     return plan.deadline_utc is None or now + longest_s(hold) + kept_s <= plan.deadline_utc
 
 
+def kept_for_closing(plan: Plan) -> float:
+    """Seconds that everything leaves for the last reference hold at each condition."""
+    if plan.reference is None or plan.deadline_utc is None:
+        return 0.0
+    relaunch_s = max(0.0 if plan.stall is None else plan.stall.relaunch_s, 5.0 * plan.time_constant_s)
+    return len(plan.conditions) * (plan.reference.time_s + relaunch_s + BETWEEN_S)
+
+
 def kept_for_later(plan: Plan, past: Tallies) -> float:
     """Seconds that the searches of stall and start leave for kicks and long holds: what each condition needs so that
     it has an answer of these too, as far as that is not there yet."""

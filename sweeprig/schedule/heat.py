@@ -22,7 +22,15 @@ COAST_SEEN_S = 1.0
 _REST, _DONE = Purpose.REST, Status.DONE  # looking a member up costs more than all else in the walk
 _TURNED = (Verdict.TURNING, Verdict.STARTED)
 _COLD_PURPOSES = (Purpose.ZERO, Purpose.REST)
-_MAY_LOCK = (Purpose.START, Purpose.STALL, Purpose.RUN_IN, Purpose.KICK, Purpose.LONG, Purpose.REFERENCE)
+_MAY_LOCK = (
+    Purpose.START,
+    Purpose.STALL,
+    Purpose.RUN_IN,
+    Purpose.KICK,
+    Purpose.LONG,
+    Purpose.REFERENCE,
+    Purpose.TAP_MAP,
+)
 
 
 def full_exposure(hold: Hold, plan: HeatPlan) -> float:

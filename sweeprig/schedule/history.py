@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Sequence
+from dataclasses import replace
 from typing import overload
 
 from sweeprig.holds import Outcome
@@ -49,4 +50,6 @@ class History(Sequence[Outcome]):
 def past_of(outcomes: Sequence[Outcome], plan: Plan) -> Tallies:
     """The tallies of `outcomes`: those of a History as they stand, those of any other sequence counted anew."""
     reads = Reads(plan.time_constant_s, plan.roles.get("speed"))
+    if plan.taps is not None:
+        reads = replace(reads, duty=plan.roles.get("duty"), frequency=plan.roles.get("pwm_frequency"))
     return outcomes.past(reads) if isinstance(outcomes, History) else tallies(outcomes, reads)

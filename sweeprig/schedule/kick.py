@@ -1,6 +1,6 @@
 """Starts by a pulse: which kick duty and which pulse time to try next. A source of holds.
 
-Up and down on the logarithm of the pulse time, each kick duty on its own, the kick duties in turn.
+The search of `search` on the logarithm of the pulse time, each kick duty on its own, the kick duties in turn.
 """
 
 from __future__ import annotations
@@ -10,19 +10,20 @@ from collections.abc import Sequence
 
 from sweeprig.exposures import kick_of
 from sweeprig.holds import Approach, EndsWhen, Hold, Purpose, Verdict
-from sweeprig.laws import STALL_LAWS
+from sweeprig.laws import STALL_LAWS, START_LAWS
 from sweeprig.plan import KickPlan, Plan, StallPlan
+from sweeprig.schedule.posterior import Prior
 from sweeprig.schedule.proposal import TRIAL_SENSORS, Here, Proposal, offered
-from sweeprig.schedule.quick_fit import contrast, key_of, quick_fit
-from sweeprig.schedule.tally import Tally
+from sweeprig.schedule.quick_fit import key_of, quick_fit
+from sweeprig.schedule.search import BINARY, Question, best
+from sweeprig.schedule.tally import Sums, Tally
 
-STEPS_PER_OCTAVE = 4
-"""Pulse times differ by a fourth part of an octave, 19 %: about the scatter of what one start needs."""
-FIRST_STEPS = 4
-"""Until both results were seen the steps are so many times as long: an octave."""
-STEPS_UP = 3
-"""After a failure so many steps longer: the trials then support the pulse that nearly always starts, not half of them.
-"""
+LONGER = 1.05
+"""Pulse times are tried in steps of this ratio."""
+SPREAD, SPREAD_LOG_SD = 0.3, 1.0
+"""Before the trials: spread of the natural logarithm of the pulse that one start needs (common practice, no source)."""
+BEYOND = 3.0
+"""The half may lie so far outside the allowed pulses, in their logarithm."""
 RELIABLE, CONFIDENCE = 0.99, 0.95
 AT_THE_EDGE = 3
 _BOTH = (Verdict.STARTED, Verdict.DID_NOT_START)
@@ -40,16 +41,16 @@ def kicks(plan: Plan, here: Here) -> Proposal | None:
     run = run_duty(plan, kick, here.tally)
     if run is None or here.tally.passed_over(Purpose.KICK, Approach.FROM_REST, run):
         return None
-    open_still = [
-        (len(trials), -duty, trials)
-        for duty in kick.duties_percent
-        if not _finished(kick, trials := tried(here.tally, duty, run))
-    ]
+    open_still = []
+    for duty in kick.duties_percent:
+        trials = tried(here.tally, duty, run)
+        pulse_s, reached = next_pulse(kick, trials)
+        if not reached and not _finished(kick, trials):
+            open_still.append((len(trials), -duty, pulse_s, any(started for _, started in trials)))
     if not open_still:
         return None
-    count, minus_duty, trials = min(open_still)
-    hold = kick_hold(plan, kick, here, -minus_duty, next_pulse(kick, trials), run)
-    answered = any(started for _, started in trials)
+    count, minus_duty, pulse_s, answered = min(open_still)
+    hold = kick_hold(plan, kick, here, -minus_duty, pulse_s, run)
     return Proposal(hold, (count / kick.trials,), spare=answered)
 
 
@@ -68,7 +69,7 @@ def run_duty(plan: Plan, kick: KickPlan, tally: Tally) -> float | None:
     if earlier:
         return min(earlier, key=lambda outcome: outcome.number).hold.duty_percent
     sums = tally.stall.sums
-    if plan.stall is not None and contrast(sums):
+    if plan.stall is not None and sums.successes and sums.failures:
         reliable = _reliable(plan.stall, tally)
     else:
         turned = [duty for duty, seconds in sums.exposure.items() if seconds > 0.0]
@@ -101,27 +102,22 @@ def _same(one_percent: float, other_percent: float) -> bool:
     return math.isclose(one_percent, other_percent, abs_tol=1e-6)
 
 
-def next_pulse(kick: KickPlan, trials: Sequence[Tried]) -> float:
-    """Pulse time of the next trial, s: one step shorter after a start, STEPS_UP longer after a failure; from the
-    geometric middle, and by octaves until both results were seen. Within the shortest and the longest allowed."""
-    shortest, longest = math.log2(kick.shortest_s), math.log2(kick.longest_s)
-    decided = [(pulse, started) for pulse, started in trials if started is not None]
-    if not decided:
-        return _held(0.5 * (shortest + longest), shortest, longest)
-    pulse, started = decided[-1]
-    step = 1.0 / STEPS_PER_OCTAVE
-    if all(one == started for _, one in decided):
-        step *= FIRST_STEPS
-        target = math.log2(pulse) + (-step if started else step)
-    else:
-        target = math.log2(pulse) + (-step if started else STEPS_UP * step)
-    return _held(target, shortest, longest)
-
-
-def _held(log2_s: float, shortest: float, longest: float) -> float:
-    """On the grid of the steps, within the range; rounded to 0.1 ms."""
-    grid = round(log2_s * STEPS_PER_OCTAVE) / STEPS_PER_OCTAVE
-    return round(math.exp2(min(max(grid, shortest), longest)), 4)
+def next_pulse(kick: KickPlan, trials: Sequence[Tried]) -> tuple[float, bool]:
+    """(pulse time of the next trial, s; whether `kick_99_s` is known as asked already): the search's own rule, on the
+    natural logarithm of the time. Within the shortest and the longest allowed, rounded to 0.1 ms."""
+    sums = Sums()
+    for pulse, started in trials:
+        if started is not None:
+            sums.add(round(math.log(pulse), 4), float(started), None if started else 1.0)
+    low, high = math.log(kick.shortest_s), math.log(kick.longest_s)
+    question = Question(
+        law=START_LAWS[0], prior=Prior(low - BEYOND, high + BEYOND, SPREAD, SPREAD_LOG_SD), low=low, high=high,
+        step=math.log(LONGER), parts=(1.0,), whole_s=kick.hold_time_s, before_s=kick.rest_time_s, after_failure_s=0.0,
+        coming_down_s=0.0, wanted=((RELIABLE, kick.standard_error),), likelihood=BINARY,
+    )  # fmt: skip
+    choice = best(question, key_of(sums))
+    pulse_s = math.exp(min(max(choice.duty_percent, low), high))
+    return round(min(max(pulse_s, kick.shortest_s), kick.longest_s), 4), choice.reached
 
 
 def kick_hold(plan: Plan, kick: KickPlan, here: Here, kick_percent: float, pulse_s: float, run_percent: float) -> Hold:

@@ -9,23 +9,32 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 
-from sweeprig.holds import Condition, Decision, Finished, Hold, NeedsPerson, Outcome
+from sweeprig.holds import Condition, Decision, Finished, Hold, NeedsPerson, Outcome, Purpose
 from sweeprig.plan import Plan
-from sweeprig.schedule.budget import fits, kept_for_later
+from sweeprig.schedule.adaptive import stall_beyond, stall_search, start_beyond, start_search
+from sweeprig.schedule.budget import fits, kept_for_closing, kept_for_later
+from sweeprig.schedule.by_taps import at_taps, map_taps
 from sweeprig.schedule.curve_points import coarse_curve
 from sweeprig.schedule.curve_refined import refined_curve
 from sweeprig.schedule.heat import rest_before
 from sweeprig.schedule.history import past_of
+from sweeprig.schedule.kick import kicks
 from sweeprig.schedule.ladder import stall_ladder, start_ladder
+from sweeprig.schedule.long_run import long_holds
 from sweeprig.schedule.opening import opening
-from sweeprig.schedule.proposal import Here, Source
+from sweeprig.schedule.proposal import Here, Proposal, Source
 from sweeprig.schedule.reference import last_reference, reference
 from sweeprig.schedule.tally import Tallies, Tally
 
 STAGES: tuple[tuple[Source, ...], ...] = (
+    (map_taps,),
     (coarse_curve,),
     (stall_ladder, start_ladder),
+    (stall_search, start_search),
     (refined_curve,),
+    (kicks,),
+    (long_holds,),
+    (stall_beyond, start_beyond),
     (last_reference,),
 )
 """A later stage has its turn at the conditions in hand when no source of an earlier one wants a hold there any more.
@@ -45,6 +54,8 @@ def next_hold(plan: Plan, outcomes: Sequence[Outcome], now: float) -> Decision:
     if wanted is None and late:
         return Finished("no hold that is still asked for would end before the deadline")
     hold = opening(plan, past, past.highest_number + 1, first) or wanted
+    if plan.taps is not None and isinstance(hold, Hold):
+        hold = at_taps(plan, past, hold)
     if plan.heat is not None and isinstance(hold, Hold):
         return rest_before(hold, outcomes, plan.heat, now) or hold
     return hold or Finished("every hold that the sweep asks for is done")
@@ -54,18 +65,25 @@ def _wanted(plan: Plan, past: Tallies, now: float) -> tuple[Hold | None, bool]:
     """The next hold of the conditions that are set alike by hand, the first such group that still wants one; and
     whether there were others that the deadline leaves no time for."""
     kept_s = 0.0 if plan.deadline_utc is None else kept_for_later(plan, past)
-    late = False
+    late, closing_s = False, kept_for_closing(plan)
     for group in _groups(plan):
         places = [Here(one, past.conditions.get(one) or Tally(), past, past.highest_number + 1, now) for one in group]
         for stage in STAGES:
             proposals = [one for here in places for source in stage if (one := source(plan, here)) is not None]
-            timely = [one for one in proposals if fits(plan, one.hold, now, kept_s if one.spare else 0.0)]
+            timely = [one for one in proposals if fits(plan, one.hold, now, _kept(one, kept_s, closing_s))]
             late = late or len(timely) < len(proposals)
             if timely:
                 due = [one for here in places if (one := reference(plan, here)) is not None]
                 due = [one for one in due if fits(plan, one.hold, now)]
                 return min(due or timely, key=lambda one: one.rank).hold, late
     return None, late
+
+
+def _kept(proposal: Proposal, later_s: float, closing_s: float) -> float:
+    """Seconds that must be left after it before the deadline."""
+    if proposal.hold.purpose is Purpose.REFERENCE:
+        return 0.0
+    return closing_s + (later_s if proposal.spare else 0.0)
 
 
 def _groups(plan: Plan) -> Iterator[tuple[Condition, ...]]:

@@ -21,6 +21,8 @@ from sweeprig.schedule.sharpness import answered, standard_errors
 
 NIGHTS = 19
 """The longest and the shortest of 19 hold a twentieth night between them nine times in ten."""
+ROUGH = 3
+"""So many are enough for about how long it will take."""
 MOST_HOLDS = 100_000
 
 
@@ -40,10 +42,11 @@ class Band:
 @dataclass(frozen=True, slots=True)
 class Preview:
     """holds: predicted number by purpose (median); seconds: predicted bench time (median), rest_s of it with the drive
-    off so that the winding cools; answered_s: until every condition has an answer; hours, count: time and holds with
+    off so that the winding cools; answered_s: until every condition has an answer, at the latest of
+    the nights, None where some night left one without; hours, count: time and holds with
     their 90 % bands; standard_errors: of the findings that a search can sharpen, worst over the conditions, %;
     can / cannot: what this rig gives and lacks, in words; persons: what needs a person; guesses: what the prediction
-    assumes; ends: why the night ends."""
+    assumes; ends: why the night ends; remarks: the plan's, on what is done otherwise than asked."""
 
     holds: dict[str, int]
     seconds: float
@@ -52,11 +55,12 @@ class Preview:
     persons: tuple[str, ...]
     guesses: tuple[str, ...]
     rest_s: float = 0.0
-    answered_s: float = 0.0
+    answered_s: float | None = None
     hours: Band = Band(0.0, 0.0, 0.0)
     count: Band = Band(0.0, 0.0, 0.0)
     standard_errors: dict[str, Band] = field(default_factory=dict)
     ends: str = ""
+    remarks: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,11 +91,12 @@ def preview(plan: Plan, now: float, nights: int = NIGHTS) -> Preview:
         persons=middle.persons,
         guesses=_guesses(plan),
         rest_s=middle.rest_s,
-        answered_s=max(finished, default=middle.seconds),
+        answered_s=max(finished) if len(finished) == len(seen) else None,
         hours=Band.of([night.seconds / 3600.0 for night in seen]),
         count=Band.of([float(night.holds.total()) for night in seen]),
         standard_errors={name: Band.of([night.errors[name] for night in seen]) for name in names},
         ends=Counter(night.ends for night in seen).most_common(1)[0][0],
+        remarks=plan.remarks,
     )
 
 

@@ -8,6 +8,7 @@ from operator import attrgetter
 
 from sweeprig.exposures import LEAST_TIME_CONSTANTS, exposure, turned_before
 from sweeprig.holds import Approach, Condition, Hold, Outcome, Purpose, Status, Verdict
+from sweeprig.taps import TapsSeen
 
 STRIKES = 3
 """The same hold discarded or abandoned so often is passed over."""
@@ -29,10 +30,13 @@ _EXPOSED = (Purpose.STALL, Purpose.LONG)
 
 @dataclass(frozen=True, slots=True)
 class Reads:
-    """What the plan says that counting needs: the motor's longest time constant (s), and the channel of the speed."""
+    """What the plan says that counting needs: the motor's longest time constant (s), and the channel of the speed; of
+    a drive by taps also those of the duty and the PWM frequency."""
 
     time_constant_s: float
     speed: str | None
+    duty: str | None = None
+    frequency: str | None = None
 
 
 @dataclass(slots=True)
@@ -100,7 +104,8 @@ class Tally:
     def passed_over(self, purpose: Purpose, approach: Approach, duty_percent: float) -> bool:
         return self.strikes.get((purpose, approach, round(duty_percent, 6)), 0) >= STRIKES
 
-    def add(self, outcome: Outcome, previous: Outcome | None, reads: Reads) -> None:
+    def add(self, outcome: Outcome, previous: Outcome | None, reads: Reads, given: float) -> None:
+        """given: the duty that the drive gave, under which it is summed; lists of duties are by what was asked."""
         hold = outcome.hold
         if outcome.status is not _DONE:
             setting = setting_of(hold)
@@ -112,15 +117,15 @@ class Tally:
             self.stall.add(outcome, duty)
         elif purpose is _START:
             self.start.add(outcome, duty)
-            self._started(outcome, duty)
+            self._started(outcome, given)
         elif purpose is _CURVE:
-            self._curve(outcome, duty, reads.speed)
+            self._curve(outcome, duty, reads.speed, given)
         elif purpose in _KEPT:
             self.kept.setdefault(purpose, []).append(outcome)
         if hold.approach is _FALLING:
-            self._exposed(outcome, duty, previous, reads.time_constant_s)
+            self._exposed(outcome, given, previous, reads.time_constant_s)
 
-    def _curve(self, outcome: Outcome, duty: float, channel: str | None) -> None:
+    def _curve(self, outcome: Outcome, duty: float, channel: str | None, given: float) -> None:
         turning = outcome.verdict is _TURNING
         if outcome.hold.approach is not _FALLING:
             self.rising[duty] = turning
@@ -129,7 +134,7 @@ class Tally:
         self.falling[duty] = turning and self.falling.get(duty, True)
         reading = outcome.means.get(channel) if turning and channel is not None else None
         if reading is not None and reading.value is not None:
-            self.speeds.setdefault(duty, []).append(reading.value)
+            self.speeds.setdefault(given, []).append(reading.value)
 
     def _exposed(self, outcome: Outcome, duty: float, previous: Outcome | None, time_constant_s: float) -> None:
         purpose, verdict = outcome.hold.purpose, outcome.verdict
@@ -153,12 +158,17 @@ class Tally:
 
 @dataclass(slots=True)
 class Tallies:
-    """Everything `next_hold` wants to know about the past. Outcomes are added in the order of their numbers."""
+    """Everything `next_hold` wants to know about the past. Outcomes are added in the order of their numbers.
+
+    taps, tap_strikes   of a drive by taps: what was measured at each, and holds discarded or abandoned at it
+    """
 
     reads: Reads
     conditions: dict[Condition, Tally] = field(default_factory=dict)
     last: Outcome | None = None
     highest_number: int = 0
+    taps: TapsSeen = field(default_factory=TapsSeen)
+    tap_strikes: dict[tuple[Purpose, int], int] = field(default_factory=dict)
     _done: dict[tuple[int, Purpose], list[Outcome]] = field(default_factory=dict)
     _strikes: dict[tuple[int, Purpose], int] = field(default_factory=dict)
 
@@ -173,6 +183,7 @@ class Tallies:
     def add(self, outcome: Outcome) -> None:
         hold, previous = outcome.hold, self.last
         self.highest_number, self.last = outcome.number, outcome
+        given = round(hold.duty_percent, 6) if hold.tap is None else self._tap(outcome, hold.tap)
         if hold.purpose is _ZERO or hold.purpose is _RUN_IN:
             key = outcome.session, hold.purpose
             if outcome.status is _DONE:
@@ -183,12 +194,19 @@ class Tallies:
         tally = self.conditions.get(hold.condition)
         if tally is None:
             tally = self.conditions[hold.condition] = Tally()
-        tally.add(outcome, previous, self.reads)
+        tally.add(outcome, previous, self.reads, given)
+
+    def _tap(self, outcome: Outcome, tap: int) -> float:
+        """The duty under which a hold at a tap is summed."""
+        if outcome.status is not _DONE:
+            key = outcome.hold.purpose, tap
+            self.tap_strikes[key] = self.tap_strikes.get(key, 0) + 1
+        return self.taps.add(outcome)
 
 
 def tallies(outcomes: Sequence[Outcome], reads: Reads) -> Tallies:
     """Count `outcomes`, in any order."""
-    past = Tallies(reads)
+    past = Tallies(reads, taps=TapsSeen(reads.duty, reads.frequency))
     for outcome in sorted(outcomes, key=attrgetter("number")):
         past.add(outcome)
     return past

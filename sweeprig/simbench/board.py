@@ -5,11 +5,12 @@ After drivers/firmware/README.md. The firmware answers in the order in which lin
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 from sweeprig.simbench.counter import GATE_S, PWM_HZ, GateCounter, quantise
 from sweeprig.simbench.instrument import Instrument, Setup, draw_scale_error
-from sweeprig.simbench.pwm_timer import REFERENCE_DEGC
+from sweeprig.simbench.pwm_timer import REFERENCE_DEGC, PwmTimer
 from sweeprig.simbench.scpi import NOT_A_NUMBER, Refused, boolean, integer, nr1, nr3, number
 
 if TYPE_CHECKING:
@@ -44,6 +45,17 @@ def _crc_table() -> tuple[int, ...]:
 _CRC_TABLE = _crc_table()
 
 
+def with_errors(setup: Setup, timer: PwmTimer) -> PwmTimer:
+    """The timer as it is fitted: with the errors of the rig file's `[simulated.<board>]`."""
+    return replace(
+        timer,
+        potentiometer_ohm=timer.potentiometer_ohm * (1.0 + setup.error("potentiometer_error_percent", 0.0) / 100.0),
+        ends_percent=setup.error("timer_ends_percent", 0.0),
+        skips_from=int(setup.error("wiper_skips_from", HIGHEST_TAP + 1.0)),
+        skips_taps=int(setup.error("wiper_skips_taps", 0.0)),
+    )
+
+
 class Board(Instrument):
     """Protocol table of drivers/firmware/README.md. Checksum suffixes are checked on lines in; answers carry none."""
 
@@ -53,12 +65,14 @@ class Board(Instrument):
     latency_s = 3e-4
     """Time for a command in the firmware; a prototype took 0.18 to 0.35 ms."""
     longest_line = 128
-    error_keys = ("timer_degc",)
+    error_keys = (
+        "timer_degc", "potentiometer_error_percent", "timer_ends_percent", "wiper_skips_from", "wiper_skips_taps",
+    )  # fmt: skip
     has_panel = False
 
     def __init__(self, setup: Setup, bench: Bench) -> None:
         super().__init__(setup, bench)
-        self._pwm_timer = setup.pwm_timer
+        self._pwm_timer = None if setup.pwm_timer is None else with_errors(setup, setup.pwm_timer)
         self._timer_degc = setup.error("timer_degc", REFERENCE_DEGC)
         self._crystal = draw_scale_error(setup, "speed").gain
         self.counter = GateCounter(bench, self._crystal)

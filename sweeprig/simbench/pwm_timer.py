@@ -27,6 +27,9 @@ class PwmTimer:
                         the integrated circuit's own drift: bipolar, astable, typical 150 ppm/K and 0.3 %/V from 5 V
                         (checks 3.5, data sheet of the bipolar timer)
     capacitor_ppm_per_k the capacitor's
+    ends_percent        frequency at the potentiometer's ends above that in its middle, %: a diode drops less at a small
+                        current, which no formula of the parts has (own choice: as the square)
+    skips_from, skips_taps  a broken ladder: from that tap on the wiper sits so many taps lower than it was told
     """
 
     potentiometer_ohm: float
@@ -39,6 +42,9 @@ class PwmTimer:
     timer_ppm_per_k: float = 150.0
     timer_percent_per_volt: float = 0.3
     capacitor_ppm_per_k: float = 0.0
+    ends_percent: float = 0.0
+    skips_from: int = HIGHEST_TAP + 1
+    skips_taps: int = 0
 
     def duty_percent(self, tap: int) -> float:
         """On-time in percent of the period: charging part over the whole (checks 3.13), the diodes' drop cancels."""
@@ -55,9 +61,12 @@ class PwmTimer:
         stretch = math.log((2.0 * self.supply_volts - 3.0 * drop) / (self.supply_volts - 3.0 * drop))
         drift = 1.0 + (self.timer_ppm_per_k + self.capacitor_ppm_per_k) * 1e-6 * warmer
         drift *= 1.0 + self.timer_percent_per_volt / 100.0 * (self.supply_volts - 5.0)
+        off_middle = 2.0 * tap / HIGHEST_TAP - 1.0
+        drift /= 1.0 + self.ends_percent / 100.0 * off_middle**2
         return 1.0 / (sum(self._paths(tap)) * self.capacitor_farad * stretch * drift)
 
     def _paths(self, tap: int) -> tuple[float, float]:
-        part = self.potentiometer_ohm * tap / HIGHEST_TAP
+        wiper = tap - self.skips_taps if tap >= self.skips_from else tap
+        part = self.potentiometer_ohm * wiper / HIGHEST_TAP
         end = self.end_ohm + self.wiper_ohm
         return end + part, end + self.potentiometer_ohm - part

@@ -48,6 +48,7 @@ class Procedure:
     settle_s   speeds and voltages are averaged from this long after the duty was applied
     run_in     (duty_percent, seconds) that warm the motor before each block of trials
     expected_rpm  the speed that the longest allowed gap between edges is reckoned from
+    kick_…     `plan.KickPlan`; service_s, service_percent: the long run
     """
 
     hold_time_s: float = 20.0
@@ -64,6 +65,12 @@ class Procedure:
     current_limit_amps: float = math.inf
     settle_s: float = 3.0
     run_in: tuple[float, float] = (60.0, 240.0)
+    kick_duties_percent: tuple[float, ...] = ()
+    kick_margin_percent: float = 1.0
+    kick_hold_s: float = 5.0
+    kick_rest_s: float = 10.0
+    service_s: float = 86_400.0
+    service_percent: float = 99.0
 
     @property
     def longest_gap_s(self) -> float:
@@ -96,6 +103,7 @@ class Task:
 
     motor its true values; of a kind that is not plainly brushed, the motor file
     rig   whose power stage and supply the motor hangs on; None: an ideal low-side switch on an ideal supply
+    kick  (kick duty, run duty), percent: for the kind `kick`, of which `duty` is the natural logarithm of the pulse (s)
     """
 
     motor: MotorTruth | Motor
@@ -106,11 +114,12 @@ class Task:
     trials: int
     seed: tuple[int, ...]
     rig: Rig | None = None
+    kick: tuple[float, float] = (100.0, 100.0)
 
 
 @dataclass(frozen=True, slots=True)
 class Counts:
-    """events: stops (kind `stall`) or starts (kind `start`); the sums are over the settled turning time."""
+    """events: stops (kind `stall`) or starts (kinds `start` and `kick`); the sums are over the settled turning time."""
 
     duty: float
     trials: int
@@ -200,9 +209,28 @@ def start_trial(plant: Trialled, pwm_hz: float, duty: float, p: Procedure) -> bo
     return plant.turning and (plant.angle - before) / (2.0 * math.pi) >= WHOLE_REVOLUTIONS
 
 
+def kick_trial(plant: Trialled, pwm_hz: float, kick: tuple[float, float], pulse_s: float, p: Procedure) -> bool:
+    """Coast to rest, rest, the pulse at the kick duty, then the run duty: turning on to the end of the hold."""
+    rest(plant, pwm_hz, p.kick_rest_s)
+    plant.set_drive(pwm_hz, kick[0], True)
+    plant.advance(plant.now + pulse_s)
+    plant.set_drive(pwm_hz, kick[1], True)
+    began = plant.now
+    looks = max(1, round(p.kick_hold_s / LOOK_S))
+    for look in range(1, looks + 1):
+        plant.advance(began + p.kick_hold_s * look / looks)
+        if plant.now - max(began, plant.last_edge_at) > p.longest_gap_s:
+            return False
+    return plant.turning
+
+
 def perform(task: Task) -> Counts:
     plant = warm_plant(task)
     pwm = task.condition.pwm_hz
+    if task.kind == "kick":
+        pulse_s = math.exp(task.duty)
+        lasted = sum(kick_trial(plant, pwm, task.kick, pulse_s, task.procedure) for _ in range(task.trials))
+        return Counts(task.duty, task.trials, lasted)
     if task.kind == "start":
         started = sum(start_trial(plant, pwm, task.duty, task.procedure) for _ in range(task.trials))
         return Counts(task.duty, task.trials, started)

@@ -91,7 +91,21 @@ def _procedure(job: Job, plan: Plan) -> Procedure:
         duty_low_percent=plan.duty_low_percent,
         duty_high_percent=plan.duty_high_percent,
         current_limit_amps=job.limits().current,
+        **_kick_and_service(plan),
     )
+
+
+def _kick_and_service(plan: Plan) -> dict[str, Any]:
+    """What the sweep says of kicks and of the long run, where it does."""
+    said: dict[str, Any] = {}
+    if plan.kick is not None:
+        said |= {
+            "kick_duties_percent": plan.kick.duties_percent, "kick_margin_percent": plan.kick.margin_percent,
+            "kick_hold_s": plan.kick.hold_time_s, "kick_rest_s": plan.kick.rest_time_s,
+        }  # fmt: skip
+    if plan.long_run is not None:
+        said |= {"service_s": plan.long_run.service_s, "service_percent": 100.0 * plan.long_run.probability}
+    return said
 
 
 def _flat(found: Mapping[str, Any]) -> dict[str, Any]:

@@ -16,8 +16,8 @@ from scipy.optimize import brentq
 from sweeprig.holds import Condition
 from sweeprig.simbench.kinds.prescribed import PrescribedTruth
 from sweeprig.simbench.trials import WHOLE_REVOLUTIONS, Procedure
+from sweeprig.simbench.truth_kick import LONGEST_S, NAMES, SHORTEST_S
 
-SERVICE_S = 86_400.0
 _NODES, _WEIGHTS = np.polynomial.hermite_e.hermegauss(61)
 Finding = dict[str, Any]
 
@@ -37,6 +37,45 @@ def started(motor: PrescribedTruth, duty: float, seconds: float) -> float:
     if turns < WHOLE_REVOLUTIONS:
         return 0.0
     return _over_scatter(motor, lambda shift: motor.start_chance(duty, shift) * motor.survival(duty, seconds, shift))
+
+
+def kicked(motor: PrescribedTruth, kick: tuple[float, float], pulse_s: float, seconds: float) -> float:
+    """The chance that a pulse at the first duty (percent) starts it and that it turns on for `seconds` at the second.
+
+    It starts at the kick duty and holds out the step down, or starts at the run duty as from rest, then or never; the
+    threshold scatters anew at each setting."""
+    duty, run = kick
+    holds_out = motor.kick_chance(duty, pulse_s)
+    starts = _over_scatter(motor, lambda shift: motor.start_chance(duty, shift))
+
+    def lasts(shift: float) -> float:
+        from_rest = motor.start_chance(run, shift)
+        turning = starts * (holds_out + (1.0 - holds_out) * from_rest) + (1.0 - starts) * from_rest
+        return turning * motor.survival(run, seconds, shift)
+
+    return _over_scatter(motor, lasts)
+
+
+def _kicks(motor: PrescribedTruth, sustain: Finding, p: Procedure) -> dict[str, Finding]:
+    """The true pulses, s, at the true sustaining duty plus the margin; a root on the logarithm of time."""
+    found: dict[str, Finding] = {}
+    for name, duty in zip(NAMES, sorted(p.kick_duties_percent, reverse=True), strict=False):
+        if sustain["value"] is None:
+            found[name] = sustain
+            continue
+        kick = duty, min(sustain["value"] + p.kick_margin_percent, p.duty_high_percent)
+        ends = [kicked(motor, kick, seconds, p.kick_hold_s) for seconds in (SHORTEST_S, LONGEST_S)]
+        if not ends[0] < 0.99 <= ends[1]:
+            found[name] = {"value": None, "reason": "never_started" if ends[1] < 0.99 else "always_started"}
+            continue
+        low, high = math.log(SHORTEST_S), math.log(LONGEST_S)
+        root = brentq(_short_of_99, low, high, args=(motor, kick, p.kick_hold_s), xtol=1e-12)
+        found[name] = _exact(math.exp(float(root)))
+    return found
+
+
+def _short_of_99(place: float, motor: PrescribedTruth, kick: tuple[float, float], seconds: float) -> float:
+    return kicked(motor, kick, math.exp(place), seconds) - 0.99
 
 
 def _over_scatter(motor: PrescribedTruth, chance: Callable[[float], float]) -> float:
@@ -63,7 +102,8 @@ def prescribed_truth(motor: PrescribedTruth, condition: Condition, p: Procedure)
     start, start_99 = (_root(starting, level, p, "started") for level in (0.5, 0.99))
     found |= {"stall_duty_percent": stall, "sustain_99_duty_percent": sustain}
     found |= {"start_duty_percent": start, "start_99_duty_percent": start_99}
-    found["long_run_duty_percent"] = _root(turning(SERVICE_S), 0.99, p, "stopped")
+    found["long_run_duty_percent"] = _root(turning(p.service_s), p.service_percent / 100.0, p, "stopped")
+    found |= _kicks(motor, sustain, p)
     found["start_stall_hysteresis_percent"] = _of(lambda a, b: a - b, start, stall)
     found["stall_speed_rpm"] = _of(motor.rpm, stall)
     found["stall_voltage_volts"] = _of(lambda duty: duty / 100.0 * condition.supply_v, stall)

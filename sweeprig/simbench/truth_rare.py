@@ -21,9 +21,6 @@ from sweeprig.simbench.rare_starts import Chance, start_failure
 from sweeprig.simbench.rare_trials import stop_rate_in_hold, stop_rate_in_service
 from sweeprig.simbench.trials import BLOCK_TRIALS, Finding, Map, Task, cold_plant, perform
 
-SERVICE_S = 86_400.0
-SERVICE_PERCENT = 99.0
-"""`long_run_duty_percent` is the duty that so many of the services survive (definitions: 24 h at 99 %)."""
 BATCHES = 4
 NEAR = 4.0
 """Points within so much of the wanted logarithm carry the line."""
@@ -61,7 +58,8 @@ def long_run(task: Task, sustain_percent: float, spread_percent: float, spread: 
     sustain_percent, spread_percent   where a hold is survived with 99 %, and the stopping law's spread: where to begin
     `task.trials` forks a rung of splitting; more give a smaller u
     """
-    wanted = math.log(-math.log(SERVICE_PERCENT / 100.0) / SERVICE_S)
+    service_s, service_percent = task.procedure.service_s, task.procedure.service_percent
+    wanted = math.log(-math.log(service_percent / 100.0) / service_s)
     # beyond the tested range the hazard falls at least as fast as the law of that spread says
     fall = 1.283 / spread_percent
     begin = math.log(0.01 / task.procedure.hold_time_s)
@@ -77,8 +75,8 @@ def long_run(task: Task, sustain_percent: float, spread_percent: float, spread: 
         if len(points) < 2:
             break
         low, high = _around(points, wanted, fall)
-    services = trials_to_count(1.0 - SERVICE_PERCENT / 100.0)
-    missing: Finding = {"value": None, "reason": "not_affordable", "trials_needed": services, "trial_s": SERVICE_S}
+    services = trials_to_count(1.0 - service_percent / 100.0)
+    missing: Finding = {"value": None, "reason": "not_affordable", "trials_needed": services, "trial_s": service_s}
     end = min(task.procedure.duty_high_percent, sustain_percent + 3.0 * spread_percent)
     return missing, _tail(task, sustain_percent, end, spread)
 

@@ -13,6 +13,7 @@ import pytest
 
 from sweeprig.conduct.unattended import points, refusals
 from sweeprig.job import Job, load, shipped
+from sweeprig.schedule.preview import Preview
 from sweeprig.terminal import preview_text
 
 NOON = datetime(2026, 3, 2, 12, 0, tzinfo=UTC).timestamp()
@@ -110,12 +111,9 @@ def test_preview_lists_the_points(sweeprig: Callable[..., subprocess.CompletedPr
 def test_an_unmet_point_stands_out(real: Edit) -> None:
     """A point that is not met is shown with NO, and below what to do about it."""
 
-    class Night:
-        holds, seconds, rest_s = {"zero": 1, "rest": 2}, 700.0, 90.0
-        can, cannot, persons, guesses = ("x",), (), (), ()
-
+    night = Preview({"zero": 1, "rest": 2}, 700.0, ("x",), (), (), (), rest_s=90.0)
     job = real((RIG, 'cautions_acknowledged = "A. Bench, 2026-03-01"\n', ""))
-    text = preview_text(Night(), "title", {}, points(job, NOON))
+    text = preview_text(night, "title", {}, points(job, NOON))
     assert "  NO   has its cautions acknowledged (nobody did)" in text
     assert "1 min 30 s of it are rests" in text
     assert "Refused unattended, until this is mended:\n  nobody has acknowledged" in text

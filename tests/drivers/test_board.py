@@ -253,10 +253,11 @@ def test_a_frequency_is_confirmed_within_its_quantisation(
 
 
 def test_a_tap_replaces_the_duty(adapter: Board, board: Scripted) -> None:
-    """With a potentiometer tap the duty is not the board's: it says no data, not the last duty."""
+    """With a potentiometer tap duty and frequency are not the board's: it says no data, not what its pin would do."""
     readings = perform(adapter.apply(DriveSetting(1000.0, 30.0, tap=77)), board)
     assert board.sent == [b"SOUR:FREQ 1000", b"SOUR:FREQ?", b"SOUR:RES:TAP 77", b"SOUR:RES:TAP?"]
-    assert (readings["duty_set"].value, readings["duty_set"].flags) == (None, ("no_data:set_by_tap",))
+    for quantity in ("duty_set", "pwm_hz"):
+        assert (readings[quantity].value, readings[quantity].flags) == (None, ("no_data:set_by_tap",))
     board.answers["SOUR:RES:TAP?"] = "76"
     with pytest.raises(InstrumentRefused, match="tap"):
         perform(adapter.apply(DriveSetting(1000.0, 30.0, tap=77)), board)

@@ -273,3 +273,22 @@ def test_an_accuracy_for_an_unknown_quantity_is_refused(setups: dict[str, Adapte
     """A misspelt quantity would leave the real one without an uncertainty."""
     with pytest.raises(ConfigError, match="does not have: volt "):
         ScpiMultimeter(replace(setups["meter"], accuracy={"volt": Accuracy(0.02)}))
+
+
+def test_only_offered_apertures(setups: dict[str, AdapterSetup]) -> None:
+    """A dialect that lists its family's apertures has any other refused, with the list and the nearest; one that is
+    listed is taken."""
+    setup = setups["meter"]
+    offers = replace(setup, dialect={**setup.dialect, "apertures": [0.02, 0.2, 1]})
+    assert ScpiMultimeter(offers).channels == {"volts": "V"}
+    with pytest.raises(ConfigError, match=r"does not offer this aperture.*0.02 s, 0.2 s, 1 s") as caught:
+        ScpiMultimeter(replace(offers, options={**setup.options, "aperture": "0.3 s"}))
+    assert "aperture to '0.2 s'" in str(caught.value)
+
+
+@pytest.mark.parametrize("wrong", ["0.2", [0.2, 0], [True], [2000.0]])
+def test_apertures_are_times(setups: dict[str, AdapterSetup], wrong: object) -> None:
+    """What is no list of times above zero and up to a thousand seconds is the dialect's fault, and is said so."""
+    setup = setups["meter"]
+    with pytest.raises(ConfigError, match="apertures"):
+        ScpiMultimeter(replace(setup, dialect={**setup.dialect, "apertures": wrong}))

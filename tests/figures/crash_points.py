@@ -234,17 +234,17 @@ ASKED = {Purpose.CURVE: 6, Purpose.STALL: 4, Purpose.START: 4}
 
 
 def points(every: int = 1, first: int = 0) -> list[Point]:
-    """All of them (of the interrupts every tenth), or every so-many-th of these."""
+    """All of them (of the interrupts every tenth), or every so-many-th of each kind, one of each at least."""
     counts, found = calm()
     assert found == ASKED, found
     messages, commits = range(1, counts.exchanges + 1), range(1, counts.commits + 1)
-    whole = [
-        *(Point("exchange", k) for k in messages),
-        *(Point("interrupt", k) for k in messages[::INTERRUPTS]),
-        *(Point("before", k) for k in commits),
-        *(Point("after", k) for k in commits),
-    ]
-    return whole[first % every :: every]
+    kinds = (
+        [Point("exchange", k) for k in messages],
+        [Point("interrupt", k) for k in messages[::INTERRUPTS]],
+        [Point("before", k) for k in commits],
+        [Point("after", k) for k in commits],
+    )
+    return [point for kind in kinds for point in kind[first % min(every, len(kind)) :: every]]
 
 
 def figures(full: bool, workers: int | None = None) -> Iterator[dict[str, Any]]:

@@ -14,8 +14,16 @@ from collections.abc import Iterator
 from importlib import import_module
 from typing import Any
 
-GROUPS = ("startup", "search", "conduct", "night", "findings", "physics", "truth", "unattended", "fuzz", "serve")
-MORE = {"unattended": ("fault_nights", "crash_points", "stress")}
+GROUPS = (
+    "startup", "search", "settle", "conduct", "night", "findings",
+    "physics", "truth", "unattended", "fuzz", "serve",
+)  # fmt: skip
+MORE = {
+    "unattended": ("fault_nights", "crash_points", "stress"),
+    "findings": ("findings_covered", "kick"),
+    "search": ("long_run",),
+    "night": ("drift",),
+}
 """Modules of a group beside the one of its name."""
 
 

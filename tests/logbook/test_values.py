@@ -11,7 +11,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from sweeprig.holds import Approach, Condition, EndsWhen, Hold, Outcome, Purpose, Status, Verdict
+from sweeprig.holds import Approach, AtTap, Condition, EndsWhen, Hold, Outcome, Purpose, Status, Verdict
 from sweeprig.logbook import values
 from sweeprig.quantities import Reading
 
@@ -35,6 +35,7 @@ HOLDS = st.builds(
     why=TEXTS,
     lead=st.lists(st.tuples(FINITE, FINITE), max_size=3).map(tuple),
     tap=st.none() | st.integers(0, 2**31),
+    taps=st.lists(st.builds(AtTap, FINITE, st.integers(0, 255), FINITE, FINITE, FINITE, FINITE), max_size=3).map(tuple),
 )
 OUTCOMES = st.builds(
     Outcome,
@@ -91,6 +92,7 @@ def test_outcome_comes_back(outcome: Outcome) -> None:
 def test_no_field_is_forgotten(kind: type) -> None:
     """Every field of a shared value has a key of its name in the JSON, so that a new field cannot be lost silently."""
     hold = Hold(1, Purpose.REST, Approach.FALLING, Condition(1.0, 2.0), 0.0, 0.0, 1.0, EndsWhen.TIME, (), "")
+    hold = dataclasses.replace(hold, taps=(AtTap(1.0, 2, 3.0, 4.0, 5.0, 6.0),))
     made = {
         Condition: values.condition_to_json(hold.condition),
         Hold: values.hold_to_json(hold),

@@ -16,7 +16,7 @@ WARM = Condition(1000.0, 12.0)
 
 def findings(**values: tuple[float | None, float | None]) -> dict[str, Any]:
     names = ("stall_duty_percent", "sustain_99_duty_percent", "start_duty_percent", "start_99_duty_percent")
-    found = {name: {"value": None, "u": None} for name in names}
+    found: dict[str, Any] = {name: {"value": None, "u": None} for name in names}
     found |= {name: {"value": value, "u": u} for name, (value, u) in values.items()}
     return {**asdict(WARM), **found}
 
@@ -41,7 +41,8 @@ def test_place_and_spread_come_from_half_and_tail() -> None:
     expected = learned([one], [], "the run of Monday")[WARM]
     assert expected.stall_percent[0] == half
     assert expected.stall_spread_percent[0] == pytest.approx(spread)
-    assert (expected.start_percent[0], expected.start_spread_percent[0]) == (17.0, pytest.approx(0.7))
+    assert expected.start_percent[0] == 17.0
+    assert expected.start_spread_percent[0] == pytest.approx(0.7)
     assert expected.source == "the run of Monday"
 
 

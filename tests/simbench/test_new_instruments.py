@@ -316,6 +316,23 @@ def test_the_board_steps_the_timers_tap(bed: Bed) -> None:
     assert bed.plant.drive[2] is False
 
 
+def test_parts_as_they_are_fitted(bed: Bed) -> None:
+    """A potentiometer 10 % too large lowers the frequency and the lowest duty, the ends run faster by what is stated,
+    and from a broken place of the ladder on the wiper sits as many taps lower as stated (independent arithmetic)."""
+    errors = {
+        "potentiometer_error_percent": 10.0, "timer_ends_percent": 2.0, "wiper_skips_from": 100.0,
+        "wiper_skips_taps": 40.0,
+    }  # fmt: skip
+    timer = PwmTimer(100e3, 10e-9, 5.0)
+    board = bed.board(pwm_timer=timer, errors=errors)
+    bed.tell(board, "SOUR:RES:TAP 0", "OUTP ON")
+    assert bed.plant.drive[1] == pytest.approx(100.0 * 1.0 / 112.0)
+    assert bed.plant.drive[0] == pytest.approx(timer.pwm_hz(0) * 102.0 / 112.0 * 1.02)
+    for told, at in ((99, 99), (100, 60)):
+        bed.tell(board, f"SOUR:RES:TAP {told}")
+        assert bed.plant.drive[1] == pytest.approx(100.0 * (1.0 + 110.0 * at / 255.0) / 112.0)
+
+
 # Trips of the supply
 
 

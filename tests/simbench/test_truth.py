@@ -21,7 +21,8 @@ from sweeprig.simbench.trials import (
     true_speed,
     warm_plant,
 )
-from sweeprig.simbench.truth import fit_law, truth
+from sweeprig.simbench.truth import truth
+from sweeprig.simbench.truth_law import fit_law
 
 FAN = MotorTruth(
     resistance_ohm=11.6,

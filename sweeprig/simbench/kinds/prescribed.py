@@ -36,6 +36,9 @@ class PrescribedTruth:
     exponential   hazard h(D) = ln 2 / T · exp(−b·(D − D50)) per second, b = 1.283 / spread
     gaussian      hazard −ln Φ((D − D50)/spread) / T: a hold of just T seconds is survived with probability Φ
     Start: with probability 1 − 2^(−exp(b·(D − D50))), or Φ((D − D50)/spread), at the moment a setting is applied.
+    Kick, where kick_s is above 0: a rotor that started holds out a step down to less duty only after a time that is
+    drawn for each start; by t seconds it has passed with probability 1 − 2^(−exp(b·ln(t/t50))), or Φ(ln(t/t50)/spread),
+    t50 = kick_s·(100/D)^kick_power, spread = kick_spread. Before that it is at rest again, and starts as from rest.
     """
 
     law: str
@@ -51,6 +54,9 @@ class PrescribedTruth:
     dead_percent: float
     time_constant_s: float
     full_amps: float
+    kick_s: float = 0.0
+    kick_spread: float = 0.3
+    kick_power: float = 1.0
 
     def hazard(self, duty_percent: float, shift_percent: float = 0.0) -> float:
         """Stops per second of turning at a duty; `shift_percent`: scatter and drift of the threshold."""
@@ -70,6 +76,19 @@ class PrescribedTruth:
         if self.law == "gaussian":
             return math.exp(log_phi(above / self.start_spread_percent))
         return -math.expm1(-math.log(2.0) * _exp(GUMBEL_SPREAD / self.start_spread_percent * above))
+
+    def kick_half_s(self, duty_percent: float) -> float:
+        """The time at a kick duty after which half of the starts hold out the step down, s."""
+        return self.kick_s * float((100.0 / duty_percent) ** self.kick_power)
+
+    def kick_chance(self, duty_percent: float, seconds: float) -> float:
+        """The chance that a rotor which started at a kick duty holds out a step down after `seconds` there."""
+        if self.kick_s <= 0.0:
+            return 1.0
+        z = math.log(seconds / self.kick_half_s(duty_percent)) / self.kick_spread
+        if self.law == "gaussian":
+            return math.exp(log_phi(z))
+        return -math.expm1(-math.log(2.0) * _exp(GUMBEL_SPREAD * z))
 
     def rpm(self, duty_percent: float) -> float:
         """The settled speed while it turns: straight above the dead band, never below 2 % of the top."""
@@ -111,6 +130,8 @@ class PrescribedMotor(Stepped):
         self._hazard = 0.0
         self._ends_at = math.inf
         self._setting: tuple[float, float, float] | None = None
+        self._started_at_percent = 0.0
+        self._holds_out_from = now
 
     @property
     def powered(self) -> bool:
@@ -158,8 +179,22 @@ class PrescribedMotor(Stepped):
             return
         self._scatter = self.truth.scatter_percent * self._normal() if self.truth.scatter_percent else 0.0
         self._life = self._rng.expovariate(1.0)
+        if self.turning and self._at < self._holds_out_from and self.duty_percent < self._started_at_percent:
+            self._stand()
         if not self.turning:
             self.turning = self._rng.random() < self.truth.start_chance(self.duty_percent, self._shift())
+            if self.truth.kick_s > 0.0:
+                self._started_at_percent = self.duty_percent
+                self._holds_out_from = self._at + self._kick_needed_s()
+
+    def _kick_needed_s(self) -> float:
+        """Drawn by the law of `PrescribedTruth.kick_chance`: how long at this duty until a step down is held out."""
+        t = self.truth
+        if t.law == "gaussian":
+            z = self._normal()
+        else:
+            z = math.log(-math.log2(1.0 - self._rng.random() * (1.0 - 1e-12)) + 1e-300) / GUMBEL_SPREAD
+        return t.kick_half_s(self.duty_percent) * math.exp(t.kick_spread * z)
 
     def _flow(self) -> Flow:
         t = self.truth
