@@ -121,7 +121,7 @@ def _commanded_only(plan: Plan, condition: Condition, commanded: Mapping[int, fl
 
 
 def stall_trials(plan: Plan, known: Duties, outcomes: Sequence[Outcome], turned_before: frozenset[int]) -> Chosen:
-    """Exposures for the stall law: falling-approach stall holds, and curve holds of the falling branch that qualify.
+    """Exposures for the stall law: stall holds and long holds from above, and falling curve holds that qualify.
 
     A curve hold is the same exposure to the same hazard when it was meant to last at least five time constants and the
     rotor is known to have turned when it began; a rotor that already stood cannot stop, and counting it would invent a
@@ -173,7 +173,7 @@ def _middle(outcome: Outcome) -> float:
 
 
 def _is_exposure(plan: Plan, outcome: Outcome, turned_before: frozenset[int]) -> bool:
-    if outcome.hold.purpose is Purpose.STALL:
+    if outcome.hold.purpose in (Purpose.STALL, Purpose.LONG):
         return True
     if outcome.hold.purpose is not Purpose.CURVE:
         return False
@@ -243,13 +243,13 @@ def _settled(plan: Plan, outcomes: Sequence[Outcome], branch: Approach) -> list[
     """Holds of the branch whose means are of a turning rotor. One that stopped counts for the time before, if that
     was long enough to settle: its readings are of a rotor that had not yet begun to stop."""
     least = LEAST_TIME_CONSTANTS * plan.time_constant_s
-    purposes = (Purpose.CURVE, Purpose.STALL) if branch is Approach.FALLING else (Purpose.CURVE,)
+    purposes = (Purpose.CURVE, Purpose.STALL, Purpose.LONG) if branch is Approach.FALLING else (Purpose.CURVE,)
     return [
         o
         for o in outcomes
         if o.hold.approach is branch
         and o.hold.purpose in purposes
-        and (o.verdict is Verdict.TURNING or (o.verdict is Verdict.STOPPED and o.hold.purpose is Purpose.STALL))
+        and (o.verdict is Verdict.TURNING or (o.verdict is Verdict.STOPPED and o.hold.purpose is not Purpose.CURVE))
         and (o.verdict is Verdict.TURNING or exposure(o, plan.time_constant_s)[0] >= least)
         and not o.restarts
     ]

@@ -16,8 +16,7 @@ from sweeprig.characterise.combine import K_ONE_SIDED, ONE_SIDED, quantile, wide
 from sweeprig.characterise.evidence import Chosen, Duties
 from sweeprig.characterise.findings import EXTRAPOLATED, Bound, Finding, not_found
 from sweeprig.characterise.thresholds import STALL_PRIOR, bound_without_contrast, posterior
-from sweeprig.exposures import exposure
-from sweeprig.holds import Approach, Outcome, Purpose, Verdict
+from sweeprig.holds import Outcome, Purpose
 from sweeprig.laws import EXPONENTIAL, LOGISTIC, Evidence, Law, Trial, summed
 from sweeprig.plan import LongRunPlan, Plan
 
@@ -65,11 +64,11 @@ class _Case:
 def long_run(plan: Plan, known: Duties, exposures: Chosen, done: Sequence[Outcome]) -> LongRun:
     """The duty for the plan's service time, and beside it how far that reaches beyond what was held.
 
-    exposures   trials of the stall law; long holds among `done` are added to them where they are not in there
+    exposures   trials of the stall law, long holds among them
     """
     if plan.long_run is None or plan.stall is None:
         return _none(NOT_ASKED)
-    trials = (*exposures.trials, *_long_trials(plan, known, done, {trial.hold for trial in exposures.trials}))
+    trials = exposures.trials
     if not trials:
         return _none("no exposure was done at this condition")
     case = _Case(trials, plan.stall.hold_time_s, plan.long_run, known)
@@ -82,22 +81,6 @@ def long_run(plan: Plan, known: Duties, exposures: Chosen, done: Sequence[Outcom
 
 def _none(reason: str) -> LongRun:
     return LongRun(*(not_found(reason) for _ in range(4)))
-
-
-def _long_trials(plan: Plan, known: Duties, done: Sequence[Outcome], there: set[int]) -> list[Trial]:
-    """Long holds as exposures to the same hazard, in parts of the stall hold time."""
-    assert plan.stall is not None
-    found = []
-    for outcome in done:
-        falling = outcome.hold.purpose is Purpose.LONG and outcome.hold.approach is Approach.FALLING
-        if outcome.number in there or not falling or outcome.verdict not in (Verdict.TURNING, Verdict.STOPPED):
-            continue
-        survived, failed = exposure(outcome, plan.time_constant_s)
-        if survived > 0.0 or failed is not None:
-            whole = plan.stall.hold_time_s
-            width = None if failed is None else failed / whole
-            found.append(Trial(outcome.number, known.of[outcome.number], survived / whole, width))
-    return found
 
 
 def _bound(law: Law, evidence: Evidence, case: _Case) -> tuple[float, float]:

@@ -15,7 +15,16 @@ import numpy as np
 from scipy import optimize, special
 
 from sweeprig.characterise.combine import ONE_SIDED, equally_likely
-from sweeprig.laws import Evidence, Floats, Law, log_chance_of_same, log_likelihood
+from sweeprig.laws import (
+    SPREAD_LOG_SD,
+    STALL_SPREAD_PERCENT,
+    START_SPREAD_PERCENT,
+    Evidence,
+    Floats,
+    Law,
+    log_chance_of_same,
+    log_likelihood,
+)
 
 Likelihood = Callable[[Floats, Floats], Floats]
 """(median, spread), percent duty, shapes (rows, columns) and (rows, 1) → log-likelihood, shape (rows, columns)."""
@@ -37,7 +46,7 @@ class SpreadPrior:
     """
 
     median_percent: float
-    log_sd: float = 1.0
+    log_sd: float = SPREAD_LOG_SD
 
     def log_density(self, log_spread: Floats) -> Floats:
         return np.asarray(-0.5 * ((log_spread - math.log(self.median_percent)) / self.log_sd) ** 2)
@@ -60,11 +69,8 @@ PRECISE = Grid(41, 25, 81)
 ROUGH = Grid(21, 17, 33)
 """For what only stands beside the plain law."""
 
-STALL_PRIOR = SpreadPrior(0.3, 1.2)
-START_PRIOR = SpreadPrior(0.8, 1.2)
-"""Small brushed motors: a few tenths of a percent duty for the stall, more for the start (common practice, no source).
-At log_sd 1.2 a motor five times as wide is still covered as stated; at 1.0 the upper bounds of such motors held 90 %
-(coverage by spread: the figures of `findings`)."""
+STALL_PRIOR = SpreadPrior(STALL_SPREAD_PERCENT, SPREAD_LOG_SD)
+START_PRIOR = SpreadPrior(START_SPREAD_PERCENT, SPREAD_LOG_SD)
 
 
 @dataclass(frozen=True, slots=True)

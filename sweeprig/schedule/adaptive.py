@@ -13,19 +13,17 @@ import numpy as np
 
 from sweeprig.exposures import LEAST_TIME_CONSTANTS
 from sweeprig.holds import Approach, Condition, Hold, Purpose
-from sweeprig.laws import STALL_LAWS, START_LAWS, Law
+from sweeprig.laws import STALL_LAWS, STALL_SPREAD_PERCENT, START_LAWS, START_SPREAD_PERCENT, Law
 from sweeprig.plan import HeatPlan, Plan, StallPlan, StartPlan
 from sweeprig.schedule.budget import BETWEEN_S, COAST_S
 from sweeprig.schedule.posterior import Neighbour, Prior, cells
 from sweeprig.schedule.proposal import Here, Proposal
 from sweeprig.schedule.quick_fit import Key, key_of
-from sweeprig.schedule.search import Choice, Question, best
+from sweeprig.schedule.search import BINARY, SURVIVAL, Choice, Question, best
 from sweeprig.schedule.tally import Tally, Trials
 from sweeprig.schedule.trials import stall_hold, stall_lead, start_hold
 
 NAME = "adaptive"
-SPREAD_PERCENT = {"stall": 0.3, "start": 0.8}
-"""Before the trials, as findings have it: spreads of small brushed motors (common practice, no source)."""
 PROBABILITY = {
     "stall_duty_percent": ("stall", 0.5),
     "sustain_99_duty_percent": ("stall", 0.99),
@@ -59,7 +57,11 @@ def start_beyond(plan: Plan, here: Here) -> Proposal | None:
 
 @dataclass(frozen=True, slots=True)
 class Kind:
-    """What differs between the two kinds of trial. most: trials at most; trials: those that were made."""
+    """What differs between the two kinds of trial.
+
+    most: trials at most; trials: those that were made; spread_percent: of the law before them; unit: what a whole
+    trial counts in their sums
+    """
 
     name: str
     stage: StallPlan | StartPlan
@@ -67,20 +69,29 @@ class Kind:
     trials: Trials
     purpose: Purpose
     approach: Approach
+    law: Law
+    spread_percent: float
+    unit: float
 
 
 def kind_of(plan: Plan, name: str, tally: Tally) -> Kind | None:
-    """None where the sweep does not make such trials, or makes them by a ladder."""
-    if name == "stall" and plan.stall is not None and plan.stall.search == NAME:
-        return Kind(name, plan.stall, plan.stall.holds, tally.stall, Purpose.STALL, Approach.FALLING)
-    if name == "start" and plan.start is not None and plan.start.search == NAME:
-        return Kind(name, plan.start, plan.start.trials, tally.start, Purpose.START, Approach.FROM_REST)
+    """None where the sweep makes no such trials. Who chooses them, a ladder or the search, is not asked here."""
+    if name == "stall" and plan.stall is not None:
+        return Kind(
+            name, plan.stall, plan.stall.holds, tally.stall, Purpose.STALL, Approach.FALLING, STALL_LAWS[0],
+            STALL_SPREAD_PERCENT, plan.stall.hold_time_s,
+        )  # fmt: skip
+    if name == "start" and plan.start is not None:
+        return Kind(
+            name, plan.start, plan.start.trials, tally.start, Purpose.START, Approach.FROM_REST, START_LAWS[0],
+            START_SPREAD_PERCENT, 1.0,
+        )  # fmt: skip
     return None
 
 
 def _proposal(plan: Plan, here: Here, name: str, *, beyond: bool) -> Proposal | None:
     kind = kind_of(plan, name, here.tally)
-    if kind is None or kind.trials.count >= kind.most:
+    if kind is None or kind.stage.search != NAME or kind.trials.count >= kind.most:
         return None
     if beyond and (plan.deadline_utc is None or plan.spend != "all"):
         return None
@@ -106,7 +117,7 @@ def _key(tally: Tally, kind: Kind) -> Key:
     if kind.trials.sums.successes and kind.trials.sums.failures:
         return own
     branch = tally.falling if kind.name == "stall" else tally.rising
-    whole = kind.stage.hold_time_s if isinstance(kind.stage, StallPlan) else 1.0
+    whole = kind.unit
     turned = sorted(duty for duty, turning in branch.items() if turning)
     stood = sorted(duty for duty, turning in branch.items() if not turning)
     exposures = tuple((duty, HINT * whole) for duty in turned[:1])
@@ -136,20 +147,22 @@ def _question(plan: Plan, here: Here, kind: Kind) -> Question:
     wanted = tuple((probability, stage.standard_error_percent) for probability in named or [TAIL])
     own = kind.trials.sums
     neighbours = () if own.successes and own.failures else _neighbours(plan, here, kind)
-    prior = Prior(plan.duty_low_percent, plan.duty_high_percent, SPREAD_PERCENT[kind.name], neighbours=neighbours)
+    prior = Prior(plan.duty_low_percent, plan.duty_high_percent, kind.spread_percent, neighbours=neighbours)
     low, high, step = plan.duty_low_percent, plan.duty_high_percent, stage.step_percent
     if isinstance(stage, StallPlan):
         before_s = BETWEEN_S + sum(seconds for _, seconds in stall_lead(plan, stage, 0.5 * (low + high)))
         coming_down_s = LEAST_TIME_CONSTANTS * plan.time_constant_s
         parts = tuple(time_s / stage.hold_time_s for time_s in stage.times_s) or (1.0,)
-        whole_s, law, unit = stage.hold_time_s, STALL_LAWS[0], stage.hold_time_s
+        whole_s = stage.hold_time_s
     else:
         before_s = BETWEEN_S + stage.rest_time_s + COAST_S
         coming_down_s, parts = stage.start_time_s, (1.0,)
-        whole_s, law, unit = stage.start_time_s, START_LAWS[0], 1.0
+        whole_s = stage.start_time_s
     after_s = _cooling_s(plan.heat, before_s, whole_s, kind, here.condition)
+    likelihood = SURVIVAL if kind.name == "stall" else BINARY
     return Question(
-        law, prior, low, high, step, parts, whole_s, before_s, after_s, coming_down_s, wanted, unit=unit
+        kind.law, prior, low, high, step, parts, whole_s, before_s, after_s, coming_down_s, wanted, likelihood,
+        kind.unit,
     )  # fmt: skip
 
 
@@ -175,10 +188,8 @@ def _neighbours(plan: Plan, here: Here, kind: Kind) -> tuple[Neighbour, ...]:
             continue
         sums = other.trials.sums
         if sums.successes and sums.failures:
-            law = STALL_LAWS[0] if kind.name == "stall" else START_LAWS[0]
-            unit = kind.stage.hold_time_s if isinstance(kind.stage, StallPlan) else 1.0
-            prior = Prior(plan.duty_low_percent, plan.duty_high_percent, SPREAD_PERCENT[kind.name])
-            found.append(_place(law, key_of(sums), unit, prior))
+            prior = Prior(plan.duty_low_percent, plan.duty_high_percent, kind.spread_percent)
+            found.append(_place(kind.law, key_of(sums), kind.unit, prior))
     return tuple(sorted(found))
 
 

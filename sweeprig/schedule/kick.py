@@ -16,7 +16,7 @@ from sweeprig.schedule.posterior import Prior
 from sweeprig.schedule.proposal import TRIAL_SENSORS, Here, Proposal, offered
 from sweeprig.schedule.quick_fit import key_of, quick_fit
 from sweeprig.schedule.search import BINARY, Question, best
-from sweeprig.schedule.tally import Sums, Tally
+from sweeprig.schedule.tally import STRIKES, Sums, Tally
 
 LONGER = 1.05
 """Pulse times are tried in steps of this ratio."""
@@ -39,7 +39,7 @@ def kicks(plan: Plan, here: Here) -> Proposal | None:
     if kick is None or not kick.duties_percent:
         return None
     run = run_duty(plan, kick, here.tally)
-    if run is None or here.tally.passed_over(Purpose.KICK, Approach.FROM_REST, run):
+    if run is None or _given_up(here.tally, run):
         return None
     open_still = []
     for duty in kick.duties_percent:
@@ -52,6 +52,12 @@ def kicks(plan: Plan, here: Here) -> Proposal | None:
     count, minus_duty, pulse_s, answered = min(open_still)
     hold = kick_hold(plan, kick, here, -minus_duty, pulse_s, run)
     return Proposal(hold, (count / kick.trials,), spare=answered)
+
+
+def _given_up(tally: Tally, run_percent: float) -> bool:
+    """Three strikes at the run duty, whatever the pulse; each kick that was done takes one strike back."""
+    setting = Purpose.KICK, Approach.FROM_REST, round(run_percent, 6)
+    return tally.strikes.get(setting, 0) >= STRIKES + len(tally.kept.get(Purpose.KICK, ()))
 
 
 def _finished(kick: KickPlan, trials: Sequence[Tried]) -> bool:

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from sweeprig.laws import EXPONENTIAL, GUMBEL_SD, LN2, Evidence, Floats, Law, log_likelihood
+from sweeprig.laws import EXPONENTIAL, GUMBEL_SD, LN2, SPREAD_LOG_SD, Evidence, Floats, Law, log_likelihood
 from sweeprig.schedule.quick_fit import Key
 
 Likely = Callable[[Floats, Floats], Floats]
@@ -47,7 +47,7 @@ class Prior:
     low: float
     high: float
     spread_percent: float
-    log_sd: float = 1.0
+    log_sd: float = SPREAD_LOG_SD
     neighbours: tuple[Neighbour, ...] = ()
 
     def log_place(self, median: Floats) -> Floats | float:

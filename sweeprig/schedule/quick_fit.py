@@ -11,11 +11,9 @@ from functools import lru_cache
 
 import numpy as np
 
-from sweeprig.laws import STALL_LAWS, Evidence, Floats, Law, log_likelihood
+from sweeprig.laws import SPREAD_LOG_SD, STALL_LAWS, STALL_SPREAD_PERCENT, Evidence, Floats, Law, log_likelihood
 from sweeprig.schedule.tally import Sums
 
-SPREAD_PERCENT, SPREAD_LOG_SD = 0.3, 1.0
-"""Before the trials: spreads of small brushed motors, % duty, as findings have it (common practice, no source)."""
 _ROWS, _COLUMNS, _REACH = 31, 61, 3.0
 _BEYOND_PERCENT, _BEYOND_SPREADS = 2.0, 6.0
 _KEPT = 12.0
@@ -59,7 +57,7 @@ def quick_fit(key: Key, hold_time_s: float, which: int = 0) -> Quick:
 
     The grid is laid twice: around the lowest duty that turned and the highest that stopped, then where the weight is.
     """
-    law, evidence, centre = STALL_LAWS[which], _evidence(key, hold_time_s), math.log(SPREAD_PERCENT)
+    law, evidence, centre = STALL_LAWS[which], _evidence(key, hold_time_s), math.log(STALL_SPREAD_PERCENT)
     rows = centre + SPREAD_LOG_SD * np.linspace(-_REACH, _REACH, _ROWS)
     turned = [float(duty) for duty, time in zip(evidence.duty, evidence.exposure, strict=True) if time > 0.0]
     ends = min(turned), float(evidence.event_duty.max())

@@ -6,10 +6,14 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
+import numpy as np
+
 from sweeprig.holds import Outcome
 from sweeprig.plan import Plan
+from sweeprig.schedule.adaptive import PROBABILITY, Kind, kind_of
 from sweeprig.schedule.history import past_of
-from sweeprig.schedule.quick_fit import contrast, key_of, quick_fit
+from sweeprig.schedule.posterior import Prior, cells
+from sweeprig.schedule.quick_fit import key_of
 from sweeprig.schedule.tally import Sums, Tally
 
 
@@ -29,20 +33,22 @@ def both(sums: Sums) -> bool:
 
 
 def standard_errors(plan: Plan, outcomes: Sequence[Outcome]) -> dict[str, float]:
-    """Standard errors of the findings that a search can sharpen, % duty, the worst over the conditions; without those
-    of which some condition has only a bound."""
+    """Standard errors of the findings that a search can sharpen, % duty, the worst over the conditions, as the search
+    reckons them; without those of which some condition has only a bound."""
     past = past_of(outcomes, plan)
     found: dict[str, float] = {}
-    if plan.stall is None:
-        return found
-    for condition in plan.conditions:
-        sums = (past.conditions.get(condition) or Tally()).stall.sums
-        if not contrast(sums):
-            return {}
-        fitted = quick_fit(key_of(sums), plan.stall.hold_time_s)
-        for name, probability in (("stall_duty_percent", 0.5), ("sustain_99_duty_percent", 0.99)):
-            place = fitted.median + fitted.law.offset(probability) * fitted.spread
-            mean = (place * fitted.weight).sum()
-            u = float(((place - mean) ** 2 * fitted.weight).sum()) ** 0.5
-            found[name] = max(found.get(name, 0.0), u)
+    for name in ("stall", "start"):
+        kinds = [kind_of(plan, name, past.conditions.get(one) or Tally()) for one in plan.conditions]
+        if any(kind is None or not both(kind.trials.sums) for kind in kinds):
+            continue
+        for finding, (kind_name, probability) in PROBABILITY.items():
+            if kind_name == name:
+                found[finding] = max(_error(plan, kind, probability) for kind in kinds if kind is not None)
     return found
+
+
+def _error(plan: Plan, kind: Kind, probability: float) -> float:
+    prior = Prior(plan.duty_low_percent, plan.duty_high_percent, kind.spread_percent)
+    believed = cells(kind.law, key_of(kind.trials.sums), kind.unit, prior)
+    duty = np.clip(believed.duty(probability), plan.duty_low_percent, plan.duty_high_percent)
+    return float(np.sqrt(believed.weight @ (duty - believed.weight @ duty) ** 2))

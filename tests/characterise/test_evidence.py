@@ -58,7 +58,8 @@ def test_early_stop_tells_only_that_it_was_early(plan: Plan, outcome: MakeOutcom
 
 
 def test_other_approaches_and_verdicts_are_no_trials(plan: Plan, outcome: MakeOutcome) -> None:
-    """A rising hold, a stepping rotor and an undecided one say nothing for the law, and what is left out is flagged."""
+    """A rising hold, a stepping rotor and an undecided one say nothing for the law, and what is left out is flagged; a
+    long hold from above says what any other exposure does."""
     made = [
         outcome(1, Purpose.STALL, 12.0, Verdict.TURNING, approach=Approach.RISING),
         outcome(2, Purpose.STALL, 12.0, Verdict.STEPPING),
@@ -67,7 +68,7 @@ def test_other_approaches_and_verdicts_are_no_trials(plan: Plan, outcome: MakeOu
         outcome(5, Purpose.STALL, 12.0, Verdict.TURNING, event_between_s=(0.0, None), exposed_s=0.0),
     ]
     chosen = stall_trials(plan, duties(plan, plan.conditions[0], made), made, turning_before(made))
-    assert chosen.trials == ()
+    assert [trial.hold for trial in chosen.trials] == [4]
     assert {"stepping_left_out", "undecided_left_out"} <= set(chosen.flags)
 
 

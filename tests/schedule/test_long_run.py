@@ -11,6 +11,7 @@ import pytest
 from scipy import integrate, stats
 
 from sweeprig.holds import Approach, Condition, EndsWhen, Hold, Outcome, Purpose, Status, Verdict
+from sweeprig.laws import SPREAD_LOG_SD
 from sweeprig.plan import LongRunPlan, Plan, SettlePlan, StallPlan
 from sweeprig.schedule.history import History, past_of
 from sweeprig.schedule.long_run import WANTED_FAILURE, long_holds
@@ -87,7 +88,7 @@ def test_quick_fit_against_integration() -> None:
 
     def log_weight(place: float, log_spread: float) -> float:
         b = math.pi / math.sqrt(6.0) / math.exp(log_spread)
-        total = float(stats.norm.logpdf(log_spread, math.log(0.3), 1.0))
+        total = float(stats.norm.logpdf(log_spread, math.log(0.3), SPREAD_LOG_SD))
         for one in made:
             h = math.log(2.0) / 20.0 * math.exp(min(-b * (one.hold.duty_percent - place), 300.0))
             begin, end = one.event_between_s
@@ -105,7 +106,7 @@ def test_quick_fit_against_integration() -> None:
             h = math.log(2.0) / 20.0 * math.exp(min(-b * (duty - place), 300.0))
             return weight * (-math.expm1(-LONG.hold_time_s * h) if weighted else 1.0)
 
-        return float(integrate.dblquad(inside, -2.7, 0.9, 9.8, 12.2, epsabs=1e-5, epsrel=1e-3)[0])
+        return float(integrate.dblquad(inside, -3.3, 1.3, 9.3, 12.7, epsabs=1e-5, epsrel=1e-3)[0])
 
     assert part(True) / part(False) == pytest.approx(WANTED_FAILURE, abs=0.02)
 

@@ -127,7 +127,7 @@ def test_a_motor_that_never_fails_is_left_at_the_lowest_duty(law: Law) -> None:
         sums.add(choice.duty_percent, choice.part * question.unit, None)
     assert choice.reached
     assert min(sums.exposure) == 10.0
-    assert sums.successes <= 25
+    assert sums.successes <= 30  # the wider the spread may be, the longer it goes on at the end
 
 
 def test_long_holds_where_failures_are_rare_and_relaunching_is_dear() -> None:
