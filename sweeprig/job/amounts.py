@@ -78,9 +78,9 @@ class Amount:
     @property
     def example(self) -> str:
         """A value in range, as it stands in a file."""
-        common = _EXAMPLES.get(self.unit, f"1 {self.unit}")
-        inside = self.least < parse_quantity(common, self.unit) <= self.most
-        return as_written(common if inside else exact_text(self.most, self.unit))
+        common = (_EXAMPLES.get(self.unit, f"1 {self.unit}"), *(("24 h",) if self.unit == "s" else ()))
+        inside = (text for text in common if self.least < parse_quantity(text, self.unit) <= self.most)
+        return as_written(next(inside, exact_text(self.most, self.unit)))
 
     def read(self, value: object) -> float:
         """The number in base units; raises the problem of a missing or wrong unit or of a value out of range."""

@@ -24,6 +24,7 @@ def search_checks(job: Job, sources: Sources) -> Iterator[ConfigError]:
     yield from _orders(job, sources)
     yield from _duties(job, sources)
     yield from _arrives(job, sources)
+    yield from _bounded(job, sources)
 
 
 def _searches(job: Job, sources: Sources) -> Iterator[ConfigError]:
@@ -133,3 +134,31 @@ def _arrives(job: Job, sources: Sources) -> Iterator[ConfigError]:
                 f"{shown(needed, 's')} or more", "Lengthen it: the speed has not arrived before",
                 default=shown(seconds, "s"),
             )  # fmt: skip
+
+
+def _bounded(job: Job, sources: Sources) -> Iterator[ConfigError]:
+    """A pulse that starts nothing leaves the rotor locked; a curve to be refined has more holds than points."""
+    sweep, locked = job.sweep, job.limits().locked_rotor_time
+    if sweep.kick is not None and sweep.kick.longest >= locked:
+        own = job.rig.limits.locked_rotor_time > job.motor.locked_rotor_time
+        owner: KeyPath = ("motor", "locked_rotor_time") if own else ("rig", "limits", "locked_rotor_time")
+        yield misfit(
+            sources, ("sweep", "kick", "longest"),
+            f"a motor that a pulse does not start stands locked for as long as it may ({sources.where(owner)})",
+            f"below {shown(locked, 's')}", "Shorten it, or protection ends the run",
+            topic="safety", default=shown(sweep.kick.longest, "s"),
+        )  # fmt: skip
+    curve = sweep.curve
+    if curve is None or curve.holds is None:
+        return
+    if curve.standard_error is None:
+        yield misfit(
+            sources, ("sweep", "curve", "holds"), "no point is added to the curve unless standard_error is given",
+            "together with standard_error", 'Write for example standard_error = "1 %", or remove holds',
+        )  # fmt: skip
+    points = curve.points or len(curve.duties or ())
+    if curve.holds < points:
+        yield misfit(
+            sources, ("sweep", "curve", "holds"), f"fewer than the {points} points that are made in any case",
+            f"{points} or more", "Raise it, or remove standard_error and holds",
+        )  # fmt: skip

@@ -143,7 +143,7 @@ MEANINGS: dict[str, Meaning] = {
 FLAGS: dict[str, str] = {
     "never_stopped": "the motor never stopped in the allowed range: a bound, not a value",
     "never_started": "the motor never started in the allowed range: a bound, not a value",
-    "always_started": "the motor started at every duty tried: a bound, not a value",
+    "always_started": "the motor started at every duty or pulse tried: a bound, not a value",
     "law_assumed": "depends on the assumed law; the data cannot choose between laws",
     "extrapolated": "read off the curve beyond the last duty that always turned",
     "extrapolated_in_time": "no hold lasted the service time: limits are not decided by it",

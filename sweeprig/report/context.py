@@ -122,59 +122,6 @@ def listed(value: Any) -> str:
     return "; ".join(str(part) for part in value) if isinstance(value, list | tuple) else str(value)
 
 
-def settings(run: Any) -> list[tuple[str, str]]:
-    """How it was measured, as (what, value) lines from the frozen plan."""
-    plan = run.plan
-    lines = [("PWM frequencies", _several({c.pwm_hz for c in plan.conditions}, "Hz"))]
-    lines.append(("Supply voltages", _several({c.supply_v for c in plan.conditions}, "V")))
-    lines += [
-        (name.capitalize(), ", ".join(sorted({str(getattr(c, name)).replace("_", " ") for c in plan.conditions})))
-        for name in ("direction", "load", "thermal", "freewheel")
-    ]
-    lines.append(
-        ("Allowed duty", f"{numbers.plain(plan.duty_low_percent)} % to {numbers.plain(plan.duty_high_percent)} %")
-    )
-    if plan.run_in:
-        lines.append(
-            ("Run-in", f"{show_quantity(plan.run_in.time_s, 's')} at {numbers.plain(plan.run_in.duty_percent)} %")
-        )
-    if plan.curve:
-        lines.append(
-            ("Speed curve", f"{len(plan.curve.duties_percent)} duties, downwards from the top, then upwards again")
-        )
-    lines += _trials(plan)
-    settle = f"last window within {numbers.plain(plan.settle.tolerance_percent)} % of the final value"
-    lines.append(("Settled", f"{settle}, {numbers.plain(plan.settle.confidence_percent)} % confidence"))
-    lines.append(("Lowest measurable speed", show_quantity(plan.lowest_rpm, "rpm")))
-    lines.append(("Motor voltage read", plan.voltage_at.replace("_", " ")))
-    lines.append(("Current read", plan.current_at.replace("_", " ")))
-    lines.append(("Seed of random choices", str(plan.seed)))
-    return lines
-
-
-def _trials(plan: Any) -> list[tuple[str, str]]:
-    lines = []
-    if plan.stall:
-        s = plan.stall
-        text = (
-            f"{s.holds} holds of {show_quantity(s.hold_time_s, 's')} a condition, search: {s.search}; each from "
-            f"{numbers.plain(s.relaunch_above_percent)} % above, kept there for {show_quantity(s.relaunch_s, 's')}"
-        )
-        lines.append(("Stall trials", text))
-    if plan.start:
-        s = plan.start
-        text = (
-            f"{s.trials} trials of {show_quantity(s.start_time_s, 's')} a condition, search: {s.search}; each from "
-            f"rest, no edge for {show_quantity(s.rest_time_s, 's')}"
-        )
-        lines.append(("Start trials", text))
-    return lines
-
-
-def _several(values: set[float], unit: str) -> str:
-    return ", ".join(show_quantity(value, unit) for value in sorted(values))
-
-
 def counts(outcomes: Sequence[Outcome]) -> list[tuple[str, int, int, int, int, str]]:
     """(purpose, done, discarded, abandoned, tripped, time spent) for every purpose that occurs."""
     lines = []

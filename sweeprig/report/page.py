@@ -13,7 +13,7 @@ from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup
 
 from sweeprig import manual
-from sweeprig.report import answer, context, figures, tables
+from sweeprig.report import answer, context, figures, how, tables
 from sweeprig.report.catalogue import meaning
 from sweeprig.report.svg import inline_svg
 
@@ -73,7 +73,7 @@ def _values(run: Any) -> dict[str, Any]:
             (label, tables.rows(entry), tables.times(entry)) for label, entry in context.conditions_named(findings)
         ],
         "figures": _figures(run),
-        "settings": context.settings(run),
+        "settings": how.settings(run),
         "counts": context.counts(run.outcomes),
         "definitions": context.definitions(run),
         "methods": context.methods(findings),

@@ -44,10 +44,15 @@ def test_numbers_reach_the_plan(configs: Path, spoil: Spoil) -> None:
     assert (plan.seed, plan.session, plan.lowest_rpm, plan.zero_time_s) == (1, 3, 60.0, 3.0)
     assert plan.run_in == RunIn(60.0, 240.0)
     assert plan.stall is not None
-    assert (plan.stall.search, plan.stall.hold_time_s, plan.stall.step_percent) == ("ladder", 20.0, 0.5)
-    assert (plan.stall.holds, plan.stall.relaunch_above_percent, plan.stall.relaunch_s) == (24, 12.0, 4.0)
+    assert (plan.stall.search, plan.stall.hold_time_s, plan.stall.step_percent) == ("adaptive", 20.0, 0.1)
+    assert (plan.stall.standard_error_percent, plan.stall.relaunch_above_percent, plan.stall.relaunch_s) == (
+        0.3,
+        12.0,
+        4.0,
+    )
+    assert plan.stall.times_s == (5.0, 10.0, 20.0, 40.0)
     assert plan.start is not None
-    assert (plan.start.start_time_s, plan.start.rest_time_s, plan.start.trials) == (5.5, 5.0, 24)
+    assert (plan.start.start_time_s, plan.start.rest_time_s, plan.start.trials) == (5.5, 5.0, 80)
     assert plan.settle.tolerance_percent == 1.0
     assert (plan.voltage_at, plan.current_at, plan.switch_delay_s) == ("across_motor", "supply_lead", 1e-6)
     assert plan.roles["current"] == "supply.amps"

@@ -106,11 +106,11 @@ def test_windows_line_ends_change_nothing(configs: Path) -> None:
 @pytest.mark.parametrize(
     ("broken", "line", "shown"),
     [
-        ("[settle", 38, "[settle"),
-        ("settle = 1 %", 38, "settle = 1 %"),
-        ("[zero]", 38, "[zero]"),
-        ('settle = "one', 38, 'settle = "one'),
-        ("settle = [1,", 39, 'tolerance = "1 %"'),
+        ("[settle", 36, "[settle"),
+        ("settle = 1 %", 36, "settle = 1 %"),
+        ("[zero]", 36, "[zero]"),
+        ('settle = "one', 36, 'settle = "one'),
+        ("settle = [1,", 37, 'tolerance = "1 %"'),
     ],
 )
 def test_syntax_error_has_file_and_line(configs: Path, spoil: Spoil, broken: str, line: int, shown: str) -> None:

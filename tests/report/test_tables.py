@@ -138,3 +138,12 @@ def test_no_condition_is_said() -> None:
     assert answer.sentences({"conditions": []}, "fan A") == [
         "Nothing can be said about fan A: no condition has findings."
     ]
+
+
+def test_figure_that_is_only_counted_has_no_interval() -> None:
+    """A finding whose interval is a point is written as its value alone; one with a width keeps it."""
+    counted = {"value": 8491.0, "low": 8491.0, "high": 8491.0, "flags": []}
+    line = tables.row("long_run_extrapolation_factor", counted, "")
+    assert (line.value, line.interval) == ("8491", "–")
+    wide = tables.row("long_run_extrapolation_factor", {**counted, "low": 8400.0}, "")
+    assert wide.interval.startswith("84")
