@@ -51,7 +51,9 @@ def _gaussian(x: Floats) -> Floats:
 
 
 def _logistic(x: Floats) -> Floats:
-    return np.asarray(np.logaddexp(0.0, -LOGISTIC_SD * x), dtype=np.float64)
+    """ln(1 + e^z), z = −π/√3·x. Above 40 the 1 is below the last bit; numpy's logaddexp takes four times as long."""
+    z = -LOGISTIC_SD * x
+    return np.asarray(np.where(z > 40.0, z, np.log1p(np.exp(np.minimum(z, 40.0)))), dtype=np.float64)
 
 
 EXPONENTIAL = Law("exponential hazard", _exponential, lambda p: math.log(LN2 / -math.log(p)) / GUMBEL_SD)

@@ -40,8 +40,8 @@ def show_time(seconds: float) -> str:
 class Lines:
     """Plain lines: one a hold; for logs, pipes and slow remote shells."""
 
-    def __init__(self, expected_s: float) -> None:
-        self.expected_s = expected_s
+    def __init__(self, expected_s: float, most_s: float | None = None) -> None:
+        self.expected_s, self.most_s = expected_s, most_s
         self.began: float | None = None
         self.holds = 0
 
@@ -58,7 +58,11 @@ class Lines:
     def left(self, at: float) -> str:
         spent = at - (self.began if self.began is not None else at)
         left = self.expected_s - spent
-        return f"about {show_time(left)} left" if left > 0 else "longer than predicted"
+        if left > 0:
+            return f"about {show_time(left)} left"
+        if self.most_s is None or self.most_s <= spent:
+            return "longer than predicted"
+        return f"longer than predicted; {show_time(self.most_s - spent)} to the deadline"
 
     def __call__(self, event: Event) -> None:
         if event.kind == "session" and self.began is None:
@@ -130,9 +134,10 @@ class Screen(Lines):
             self.status.update(escape(text))
 
 
-def progress(expected_s: float, plain: bool) -> Lines:
-    """A screen where standard error is a terminal, lines elsewhere or when asked."""
-    return Lines(expected_s) if plain or not sys.stderr.isatty() else Screen(expected_s)
+def progress(expected_s: float, plain: bool, most_s: float | None = None) -> Lines:
+    """A screen where standard error is a terminal, lines elsewhere or when asked. expected_s: predicted from now on;
+    most_s: until the deadline."""
+    return (Lines if plain or not sys.stderr.isatty() else Screen)(expected_s, most_s)
 
 
 def width_of_output() -> int:

@@ -10,11 +10,13 @@ from typing import Any
 
 import pytest
 
+from sweeprig.cli.jobs import time_ahead
 from sweeprig.conduct.states import Event
 from sweeprig.errors import ConfigError, RoleMissing
 from sweeprig.job import load
 from sweeprig.launch import check_rig, start
 from sweeprig.logbook.run_folder import FolderLock
+from sweeprig.opened import open_run
 from sweeprig.terminal import Lines, findings_text, status_text, table, truth_text
 
 Command = Callable[..., subprocess.CompletedProcess[str]]
@@ -182,3 +184,24 @@ def test_a_links_trouble_names_the_instrument() -> None:
     """A link's event is one sentence: the instrument, a colon, what happened."""
     event = Event("link", 1.0, {"instrument": "meter", "what": "the link is back"})
     assert Lines(10.0).sentence(event) == "  meter: the link is back"
+
+
+def test_time_left_names_the_deadline_when_the_prediction_is_used_up() -> None:
+    """First what was predicted, then what is left to the deadline, and neither below nothing."""
+    lines = Lines(100.0, 300.0)
+    lines(Event("session", 1000.0, {"session": 1, "simulated": True}))
+    assert lines.left(1040.0) == "about 1 min 00 s left"
+    assert lines.left(1180.0) == "longer than predicted; 2 min 00 s to the deadline"
+    assert lines.left(1300.0) == "longer than predicted"
+    assert Lines(0.0).left(5.0) == "longer than predicted"
+
+
+def test_a_resume_has_less_ahead_of_it_than_the_whole_night(short_run: Path) -> None:
+    """What earlier sessions did is taken off the prediction, the opening not: that is done again."""
+    earlier = open_run(short_run)
+    whole, _ = time_ahead(earlier.job, ())
+    rest, _ = time_ahead(earlier.job, earlier.outcomes)
+    opening = sum(o.ended - o.began for o in earlier.outcomes if o.hold.purpose in ("zero", "run_in", "rest"))
+    everything = sum(o.ended - o.began for o in earlier.outcomes)
+    assert whole - rest == pytest.approx(everything - opening)
+    assert everything > opening > 0.0

@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import signal
 import sys
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -17,10 +17,11 @@ from sweeprig.errors import ConfigError
 
 if TYPE_CHECKING:
     from sweeprig.conduct.states import Orders
-    from sweeprig.holds import Condition
+    from sweeprig.holds import Condition, Outcome
     from sweeprig.job import Job
     from sweeprig.launch import Launched
-    from sweeprig.plan import Expected
+    from sweeprig.plan import Expected, Plan
+    from sweeprig.schedule.preview import Spread
 
 
 def time_options(command: Callable[..., None]) -> Callable[..., None]:
@@ -55,6 +56,20 @@ def known_of(run: Path) -> dict[Condition, Expected]:
     return learned(conditions, earlier.outcomes, f"the run {earlier.path.name}")
 
 
+@contextmanager
+def processes(plan: Plan) -> Iterator[Spread]:
+    """Something like `map`: over all cores where predicting nineteen nights would take long, else one by one."""
+    searched = any(stage is not None and stage.search != "ladder" for stage in (plan.stall, plan.start))
+    if not searched or plan.deadline_utc is None:
+        yield map
+        return
+    import multiprocessing
+    from concurrent.futures import ProcessPoolExecutor
+
+    with ProcessPoolExecutor(mp_context=multiprocessing.get_context("spawn")) as pool:
+        yield pool.map
+
+
 @cli.command(short_help="What a night would do; nothing is opened or moved.")
 @click.argument("job")
 @time_options
@@ -80,7 +95,8 @@ def preview(job: str, until: str | None, hours: float | None, like: Path | None,
     check_rig(checked)
     now = first_utc(checked)
     plan = freeze(checked, began_utc=now)
-    night = look_ahead(plan if like is None else replace(plan, expected_at=known_of(like)), now)
+    with processes(plan) as spread:
+        night = look_ahead(plan if like is None else replace(plan, expected_at=known_of(like)), now, spread=spread)
     sums, alone = locked_rotor_sum(checked), points(checked, SystemClock().utc())
     refused = [point.why for point in alone if not point.met]
     simulated = in_process(checked) or checked.rig.rate is not None
@@ -132,10 +148,10 @@ def resume(run: Path, attended: bool, plain: bool, undecided_ok: bool, json_out:
     from sweeprig.launch import resume as go_on
     from sweeprig.opened import open_run
 
-    job = open_run(run).job
-    _allowed(job, attended)
-    _perform(job, plain, undecided_ok, json_out, lambda on_event, orders: go_on(
-        run, attended=attended, on_event=on_event, orders=orders))  # fmt: skip
+    earlier = open_run(run)
+    _allowed(earlier.job, attended)
+    _perform(earlier.job, plain, undecided_ok, json_out, lambda on_event, orders: go_on(
+        run, attended=attended, on_event=on_event, orders=orders), earlier.outcomes)  # fmt: skip
 
 
 def _allowed(job: Job, attended: bool) -> None:
@@ -158,27 +174,44 @@ def _allowed(job: Job, attended: bool) -> None:
         )
 
 
-def _perform(
-    job: Job, plain: bool, undecided_ok: bool, json_out: bool, work: Callable[[Any, Orders], Launched]
-) -> None:
-    """Work a session with progress and Ctrl-C, then findings and report, then the answer."""
-    from sweeprig.conduct.states import Orders, State
+def time_ahead(job: Job, done: Sequence[Outcome]) -> tuple[float, float | None]:
+    """(predicted seconds from now on, seconds to the deadline, None without one). What an earlier session did is not
+    done again, except its opening; its deadline is known by then only on a clock that goes on meanwhile."""
+    from sweeprig.holds import Purpose
     from sweeprig.job import freeze
-    from sweeprig.launch import first_utc
+    from sweeprig.launch import first_utc, in_process
     from sweeprig.schedule import preview as look_ahead
     from sweeprig.schedule.preview import ROUGH
+
+    now = first_utc(job)
+    plan = freeze(job, began_utc=now)
+    opening = (Purpose.ZERO, Purpose.RUN_IN, Purpose.REST)
+    kept = (one.ended - one.began for one in done if one.status == "done" and one.hold.purpose not in opening)
+    most_s = None
+    if plan.deadline_utc is not None and not (done and in_process(job)):
+        most_s = plan.deadline_utc - now
+    return look_ahead(plan, now, ROUGH).seconds - sum(kept), most_s
+
+
+def _perform(
+    job: Job,
+    plain: bool,
+    undecided_ok: bool,
+    json_out: bool,
+    work: Callable[[Any, Orders], Launched],
+    done: Sequence[Outcome] = (),
+) -> None:
+    """Work a session with progress and Ctrl-C, then findings and report, then the answer. done: by earlier sessions."""
+    from sweeprig.conduct.states import Orders, State
     from sweeprig.terminal import progress
 
-    orders, now = Orders(), first_utc(job)
-    with (
-        progress(look_ahead(freeze(job, began_utc=now), now, ROUGH).seconds, plain) as show,
-        _interrupts(orders, show.say),
-    ):
+    orders, (expected_s, most_s) = Orders(), time_ahead(job, done)
+    with progress(expected_s, plain, most_s) as show, _interrupts(orders, show.say):
         launched = work(show, orders)
     from sweeprig.results import results  # only now: what it loads costs a second and has no part in a night
 
-    done = results(launched.path)
-    answer(done.findings.as_json(), launched.path, done.report_path, json_out)
+    found = results(launched.path)
+    answer(found.findings.as_json(), launched.path, found.report_path, json_out)
     _say_what_is_no_data(launched.path)
     state, reason = launched.ending.state, launched.ending.reason
     if state is State.TRIPPED:
@@ -187,7 +220,7 @@ def _perform(
     if state is not State.FINISHED:
         click.echo(f"sweeprig: {reason}. Go on with: sweeprig resume {launched.path}", err=True)
         sys.exit(5)
-    verdicts = [limit["verdict"] for limit in done.findings.as_json()["limits"]]
+    verdicts = [limit["verdict"] for limit in found.findings.as_json()["limits"]]
     if "fail" in verdicts or ("not_decided" in verdicts and not undecided_ok):
         sys.exit(1)
 

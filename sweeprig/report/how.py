@@ -91,7 +91,8 @@ def _search(plan: Any, stage: Any) -> str:
     if stage.search == "ladder":
         return f"search: {stage.search}"
     beyond = ", and on to the deadline" if plan.spend == "all" and plan.deadline_utc is not None else ""
-    return f"search: {stage.search}, until the standard error is {numbers.plain(stage.standard_error_percent)} %{beyond}"
+    error = f"{numbers.plain(stage.standard_error_percent)} %"
+    return f"search: {stage.search}, until the standard error is {error}{beyond}"
 
 
 def _after_trials(plan: Any) -> list[tuple[str, str]]:

@@ -137,8 +137,8 @@ def _written(finding: Json) -> tuple[str, str]:
     if kind == "lower":
         return numbers.at_least(value, u), f"one-sided {sure}".strip()
     expanded = float(u) * float(k) if u and k else None
-    known = low is not None and high is not None and low < high  # a figure that is only counted has no interval
-    shown = numbers.interval(low, high, expanded) if known else "–"
+    # a figure that is only counted has no interval: its two ends are one
+    shown = "–" if low is None or high is None or low == high else numbers.interval(low, high, expanded)
     if expanded is not None and numbers.symmetric(value, low, high, expanded):
         return numbers.value_and_u(value, expanded), shown
     spread = expanded if expanded is not None else (None if low is None or high is None else (high - low) / 2.0)

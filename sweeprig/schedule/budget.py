@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 from sweeprig.holds import Hold, Purpose
 from sweeprig.plan import Plan
 from sweeprig.schedule.tally import Tallies, Tally
@@ -34,8 +36,10 @@ def kept_for_closing(plan: Plan) -> float:
 
 def kept_for_later(plan: Plan, past: Tallies) -> float:
     """Seconds that the searches of stall and start leave for kicks and long holds: what each condition needs so that
-    it has an answer of these too, as far as that is not there yet."""
-    return sum(_kept(plan, past.conditions.get(one) or Tally()) for one in plan.conditions)
+    it has an answer of these too, as far as that is not there yet, and for the references that come due meanwhile."""
+    seconds = sum(_kept(plan, past.conditions.get(one) or Tally()) for one in plan.conditions)
+    rounds = 0 if plan.reference is None else math.ceil(seconds / plan.reference.every_s)
+    return seconds + rounds * kept_for_closing(plan)
 
 
 def _kept(plan: Plan, tally: Tally) -> float:

@@ -12,6 +12,7 @@ from sweeprig.exposures import kick_of
 from sweeprig.holds import Approach, EndsWhen, Hold, Purpose, Verdict
 from sweeprig.laws import STALL_LAWS, START_LAWS
 from sweeprig.plan import KickPlan, Plan, StallPlan
+from sweeprig.schedule.budget import LEAST_KICKS
 from sweeprig.schedule.posterior import Prior
 from sweeprig.schedule.proposal import TRIAL_SENSORS, Here, Proposal, offered
 from sweeprig.schedule.quick_fit import key_of, quick_fit
@@ -46,7 +47,8 @@ def kicks(plan: Plan, here: Here) -> Proposal | None:
         trials = tried(here.tally, duty, run)
         pulse_s, reached = next_pulse(kick, trials)
         if not reached and not _finished(kick, trials):
-            open_still.append((len(trials), -duty, pulse_s, any(started for _, started in trials)))
+            answered = len(trials) >= LEAST_KICKS and any(started for _, started in trials)
+            open_still.append((len(trials), -duty, pulse_s, answered))
     if not open_still:
         return None
     count, minus_duty, pulse_s, answered = min(open_still)

@@ -33,7 +33,7 @@ def long_holds(plan: Plan, here: Here) -> Proposal | None:
     hold = long_hold(plan, long, stall, here, duty)
     if plan.deadline_utc is not None and here.now + _longest_s(hold) > plan.deadline_utc:
         return None
-    return Proposal(hold, (done / long.holds,), spare=True)
+    return Proposal(hold, (done / long.holds,), spare=done > 0)
 
 
 def _duty(plan: Plan, long: LongRunPlan, stall: StallPlan, here: Here) -> float | None:

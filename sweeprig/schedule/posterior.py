@@ -12,7 +12,18 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from sweeprig.laws import EXPONENTIAL, GUMBEL_SD, LN2, SPREAD_LOG_SD, Evidence, Floats, Law, log_likelihood
+from sweeprig.laws import (
+    EXPONENTIAL,
+    GUMBEL_SD,
+    LN2,
+    LOGISTIC,
+    LOGISTIC_SD,
+    SPREAD_LOG_SD,
+    Evidence,
+    Floats,
+    Law,
+    log_likelihood,
+)
 from sweeprig.schedule.quick_fit import Key
 
 Likely = Callable[[Floats, Floats], Floats]
@@ -34,6 +45,7 @@ _BEYOND_PERCENT, _BEYOND_SPREADS = 2.0, 6.0
 _FLAT = 0.1
 _ALIKE = 0.15
 _LARGEST = 600.0
+_STRAIGHT = 40.0
 _NONE = 1e-300
 
 
@@ -155,9 +167,31 @@ def evidence_of(key: Key, unit: float) -> Evidence:
 
 
 def _likely(law: Law, evidence: Evidence, narrow: float) -> Likely:
+    if law is LOGISTIC and bool(np.all(evidence.event_width == 1.0)):
+        return _logistic_likely(evidence)
     if law is not EXPONENTIAL:
         return lambda median, spread: log_likelihood(law, evidence, median, spread)
     return _exponential_likely(evidence, evidence.event_width < narrow)
+
+
+def _logistic_likely(evidence: Evidence) -> Likely:
+    """Whole trials that succeed or not: with z = −g·(D − m)/s a success counts −ln(1 + e^z), a failure z less than
+    that; so one logarithm a duty for both, and the z of the failures add up to a straight line in m."""
+    duty = np.unique(np.concatenate([evidence.duty, evidence.event_duty]))
+    tried = np.zeros(duty.size)
+    np.add.at(tried, np.searchsorted(duty, evidence.duty), evidence.exposure)
+    np.add.at(tried, np.searchsorted(duty, evidence.event_duty), evidence.events)
+    failed, total = float(evidence.events.sum()), float(evidence.events @ evidence.event_duty)
+
+    def likely(median: Floats, spread: Floats) -> Floats:
+        steep = LOGISTIC_SD / spread
+        value = steep * (failed * median - total)
+        if duty.size:
+            z = (median[..., None] - duty) * steep[..., None]
+            value = value - np.where(z > _STRAIGHT, z, np.log1p(np.exp(np.minimum(z, _STRAIGHT)))) @ tried
+        return np.asarray(value)
+
+    return likely
 
 
 def _exponential_likely(evidence: Evidence, narrow: NDArray[np.bool_]) -> Likely:

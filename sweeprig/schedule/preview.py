@@ -8,8 +8,10 @@ from __future__ import annotations
 
 import statistics
 from collections import Counter
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass, field, replace
+from functools import partial
+from typing import Protocol
 
 from sweeprig.holds import Finished, Hold, NeedsPerson, Purpose
 from sweeprig.plan import Plan
@@ -76,9 +78,18 @@ class Night:
     ends: str
 
 
-def preview(plan: Plan, now: float, nights: int = NIGHTS) -> Preview:
-    """Run `next_hold` to its end on motors drawn from what is expected of this one. `now`: UTC seconds of the start."""
-    seen = [one_night(plan, now, number) for number in range(nights)]
+class Spread(Protocol):
+    """`map`, or what does as it does."""
+
+    def __call__(self, do: Callable[[int], Night], numbers: Iterable[int], /) -> Iterable[Night]: ...
+
+
+def preview(plan: Plan, now: float, nights: int = NIGHTS, spread: Spread = map) -> Preview:
+    """Run `next_hold` to its end on motors drawn from what is expected of this one. `now`: UTC seconds of the start.
+
+    spread: `map`, or what does as it does over several processes; a night takes a second or two.
+    """
+    seen = list(spread(partial(one_night, plan, now), range(nights)))
     can, cannot = what_can_be_found(plan)
     middle = sorted(seen, key=lambda night: night.seconds)[nights // 2]
     names = [name for name in seen[0].errors if all(name in night.errors for night in seen)]

@@ -15,7 +15,8 @@ class Proposal:
     """A hold that would be useful now. rank: the lowest goes first; equal ranks: the earlier condition and source.
 
     A search that is steered by gain ranks by minus its gain per second, a list that is worked off by the part done.
-    spare: there is an answer already, so before a deadline it must leave time for what has none yet.
+    spare: there is an answer already, so before a deadline it must leave time for what has none yet. Never of a hold
+    for which that time is left (`budget.kept_for_later`): it would have to leave it for itself, and then none is made.
     """
 
     hold: Hold

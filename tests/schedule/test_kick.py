@@ -14,6 +14,7 @@ from sweeprig.exposures import KICK_PULSE
 from sweeprig.holds import Approach, Condition, EndsWhen, Hold, Outcome, Purpose, Status, Verdict
 from sweeprig.plan import KickPlan, Plan, SettlePlan, StallPlan
 from sweeprig.quantities import Reading
+from sweeprig.schedule.budget import LEAST_KICKS
 from sweeprig.schedule.history import History, past_of
 from sweeprig.schedule.kick import kicks, next_pulse, tried
 from sweeprig.schedule.proposal import Here, Proposal
@@ -150,13 +151,13 @@ def test_shortest_and_longest() -> None:
 
 
 def test_spare_once_answered() -> None:
-    """Before a start was seen a kick has no answer yet; afterwards its holds may wait for others before a deadline."""
-    proposal = asked(SEARCHED)
-    assert proposal is not None
-    assert not proposal.spare
-    after = asked([*SEARCHED, *motor(0.11)[:4]])
-    assert after is not None
-    assert after.spare
+    """A kick has no answer before a start was seen, nor before the trials are made that time is left for; afterwards
+    its holds wait for others before a deadline."""
+    made = motor(0.11)
+    for count, spare in ((0, False), (4, False), (2 * LEAST_KICKS, True)):
+        proposal = asked([*SEARCHED, *made[:count]])
+        assert proposal is not None
+        assert proposal.spare is spare
 
 
 @given(st.lists(st.tuples(st.floats(1e-3, 5.0), st.sampled_from([True, False, None])), max_size=30))

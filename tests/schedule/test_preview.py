@@ -4,8 +4,21 @@ from __future__ import annotations
 
 from dataclasses import replace
 
+import pytest
+
 from sweeprig.holds import Condition
-from sweeprig.plan import CurvePlan, Expected, Plan, RunIn, SettlePlan, StallPlan, StartPlan
+from sweeprig.plan import (
+    CurvePlan,
+    Expected,
+    KickPlan,
+    LongRunPlan,
+    Plan,
+    ReferencePlan,
+    RunIn,
+    SettlePlan,
+    StallPlan,
+    StartPlan,
+)
 from sweeprig.schedule import preview
 from sweeprig.schedule.preview import one_night
 
@@ -70,3 +83,22 @@ def test_the_same_plan_the_same_preview() -> None:
     """Nothing but the plan decides: asked twice it says the same."""
     plan = a_plan({"drive": "board", "speed": "board.speed"})
     assert preview(plan, 0.0) == preview(plan, 0.0)
+
+
+@pytest.mark.parametrize("hours", [0.9, 1.2, 1.5, 1.8])
+@pytest.mark.parametrize("number", range(3))
+def test_a_deadline_leaves_time_for_kicks_and_long_holds_and_they_use_it(hours: float, number: int) -> None:
+    """Whatever the deadline, each of two conditions has its kicks and a long hold, no time is left in which one more
+    long hold would have fitted, and the deadline is kept."""
+    plan = a_plan({"drive": "board", "speed": "board.speed"})
+    search = StallPlan("adaptive", 20.0, 0.1, 300, 12.0, 4.0, 0.05, (5.0, 10.0, 20.0))
+    plan = replace(
+        plan, conditions=(Condition(300.0, 12.0), Condition(25e3, 12.0)), stall=search,
+        start=StartPlan("adaptive", 5.0, 5.0, 0.5, 300, 0.05), kick=KickPlan((100.0,), 1.0, 0.02, 2.0, 5.0, 10.0, 40),
+        long_run=LongRunPlan(86_400.0, 300.0, 20), reference=ReferencePlan(40.0, 1200.0, 30.0),
+        deadline_utc=3600.0 * hours,
+    )  # fmt: skip
+    night = one_night(plan, 0.0, number)
+    assert night.holds["kick"] >= 20
+    assert night.holds["long"] >= 2
+    assert 3600.0 * hours - 400.0 < night.seconds <= 3600.0 * hours

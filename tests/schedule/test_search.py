@@ -11,7 +11,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as some
 
 from sweeprig.characterise.thresholds import STALL_PRIOR, START_PRIOR, posterior
-from sweeprig.laws import EXPONENTIAL, LOGISTIC, Law
+from sweeprig.laws import EXPONENTIAL, LOGISTIC, Law, log_likelihood
+from sweeprig.schedule import posterior as posterior_module
 from sweeprig.schedule.posterior import NO_TRIALS, Prior, cells, evidence_of
 from sweeprig.schedule.quick_fit import Key, key_of
 from sweeprig.schedule.search import BINARY, Choice, Question, best
@@ -215,3 +216,22 @@ def test_any_sums_have_a_choice(key: Key, question: Question) -> None:
     assert math.isfinite(choice.u[0.99])
     assert 0.0 <= choice.failing <= 1.0 + 1e-9
     assert choice.seconds >= question.before_s
+
+
+def test_the_short_cut_for_starts_is_the_likelihood() -> None:
+    """Successes and failures at many duties: the collapsed sums give what the general likelihood gives (independent
+    method: laws.log_likelihood), to rounding, also far from the place where e^z has no room."""
+    rng = np.random.default_rng(11)
+    sums = Sums()
+    for duty in rng.uniform(10.0, 60.0, 40).round(1).tolist():
+        started = rng.random() < 1.0 / (1.0 + math.exp(-(duty - 30.0) / 4.0))
+        sums.add(duty, float(started), None if started else 1.0)
+    sums.add(5.0, 0.0, 1.0)
+    evidence = evidence_of(key_of(sums), 1.0)
+    median, spread = np.linspace(0.0, 100.0, 31)[None, :], np.geomspace(0.02, 20.0, 13)[:, None]
+    ours = posterior_module._likely(LOGISTIC, evidence, posterior_module.NARROW)(median, spread)
+    general = log_likelihood(LOGISTIC, evidence, median, spread)
+    possible = general > -600.0  # below, the general one holds chances at 1e-300
+    assert possible.sum() > 50
+    assert ours[possible] == pytest.approx(general[possible], rel=1e-9, abs=1e-9)
+    assert np.all(ours[~possible] <= -600.0)
