@@ -65,6 +65,9 @@ class WarmUp:
         return f"{shown}, {'under' if self.steady else 'not surely under'} the {asked:g} %/h asked for"
 
 
+PIECE_SLACK = 0.1
+
+
 def warm_up(run_in: RunIn, pieces: Sequence[Outcome]) -> WarmUp:
     """Judge the done pieces of one session's run-in.
 
@@ -79,7 +82,8 @@ def warm_up(run_in: RunIn, pieces: Sequence[Outcome]) -> WarmUp:
     points = [one for piece in pieces if (one := steady(piece)) is not None]
     points.sort(key=lambda one: one.at_s)
     slopes = [drift_rate(points[-count:]) for count in range(2, len(points) + 1)]
-    no_time = seconds + run_in.time_s > run_in.most_s * (1.0 + 1e-9)
+    # a piece ends with its last reading, a moment late: that must not cost the last piece
+    no_time = seconds + run_in.time_s > run_in.most_s + PIECE_SLACK * run_in.time_s
     if not slopes:
         return WarmUp(seconds, None, 0.0, steady=False, done=no_time and bool(pieces))
     rate, u = min(slopes, key=lambda one: abs(one[0]) + SURE * one[1])

@@ -126,7 +126,7 @@ def _key(tally: Tally, kind: Kind) -> Key:
 
 
 def _hold(plan: Plan, here: Here, kind: Kind, duty: float, choice: Choice) -> Hold:
-    chosen = f" It tells most per second now, and fails with a chance of {choice.failing:.0%}."
+    chosen = f" It tells most per second now, and fails with a chance of {100.0 * choice.failing:.0f} %."
     if isinstance(kind.stage, StallPlan):
         return stall_hold(plan, kind.stage, here, duty, choice.part * kind.stage.hold_time_s, chosen)
     return start_hold(plan, kind.stage, here, duty, chosen)

@@ -63,11 +63,15 @@ def _given_up(tally: Tally, run_percent: float) -> bool:
 
 
 def _finished(kick: KickPlan, trials: Sequence[Tried]) -> bool:
-    """All trials done, or the longest pulse has failed AT_THE_EDGE times in a row: no pulse allowed starts it."""
+    """All trials done; or the longest pulse has failed AT_THE_EDGE times in a row: no pulse allowed starts it; or every
+    trial started, LEAST_KICKS of them with the shortest: a bound is all there is to find.
+    """
     last = trials[-AT_THE_EDGE:]
     longest = 0.9 * kick.longest_s
     hopeless = len(last) == AT_THE_EDGE and all(started is False and pulse >= longest for pulse, started in last)
-    return len(trials) >= kick.trials or hopeless
+    shortest = sum(pulse <= 1.1 * kick.shortest_s for pulse, _ in trials)
+    needless = shortest >= LEAST_KICKS and all(started is not False for _, started in trials)
+    return len(trials) >= kick.trials or hopeless or needless
 
 
 def run_duty(plan: Plan, kick: KickPlan, tally: Tally) -> float | None:

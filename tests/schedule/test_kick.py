@@ -144,6 +144,15 @@ def test_a_motor_that_no_pulse_starts() -> None:
     assert made[-1].hold.lead[-1][1] >= 0.9 * KICK.longest_s
 
 
+def test_a_motor_that_needs_no_kick() -> None:
+    """Where every pulse starts it, ten with the shortest are enough at each kick duty: a bound is all there is to find."""
+    needs_none = motor(0.0, replace(PLAN, kick=replace(KICK, trials=60)))
+    for duty in KICK.duties_percent:
+        trials = [o for o in needs_none if o.hold.lead[-1][0] == duty]
+        assert len(trials) < 25
+        assert sum(o.hold.lead[-1][1] <= 1.1 * KICK.shortest_s for o in trials) >= 10
+
+
 def test_shortest_and_longest() -> None:
     """No pulse is shorter or longer than the sweep allows, whatever the motor wants."""
     for need_s in (1e-4, 1e9):
