@@ -20,7 +20,7 @@ from sweeprig.schedule.posterior import Neighbour, Prior, cells
 from sweeprig.schedule.proposal import Here, Proposal
 from sweeprig.schedule.quick_fit import Key, key_of
 from sweeprig.schedule.search import BINARY, SURVIVAL, Choice, Question, best
-from sweeprig.schedule.tally import Tally, Trials
+from sweeprig.schedule.tally import Tallies, Tally, Trials
 from sweeprig.schedule.trials import stall_hold, stall_lead, start_hold
 
 NAME = "adaptive"
@@ -103,6 +103,27 @@ def _proposal(plan: Plan, here: Here, name: str, *, beyond: bool) -> Proposal | 
         return None
     answered = kind.trials.sums.successes > 0 and kind.trials.sums.failures > 0
     return Proposal(_hold(plan, here, kind, duty, choice), (float(answered), -choice.gain_per_s), spare=answered)
+
+
+def how_they_ended(plan: Plan, past: Tallies, now: float) -> str:
+    """What the adaptive searches ended at, as the rest of a sentence: all as asked, or which of them fell short
+    (trials or time used up), with what they reached and what was asked. Empty without such searches."""
+    short, searched = [], 0
+    for condition in plan.conditions:
+        tally = past.conditions.get(condition) or Tally()
+        here = Here(condition, tally, past, past.highest_number + 1, now)
+        for name in ("stall", "start"):
+            kind = kind_of(plan, name, tally)
+            if kind is None or kind.stage.search != NAME:
+                continue
+            searched += 1
+            choice = choice_of(plan, here, kind)
+            if not choice.reached:
+                asked, u = kind.stage.standard_error_percent, max(choice.u.values())
+                short.append(f"{name} at {condition.label()} ({u:.2g} % instead of {asked:g} %)")
+    if not short:
+        return ", and all that was searched for is known as well as asked" if searched else ""
+    return f"; known less well than asked: {'; '.join(short)}"
 
 
 def choice_of(plan: Plan, here: Here, kind: Kind) -> Choice:

@@ -11,7 +11,7 @@ from collections.abc import Iterator, Sequence
 
 from sweeprig.holds import Condition, Decision, Finished, Hold, NeedsPerson, Outcome, Purpose
 from sweeprig.plan import Plan
-from sweeprig.schedule.adaptive import stall_beyond, stall_search, start_beyond, start_search
+from sweeprig.schedule.adaptive import how_they_ended, stall_beyond, stall_search, start_beyond, start_search
 from sweeprig.schedule.budget import fits, kept_for_closing, kept_for_later
 from sweeprig.schedule.by_taps import at_taps, map_taps
 from sweeprig.schedule.curve_points import coarse_curve
@@ -52,13 +52,14 @@ def next_hold(plan: Plan, outcomes: Sequence[Outcome], now: float) -> Decision:
     if wanted is not None and plan.by_hand and plan.set_by_hand(first) != plan.hands:
         return _hands(plan, first)
     if wanted is None and late:
-        return Finished("no hold that is still asked for would end before the deadline")
+        late_for = "no hold that is still asked for would end before the deadline"
+        return Finished(f"{late_for}{how_they_ended(plan, past, now)}")
     hold = opening(plan, past, past.highest_number + 1, first) or wanted
     if plan.taps is not None and isinstance(hold, Hold):
         hold = at_taps(plan, past, hold)
     if plan.heat is not None and isinstance(hold, Hold):
         return rest_before(hold, outcomes, plan.heat, now) or hold
-    return hold or Finished("every hold that the sweep asks for is done")
+    return hold or Finished(f"every hold that the sweep asks for is done{how_they_ended(plan, past, now)}")
 
 
 def _wanted(plan: Plan, past: Tallies, now: float) -> tuple[Hold | None, bool]:

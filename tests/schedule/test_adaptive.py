@@ -58,6 +58,18 @@ def test_the_search_ends_with_what_was_asked(number: int) -> None:
     assert errors["sustain_99_duty_percent"] <= 0.3 + 1e-9 or _stalls(outcomes) >= 80
 
 
+@pytest.mark.parametrize(
+    ("most", "says"), [(80, "as well as asked"), (6, "known less well than asked: stall at 300 Hz")]
+)
+def test_it_says_what_the_searches_ended_at(most: int, says: str) -> None:
+    """Standard error reached or trials used up: the reason of the end says which, and by how much it fell short."""
+    plan = a_plan(conditions=(SLOW,), start=None)
+    assert plan.stall is not None
+    _, finished = night(replace(plan, stall=replace(plan.stall, holds=most)), 1)
+    assert says in finished.reason
+    assert ("instead of 0.3 %" in finished.reason) == (most == 6)
+
+
 def _stalls(outcomes: list[Outcome]) -> int:
     return sum(o.hold.purpose is Purpose.STALL for o in outcomes)
 

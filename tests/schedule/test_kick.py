@@ -145,7 +145,7 @@ def test_a_motor_that_no_pulse_starts() -> None:
 
 
 def test_a_motor_that_needs_no_kick() -> None:
-    """Where every pulse starts it, ten with the shortest are enough at each kick duty: a bound is all there is to find."""
+    """Where every pulse starts it, ten with the shortest are enough at each kick duty: there is but a bound to find."""
     needs_none = motor(0.0, replace(PLAN, kick=replace(KICK, trials=60)))
     for duty in KICK.duties_percent:
         trials = [o for o in needs_none if o.hold.lead[-1][0] == duty]
