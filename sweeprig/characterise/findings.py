@@ -157,6 +157,8 @@ def _read(condition: Mapping[str, Any], name: str) -> Finding:
     return not_found("the release that wrote these findings did not know it")
 
 
+NOT_ASKED = "the sweep asks for no"
+"""How the reason of a finding begins that nobody asked for."""
 TIME_NAMES = ("hold_time_s", "start_time_s", "rest_time_s")
 RANGE_NAMES = tuple(f.name for f in fields(UsableRange))
 FINDING_NAMES = tuple(

@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from sweeprig.characterise.combine import K_ONE_SIDED, K_TWO_SIDED, ONE_SIDED, TWO_SIDED, summary, widened
-from sweeprig.characterise.findings import Finding, not_found
+from sweeprig.characterise.findings import NOT_ASKED, Finding, not_found
 from sweeprig.characterise.thresholds import REJECTED_BELOW, SpreadPrior, bound_without_contrast, posterior
 from sweeprig.exposures import KICK_AMPS, kick_of
 from sweeprig.holds import Approach, Outcome, Purpose, Verdict
@@ -56,7 +56,7 @@ def kicks(plan: Plan, done: Sequence[Outcome]) -> tuple[Kick, ...]:
     asked = () if plan.kick is None else plan.kick.duties_percent
     duties = sorted({round(duty, 6) for duty in asked} | {round(duty, 6) for duty, _ in kicked}, reverse=True)
     found = [_at(plan, duty, [o for one, o in kicked if round(one, 6) == duty]) for duty in duties[:KICK_DUTIES]]
-    reason = "the sweep asks for no kick" if not duties else "the sweep asks for no further kick duty"
+    reason = f"{NOT_ASKED} kick" if not duties else f"{NOT_ASKED} further kick duty"
     missing = Kick(not_found(reason), not_found(reason))
     return (*found, *(missing for _ in range(KICK_DUTIES - len(found))))
 

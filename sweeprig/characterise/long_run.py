@@ -14,7 +14,7 @@ from scipy import special
 
 from sweeprig.characterise.combine import K_ONE_SIDED, ONE_SIDED, quantile, widened
 from sweeprig.characterise.evidence import Chosen, Duties
-from sweeprig.characterise.findings import EXTRAPOLATED, Bound, Finding, not_found
+from sweeprig.characterise.findings import EXTRAPOLATED, NOT_ASKED, Bound, Finding, not_found
 from sweeprig.characterise.thresholds import STALL_PRIOR, bound_without_contrast, posterior
 from sweeprig.holds import Outcome, Purpose
 from sweeprig.laws import EXPONENTIAL, LOGISTIC, Evidence, Law, Trial, summed
@@ -22,7 +22,6 @@ from sweeprig.plan import LongRunPlan, Plan
 
 NEAR_SPREADS = 2.0
 """Holds within so many spreads of a duty are near it."""
-NOT_ASKED = "the sweep asks for no long run"
 _FALLS_ON = (
     "beyond the tested range the logarithm of the hazard falls with duty at least as fast as inside it; a floor, or a "
     "slope that flattens, breaks this"
@@ -67,7 +66,7 @@ def long_run(plan: Plan, known: Duties, exposures: Chosen, done: Sequence[Outcom
     exposures   trials of the stall law, long holds among them
     """
     if plan.long_run is None or plan.stall is None:
-        return _none(NOT_ASKED)
+        return _none(f"{NOT_ASKED} long run")
     trials = exposures.trials
     if not trials:
         return _none("no exposure was done at this condition")

@@ -16,7 +16,7 @@ import numpy as np
 from sweeprig.characterise.combine import K_TWO_SIDED, TWO_SIDED
 from sweeprig.characterise.curve import SAME_DUTY_PERCENT, Curve
 from sweeprig.characterise.evidence import Chosen, Duties, Point, speed_points
-from sweeprig.characterise.findings import Finding, not_found
+from sweeprig.characterise.findings import NOT_ASKED, Finding, not_found
 from sweeprig.characterise.speed_course import LEAST, Course, course
 from sweeprig.characterise.usable import Branch
 from sweeprig.holds import Approach, Outcome, Purpose
@@ -261,7 +261,7 @@ def drift_percent_per_hour(plan: Plan, outcomes: Sequence[Outcome], drift: Drift
     """Mean drift of the reference speed from the first reference to the last: 100·Δ ln v / Δt."""
     assumes, flags = began
     if plan.reference is None and not any(one.hold.purpose is Purpose.REFERENCE for one in outcomes):
-        return not_found("no reference holds were made: the sweep has no [reference] table", flags=flags)
+        return not_found(f"{NOT_ASKED} reference holds", flags=flags)
     if drift is None:
         count = len(references(outcomes))
         return not_found(f"a drift needs {LEAST} reference holds that gave a speed; there were {count}", flags=flags)

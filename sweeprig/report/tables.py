@@ -9,6 +9,7 @@ from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
+from sweeprig.characterise.findings import NOT_ASKED
 from sweeprig.quantities import show_quantity
 from sweeprig.report import numbers
 from sweeprig.report.catalogue import CONDITION_FIELDS, MEANINGS, TIMES, flag_text, meaning
@@ -64,10 +65,13 @@ def telling_fields(conditions: Sequence[Json]) -> list[str]:
 
 
 def entries(condition: Json) -> Iterator[tuple[str, Json]]:
-    """(full name, F) of every finding of a condition: listed ones in the order of the catalogue, then the others."""
+    """(full name, F) of every finding of a condition: listed ones in the order of the catalogue, then the others.
+
+    What nobody asked for is left out: findings.json keeps its name, a page of thirty such rows would hide the others.
+    """
     flat: dict[str, Json] = {}
     for key, value in condition.items():
-        if isinstance(value, Mapping) and "value" in value:
+        if isinstance(value, Mapping) and "value" in value and not _not_asked(value):
             flat[key] = value
         elif key == "usable_range" and isinstance(value, Mapping):
             flat.update({f"{key}.{part}": f for part, f in value.items() if isinstance(f, Mapping)})
@@ -75,6 +79,10 @@ def entries(condition: Json) -> Iterator[tuple[str, Json]]:
         if key in flat:
             yield key, flat.pop(key)
     yield from flat.items()
+
+
+def _not_asked(finding: Json) -> bool:
+    return finding["value"] is None and str(finding.get("reason", "")).startswith(NOT_ASKED)
 
 
 def times(condition: Json) -> dict[str, float]:

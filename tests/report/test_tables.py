@@ -36,6 +36,15 @@ def test_null_finding_keeps_its_row_with_the_reason(findings: dict[str, Any]) ->
     assert row.remarks == ("no start trial was done at 25 kHz: the run ended before",)
 
 
+def test_what_nobody_asked_for_has_no_row(findings: dict[str, Any]) -> None:
+    """A finding that the sweep does not ask for stays in findings.json and takes no row of the page."""
+    condition = copy.deepcopy(findings["conditions"][0])
+    condition["kick_99_s"] = {"value": None, "reason": "the sweep asks for no kick"}
+    assert "kick_99_s" not in by_name(tables.rows(condition))
+    condition["kick_99_s"]["reason"] = "every kick failed"
+    assert "kick_99_s" in by_name(tables.rows(condition))
+
+
 def test_null_finding_without_reason_says_so() -> None:
     """A missing reason is named as missing, not hidden."""
     row = tables.row("lapse", {"value": None}, "somewhere")
