@@ -227,7 +227,7 @@ def test_the_drift_is_a_finding(plan: Plan, night: list[Outcome], outcome: MakeO
 def test_without_references_all_is_as_before(plan: Plan, night: list[Outcome]) -> None:
     """No reference holds: the drift says so, and speeds carry the settling tolerance: 1 % / 2.576 of 4,000 rpm."""
     found = of(plan, night)
-    assert "no [reference] table" in found.finding("drift_percent_per_hour").reason
+    assert found.finding("drift_percent_per_hour").reason == "the sweep asks for no reference holds"
     u = found.finding("top_speed_rpm").u
     assert u is not None
     assert u >= 4000.0 * 0.01 / 2.576
