@@ -22,7 +22,7 @@ MORE = {
     "unattended": ("fault_nights", "crash_points", "stress"),
     "findings": ("findings_covered", "kick"),
     "search": ("long_run",),
-    "night": ("drift",),
+    "night": ("foretold", "drift"),
 }
 """Modules of a group beside the one of its name."""
 
