@@ -19,7 +19,7 @@ NIGHTS_DIFFER = 0.02
 """Scatter of the logarithm of a duty from one night of a motor to the next (guess); the run's own u is added."""
 TIMES_SCATTER = 0.15
 SPREAD_UNKNOWN = 0.5
-"""A spread from one night: known to a factor of about 1.6."""
+"""A spread from one night: known to a factor of 1.6 at worst, else as well as the distance of its two duties."""
 TAIL = 0.99
 
 
@@ -48,8 +48,9 @@ def _threshold(one: Mapping[str, Any], kind: str, half: str, tail: str, law: Law
         return {}
     known = {f"{kind}_percent": (place["value"], math.hypot(place["u"] / place["value"], NIGHTS_DIFFER))}
     if above["value"] is not None and above["value"] > place["value"]:
-        spread = (above["value"] - place["value"]) / law.offset(TAIL)
-        known[f"{kind}_spread_percent"] = (spread, SPREAD_UNKNOWN)
+        between = above["value"] - place["value"]
+        unknown = SPREAD_UNKNOWN if above["u"] is None else min(above["u"] / between, SPREAD_UNKNOWN)
+        known[f"{kind}_spread_percent"] = (between / law.offset(TAIL), unknown)
     return known
 
 

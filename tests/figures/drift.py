@@ -59,6 +59,10 @@ class Night:
         return float(np.interp(at_s, [at for at, _ in self.ages], [hours for _, hours in self.ages]))
 
 
+LADDER = {"search": "ladder", "step": 0.5, "standard_error": None}
+"""As many trials with drift as without: what differs is the motor and not the plan of the night."""
+
+
 def job_of(seed: int, friction: float = 0.0, magnet: float = 0.0, hours: float = 0.0) -> Job:
     """The demo at its last PWM frequency with reference holds.
 
@@ -81,8 +85,8 @@ def job_of(seed: int, friction: float = 0.0, magnet: float = 0.0, hours: float =
     }
     asked = {
         "seed": seed, "pwm": sweep.pwm[-1:],
-        "stall": sweep.stall.model_copy(update={"holds": TRIALS}),
-        "start": sweep.start.model_copy(update={"trials": TRIALS}),
+        "stall": sweep.stall.model_copy(update={**LADDER, "holds": TRIALS}),
+        "start": sweep.start.model_copy(update={**LADDER, "trials": TRIALS}),
         "reference": Reference.model_construct(duty=DUTY, every=EVERY_S, time=TIME_S),
     }  # fmt: skip
     simulated = motor.model_copy(update=changed)

@@ -147,8 +147,9 @@ def long_job(folder: Path) -> Job:
         folder,
         {
             'pwm = ["300 Hz", "1 kHz", "25 kHz"]': 'pwm = ["1 kHz"]',
-            'hold_time = "20 s"': 'hold_time = "90 s"',
-            "holds = 24": "holds = 10000",
+            'search = "adaptive"\nhold_time = "20 s"\nstandard_error = "0.3 %"': (
+                'search = "ladder"\nhold_time = "90 s"\nholds = 10000'
+            ),
         },
     )
 
