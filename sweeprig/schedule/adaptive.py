@@ -16,9 +16,9 @@ from sweeprig.holds import Approach, Condition, Hold, Purpose
 from sweeprig.laws import STALL_LAWS, STALL_SPREAD_PERCENT, START_LAWS, START_SPREAD_PERCENT, Law
 from sweeprig.plan import HeatPlan, Plan, StallPlan, StartPlan
 from sweeprig.schedule.budget import BETWEEN_S, COAST_S
+from sweeprig.schedule.keys import Key, key_of
 from sweeprig.schedule.posterior import Neighbour, Prior, cells
 from sweeprig.schedule.proposal import Here, Proposal
-from sweeprig.schedule.quick_fit import Key, key_of
 from sweeprig.schedule.search import BINARY, SURVIVAL, Choice, Question, best
 from sweeprig.schedule.tally import Tallies, Tally, Trials
 from sweeprig.schedule.trials import stall_hold, stall_lead, start_hold
@@ -32,6 +32,8 @@ PROBABILITY = {
 }
 """Finding → kind of trial, and the chance to succeed at the duty that it is."""
 TAIL = 0.99
+END_WITHIN = 1.0
+"""%: so near to the lowest duty allowed a motor that has never stopped is tried at that duty itself."""
 HINT = 0.25
 """A curve hold that turned on is as good a hint as so much of a whole trial that was survived."""
 
@@ -183,7 +185,7 @@ def _question(plan: Plan, here: Here, kind: Kind) -> Question:
     likelihood = SURVIVAL if kind.name == "stall" else BINARY
     return Question(
         kind.law, prior, low, high, step, parts, whole_s, before_s, after_s, coming_down_s, wanted, likelihood,
-        kind.unit,
+        kind.unit, end_within=END_WITHIN,
     )  # fmt: skip
 
 

@@ -13,9 +13,10 @@ from sweeprig.holds import Approach, EndsWhen, Hold, Purpose, Verdict
 from sweeprig.laws import STALL_LAWS, START_LAWS
 from sweeprig.plan import KickPlan, Plan, StallPlan
 from sweeprig.schedule.budget import LEAST_KICKS
+from sweeprig.schedule.keys import key_of
 from sweeprig.schedule.posterior import Prior
 from sweeprig.schedule.proposal import TRIAL_SENSORS, Here, Proposal, offered
-from sweeprig.schedule.quick_fit import key_of, quick_fit
+from sweeprig.schedule.quick_fit import quick_fit
 from sweeprig.schedule.search import BINARY, Question, best
 from sweeprig.schedule.tally import STRIKES, Sums, Tally
 

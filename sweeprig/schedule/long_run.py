@@ -8,8 +8,9 @@ from __future__ import annotations
 
 from sweeprig.holds import Approach, EndsWhen, Hold, Purpose
 from sweeprig.plan import LongRunPlan, Plan, StallPlan
+from sweeprig.schedule.keys import contrast, key_of
 from sweeprig.schedule.proposal import TRIAL_SENSORS, Here, Proposal, offered
-from sweeprig.schedule.quick_fit import contrast, duty_that_fails, key_of, quick_fit
+from sweeprig.schedule.quick_fit import duty_that_fails, quick_fit
 from sweeprig.schedule.trials import stall_lead
 
 WANTED_FAILURE = 0.4

@@ -24,7 +24,7 @@ from sweeprig.laws import (
     Law,
     log_likelihood,
 )
-from sweeprig.schedule.quick_fit import Key
+from sweeprig.schedule.keys import Key, evidence_of
 
 Likely = Callable[[Floats, Floats], Floats]
 """(median (rows, columns), spread (rows, 1)) → log-likelihood (rows, columns)."""
@@ -151,19 +151,6 @@ def _closer(likely: Likely, prior: Prior, rows: Floats, low: Floats, high: Float
     last = np.minimum(_COARSE - inside[:, ::-1].argmax(axis=1), _COARSE - 1)
     width = (high - low) / (_COARSE - 1)
     return value, low + first * width, low + last * width
-
-
-def evidence_of(key: Key, unit: float) -> Evidence:
-    """The sums as `laws` has them, in parts of the whole trial."""
-    exposures, events = key
-    return Evidence(
-        duty=np.array([duty for duty, _ in exposures]),
-        exposure=np.array([survived for _, survived in exposures]) / unit,
-        event_duty=np.array([duty for duty, _, _ in events]),
-        event_width=np.array([width for _, width, _ in events]) / unit,
-        events=np.array([count for _, _, count in events], dtype=np.float64),
-        holds=(),
-    )
 
 
 def _likely(law: Law, evidence: Evidence, narrow: float) -> Likely:

@@ -11,14 +11,13 @@ from functools import lru_cache
 
 import numpy as np
 
-from sweeprig.laws import SPREAD_LOG_SD, STALL_LAWS, STALL_SPREAD_PERCENT, Evidence, Floats, Law, log_likelihood
-from sweeprig.schedule.tally import Sums
+from sweeprig.laws import SPREAD_LOG_SD, STALL_LAWS, STALL_SPREAD_PERCENT, Floats, Law, log_likelihood
+from sweeprig.schedule.keys import Key, evidence_of
 
 _ROWS, _COLUMNS, _REACH = 31, 61, 3.0
 _BEYOND_PERCENT, _BEYOND_SPREADS = 2.0, 6.0
 _KEPT = 12.0
 _HALVINGS = 30
-Key = tuple[tuple[tuple[float, float], ...], tuple[tuple[float, float, int], ...]]
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,21 +42,13 @@ class Quick:
         return float(place[order][min(int(np.searchsorted(share, confidence)), place.size - 1)])
 
 
-def key_of(sums: Sums) -> Key:
-    """The sums as a value that can be remembered by."""
-    return (
-        tuple(sorted(sums.exposure.items())),
-        tuple(sorted((duty, width, count) for (duty, width), count in sums.events.items())),
-    )
-
-
 @lru_cache(maxsize=256)
 def quick_fit(key: Key, hold_time_s: float, which: int = 0) -> Quick:
     """The posterior of STALL_LAWS[which]; `key` must hold a stop and a time turned, else it is improper.
 
     The grid is laid twice: around the lowest duty that turned and the highest that stopped, then where the weight is.
     """
-    law, evidence, centre = STALL_LAWS[which], _evidence(key, hold_time_s), math.log(STALL_SPREAD_PERCENT)
+    law, evidence, centre = STALL_LAWS[which], evidence_of(key, hold_time_s), math.log(STALL_SPREAD_PERCENT)
     rows = centre + SPREAD_LOG_SD * np.linspace(-_REACH, _REACH, _ROWS)
     turned = [float(duty) for duty, time in zip(evidence.duty, evidence.exposure, strict=True) if time > 0.0]
     ends = min(turned), float(evidence.event_duty.max())
@@ -79,23 +70,6 @@ def quick_fit(key: Key, hold_time_s: float, which: int = 0) -> Quick:
         low, high, rows = np.interp(finer, rows, low), np.interp(finer, rows, high), finer
     weight = np.exp(value - value.max()) * (high - low)[:, None]
     return Quick(law, median, np.exp(rows)[:, None], weight / weight.sum())
-
-
-def _evidence(key: Key, hold_time_s: float) -> Evidence:
-    exposures, events = key
-    return Evidence(
-        duty=np.array([duty for duty, _ in exposures]),
-        exposure=np.array([seconds for _, seconds in exposures]) / hold_time_s,
-        event_duty=np.array([duty for duty, _, _ in events]),
-        event_width=np.array([width for _, width, _ in events]) / hold_time_s,
-        events=np.array([count for _, _, count in events], dtype=np.float64),
-        holds=(),
-    )
-
-
-def contrast(sums: Sums) -> bool:
-    """Whether something stopped and something turned on: without both, nothing can be fitted."""
-    return bool(sums.events) and any(seconds > 0.0 for seconds in sums.exposure.values())
 
 
 def duty_that_fails(fitted: Quick, chance: float, parts: float, low: float, high: float) -> float:

@@ -14,9 +14,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sweeprig.laws import Floats, Law
+from sweeprig.schedule.keys import Key
 from sweeprig.schedule.one_step import expected, variance
 from sweeprig.schedule.posterior import Cells, Prior, cells
-from sweeprig.schedule.quick_fit import Key
 
 SURVIVAL, BINARY = "survival", "binary"
 LEVELS = (0.005, 0.02, 0.04, 0.08, 0.14, 0.22, 0.32, 0.43, 0.55, 0.67, 0.79, 0.9, 0.97)
@@ -26,6 +26,8 @@ and where the other law of the stall was the true one, the errors of `sustain_99
 TAIL = (0.02, 0.2)
 """Definitions: findings in the tail are supported by trials with such chances to fail."""
 TAIL_FROM = 0.99
+AT_THE_END = 3
+"""Whole trials alike at the end of the duties allowed after which a motor is said never to stop, or never to start."""
 _SPOTS, _REACH = 27, 2.8
 _DIGITS = 9
 _LEAST_HAZARD = 1e-9
@@ -45,6 +47,8 @@ class Question:
     wanted           (chance to succeed, standard error asked of its duty, percent)
     likelihood       SURVIVAL: the moment of a failure is known; BINARY: only whether it failed
     unit             what one whole trial counts in the sums: its seconds, or 1
+    end_within       as long as one result was never seen, trials so near to the end of the duties, %, are followed by
+                     trials at the end itself; 0: they are not
     ends_early       a failure ends the exposure, so that it costs less time; None: where its moment is known
     """
 
@@ -62,6 +66,7 @@ class Question:
     likelihood: str = SURVIVAL
     unit: float = 1.0
     ends_early: bool | None = None
+    end_within: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -70,7 +75,8 @@ class Choice:
 
     gain_per_s   expected fall of the wanted variances, in squares of the asked standard errors, per expected second
     u            chance to succeed → standard error of its duty now, percent
-    reached      all wanted are known as asked, and a tail that is wanted has a trial in it
+    reached      all wanted are known as asked, and a tail that is wanted has a trial in it; or one result never came,
+                 in AT_THE_END trials at the end of the duties neither, and there is but a bound to find
     failing      chance that the trial fails; seconds: that it is expected to take, all counted
     """
 
@@ -85,7 +91,7 @@ class Choice:
 
 @lru_cache(maxsize=512)
 def best(question: Question, key: Key) -> Choice:
-    """The trial that tells most per second given the sums `key` (`quick_fit.key_of`). Total and deterministic."""
+    """The trial that tells most per second given the sums `key` (`keys.key_of`). Total and deterministic."""
     believed = cells(question.law, key, question.unit, question.prior, question.coming_down_s / question.whole_s)
     values = np.array([np.clip(believed.duty(p), question.low, question.high) for p, _ in question.wanted])
     now = _variances(believed.weight, values)
@@ -94,8 +100,9 @@ def best(question: Question, key: Key) -> Choice:
     edge = _edge(question, key)
     supported = edge is None and _tail_tried(question, key, believed)
     duties = _duties(question, believed, tail_only=sharp and not supported)
-    if sharp and edge is not None:  # one result was never seen: it must be asked for where it would be
-        duties = np.array([edge])
+    end = _end_in_sight(question, key)
+    if (sharp and edge is not None) or end is not None:  # one result was never seen: it is asked for where it would be
+        duties = np.array([edge if end is None else end])
     parts = np.array(question.parts)
     chance, makes, failing, seconds = _outcomes(question, believed, duties, parts)
     after = expected(believed.weight, chance, makes, variance(values))
@@ -108,7 +115,7 @@ def best(question: Question, key: Key) -> Choice:
         part=float(parts[index % parts.size]),
         gain_per_s=float(gain[index]),
         u={p: math.sqrt(v) for (p, _), v in zip(question.wanted, now.tolist(), strict=True)},
-        reached=sharp and supported,
+        reached=(sharp and supported) or (end is not None and _tried_at(question, key, end) >= AT_THE_END),
         failing=float(failing[index]),
         seconds=float(seconds[index]),
     )
@@ -132,6 +139,25 @@ def _edge(question: Question, key: Key) -> float | None:
     return (
         None if events and max(duty for duty, _, _ in events) >= high * question.step - 1e-9 else high * question.step
     )
+
+
+def _end_in_sight(question: Question, key: Key) -> float | None:
+    """The end of the duties allowed where the result that was never seen would be, once trials came within `end_within`
+    of it: there at once, since a motor that never stops would be followed by ever smaller steps."""
+    exposures, events = key
+    turned = [duty for duty, survived in exposures if survived > 0.0]
+    if question.end_within == 0.0 or (turned and events) or not (turned or events):
+        return None
+    low, high = (step * question.step for step in _grid_ends(question))
+    nearest, end = (min(turned), low) if turned else (max(duty for duty, _, _ in events), high)
+    return round(end, _DIGITS) if abs(nearest - end) <= question.end_within else None
+
+
+def _tried_at(question: Question, key: Key, duty: float) -> float:
+    """How many whole trials were survived, or failed, at a duty."""
+    exposures, events = key
+    survived = sum(seconds for at, seconds in exposures if abs(at - duty) < 1e-9) / question.unit
+    return survived + sum(count for at, _, count in events if abs(at - duty) < 1e-9)
 
 
 def _grid_ends(question: Question) -> tuple[int, int]:

@@ -12,8 +12,8 @@ from sweeprig.holds import Outcome
 from sweeprig.plan import Plan
 from sweeprig.schedule.adaptive import PROBABILITY, Kind, kind_of
 from sweeprig.schedule.history import past_of
+from sweeprig.schedule.keys import key_of
 from sweeprig.schedule.posterior import Prior, cells
-from sweeprig.schedule.quick_fit import key_of
 from sweeprig.schedule.tally import Sums, Tally
 
 

@@ -12,9 +12,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from sweeprig.laws import EXPONENTIAL, GAUSSIAN, LOGISTIC, Law, Trial
+from sweeprig.schedule.keys import key_of
 from sweeprig.schedule.ladder import next_duty
 from sweeprig.schedule.posterior import Prior
-from sweeprig.schedule.quick_fit import key_of
 from sweeprig.schedule.search import BINARY, SURVIVAL, Question, best
 from sweeprig.schedule.tally import Sums
 

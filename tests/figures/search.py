@@ -21,7 +21,7 @@ from sweeprig.holds import Hold, Outcome, Purpose, Status, Verdict
 from sweeprig.job import freeze, load, shipped
 from sweeprig.laws import STALL_LAWS, summed
 from sweeprig.schedule import History, next_hold
-from sweeprig.schedule.quick_fit import key_of
+from sweeprig.schedule.keys import key_of
 from sweeprig.schedule.search import best
 
 if TYPE_CHECKING:

@@ -14,8 +14,8 @@ import numpy as np
 
 from sweeprig.job.freeze import curve_duties
 from sweeprig.laws import EXPONENTIAL, Trial
+from sweeprig.schedule.keys import key_of
 from sweeprig.schedule.posterior import Prior
-from sweeprig.schedule.quick_fit import key_of
 from sweeprig.schedule.search import BINARY, SURVIVAL, Choice, Question, best
 from sweeprig.schedule.tally import Sums
 

@@ -14,9 +14,10 @@ from sweeprig.holds import Approach, Condition, EndsWhen, Hold, Outcome, Purpose
 from sweeprig.laws import SPREAD_LOG_SD
 from sweeprig.plan import LongRunPlan, Plan, SettlePlan, StallPlan
 from sweeprig.schedule.history import History, past_of
+from sweeprig.schedule.keys import contrast, key_of
 from sweeprig.schedule.long_run import WANTED_FAILURE, long_holds
 from sweeprig.schedule.proposal import Here, Proposal
-from sweeprig.schedule.quick_fit import contrast, key_of, quick_fit
+from sweeprig.schedule.quick_fit import quick_fit
 from sweeprig.schedule.tally import Sums, Tally
 
 AT = Condition(1000.0, 12.0)
