@@ -134,6 +134,20 @@ def test_a_motor_that_never_fails_is_left_at_the_lowest_duty(law: Law) -> None:
     assert sums.successes <= 25
 
 
+def test_a_motor_that_never_starts_is_left_at_the_highest_duty() -> None:
+    """Every trial fails: the search goes up to the highest duty allowed, and is done after three there at most."""
+    question = replace(START, high=40.0, prior=Prior(0.0, 40.0, 0.8), end_within=END_WITHIN)
+    sums = Sums()
+    for _ in range(40):
+        choice = best(question, key_of(sums))
+        if choice.reached:
+            break
+        sums.add(choice.duty_percent, 0.0, 1.0)
+    assert choice.reached
+    assert 1 <= sums.events[40.0, 1.0] <= 3
+    assert sums.failures <= 20
+
+
 def test_long_holds_where_failures_are_rare_and_relaunching_is_dear() -> None:
     """The dearer the relaunch, the longer the exposure that is chosen at a duty."""
     sums, rng = Sums(), np.random.default_rng(3)

@@ -5,11 +5,15 @@ from __future__ import annotations
 import math
 import random
 from collections.abc import Callable
+from pathlib import Path
 from typing import Any, TypeVar
 
 import pytest
 
+from sweeprig.job import load
+from sweeprig.job.fault_models import SimulatedFault
 from sweeprig.quantities import Accuracy
+from sweeprig.simbench import build
 from sweeprig.simbench.bench import Bench
 from sweeprig.simbench.board import Board
 from sweeprig.simbench.chopper import Wave
@@ -163,3 +167,52 @@ class Awaited:
 @pytest.fixture
 def bed() -> Bed:
     return Bed()
+
+
+Faulty = Callable[..., Bench]
+
+
+class Client:
+    """A program at one instrument's port, which waits as a link on the bench's clock does."""
+
+    def __init__(self, bench: Bench, name: str) -> None:
+        self.bench, self.port = bench, bench.ports[name]
+        self.port.open()
+
+    def fileno(self) -> int | None:
+        return None
+
+    def ready_at(self) -> float:
+        return self.port.next_ready()
+
+    def pieces(self, message: str = "", seconds: float = 1.0) -> list[tuple[float, bytes]]:
+        """Write a message; all that comes within `seconds`: (seconds after the message, bytes)."""
+        began = self.bench.now
+        if message:
+            self.port.write(message.encode("ascii") + b"\n")
+        came = []
+        while self.bench.now < began + seconds:
+            self.bench.clock.wait(began + seconds, (self,))
+            data = self.port.read()
+            came += [(self.bench.now - began, data)] if data else []
+        return came
+
+    def ask(self, message: str = "", seconds: float = 1.0) -> bytes:
+        return b"".join(data for _, data in self.pieces(message, seconds))
+
+
+@pytest.fixture
+def faulty(short_job: Path) -> Faulty:
+    """`faulty({"kind": …}, …, session=1)`: the short job's bench with these faults."""
+
+    def made(*faults: dict[str, object], session: int = 1) -> Bench:
+        job = load(short_job)
+        specs = tuple(SimulatedFault.model_validate(fault) for fault in faults)
+        rig = job.rig.model_copy(update={"simulated_faults": specs})
+        return build(job.model_copy(update={"rig": rig}), session)
+
+    return made
+
+
+def on(kind: str, instrument: str = "supply", **more: object) -> dict[str, object]:
+    return {"kind": kind, "instrument": instrument, **more}
